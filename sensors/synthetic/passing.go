@@ -1,0 +1,90 @@
+package synthetic
+
+import (
+	"math"
+
+	"sockline/sensors/quantity"
+)
+
+// Front is a gust front: a line that moves over the ground; behind it a wind
+// is added. It stands at X, Y at time Passes.
+type Front struct {
+	X, Y   float64 // a point of the line at Passes, m
+	Passes float64 // s
+	Toward float64 // direction of motion, degrees true
+	Speed  float64 // of the line, m/s
+	Step   quantity.Vector
+	// Width is the half width of the transition: the step is
+	// (1 + tanh(d/Width))/2 at d metres behind the line.
+	Width float64
+	// Curve is the radius of the line's curvature at Passes, m: the line is
+	// then a circle that widens about a centre behind it. 0 means straight.
+	Curve float64
+	// Fades is the time constant, s, with which the step dies behind the line,
+	// 0 means never.
+	Fades float64
+}
+
+// Wind is the front's wind at x, y (m), t seconds after the start.
+func (f *Front) Wind(x, y, t float64) (u, v float64) {
+	behind := f.behind(x, y, t)
+	share := (1 + math.Tanh(behind/f.Width)) / 2
+	if f.Fades > 0 && behind > 0 && f.Speed > 0 {
+		share *= math.Exp(-behind / (f.Speed * f.Fades))
+	}
+	return share * f.Step.East, share * f.Step.North
+}
+
+// behind is how far x, y lies behind the line at t, m; negative ahead of it.
+func (f *Front) behind(x, y, t float64) float64 {
+	sin, cos := math.Sincos(f.Toward * (math.Pi / 180))
+	run := f.Speed * (t - f.Passes)
+	x -= f.X
+	y -= f.Y
+	if f.Curve > 0 {
+		return f.Curve + run - math.Hypot(x+f.Curve*sin, y+f.Curve*cos)
+	}
+	return run - (x*sin + y*cos)
+}
+
+// Rise is a wind that comes up, stays and goes. With a speed it travels over
+// the ground from one side: its history at a point is later by the distance
+// from X, Y along Toward. Without a speed it comes up everywhere at once.
+type Rise struct {
+	Wind    quantity.Vector // m/s at full strength
+	History History         // as felt at X, Y; Fades and Holds 0 with Stays
+	Stays   bool            // it never goes again
+	X, Y    float64         // m
+	Toward  float64         // degrees true
+	Speed   float64         // m/s; 0 means everywhere at once
+}
+
+// At is the rise's wind at x, y (m), t seconds after the start.
+func (r *Rise) At(x, y, t float64) (u, v float64) {
+	if r.Speed > 0 {
+		sin, cos := math.Sincos(r.Toward * (math.Pi / 180))
+		t -= ((x-r.X)*sin + (y-r.Y)*cos) / r.Speed
+	}
+	share := r.History.At(t)
+	if r.Stays && t >= r.History.Starts+r.History.Grows {
+		share = 1
+	}
+	return share * r.Wind.East, share * r.Wind.North
+}
+
+// Veer is a slow turn of the mean wind: linear from Starts for Takes seconds.
+type Veer struct {
+	By            float64 // degrees, clockwise positive
+	Starts, Takes float64 // s
+}
+
+// At is how far it has turned at t, degrees.
+func (v Veer) At(t float64) float64 {
+	switch {
+	case t <= v.Starts:
+		return 0
+	case t >= v.Starts+v.Takes:
+		return v.By
+	}
+	return v.By * (t - v.Starts) / v.Takes
+}
