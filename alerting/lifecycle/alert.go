@@ -71,6 +71,18 @@ type Alert struct {
 	PeakAt                        sensors.Instant
 	Used, Missing                 []string // station ids, in configured order
 	Exercise                      bool
+	Memory                        Memory // what the judging of later steps needs besides the above
+}
+
+// Memory is the part of an alert's state that no surface shows. It is kept in
+// the history with the alert, so that an alert read back goes on exactly as it
+// would have gone on without the interruption.
+type Memory struct {
+	// Held is, by level, the last step at which the level was met under the
+	// hysteresis, or at which its ground could not be seen: the hold counts
+	// from there.
+	Held  [4]sensors.Instant
+	Trend TrendMemory
 }
 
 // Transition is one issue of an alert: at opening, at a change worth telling,
