@@ -1,0 +1,286 @@
+package page
+
+import (
+	"encoding/json"
+	"errors"
+	"fmt"
+	"net"
+	"net/http"
+	"net/url"
+	"strconv"
+	"time"
+
+	"github.com/prometheus/client_golang/prometheus/promhttp"
+
+	"sockline/alerting"
+	"sockline/sensors"
+)
+
+// routes is every address there is.
+func (p *Page) routes() *http.ServeMux {
+	mux := http.NewServeMux()
+	mux.HandleFunc("GET /{$}", p.front)
+	mux.HandleFunc("GET /api/v1/now", p.now)
+	mux.HandleFunc("GET /api/v1/events", p.events)
+	mux.HandleFunc("GET /api/v1/events/{id}", p.event)
+	mux.Handle("GET /metrics", promhttp.HandlerFor(p.opts.Registry, promhttp.HandlerOpts{}))
+	mux.HandleFunc("GET /healthz", p.health)
+	mux.HandleFunc("GET /readyz", p.ready)
+	mux.HandleFunc("/", func(w http.ResponseWriter, r *http.Request) {
+		p.problem(w, http.StatusNotFound, "not-found", "There is nothing at this address.",
+			"The addresses are /, /api/v1/now, /api/v1/events, /api/v1/events/{id}, /metrics, /healthz and /readyz.")
+	})
+	return mux
+}
+
+// ServeHTTP sets what every answer carries, and refuses what no address takes.
+func (p *Page) ServeHTTP(w http.ResponseWriter, r *http.Request) {
+	h := w.Header()
+	h.Set("Content-Security-Policy", p.csp)
+	h.Set("X-Content-Type-Options", "nosniff")
+	h.Set("Referrer-Policy", "no-referrer")
+	h.Set("Cross-Origin-Resource-Policy", "same-origin")
+	h.Set("Cache-Control", "no-store")
+	if r.Method != http.MethodGet && r.Method != http.MethodHead {
+		h.Set("Allow", "GET, HEAD")
+		p.problem(w, http.StatusMethodNotAllowed, "read-only", "This can only be read.",
+			"Use GET or HEAD.")
+		return
+	}
+	// A foreign web site may have its own name resolve to this machine, and
+	// then read what a browser here is given. The name gives it away.
+	host := r.Host
+	if name, _, err := net.SplitHostPort(host); err == nil {
+		host = name
+	}
+	if n := len(host); n > 1 && host[0] == '[' && host[n-1] == ']' {
+		host = host[1 : n-1]
+	}
+	if !loopback(host) {
+		p.problem(w, http.StatusMisdirectedRequest, "foreign-host", "This program does not serve that name.",
+			"Ask for 127.0.0.1 or localhost; a reverse proxy must send one of these as Host.")
+		return
+	}
+	p.mux.ServeHTTP(w, r)
+}
+
+// current is the view if it may still be shown, else nil and why not.
+func (p *Page) current() (v *View, why string) {
+	v = p.opts.View()
+	if v == nil {
+		return nil, "Nothing has been worked out since the start."
+	}
+	// Age counts both ways: a clock that was set back must not keep an old
+	// view alive.
+	if age := p.opts.Now().Sub(v.Made); age > MaxAge || age < -MaxAge {
+		return nil, fmt.Sprintf("The last step worked out was that of %s.", v.At.Time().Format(utcSeconds))
+	}
+	return v, ""
+}
+
+const utcSeconds = "2006-01-02 15:04:05 UTC"
+
+// now answers with the whole view.
+func (p *Page) now(w http.ResponseWriter, _ *http.Request) {
+	v, why := p.current()
+	if v == nil {
+		p.problem(w, http.StatusServiceUnavailable, "no-information", "There is no information now.",
+			why+" Read every path as not observed.")
+		return
+	}
+	type body struct {
+		At         string            `json:"at"`
+		ValidUntil string            `json:"valid_until"`
+		Condition  string            `json:"condition"`
+		Status     json.RawMessage   `json:"status"`
+		Paths      []json.RawMessage `json:"paths"`
+		Alerts     []json.RawMessage `json:"alerts"`
+		Stations   []json.RawMessage `json:"stations"`
+		Exercise   bool              `json:"exercise"`
+		Notice     string            `json:"notice"`
+	}
+	b := body{
+		At:         v.At.Time().Format(time.RFC3339),
+		ValidUntil: v.ValidUntil.Time().Format(time.RFC3339),
+		Condition:  string(v.Condition),
+		Status:     v.StatusJSON,
+		Paths:      make([]json.RawMessage, 0, len(v.Paths)),
+		Alerts:     make([]json.RawMessage, 0, len(v.Alerts)),
+		Stations:   make([]json.RawMessage, 0, len(v.Stations)),
+		Exercise:   p.exercise(v),
+		Notice:     alerting.Notice,
+	}
+	for _, x := range v.Paths {
+		b.Paths = append(b.Paths, x.JSON)
+	}
+	for _, x := range v.Alerts {
+		b.Alerts = append(b.Alerts, x.JSON)
+	}
+	for _, x := range v.Stations {
+		b.Stations = append(b.Stations, x.JSON)
+	}
+	p.json(w, http.StatusOK, "application/json", b)
+}
+
+// exercise reports whether what is shown is an exercise: the whole program, or
+// this view.
+func (p *Page) exercise(v *View) bool { return p.opts.Exercise || (v != nil && v.Exercise) }
+
+// The bounds of a list of events.
+const (
+	defaultEvents = 100
+	maxEvents     = 1000
+)
+
+func (p *Page) events(w http.ResponseWriter, r *http.Request) {
+	q, err := eventQuery(r.URL.RawQuery)
+	if err != nil {
+		p.problem(w, http.StatusBadRequest, "bad-query", "The query cannot be understood.", err.Error())
+		return
+	}
+	events, err := p.opts.History.Events(q)
+	if err != nil {
+		p.internal(w, "list events", err)
+		return
+	}
+	if events == nil {
+		events = []json.RawMessage{} // an empty list, not null
+	}
+	p.json(w, http.StatusOK, "application/json", struct {
+		Events   []json.RawMessage `json:"events"`
+		Exercise bool              `json:"exercise"`
+		Notice   string            `json:"notice"`
+	}{events, p.exercise(p.opts.View()), alerting.Notice})
+}
+
+// eventQuery reads a query strictly: a misspelt name must not look like an
+// answer to what was asked.
+func eventQuery(raw string) (EventQuery, error) {
+	q := EventQuery{Limit: defaultEvents}
+	values, err := url.ParseQuery(raw)
+	if err != nil {
+		return q, fmt.Errorf("the query is not well formed: %w", err)
+	}
+	for name, given := range values {
+		if len(given) != 1 {
+			return q, fmt.Errorf("%s is given %d times; give it once", name, len(given))
+		}
+		value := given[0]
+		switch name {
+		case "from", "to":
+			at, err := time.Parse(time.RFC3339, value)
+			if err != nil {
+				return q, fmt.Errorf("%s=%q is not a time; write it as 2026-07-01T14:00:00Z", name, value)
+			}
+			if name == "from" {
+				q.From = sensors.At(at)
+			} else {
+				q.To = sensors.At(at)
+			}
+		case "limit":
+			q.Limit, err = strconv.Atoi(value)
+			if err != nil || q.Limit < 1 || q.Limit > maxEvents {
+				return q, fmt.Errorf("limit=%q is not a whole number from 1 to %d", value, maxEvents)
+			}
+		case "open":
+			if value != "true" {
+				return q, fmt.Errorf("open=%q: write open=true for the open ones, or leave it out", value)
+			}
+			q.Open = true
+		default:
+			return q, fmt.Errorf("there is no parameter %q; there are from, to, limit and open", name)
+		}
+	}
+	if q.From != 0 && q.To != 0 && q.From >= q.To {
+		return q, errors.New("from must be before to")
+	}
+	return q, nil
+}
+
+func (p *Page) event(w http.ResponseWriter, r *http.Request) {
+	id := r.PathValue("id")
+	issues, err := p.opts.History.Event(id)
+	switch {
+	case errors.Is(err, ErrNoEvent):
+		p.problem(w, http.StatusNotFound, "no-event", "There is no event with this id.",
+			"/api/v1/events lists the events that are kept.")
+		return
+	case err != nil:
+		p.internal(w, "read an event", err)
+		return
+	}
+	p.json(w, http.StatusOK, "application/json", struct {
+		ID       string            `json:"id"`
+		Issues   []json.RawMessage `json:"issues"`
+		Exercise bool              `json:"exercise"`
+		Notice   string            `json:"notice"`
+	}{id, issues, p.exercise(p.opts.View()), alerting.Notice})
+}
+
+// health says that the process answers. A mast that is down is no reason to
+// restart the program, so it does not show here.
+func (p *Page) health(w http.ResponseWriter, _ *http.Request) {
+	p.json(w, http.StatusOK, "application/json", p.readiness(nil))
+}
+
+type readiness struct {
+	Ready    bool     `json:"ready"`
+	Reasons  []string `json:"reasons"`
+	Exercise bool     `json:"exercise"`
+	Notice   string   `json:"notice"`
+}
+
+func (p *Page) readiness(reasons []string) readiness {
+	if reasons == nil {
+		reasons = []string{} // an empty list, not null
+	}
+	return readiness{len(reasons) == 0, reasons, p.exercise(p.opts.View()), alerting.Notice}
+}
+
+// ready says whether the program does its work, and why not.
+func (p *Page) ready(w http.ResponseWriter, _ *http.Request) {
+	reasons := append([]string(nil), p.opts.Ready()...)
+	if v, why := p.current(); v == nil {
+		reasons = append(reasons, why)
+	}
+	status := http.StatusOK
+	if len(reasons) > 0 {
+		status = http.StatusServiceUnavailable
+	}
+	p.json(w, status, "application/json", p.readiness(reasons))
+}
+
+// problem answers with an error as RFC 9457 has it. The type is a relative
+// reference: the product has no place on the network of its own.
+func (p *Page) problem(w http.ResponseWriter, status int, code, title, detail string) {
+	p.json(w, status, "application/problem+json", struct {
+		Type     string `json:"type"`
+		Title    string `json:"title"`
+		Status   int    `json:"status"`
+		Detail   string `json:"detail"`
+		Exercise bool   `json:"exercise"`
+		Notice   string `json:"notice"`
+	}{"/problems/" + code, title, status, detail, p.exercise(p.opts.View()), alerting.Notice})
+}
+
+// internal logs what went wrong here and tells the caller no more than that:
+// the details are for the operator.
+func (p *Page) internal(w http.ResponseWriter, attempt string, err error) {
+	p.opts.Log.Error().Err(err).Str("attempt", attempt).Msg("the page could not answer")
+	p.problem(w, http.StatusInternalServerError, "internal", "The program could not answer.",
+		"The reason is in its log.")
+}
+
+func (p *Page) json(w http.ResponseWriter, status int, contentType string, body any) {
+	data, err := json.Marshal(body)
+	if err != nil {
+		// Only a part that is not JSON, given to us as ready-made, comes here.
+		p.opts.Log.Error().Err(err).Msg("the page could not write its answer")
+		status, data = http.StatusInternalServerError, []byte(`{"type":"/problems/internal","status":500}`)
+		contentType = "application/problem+json"
+	}
+	w.Header().Set("Content-Type", contentType)
+	w.WriteHeader(status)
+	// An error here is a client that has gone; there is nobody left to tell.
+	_, _ = w.Write(append(data, '\n'))
+}

@@ -1,0 +1,212 @@
+// Package page takes an immutable view of what the daemon knows, and its
+// history, and serves both over HTTP: one page for people and JSON for
+// programs. It is the last stage on the way out; beside it stands publish.
+//
+// It only reads. It has no users, and therefore serves this machine alone:
+// see CheckListen. A view that is too old is never shown: every value of it
+// becomes "no information".
+package page
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"html/template"
+	"net"
+	"net/http"
+	"time"
+
+	"github.com/prometheus/client_golang/prometheus"
+	"github.com/rs/zerolog"
+
+	"sockline/alerting"
+	"sockline/sensors"
+)
+
+// MaxAge is the age from which a view is no information.
+const MaxAge = 5 * time.Second
+
+// View is what the daemon knows after one step. It is never changed once it
+// is handed over; the next step makes a new one.
+type View struct {
+	Made       time.Time // wall time, by the same clock as Options.Now
+	At         sensors.Instant
+	ValidUntil sensors.Instant
+	Condition  alerting.Condition
+	Remarks    []string // what else to know of the daemon itself, as sentences
+	Exercise   bool
+
+	Ends     []End
+	Paths    []Path
+	Alerts   []Alert // open ones, the worst first
+	Stations []Station
+
+	StatusJSON []byte // the status object
+}
+
+// End is the wind at one runway end.
+type End struct {
+	Runway   string
+	Observed bool
+	Sentence string
+}
+
+// Path is one path.
+type Path struct {
+	Name       string // "landing 07"
+	State      alerting.PathState
+	Sentence   string
+	Unobserved []string // the stretches that are not observed, in words
+	JSON       []byte   // the path object
+}
+
+// Alert is one open alert.
+type Alert struct {
+	ID       string
+	Kind     alerting.Kind
+	Level    alerting.Level
+	Observed bool // false: the sentence tells what was last measured
+	Sentence string
+	JSON     []byte // the alert object
+}
+
+// Station is one mast.
+type Station struct {
+	ID       string
+	State    string // one word: live, stale, starting ...
+	Live     bool
+	Sentence string
+	JSON     []byte // the health object
+}
+
+// EventQuery says which events are wanted. A zero From or To is an open end.
+type EventQuery struct {
+	From, To sensors.Instant // opened at or after From and before To
+	Open     bool            // only those still open
+	Limit    int             // at most so many, the newest
+}
+
+// ErrNoEvent is what History.Event returns for an id it does not know.
+var ErrNoEvent = errors.New("there is no event with this id")
+
+// History is the record of past events, as much of it as the page needs. Its
+// methods are called from many goroutines.
+type History interface {
+	// Events lists events as JSON objects, the newest first.
+	Events(q EventQuery) ([]json.RawMessage, error)
+	// Event is every issue of one event as JSON objects, the oldest first;
+	// ErrNoEvent if the id is unknown.
+	Event(id string) ([]json.RawMessage, error)
+}
+
+// Options says what a Page serves. All fields are required but Ready.
+type Options struct {
+	Airfield string // its name, for people
+	Listen   string // the address it is to be served on; loopback only
+	Exercise bool   // the whole program is an exercise
+	View     func() *View
+	History  History
+	Registry *prometheus.Registry
+	Ready    func() []string  // why the program is not ready; none: it is
+	Now      func() time.Time // wall time
+	Log      zerolog.Logger
+}
+
+// Page is the HTTP handler.
+type Page struct {
+	opts     Options
+	mux      *http.ServeMux
+	csp      string
+	template *template.Template
+}
+
+// New makes a page. It refuses a Listen address that is not on this machine.
+func New(o Options) (*Page, error) {
+	if err := CheckListen(o.Listen); err != nil {
+		return nil, err
+	}
+	if o.View == nil || o.History == nil || o.Registry == nil || o.Now == nil {
+		return nil, errors.New("the page needs View, History, Registry and Now")
+	}
+	if o.Ready == nil {
+		o.Ready = func() []string { return nil }
+	}
+	t, err := parseFront()
+	if err != nil {
+		return nil, err
+	}
+	p := &Page{opts: o, csp: contentSecurityPolicy(), template: t}
+	p.mux = p.routes()
+	return p, nil
+}
+
+// CheckListen refuses an address that others than this machine could reach:
+// there are no users yet, so nobody could be told apart.
+func CheckListen(address string) error {
+	host, _, err := net.SplitHostPort(address)
+	if err != nil {
+		return fmt.Errorf("page address %q: %w; use 127.0.0.1:7625", address, err)
+	}
+	if !loopback(host) {
+		return fmt.Errorf("page address %q can be reached from other machines, and the page has neither "+
+			"users nor encryption; use 127.0.0.1:<port>, and a reverse proxy with both in front of it", address)
+	}
+	return nil
+}
+
+// loopback reports whether a host is this machine by its very spelling. Other
+// names are not resolved: what they stand for may change.
+func loopback(host string) bool {
+	if host == "localhost" {
+		return true
+	}
+	ip := net.ParseIP(host)
+	return ip != nil && ip.IsLoopback()
+}
+
+// Limits of the server. A client that does not read is cut off, and never
+// holds up anything but itself.
+const (
+	headerWithin   = 5 * time.Second
+	readWithin     = 10 * time.Second
+	writeWithin    = 15 * time.Second
+	idleWithin     = time.Minute
+	headerBytes    = 16 << 10
+	shutdownWithin = 2 * time.Second
+)
+
+// Serve answers on a listener until ctx is done. It refuses a listener that
+// is not on this machine.
+func (p *Page) Serve(ctx context.Context, l net.Listener) error {
+	if err := CheckListen(l.Addr().String()); err != nil {
+		return errors.Join(err, l.Close())
+	}
+	server := &http.Server{
+		Handler:           p,
+		ReadHeaderTimeout: headerWithin,
+		ReadTimeout:       readWithin,
+		WriteTimeout:      writeWithin,
+		IdleTimeout:       idleWithin,
+		MaxHeaderBytes:    headerBytes,
+	}
+	ended := make(chan error, 1)
+	go func() { ended <- server.Serve(l) }()
+	select {
+	case err := <-ended:
+		return fmt.Errorf("serve the page on %s: %w", l.Addr(), err)
+	case <-ctx.Done():
+	}
+	// The parent is done already, so the time to end is counted anew.
+	limit, cancel := context.WithTimeout(context.WithoutCancel(ctx), shutdownWithin)
+	defer cancel()
+	err := server.Shutdown(limit)
+	if errors.Is(err, context.DeadlineExceeded) {
+		err = server.Close() // somebody does not read; nothing of value is cut
+	}
+	<-ended
+	if err != nil {
+		return fmt.Errorf("end the page on %s: %w", l.Addr(), err)
+	}
+	return nil
+}
