@@ -132,8 +132,8 @@ func TestFactors(t *testing.T) {
 func TestComponents(t *testing.T) {
 	// Worked by hand: sine and cosine of 30 and 40 degrees times the speed.
 	for _, row := range []struct {
-		name                string
-		from, kt, bearing   float64
+		name                 string
+		from, kt, bearing    float64
 		head, crossFromRight float64
 	}{
 		{"30 degrees off to the right", 210, 20, 180, 17.321, 10.000},

@@ -1,0 +1,471 @@
+package decode
+
+import (
+	"bytes"
+	"math"
+	"math/bits"
+
+	"sockline/sensors"
+	"sockline/sensors/quantity"
+)
+
+// SenML JSON, RFC 8428 (C. Jennings, Z. Shelby, J. Arkko, A. Keranen, C.
+// Bormann, "Sensor Measurement Lists (SenML)", 2018), section numbers from
+// memory.
+const (
+	senMLVersion = 10 // section 4.4
+
+	// relativeLimit: a time below 2^28 s counts from now (section 4.5.3). It
+	// is 4 July 1978 as a Unix time, so no measurement is mistaken.
+	relativeLimit = 1 << 28
+)
+
+// The fields of a record, section 4.
+const (
+	fieldBaseName = iota
+	fieldBaseTime
+	fieldBaseUnit
+	fieldBaseValue
+	fieldBaseSum
+	fieldVersion
+	fieldName
+	fieldUnit
+	fieldValue
+	fieldString
+	fieldBoolean
+	fieldData
+	fieldSum
+	fieldTime
+	fieldUpdate
+	fieldCount
+
+	valueFields = 1<<fieldValue | 1<<fieldString | 1<<fieldBoolean | 1<<fieldData
+)
+
+// fieldOf is the field that a key names, and the kind that its value must be.
+func fieldOf(key []byte) (field int, want kind, ok bool) {
+	switch string(key) {
+	case "bn":
+		return fieldBaseName, text, true
+	case "bt":
+		return fieldBaseTime, numeric, true
+	case "bu":
+		return fieldBaseUnit, text, true
+	case "bv":
+		return fieldBaseValue, numeric, true
+	case "bs":
+		return fieldBaseSum, numeric, true
+	case "bver":
+		return fieldVersion, numeric, true
+	case "n":
+		return fieldName, text, true
+	case "u":
+		return fieldUnit, text, true
+	case "v":
+		return fieldValue, numeric, true
+	case "vs":
+		return fieldString, text, true
+	case "vb":
+		return fieldBoolean, boolean, true
+	case "vd":
+		return fieldData, text, true
+	case "s":
+		return fieldSum, numeric, true
+	case "t":
+		return fieldTime, numeric, true
+	case "ut":
+		return fieldUpdate, numeric, true
+	}
+	return 0, absent, false
+}
+
+// pack is the state of a walk through a SenML pack: the base fields in force.
+type pack struct {
+	scan      scanner
+	count     int // records begun
+	name      []byte
+	unit      []byte
+	time      float64
+	value     float64
+	sum       float64
+	version   float64
+	fields    [fieldCount]token // of the record at hand, where present says so
+	present   uint32            // bit set of fields
+	unitSpace []byte            // room for an escaped unit
+}
+
+// record is a resolved record (section 4.6): the base fields are applied and
+// gone. Its slices are good until the next one.
+type record struct {
+	name   []byte
+	unit   []byte
+	time   float64 // s, relative to now when below relativeLimit
+	value  token   // numeric, boolean or text; absent if there is only a sum, or nothing
+	sum    token
+	update token
+}
+
+// senML decodes a pack.
+func (d *Decoder) senML(dst []sensors.Reading, m sensors.Message, variationDeg float64) (readings []sensors.Reading, exercise bool) {
+	d.groups = d.groups[:0]
+	if !d.records(m.Payload, func(p *pack, r record) {
+		if d.collect(p, r, m.Received) {
+			exercise = true
+		}
+	}) {
+		return dst, false
+	}
+	for i := range d.groups {
+		if w, ok := d.joined(&d.groups[i]); ok {
+			if r, ok := d.reading(w, m, variationDeg); ok {
+				dst = append(dst, r)
+			}
+		}
+	}
+	return dst, exercise
+}
+
+// records walks a pack and hands out its resolved records. It returns false if
+// the pack must be refused: one broken record spoils it, since what else it
+// says cannot be known.
+func (d *Decoder) records(payload []byte, each func(*pack, record)) bool {
+	p := &d.pack
+	p.begin(payload)
+	d.names = d.names[:0]
+	if !p.scan.accept('[') {
+		if p.scan.end() {
+			d.refuse(Malformed, "the payload is empty; an array of SenML records is expected")
+		} else {
+			d.refuse(Malformed, "a SenML pack is an array of records; it begins with %s", excerpt(payload[p.scan.pos:]))
+		}
+		return false
+	}
+	for more := !p.scan.accept(']'); more; {
+		r, ok := d.record(p)
+		if !ok {
+			return false
+		}
+		each(p, r)
+		switch {
+		case p.scan.accept(','):
+		case p.scan.accept(']'):
+			more = false
+		default:
+			d.notJSON(&p.scan)
+			return false
+		}
+	}
+	if !p.scan.end() {
+		d.notJSON(&p.scan)
+		return false
+	}
+	return true
+}
+
+// begin starts a walk with nothing in force.
+func (p *pack) begin(data []byte) {
+	p.scan = scanner{data: data}
+	p.count = 0
+	p.name, p.unit = p.name[:0], p.unit[:0]
+	p.time, p.value, p.sum, p.version = 0, 0, 0, senMLVersion
+}
+
+// record reads and resolves the next record. ok is false if the whole pack
+// must be refused, which is then on record.
+func (d *Decoder) record(p *pack) (r record, ok bool) {
+	p.count++
+	if !d.fields(p) {
+		return r, false
+	}
+	if p.has(fieldVersion) {
+		version := p.fields[fieldVersion].number
+		if version > senMLVersion || version < 1 || version != math.Trunc(version) {
+			d.refuse(NotUnderstood, "record %d: version %v; versions 1 to %d are understood", p.count, version, senMLVersion)
+			return r, false
+		}
+		if p.count > 1 && version != p.version {
+			d.refuse(Contradiction, "record %d: version %v after version %v in one pack", p.count, version, p.version)
+			return r, false
+		}
+		p.version = version
+	}
+	d.bases(p)
+	return d.resolve(p)
+}
+
+// has reports whether the record at hand holds the field.
+func (p *pack) has(field int) bool { return p.present&(1<<field) != 0 }
+
+// fields scans the object of the record at hand.
+func (d *Decoder) fields(p *pack) bool {
+	p.present = 0
+	if !p.scan.accept('{') {
+		d.refuse(Malformed, "record %d is not an object: %s", p.count, excerpt(p.scan.data[p.scan.pos:]))
+		return false
+	}
+	if p.scan.accept('}') {
+		return true
+	}
+	for {
+		key, ok := p.scan.key()
+		if !ok {
+			d.notJSON(&p.scan)
+			return false
+		}
+		value, ok := p.scan.value(2)
+		if !ok {
+			d.notJSON(&p.scan)
+			return false
+		}
+		var label []byte
+		label, d.text = p.scan.raw(key, d.text)
+		if field, want, known := fieldOf(label); known {
+			if !d.field(p, label, field, want, value) {
+				return false
+			}
+		} else if len(label) > 0 && label[len(label)-1] == '_' {
+			// Section 4.4: such a field changes the meaning of the rest.
+			d.refuse(NotUnderstood, "record %d: field %s must be understood and is not known", p.count, excerpt(label))
+			return false
+		}
+		switch {
+		case p.scan.accept('}'):
+			if values := bits.OnesCount32(p.present & valueFields); values > 1 {
+				d.refuse(Contradiction, "record %d has %d values; a record has one", p.count, values)
+				return false
+			}
+			return true
+		case !p.scan.accept(','):
+			d.notJSON(&p.scan)
+			return false
+		}
+	}
+}
+
+// field checks the kind of a field and keeps it. Where a key is repeated the
+// last one counts.
+func (d *Decoder) field(p *pack, label []byte, field int, want kind, value token) bool {
+	switch {
+	case value.kind != want:
+		d.refuse(Malformed, "record %d: %s is %s; %s is expected", p.count, excerpt(label), value.kind, want)
+		return false
+	case want == numeric && math.IsInf(value.number, 0):
+		d.refuse(NotFinite, "record %d: %s is too large a number", p.count, excerpt(label))
+		return false
+	}
+	p.fields[field] = value
+	p.present |= 1 << field
+	return true
+}
+
+// bases takes the base fields of the record at hand into force.
+func (d *Decoder) bases(p *pack) {
+	var b []byte
+	if p.has(fieldBaseName) {
+		b, d.text = p.scan.raw(p.fields[fieldBaseName], d.text)
+		p.name = append(p.name[:0], b...)
+	}
+	if p.has(fieldBaseUnit) {
+		b, d.text = p.scan.raw(p.fields[fieldBaseUnit], d.text)
+		p.unit = append(p.unit[:0], b...)
+	}
+	if p.has(fieldBaseTime) {
+		p.time = p.fields[fieldBaseTime].number
+	}
+	if p.has(fieldBaseValue) {
+		p.value = p.fields[fieldBaseValue].number
+	}
+	if p.has(fieldBaseSum) {
+		p.sum = p.fields[fieldBaseSum].number
+	}
+}
+
+// resolve applies the base fields. A record that holds base fields only comes
+// out without a name.
+func (d *Decoder) resolve(p *pack) (r record, ok bool) {
+	if p.present&(valueFields|1<<fieldName|1<<fieldSum) == 0 {
+		return r, true
+	}
+	start := len(d.names)
+	d.names = append(d.names, p.name...)
+	if p.has(fieldName) {
+		var b []byte
+		b, d.text = p.scan.raw(p.fields[fieldName], d.text)
+		d.names = append(d.names, b...)
+	}
+	r.name = d.names[start:]
+	if !validName(r.name) {
+		d.refuse(Malformed, "record %d: %s is not a SenML name: letters, digits and - : . / _, a letter or digit first",
+			p.count, excerpt(r.name))
+		return r, false
+	}
+	r.unit = p.unit
+	if p.has(fieldUnit) {
+		r.unit, p.unitSpace = p.scan.raw(p.fields[fieldUnit], p.unitSpace)
+	}
+	r.time = p.time
+	if p.has(fieldTime) {
+		r.time += p.fields[fieldTime].number
+	}
+	for _, field := range [...]int{fieldValue, fieldString, fieldBoolean, fieldData} {
+		if p.has(field) {
+			r.value = p.fields[field]
+		}
+	}
+	if r.value.kind == numeric {
+		r.value.number += p.value
+	}
+	if p.has(fieldSum) {
+		r.sum = p.fields[fieldSum]
+		r.sum.number += p.sum
+	}
+	if p.has(fieldUpdate) {
+		r.update = p.fields[fieldUpdate]
+	}
+	return r, true
+}
+
+// validName checks the characters of section 4.5.1. Square brackets are taken
+// as well, since names are made from addresses of IPv6 hosts.
+func validName(name []byte) bool {
+	if len(name) == 0 || !isAlphanumeric(name[0]) {
+		return false
+	}
+	for _, c := range name {
+		switch {
+		case isAlphanumeric(c):
+		case c == '-', c == ':', c == '.', c == '/', c == '_', c == '[', c == ']':
+		default:
+			return false
+		}
+	}
+	return true
+}
+
+func isAlphanumeric(c byte) bool {
+	return isDigit(c) || 'a' <= c|0x20 && c|0x20 <= 'z'
+}
+
+// The roles of records that make a wind, by the ending of their names.
+const (
+	roleSpeed = iota
+	roleDirection
+	roleGust
+	roleCount
+)
+
+// roleOf finds the role of a name and what stands before its ending.
+func roleOf(name []byte) (role int, prefix []byte, ok bool) {
+	for role, ending := range [roleCount]string{"wind_speed", "wind_direction", "wind_gust"} {
+		if cut := len(name) - len(ending); cut >= 0 && string(name[cut:]) == ending {
+			return role, name[:cut], true
+		}
+	}
+	return 0, nil, false
+}
+
+// group is the records of one prefix and time.
+type group struct {
+	at     sensors.Instant
+	prefix []byte // in Decoder.names, or in an earlier array of it
+	value  [roleCount]float64
+	has    [roleCount]bool
+	bad    bool // speed or direction was refused: no reading, and no second complaint
+	place  int  // of its first record, from 1
+}
+
+// collect puts a record into its group. It reports whether the record marks
+// the pack as synthetic.
+func (d *Decoder) collect(p *pack, r record, received sensors.Instant) (exercise bool) {
+	start := len(d.names) - len(r.name)
+	role, prefix, ok := roleOf(r.name)
+	if !ok {
+		exercise := bytes.HasSuffix(r.name, []byte("exercise"))
+		d.names = d.names[:start]
+		// Whatever is not plainly false marks: better an exercise that was
+		// meant to be real than the reverse.
+		return exercise && !(r.value.kind == boolean && !r.value.truth)
+	}
+	at, ok := instantOf(r.time, received)
+	if !ok {
+		d.names = d.names[:start]
+		d.refuse(BadTime, "record %d: time %v is not between 1970 and 9999", p.count, r.time)
+		return false
+	}
+	g := d.group(at, prefix, start, p.count)
+	value, ok := d.quantity(p, r, role)
+	switch {
+	case !ok:
+		g.bad = g.bad || role != roleGust // a reading without its gust is still a reading
+	case g.has[role] && g.value[role] != value:
+		d.refuse(Contradiction, "record %d: a second, different value of %s for the same time", p.count, excerpt(r.name))
+		g.bad = true
+	default:
+		g.has[role], g.value[role] = true, value
+	}
+	return false
+}
+
+// group finds or adds a group. Packs are written in order, so that the search
+// from the back ends at once.
+func (d *Decoder) group(at sensors.Instant, prefix []byte, start, place int) *group {
+	for i := len(d.groups) - 1; i >= 0; i-- {
+		if g := &d.groups[i]; g.at == at && bytes.Equal(g.prefix, prefix) {
+			d.names = d.names[:start] // the name is not needed a second time
+			return g
+		}
+	}
+	d.groups = append(d.groups, group{at: at, prefix: prefix, place: place})
+	return &d.groups[len(d.groups)-1]
+}
+
+// quantity checks the value and unit of a record and turns it into SI. What is
+// wrong with it is then on record.
+func (d *Decoder) quantity(p *pack, r record, role int) (float64, bool) {
+	switch r.value.kind {
+	case numeric:
+	case absent:
+		d.refuse(NoValue, "record %d: %s has no value", p.count, excerpt(r.name))
+		return 0, false
+	default:
+		d.refuse(Malformed, "record %d: %s is %s; a number is expected", p.count, excerpt(r.name), r.value.kind)
+		return 0, false
+	}
+	if role == roleDirection {
+		factor, ok := quantity.AngleUnit(string(r.unit))
+		if !ok {
+			d.refuse(Units, "record %d: unit %s of %s; expected \"deg\" or \"rad\"", p.count, excerpt(r.unit), excerpt(r.name))
+			return 0, false
+		}
+		return d.direction(r.value.number, factor)
+	}
+	factor, ok := quantity.SpeedUnit(string(r.unit))
+	if !ok {
+		d.refuse(Units, "record %d: unit %s of %s; expected \"m/s\", \"km/h\", \"kt\", \"mph\" or \"ft/s\"",
+			p.count, excerpt(r.unit), excerpt(r.name))
+		return 0, false
+	}
+	label := "speed"
+	if role == roleGust {
+		label = "gust"
+	}
+	return d.speed(label, r.value.number, factor)
+}
+
+// joined makes a wind of a group that holds a speed and a direction.
+func (d *Decoder) joined(g *group) (w wind, ok bool) {
+	if g.bad {
+		return w, false
+	}
+	if !g.has[roleSpeed] || !g.has[roleDirection] {
+		d.refuse(Incomplete, "record %d: %swind_... at %s lacks its speed or its direction", g.place, g.prefix, g.at)
+		return w, false
+	}
+	return wind{
+		at:        g.at,
+		speed:     g.value[roleSpeed],
+		direction: g.value[roleDirection],
+		gust:      g.value[roleGust],
+		hasGust:   g.has[roleGust],
+	}, true
+}
