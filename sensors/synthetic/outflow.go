@@ -60,9 +60,6 @@ type Outflow struct {
 // plateau and a linear fading, in seconds from the start of the scene.
 type History struct{ Starts, Grows, Holds, Fades float64 }
 
-// ends is when nothing is left, s.
-func (h History) ends() float64 { return h.Starts + h.Grows + h.Holds + h.Fades }
-
 // At is the share of full strength at t, from 0 to 1.
 func (h History) At(t float64) float64 {
 	t -= h.Starts

@@ -47,13 +47,13 @@ func (f *Front) behind(x, y, t float64) float64 {
 	return run - (x*sin + y*cos)
 }
 
-// Rise is a wind that comes up, stays and goes. With a speed it travels over
-// the ground from one side: its history at a point is later by the distance
-// from X, Y along Toward. Without a speed it comes up everywhere at once.
+// Rise is a wind that comes up, stays and goes. With a speed it comes from one
+// side: its growth at a point is later by the distance from X, Y along Toward.
+// Without a speed it comes up everywhere at once. It goes everywhere at once.
 type Rise struct {
 	Wind    quantity.Vector // m/s at full strength
-	History History         // as felt at X, Y; Fades and Holds 0 with Stays
-	Stays   bool            // it never goes again
+	History History         // as felt at X, Y
+	Stays   bool            // it never goes again; Holds and Fades say nothing
 	X, Y    float64         // m
 	Toward  float64         // degrees true
 	Speed   float64         // m/s; 0 means everywhere at once
@@ -61,15 +61,26 @@ type Rise struct {
 
 // At is the rise's wind at x, y (m), t seconds after the start.
 func (r *Rise) At(x, y, t float64) (u, v float64) {
+	delay := 0.0
 	if r.Speed > 0 {
 		sin, cos := math.Sincos(r.Toward * (math.Pi / 180))
-		t -= ((x-r.X)*sin + (y-r.Y)*cos) / r.Speed
+		delay = ((x-r.X)*sin + (y-r.Y)*cos) / r.Speed
 	}
-	share := r.History.At(t)
-	if r.Stays && t >= r.History.Starts+r.History.Grows {
-		share = 1
+	h := r.History
+	share := History{Starts: h.Starts, Grows: h.Grows, Holds: math.Inf(1)}.At(t - delay)
+	if !r.Stays {
+		share = min(share, r.going(t))
 	}
 	return share * r.Wind.East, share * r.Wind.North
+}
+
+// going is what is left of the rise at t while it goes, 1 before.
+func (r *Rise) going(t float64) float64 {
+	begin := r.History.Starts + r.History.Grows + r.History.Holds
+	if t <= begin {
+		return 1
+	}
+	return r.History.At(t)
 }
 
 // Veer is a slow turn of the mean wind: linear from Starts for Takes seconds.

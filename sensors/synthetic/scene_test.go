@@ -1,0 +1,174 @@
+package synthetic
+
+import (
+	"fmt"
+	"math"
+	"os"
+	"path/filepath"
+	"strings"
+	"testing"
+
+	"sockline/sensors"
+	"sockline/sensors/quantity"
+)
+
+// ground is the geometry of Skerry Moor on a plane. The positions are those of
+// testdata/airfields/skerrymoor.toml; metres per degree at 54 N on WGS-84:
+// 111312.3 north, 65577.8 east (Vincenty's series for the meridian and the
+// parallel); the plane is within 2 m of the tangent plane here.
+type ground struct {
+	masts      map[string][2]float64
+	thresholds map[string][2]float64
+	bearings   map[string]float64
+}
+
+func onPlane(latitude, longitude float64) [2]float64 {
+	return [2]float64{(longitude + 20) * 65577.8, (latitude - 54) * 111312.3}
+}
+
+func skerryMoor() *ground {
+	g := &ground{
+		masts: map[string][2]float64{
+			"touch07":   onPlane(53.998763, -20.008477),
+			"touch25":   onPlane(54.003174, -19.993126),
+			"mid-north": onPlane(54.010094, -20.008358),
+			"mid-south": onPlane(53.990707, -19.991291),
+			"final07":   onPlane(53.989422, -20.033655),
+			"final25":   onPlane(54.010210, -19.966880),
+			"far07":     onPlane(53.984933, -20.057929),
+			"far25":     onPlane(54.015790, -19.940105),
+		},
+		thresholds: map[string][2]float64{
+			"07": onPlane(53.997479, -20.008771),
+			"25": onPlane(54.002520, -19.991228),
+		},
+	}
+	a, b := g.thresholds["07"], g.thresholds["25"]
+	bearing := math.Atan2(b[0]-a[0], b[1]-a[1]) * 180 / math.Pi
+	g.bearings = map[string]float64{"07": bearing, "25": bearing + 180}
+	return g
+}
+
+func (g *ground) Along(runway string, before, offset float64) (x, y float64, err error) {
+	threshold, ok := g.thresholds[runway]
+	if !ok {
+		return 0, 0, fmt.Errorf("there is no runway end %q", runway)
+	}
+	sin, cos := math.Sincos(g.bearings[runway] * math.Pi / 180)
+	return threshold[0] - before*sin + offset*cos, threshold[1] - before*cos - offset*sin, nil
+}
+
+func (g *ground) Station(id string) (x, y float64, ok bool) {
+	p, ok := g.masts[id]
+	return p[0], p[1], ok
+}
+
+// stations are the eight masts in the order of the airfield's file.
+func (g *ground) stations() []StationSpec {
+	var specs []StationSpec
+	for _, id := range []string{"touch07", "touch25", "mid-north", "mid-south", "final07", "final25", "far07", "far25"} {
+		specs = append(specs, StationSpec{
+			X: g.masts[id][0], Y: g.masts[id][1],
+			Station: sensors.Station{
+				ID: id, Height: 10, Format: sensors.FormatSenMLJSON,
+				Topic: "airfield/skerrymoor/station/" + id + "/wind",
+			},
+		})
+	}
+	return specs
+}
+
+func loadScene(t testing.TB, name string) *Scene {
+	t.Helper()
+	file := filepath.Join("../../testdata/scenes", name+".scene")
+	source, err := os.ReadFile(file)
+	if err != nil {
+		t.Fatal(err)
+	}
+	scene, err := Parse(file, source, skerryMoor())
+	if err != nil {
+		t.Fatal(err)
+	}
+	return scene
+}
+
+func sceneNames(t testing.TB) []string {
+	t.Helper()
+	files, err := filepath.Glob("../../testdata/scenes/*.scene")
+	if err != nil || len(files) < 12 {
+		t.Fatalf("found %d scenes (%v), want at least 12", len(files), err)
+	}
+	for i, f := range files {
+		files[i] = strings.TrimSuffix(filepath.Base(f), ".scene")
+	}
+	return files
+}
+
+// trueChange is the greatest true loss and gain (kt) of a landing on runway
+// between two points at most 4 km apart from 4000 m before the threshold to
+// 1250 m beyond it, at t: a plain search, 50 m apart.
+func trueChange(g *ground, w *Weather, runway string, t float64) (loss, gain float64) {
+	const step, begin, end = 50.0, 4000.0, -1250.0
+	var headwind []float64
+	for s := begin; s >= end; s -= step {
+		x, y, err := g.Along(runway, s, 0)
+		if err != nil {
+			return math.NaN(), math.NaN()
+		}
+		u, v := w.Wind(x, y, 10, t)
+		headwind = append(headwind, quantity.Vector{East: u, North: v}.Headwind(g.bearings[runway]))
+	}
+	for i := range headwind {
+		for j := i + 1; j < len(headwind) && float64(j-i)*step <= 4000; j++ {
+			loss = max(loss, headwind[i]-headwind[j])
+			gain = max(gain, headwind[j]-headwind[i])
+		}
+	}
+	return quantity.Knots(loss), quantity.Knots(gain)
+}
+
+// Each scene's wind must deserve what the scene expects: an alert's level is
+// truly reached before it is due, and where there is to be none it is truly
+// not reached (levels 10, 15 kt, and 17.25 kt: 23 % of 75 kt).
+func TestScenesDeserveTheirExpectations(t *testing.T) {
+	threshold := map[string]float64{"": 10, "noticeable": 10, "large": 15, "beyond-margin": 17.25}
+	g := skerryMoor()
+	for _, name := range sceneNames(t) {
+		t.Run(name, func(t *testing.T) {
+			scene := loadScene(t, name)
+			weather := scene.Weather()
+			if len(scene.Expectations) == 0 {
+				t.Fatal("it expects nothing")
+			}
+			for _, e := range scene.Expectations {
+				if e.Operation == "take-off" || (e.Kind != ExpectAlert && e.Kind != ExpectNoAlert) {
+					continue
+				}
+				runways := []string{e.Runway}
+				if e.Runway == "" {
+					runways = []string{"07", "25"}
+				}
+				most := 0.0
+				for _, runway := range runways {
+					for s := e.Span.From; s < min(e.Span.To, scene.Length.Seconds()); s += 2 {
+						loss, gain := trueChange(g, weather, runway, s)
+						if e.AlertKind != "headwind-gain" {
+							most = max(most, loss)
+						}
+						if e.AlertKind != "headwind-loss" {
+							most = max(most, gain)
+						}
+					}
+				}
+				level := threshold[e.Level]
+				if e.Kind == ExpectAlert && most < level*1.15 {
+					t.Errorf("line %d expects an alert, the true change is %.1f kt against %g", e.Line, most, level)
+				}
+				if e.Kind == ExpectNoAlert && most >= level {
+					t.Errorf("line %d expects no alert, the true change is %.1f kt against %g", e.Line, most, level)
+				}
+				t.Logf("line %d: %s %s %s, true change %.1f kt", e.Line, e.Kind, e.AlertKind, e.Level, most)
+			}
+		})
+	}
+}
