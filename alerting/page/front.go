@@ -8,6 +8,7 @@ import (
 	"fmt"
 	"html/template"
 	"net/http"
+	"strings"
 	"time"
 
 	"sockline/alerting"
@@ -164,7 +165,8 @@ func conditionWords(c alerting.Condition) (word, mark, meaning string) {
 // alertWords is what an alert looks like: fall and rise are told apart by word
 // and colour, the level by word and by the weight of the border.
 func alertWords(a Alert) frontAlert {
-	f := frontAlert{Class: "fall", Word: "Headwind falls", Level: int(a.Level), Name: a.Level.String(),
+	f := frontAlert{Class: "fall", Word: "Headwind falls", Level: int(a.Level),
+		Name:     strings.ReplaceAll(a.Level.String(), "-", " "),
 		Observed: a.Observed, Sentence: a.Sentence}
 	if a.Kind == alerting.HeadwindGain {
 		f.Class, f.Word = "rise", "Headwind rises"

@@ -1,0 +1,505 @@
+package page
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io"
+	"net"
+	"net/http"
+	"net/http/httptest"
+	"strings"
+	"testing"
+	"time"
+
+	"github.com/prometheus/client_golang/prometheus"
+	"github.com/prometheus/client_golang/prometheus/testutil/promlint"
+	"github.com/rs/zerolog"
+
+	"sockline/alerting"
+	"sockline/sensors"
+)
+
+// noon is the moment at which every test takes place.
+var noon = time.Date(2026, 7, 1, 14, 15, 41, 0, time.UTC)
+
+// events is a History in memory.
+type events struct {
+	asked EventQuery
+	list  []json.RawMessage
+	known map[string][]json.RawMessage
+	err   error
+}
+
+func (e *events) Events(q EventQuery) ([]json.RawMessage, error) { e.asked = q; return e.list, e.err }
+
+func (e *events) Event(id string) ([]json.RawMessage, error) {
+	if e.err != nil {
+		return nil, e.err
+	}
+	if issues, ok := e.known[id]; ok {
+		return issues, nil
+	}
+	return nil, ErrNoEvent
+}
+
+// sample is a view with everything in it, made age before noon.
+func sample(age time.Duration) *View {
+	at := sensors.At(noon.Add(-age))
+	return &View{
+		Made: noon.Add(-age), At: at, ValidUntil: at + 5*sensors.Second,
+		Condition: alerting.PartlyObserving,
+		Remarks:   []string{"The history is not being recorded: the disk is full."},
+		Ends: []End{
+			{"07", true, "From 240 degrees magnetic with 14 kt, gusting 21 kt; headwind 3 kt, crosswind 13 kt from the right."},
+			{"25", false, "Not observed."},
+		},
+		Paths: []Path{
+			{"landing 07", alerting.Raised, "One alert is open.", []string{"5.0 to 4.0 km before the threshold"}, []byte(`{"runway":"07","state":"raised"}`)},
+			{"take-off 07", alerting.BelowLimits, "Rises by about 6 kt, within limits.", []string{"4.0 to 5.0 km beyond the far end"}, []byte(`{"runway":"07","state":"below-limits"}`)},
+			{"landing 25", alerting.NotObserved, "Two masts are silent.", []string{"5.0 to 0.6 km before the threshold"}, []byte(`{"runway":"25","state":"not-observed"}`)},
+			{"take-off 25", alerting.BelowLimits, "Falls by about 4 kt, within limits.", nil, []byte(`{"runway":"25","state":"below-limits"}`)},
+		},
+		Alerts: []Alert{
+			{"a1", alerting.HeadwindLoss, alerting.BeyondMargin, true, "The headwind falls by about 28 kt (22 to 34) on the way down to runway 07, between 2.9 and 1.2 km before the threshold, at mast height; growing. Level 3 of 3: more than the stall margin of the slowest aircraft here.", []byte(`{"id":"a1"}`)},
+			{"a2", alerting.HeadwindGain, alerting.Noticeable, false, "The headwind rises by about 12 kt (9 to 15) after take-off from runway 25. Not observed now: last measured at 14:14:02 UTC.", []byte(`{"id":"a2"}`)},
+		},
+		Stations: []Station{
+			{"touch07", "live", true, "0.4 s old", []byte(`{"id":"touch07"}`)},
+			{"far07", "stale", false, "last heard 14:12:09 UTC", []byte(`{"id":"far07"}`)},
+			{"final07", "live", true, "0.6 s old", []byte(`{"id":"final07"}`)},
+		},
+		StatusJSON: []byte(`{"condition":"partly-observing"}`),
+	}
+}
+
+// serve makes a page over a view and a history.
+func serve(t *testing.T, v *View, change func(*Options)) (*Page, *strings.Builder) {
+	t.Helper()
+	var log strings.Builder
+	o := Options{
+		Airfield: "Skerry Moor", Listen: "127.0.0.1:0", View: func() *View { return v }, History: &events{},
+		Registry: prometheus.NewRegistry(), Now: func() time.Time { return noon }, Log: zerolog.New(&log),
+	}
+	if change != nil {
+		change(&o)
+	}
+	p, err := New(o)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return p, &log
+}
+
+func get(p *Page, target string) *http.Response {
+	r := httptest.NewRequest(http.MethodGet, "http://127.0.0.1:7625"+target, nil)
+	w := httptest.NewRecorder()
+	p.ServeHTTP(w, r)
+	return w.Result()
+}
+
+func text(t *testing.T, r *http.Response) string {
+	t.Helper()
+	b, err := io.ReadAll(r.Body)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return string(b)
+}
+
+// object reads an answer that must be a JSON object with the notice and the
+// exercise flag in it.
+func object(t *testing.T, r *http.Response) map[string]any {
+	t.Helper()
+	body := text(t, r)
+	var m map[string]any
+	if err := json.Unmarshal([]byte(body), &m); err != nil {
+		t.Fatalf("not a JSON object: %v\n%s", err, body)
+	}
+	if m["notice"] != alerting.Notice {
+		t.Errorf("the notice is missing in %s", body)
+	}
+	if _, ok := m["exercise"].(bool); !ok {
+		t.Errorf("the exercise flag is missing in %s", body)
+	}
+	return m
+}
+
+func TestNow(t *testing.T) {
+	p, _ := serve(t, sample(time.Second), nil)
+	r := get(p, "/api/v1/now")
+	if r.StatusCode != http.StatusOK || r.Header.Get("Content-Type") != "application/json" {
+		t.Fatalf("answer %d, %s", r.StatusCode, r.Header.Get("Content-Type"))
+	}
+	m := object(t, r)
+	want := map[string]string{
+		"at": "2026-07-01T14:15:40Z", "valid_until": "2026-07-01T14:15:45Z", "condition": "partly-observing",
+		"status":   "map[condition:partly-observing]",
+		"alerts":   "[map[id:a1] map[id:a2]]",
+		"stations": "[map[id:touch07] map[id:far07] map[id:final07]]",
+		"exercise": "false",
+	}
+	for key, value := range want {
+		if got := fmt.Sprint(m[key]); got != value {
+			t.Errorf("%s is %s, want %s", key, got, value)
+		}
+	}
+	if n := len(m["paths"].([]any)); n != 4 {
+		t.Errorf("%d paths, want 4", n)
+	}
+}
+
+// TestOldViewsAreNoInformation holds the rule that nothing stale is ever
+// shown: neither to programs nor to people.
+func TestOldViewsAreNoInformation(t *testing.T) {
+	tests := []struct {
+		name  string
+		view  *View
+		known bool
+	}{
+		{"fresh", sample(0), true},
+		{"just young enough", sample(MaxAge), true},
+		{"too old", sample(MaxAge + time.Millisecond), false},
+		{"made in the future: the clock was set back", sample(-time.Hour), false},
+		{"none yet", nil, false},
+	}
+	for _, tt := range tests {
+		t.Run(tt.name, func(t *testing.T) {
+			p, _ := serve(t, tt.view, nil)
+			status := http.StatusOK
+			if !tt.known {
+				status = http.StatusServiceUnavailable
+			}
+			for _, address := range []string{"/api/v1/now", "/readyz"} {
+				r := get(p, address)
+				object(t, r)
+				if r.StatusCode != status {
+					t.Errorf("%s answers %d, want %d", address, r.StatusCode, status)
+				}
+			}
+			html := text(t, get(p, "/"))
+			if !strings.Contains(html, alerting.Notice) {
+				t.Error("the page is without the notice")
+			}
+			for _, value := range []string{"14 kt", "28 kt", "One alert is open.", "Below limits", "below", "Partly observing",
+				"0.4 s old", "stale", "disk is full", "That does not mean"} {
+				body := html[strings.Index(html, "<body"):]
+				if !tt.known && strings.Contains(body, value) {
+					t.Errorf("a page without information shows %q", value)
+				}
+			}
+			if got := strings.Contains(html, "<h1>Partly observing</h1>"); got != tt.known {
+				t.Errorf("the condition is shown: %v, want %v", got, tt.known)
+			}
+		})
+	}
+}
+
+func TestFront(t *testing.T) {
+	p, _ := serve(t, sample(1500*time.Millisecond), nil)
+	r := get(p, "/")
+	if got := r.Header.Get("Content-Type"); r.StatusCode != 200 || got != "text/html; charset=utf-8" {
+		t.Fatalf("answer %d, %s", r.StatusCode, got)
+	}
+	html := text(t, r)
+	for _, want := range []string{
+		"Partly observing", "2026-07-01 14:15:39 UTC", "Skerry Moor",
+		"The headwind falls by about 28 kt", "Level 3 of 3, beyond margin", `"alert fall level3"`, `"alert rise level1 unseen"`,
+		"Alert open", "Below limits", "Not observed", "Not observed: 5.0 to 4.0 km before the threshold.",
+		"From 240 degrees magnetic", "touch07", "stale", "The history is not being recorded",
+		`<meta http-equiv="refresh" content="2">`,
+		`"page known lasts3"`, `"expired lasts3"`, // 1.5 s old: at most 3 whole seconds are left of 5
+	} {
+		if !strings.Contains(html, want) {
+			t.Errorf("the page is without %q", want)
+		}
+	}
+	for _, forbidden := range []string{"<script", "http://", "https://", " style=", "EXERCISE"} {
+		if strings.Contains(html, forbidden) {
+			t.Errorf("the page contains %q", forbidden)
+		}
+	}
+	if r.Header.Get("Content-Security-Policy") != p.csp || !strings.Contains(html, "<style>"+frontCSS+"</style>") {
+		t.Error("the style sheet is not the one that the policy names")
+	}
+}
+
+func TestNoOpenAlertIsNotCalledCalm(t *testing.T) {
+	v := sample(0)
+	v.Alerts = nil
+	p, _ := serve(t, v, nil)
+	html := text(t, get(p, "/"))
+	if !strings.Contains(html, "No alert is open. That does not mean no windshear.") {
+		t.Error("the page does not say what no alert means")
+	}
+	for _, word := range []string{"clear", "safe", "normal", "calm", "all good"} {
+		if strings.Contains(strings.ToLower(html[strings.Index(html, "<body"):]), word) {
+			t.Errorf("the page uses the word %q", word)
+		}
+	}
+}
+
+func TestExerciseIsUnmistakable(t *testing.T) {
+	for _, tt := range []struct {
+		name            string
+		program, marked bool
+	}{{"the program", true, false}, {"the view", false, true}} {
+		t.Run(tt.name, func(t *testing.T) {
+			v := sample(0)
+			v.Exercise = tt.marked
+			p, _ := serve(t, v, func(o *Options) { o.Exercise = tt.program })
+			html := text(t, get(p, "/"))
+			if !strings.Contains(html, `<body class="exercise">`) || strings.Count(html, "EXERCISE: nothing here is real weather") != 2 ||
+				!strings.Contains(html, "<title>EXERCISE: ") {
+				t.Error("the page of an exercise has not its pattern, its words and its title")
+			}
+			for _, address := range []string{"/api/v1/now", "/api/v1/events", "/readyz", "/healthz", "/nowhere"} {
+				if m := object(t, get(p, address)); m["exercise"] != true {
+					t.Errorf("%s does not say that this is an exercise", address)
+				}
+			}
+		})
+	}
+}
+
+// TestHostileText: nothing that comes from outside becomes markup.
+func TestHostileText(t *testing.T) {
+	for _, hostile := range []string{
+		`<script>alert(1)</script>`, `"><img src=x onerror=alert(1)>`, `</style><script>x</script>`,
+		`'-alert(1)-'`, `{{.}}`, "\x00<b>", `<svg/onload=x>`, `</title><script>`, `&lt;script&gt;<i>`,
+	} {
+		v := sample(0)
+		v.Stations[0].ID, v.Stations[0].State, v.Stations[0].Sentence = hostile, hostile, hostile
+		v.Paths[0].Name, v.Paths[0].Sentence, v.Paths[0].Unobserved = hostile, hostile, []string{hostile}
+		v.Alerts[0].Sentence, v.Ends[0].Runway, v.Ends[0].Sentence = hostile, hostile, hostile
+		v.Remarks = []string{hostile}
+		clean, _ := serve(t, sample(0), nil)
+		p, _ := serve(t, v, func(o *Options) { o.Airfield = hostile })
+		// Text that stays text adds no tag: the page has as many as before.
+		got, want := text(t, get(p, "/")), text(t, get(clean, "/"))
+		if g, w := strings.Count(got, "<"), strings.Count(want, "<"); g != w {
+			t.Errorf("%q becomes markup: %d tags, want %d", hostile, g, w)
+		}
+	}
+}
+
+func TestEvents(t *testing.T) {
+	at := func(s string) sensors.Instant {
+		v, err := time.Parse(time.RFC3339, s)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return sensors.At(v)
+	}
+	tests := []struct {
+		query string
+		want  EventQuery
+		bad   string // phrase of the detail; empty if the query is good
+	}{
+		{"", EventQuery{Limit: 100}, ""},
+		{"?limit=1000&open=true", EventQuery{Limit: 1000, Open: true}, ""},
+		{"?from=2026-07-01T14:00:00Z&to=2026-07-01T16:00:00%2B01:00",
+			EventQuery{From: at("2026-07-01T14:00:00Z"), To: at("2026-07-01T15:00:00Z"), Limit: 100}, ""},
+		{"?limit=0", EventQuery{}, "from 1 to 1000"},
+		{"?limit=1001", EventQuery{}, "from 1 to 1000"},
+		{"?limit=ten", EventQuery{}, "whole number"},
+		{"?limit=1&limit=2", EventQuery{}, "given 2 times"},
+		{"?from=yesterday", EventQuery{}, "write it as 2026-07-01T14:00:00Z"},
+		{"?from=2026-07-01T14:00:00Z&to=2026-07-01T14:00:00Z", EventQuery{}, "from must be before to"},
+		{"?open=yes", EventQuery{}, "open=true"},
+		{"?opened=true", EventQuery{}, `no parameter "opened"`},
+		{"?a;b", EventQuery{}, "well formed"},
+	}
+	for _, tt := range tests {
+		t.Run(tt.query, func(t *testing.T) {
+			h := &events{list: []json.RawMessage{json.RawMessage(`{"id":"e1"}`)}}
+			p, _ := serve(t, sample(0), func(o *Options) { o.History = h })
+			r := get(p, "/api/v1/events"+tt.query)
+			m := object(t, r)
+			if tt.bad != "" {
+				if r.StatusCode != 400 || !strings.Contains(fmt.Sprint(m["detail"]), tt.bad) {
+					t.Errorf("answer %d, %v; want 400 with %q", r.StatusCode, m["detail"], tt.bad)
+				}
+				return
+			}
+			if r.StatusCode != 200 || h.asked != tt.want || fmt.Sprint(m["events"]) != "[map[id:e1]]" {
+				t.Errorf("answer %d, asked %+v, events %v; want 200, %+v", r.StatusCode, h.asked, m["events"], tt.want)
+			}
+		})
+	}
+}
+
+func TestEventsOfAnEmptyHistory(t *testing.T) {
+	p, _ := serve(t, sample(0), nil)
+	if body := text(t, get(p, "/api/v1/events")); !strings.Contains(body, `"events":[]`) {
+		t.Errorf("no events is %s, want an empty list", body)
+	}
+}
+
+func TestEvent(t *testing.T) {
+	id := "skerrymoor-20260701T141503Z-07-landing-headwind-loss"
+	h := &events{known: map[string][]json.RawMessage{id: {json.RawMessage(`{"revision":1}`), json.RawMessage(`{"revision":2}`)}}}
+	p, log := serve(t, sample(0), func(o *Options) { o.History = h })
+	m := object(t, get(p, "/api/v1/events/"+id))
+	if m["id"] != id || fmt.Sprint(m["issues"]) != "[map[revision:1] map[revision:2]]" {
+		t.Errorf("event %v", m)
+	}
+	if r := get(p, "/api/v1/events/other"); r.StatusCode != 404 {
+		t.Errorf("an unknown event answers %d, want 404", r.StatusCode)
+	}
+	h.err = errors.New("secret place on the disk")
+	for _, address := range []string{"/api/v1/events/" + id, "/api/v1/events"} {
+		r := get(p, address)
+		if body := text(t, r); r.StatusCode != 500 || strings.Contains(body, "secret") {
+			t.Errorf("%s of a broken history answers %d: %s", address, r.StatusCode, body)
+		}
+	}
+	if n := strings.Count(log.String(), "secret place"); n != 2 {
+		t.Errorf("the operator is told of %d errors, want 2", n)
+	}
+}
+
+// TestProblems: every error is a problem object as RFC 9457 has it.
+func TestProblems(t *testing.T) {
+	tests := []struct {
+		method, target, host string
+		status               int
+		kind                 string
+	}{
+		{"GET", "/nowhere", "127.0.0.1:7625", 404, "/problems/not-found"},
+		{"GET", "/api/v1/events/x", "localhost", 404, "/problems/no-event"},
+		{"GET", "/api/v1/events?x=1", "[::1]:7625", 400, "/problems/bad-query"},
+		{"POST", "/api/v1/events", "127.0.0.1", 405, "/problems/read-only"},
+		{"DELETE", "/", "127.0.0.1", 405, "/problems/read-only"},
+		{"GET", "/", "elsewhere.example", 421, "/problems/foreign-host"},
+		{"GET", "/", "127.0.0.1.elsewhere.example:7625", 421, "/problems/foreign-host"},
+		{"GET", "/", "10.0.0.1", 421, "/problems/foreign-host"},
+	}
+	for _, tt := range tests {
+		t.Run(tt.method+" "+tt.target+" "+tt.host, func(t *testing.T) {
+			p, _ := serve(t, sample(0), nil)
+			r := httptest.NewRequest(tt.method, tt.target, nil)
+			r.Host = tt.host
+			w := httptest.NewRecorder()
+			p.ServeHTTP(w, r)
+			m := object(t, w.Result())
+			if w.Code != tt.status || m["type"] != tt.kind || m["status"] != float64(tt.status) ||
+				m["title"] == "" || m["detail"] == "" || w.Header().Get("Content-Type") != "application/problem+json" {
+				t.Errorf("answer %d %v, want %d %s", w.Code, m, tt.status, tt.kind)
+			}
+		})
+	}
+}
+
+func TestEveryAnswerIsGuarded(t *testing.T) {
+	p, _ := serve(t, sample(0), nil)
+	for _, address := range []string{"/", "/api/v1/now", "/api/v1/events", "/api/v1/events/x", "/metrics", "/healthz", "/readyz", "/no"} {
+		h := get(p, address).Header
+		csp := h.Get("Content-Security-Policy")
+		if !strings.HasPrefix(csp, "default-src 'none'; style-src 'sha256-") || strings.Contains(csp, "unsafe") ||
+			h.Get("X-Content-Type-Options") != "nosniff" || h.Get("Cache-Control") != "no-store" {
+			t.Errorf("%s is answered with %v", address, h)
+		}
+	}
+}
+
+func TestHealthAndReadiness(t *testing.T) {
+	p, _ := serve(t, sample(0), func(o *Options) { o.Ready = func() []string { return []string{"no broker yet"} } })
+	if r := get(p, "/healthz"); r.StatusCode != 200 {
+		t.Errorf("healthz answers %d, want 200 while the process lives", r.StatusCode)
+	}
+	r := get(p, "/readyz")
+	m := object(t, r)
+	if r.StatusCode != 503 || m["ready"] != false || fmt.Sprint(m["reasons"]) != "[no broker yet]" {
+		t.Errorf("readyz answers %d, %v", r.StatusCode, m)
+	}
+}
+
+func TestMetrics(t *testing.T) {
+	p, _ := serve(t, sample(0), func(o *Options) {
+		c := prometheus.NewCounter(prometheus.CounterOpts{Name: "sockline_readings_total", Help: "Readings taken."})
+		c.Add(3)
+		o.Registry.MustRegister(c)
+	})
+	body := text(t, get(p, "/metrics"))
+	if !strings.Contains(body, "\nsockline_readings_total 3\n") {
+		t.Errorf("metrics:\n%s", body)
+	}
+	if problems, err := promlint.New(strings.NewReader(body)).Lint(); err != nil || len(problems) > 0 {
+		t.Errorf("lint: %v, %v", problems, err)
+	}
+}
+
+func TestCheckListen(t *testing.T) {
+	tests := []struct {
+		address string
+		ok      bool
+	}{
+		{"127.0.0.1:7625", true}, {"127.9.9.9:0", true}, {"[::1]:7625", true}, {"localhost:7625", true},
+		{":7625", false}, {"0.0.0.0:7625", false}, {"[::]:7625", false}, {"10.1.2.3:7625", false},
+		{"tower.example:7625", false}, {"127.0.0.1.example:7625", false}, {"127.0.0.1", false}, {"", false},
+	}
+	for _, tt := range tests {
+		t.Run(tt.address, func(t *testing.T) {
+			err := CheckListen(tt.address)
+			if (err == nil) != tt.ok {
+				t.Errorf("CheckListen(%q) = %v", tt.address, err)
+			}
+			if err != nil && !strings.Contains(err.Error(), "use 127.0.0.1") {
+				t.Errorf("%v does not say what to use instead", err)
+			}
+			if _, err := New(Options{Listen: tt.address}); err == nil {
+				t.Error("New accepts options without anything to serve")
+			}
+		})
+	}
+}
+
+// TestServe runs the server on a socket and ends it, with a client that never
+// reads to the end.
+func TestServe(t *testing.T) {
+	p, _ := serve(t, sample(0), nil)
+	l, err := net.Listen("tcp", "127.0.0.1:0")
+	if err != nil {
+		t.Fatal(err)
+	}
+	ctx, cancel := context.WithCancel(t.Context())
+	ended := make(chan error, 1)
+	go func() { ended <- p.Serve(ctx, l) }()
+
+	stuck, err := net.Dial("tcp", l.Addr().String())
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer stuck.Close()
+	if _, err := io.WriteString(stuck, "GET / HTTP/1.1\r\n"); err != nil { // and no more
+		t.Fatal(err)
+	}
+	r, err := http.Get("http://" + l.Addr().String() + "/healthz")
+	if err != nil {
+		t.Fatal(err)
+	}
+	object(t, r)
+	r.Body.Close()
+	cancel()
+	select {
+	case err := <-ended:
+		if err != nil {
+			t.Errorf("Serve ended with %v", err)
+		}
+	case <-time.After(shutdownWithin + 5*time.Second):
+		t.Error("Serve did not end")
+	}
+}
+
+func TestServeRefusesOtherMachines(t *testing.T) {
+	p, _ := serve(t, sample(0), nil)
+	l, err := net.Listen("tcp", "0.0.0.0:0")
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := p.Serve(t.Context(), l); err == nil || !strings.Contains(err.Error(), "other machines") {
+		t.Errorf("Serve on %s: %v", l.Addr(), err)
+	}
+}
