@@ -34,9 +34,9 @@ func (k kind) String() string {
 // token is one JSON value. Of a container only the kind is kept.
 type token struct {
 	kind       kind
-	truth      bool // of a boolean
-	escaped    bool // the text holds backslash escapes
-	start, end int  // of the text, without its quotes
+	truth      bool  // of a boolean
+	escaped    bool  // the text holds backslash escapes
+	start, end int32 // of the text, without its quotes; MaxPayload fits
 	number     float64
 }
 
@@ -64,6 +64,14 @@ func (s *scanner) space() byte {
 
 // accept takes the byte c if it comes next after white space.
 func (s *scanner) accept(c byte) bool {
+	if s.pos < len(s.data) && s.data[s.pos] == c { // mostly there is no space
+		s.pos++
+		return true
+	}
+	return s.acceptAfterSpace(c)
+}
+
+func (s *scanner) acceptAfterSpace(c byte) bool {
 	if s.space() != c || s.pos >= len(s.data) {
 		return false
 	}
@@ -115,24 +123,30 @@ func (s *scanner) string() (t token, ok bool) {
 	if !s.accept('"') {
 		return t, false
 	}
-	t.kind, t.start = text, s.pos
-	for s.pos < len(s.data) {
-		switch c := s.data[s.pos]; {
-		case c == '"':
-			t.end = s.pos
-			s.pos++
+	data, i := s.data, s.pos
+	t.kind, t.start = text, int32(i)
+	for i < len(data) {
+		c := data[i]
+		if c == '"' {
+			t.end = int32(i)
+			s.pos = i + 1
 			return t, true
-		case c == '\\':
-			t.escaped = true
-			if !s.escape() {
-				return t, false
-			}
-		case c < ' ':
-			return t, false
-		default:
-			s.pos++
 		}
+		if c < ' ' {
+			break
+		}
+		if c != '\\' {
+			i++
+			continue
+		}
+		t.escaped = true
+		s.pos = i
+		if !s.escape() {
+			return t, false
+		}
+		i = s.pos
 	}
+	s.pos = i
 	return t, false
 }
 

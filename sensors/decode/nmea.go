@@ -25,13 +25,12 @@ func (d *Decoder) nmea(dst []sensors.Reading, m sensors.Message, variationDeg fl
 	rest := m.Payload
 	lines := 0
 	for len(rest) > 0 {
-		line := rest
-		if end := bytes.IndexAny(rest, "\r\n"); end >= 0 {
-			line, rest = rest[:end], rest[end+1:]
-		} else {
-			rest = nil
+		end := 0
+		for end < len(rest) && rest[end] != '\r' && rest[end] != '\n' {
+			end++
 		}
-		line = bytes.TrimSpace(line)
+		line := bytes.TrimSpace(rest[:end])
+		rest = rest[min(end+1, len(rest)):]
 		if len(line) == 0 {
 			continue
 		}
