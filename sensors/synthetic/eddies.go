@@ -3,6 +3,8 @@ package synthetic
 import (
 	"math"
 	"math/rand/v2"
+
+	"sockline/sensors/quantity"
 )
 
 // Eddies are the boundary layer's own motions: a two-component random wind
@@ -102,4 +104,22 @@ func (f *eddyField) wind(x, y, t float64) (u, v float64) {
 		v += w.v * c
 	}
 	return u, v
+}
+
+// addAlong adds the eddies' wind at points on a straight line. From one point
+// to the next the phase of a wave grows by a constant, so that its cosine
+// follows by one rotation (the addition theorem) in place of a call.
+func (f *eddyField) addAlong(dst []quantity.Vector, x, y, dx, dy, t float64) {
+	x -= f.carriedU * t
+	y -= f.carriedV * t
+	for i := range f.waves {
+		w := &f.waves[i]
+		sin, cos := math.Sincos(w.kx*x + w.ky*y + w.omega*t + w.phase)
+		stepSin, stepCos := math.Sincos(w.kx*dx + w.ky*dy)
+		for j := range dst {
+			dst[j].East += w.u * cos
+			dst[j].North += w.v * cos
+			cos, sin = cos*stepCos-sin*stepSin, sin*stepCos+cos*stepSin
+		}
+	}
 }
