@@ -15,8 +15,8 @@ import (
 
 const sceneHead = "airfield skerrymoor\nstart 2026-07-01T14:00:00Z\nlength 20 min\nwind 240 deg 10 kt\n"
 
-func TestParseEveryStatement(t *testing.T) {
-	source := `# whole line
+// everyStatement uses each statement, option and form of place and time.
+const everyStatement = `# whole line
 title      Two words   # a comment
 airfield   skerrymoor
 start      2026-07-01T14:00:00Z
@@ -53,8 +53,10 @@ expect     not-observed on landing 07 between 4 min and 8 min
 expect     unobserved -500 m to 5 km on landing 07
 expect     missing far07 on landing 07 from 9 min
 `
+
+func TestParseEveryStatement(t *testing.T) {
 	g := skerryMoor()
-	s, err := Parse("some/dir/every.scene", []byte(source), g)
+	s, err := Parse("some/dir/every.scene", []byte(everyStatement), g)
 	if err != nil {
 		t.Fatal(err)
 	}
