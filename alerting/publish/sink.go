@@ -138,8 +138,8 @@ func (s *Sink) nudge() {
 	}
 }
 
-// Run sends until ctx is done, then says farewell and returns. It is to be
-// called once.
+// Run sends until ctx is done, then says farewell and returns; the connection
+// must live until then. Run is to be called once.
 func (s *Sink) Run(ctx context.Context) {
 	for {
 		select {
