@@ -192,7 +192,7 @@ func TestRandomWalks(t *testing.T) {
 func TestReadBackGoesOnExactly(t *testing.T) {
 	rng := rand.New(rand.NewPCG(3, 3))
 	carried := 0
-	for range 60 {
+	for range 40 {
 		w, m := newWalk(rng.Uint64()), New(skerry())
 		cut := 900 + rng.IntN(900)
 		T := start
@@ -227,7 +227,7 @@ func TestReadBackGoesOnExactly(t *testing.T) {
 			}
 		}
 	}
-	if carried < 30 {
+	if carried < 20 {
 		t.Errorf("only %d alerts were carried over a cut", carried)
 	}
 }

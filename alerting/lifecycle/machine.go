@@ -283,3 +283,13 @@ func (m *Machine) Raised(path int) bool {
 	}
 	return false
 }
+
+// NamesOf is what a machine needs of these paths.
+func NamesOf(paths []airfield.Path) []PathName {
+	names := make([]PathName, len(paths))
+	for i, p := range paths {
+		east, north := p.At(0)
+		names[i] = PathName{Runway: p.Runway(), Operation: p.Operation(), East: east, North: north, Bearing: p.BearingTrue()}
+	}
+	return names
+}
