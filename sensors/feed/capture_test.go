@@ -323,6 +323,9 @@ func TestReadCapture(t *testing.T) {
 				if again := r.Next(&m); again != err {
 					t.Errorf("the error was %v and is %v", err, again)
 				}
+				if lines := strings.Count(tt.text, "\n"); tt.fault == "" && r.Line() < lines {
+					t.Errorf("ended in line %d of %d", r.Line(), lines)
+				}
 				if r.Truncated() != tt.truncated || r.Clamped() != tt.clamped {
 					t.Errorf("truncated %v, clamped %d, want %v, %d", r.Truncated(), r.Clamped(), tt.truncated, tt.clamped)
 				}
