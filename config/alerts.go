@@ -19,7 +19,9 @@ const leastMargin = 15 * quantity.Knot
 func (t *table) alerts() Alerts {
 	a := t.table("alerts", true)
 	var s Alerts
-	var slow, fast, noticeable, large, margin, hysteresis bool
+	var slow, fast, noticeable, large, margin, hysteresis bool // which keys are sound
+	// The bounds keep out what can only be a slip of the keyboard: no aircraft
+	// lands at 20 kt, and a level of 300 kt would never open.
 	s.ApproachSpeed, slow = a.quantity("approach_speed", speed(), bounds{"30 kt", "200 kt"}, "")
 	s.FastestApproachSpeed, fast = a.quantity("fastest_approach_speed", speed(), bounds{"30 kt", "250 kt"}, "")
 	s.Noticeable, noticeable = a.quantity("noticeable_change", speed(), bounds{"5 kt", "40 kt"}, "10 kt")
@@ -48,6 +50,7 @@ func (t *table) alerts() Alerts {
 		a.blame(a.key("large_change"), knots(s.Large), "raise large_change or lower noticeable_change",
 			"large_change must lie above noticeable_change, %s", knots(s.Noticeable))
 	}
+	// A derived margin of exactly large_change may lie a rounding below it.
 	if large && margin && s.Margin < s.Large-1e-9 {
 		key, mend := a.key("margin_change"), "raise margin_change or lower large_change"
 		if s.MarginDerived {

@@ -173,6 +173,8 @@ func parse(name string, data []byte, password Secret, override bool) (*Config, P
 	sum := sha256.Sum256([]byte(text))
 	cfg := &Config{File: name, Source: []byte(text), Hash: hex.EncodeToString(sum[:])}
 
+	// The order matters where a section needs another: topics must lie outside
+	// the prefix, which needs the id; intervals must fit the window.
 	spec := root.airfield()
 	runways := root.runways(&spec)
 	cfg.Alerts = root.alerts()

@@ -15,6 +15,7 @@ import (
 	"testing"
 	"time"
 
+	"sockline/alerting/airfield"
 	"sockline/sensors"
 )
 
@@ -297,5 +298,34 @@ func TestProblemsAreSortedLines(t *testing.T) {
 	want := name + `:29:12: station.0.height: a length from 1 m to 150 m belongs here (got "0 m"); write a value in this range`
 	if linesOf[2] != want {
 		t.Errorf("\n%s, want\n%s", linesOf[2], want)
+	}
+}
+
+// The invented airfields are sited well: with all masts live, no path lacks
+// ground that it needs.
+func TestInventedAirfieldsAreObserved(t *testing.T) {
+	for _, name := range mustGlob(t, filepath.Join(airfields, "*.toml"), 3) {
+		cfg := mustLoad(t, name)
+		masts := cfg.Airfield.MastPoints()
+		for _, p := range cfg.Airfield.Paths {
+			seen := airfield.Observed(p, masts, cfg.Analysis.Reach, airfield.Beyond)
+			if ok, gaps := airfield.Complete(seen, p.Needed()); !ok {
+				t.Errorf("%s %s: %.0f lacks %.0f", cfg.Airfield.Name, p.Name(), seen, gaps)
+			}
+		}
+	}
+	large := mustLoad(t, filepath.Join(airfields, "brandersea.toml"))
+	levels, nmea, magnetic := make(map[airfield.Point]int), 0, 0
+	for i, s := range large.Stations {
+		levels[large.Airfield.Masts[i].Point]++
+		if s.Format == sensors.FormatNMEA0183 {
+			nmea++
+		}
+		if s.North == sensors.NorthMagnetic {
+			magnetic++
+		}
+	}
+	if len(large.Airfield.Runways) != 2 || len(levels) != 12 || len(large.Stations) != 13 || nmea == 0 || magnetic != 1 {
+		t.Errorf("%d runways, %d masts, %d stations, %d NMEA, %d magnetic", len(large.Airfield.Runways), len(levels), len(large.Stations), nmea, magnetic)
 	}
 }

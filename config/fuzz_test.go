@@ -99,7 +99,7 @@ func FuzzParse(f *testing.F) {
 			f.Add(data)
 		}
 	}
-	for _, s := range []string{"[[[[", "a = [[[{b=[", "a.\"b\".'c' = {", "[a]\n[[a.b]]\n", "x = '''", "\\", "= 1", "]\n}"} {
+	for _, s := range []string{"[[[[", "a = [[[{b=[", "a.\"b\".'c' = {", "[a]\n[[a.b]]\n", "x = '''", "\\", "= 1", "]\n}", "a = \"\\\nb", "\"a\\nb\" = 1"} {
 		f.Add([]byte(s))
 	}
 	f.Fuzz(func(t *testing.T, text []byte) {

@@ -37,6 +37,8 @@ func (t *table) broker(password Secret, override bool) Broker {
 			b.blame(b.key("password_file"), "", "write the password into it", "the password file is empty")
 		}
 	}
+	// The files are read here as well as by the session, so that a wrong one is
+	// named at start and not at the first reconnect in the night.
 	var authorities, certificate, key []byte
 	s.CAFile, authorities, _ = b.file("ca_file")
 	s.CertFile, certificate, _ = b.file("cert_file")

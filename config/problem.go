@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"slices"
 	"strings"
+	"unicode"
 	"unicode/utf8"
 )
 
@@ -66,9 +67,15 @@ func (ps Problems) sort() {
 // maxShown is how many characters of a value a problem quotes.
 const maxShown = 60
 
-// shown is a value cut to a length that fits a line.
+// shown is a value cut to a length that fits a line, without what would
+// break the line or steer a terminal.
 func shown(s string) string {
-	s = strings.ToValidUTF8(s, "\uFFFD")
+	s = strings.Map(func(r rune) rune {
+		if unicode.IsPrint(r) {
+			return r
+		}
+		return '\uFFFD'
+	}, s)
 	if utf8.RuneCountInString(s) <= maxShown {
 		return s
 	}

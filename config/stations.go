@@ -100,6 +100,7 @@ func (t *table) topic(out MQTT) string {
 		message = "topics that begin with $ belong to the broker"
 	case len(topic) > maxTopic:
 		message = fmt.Sprintf("this topic is longer than %d bytes", maxTopic)
+	// Own results taken for readings would feed back for ever.
 	case out.Prefix != "" && strings.HasPrefix(topic+"/", out.Prefix+"/"):
 		message = "this program publishes its own results below " + out.Prefix
 		mend = "let the station publish elsewhere, or set prefix in [mqtt]"
