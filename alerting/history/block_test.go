@@ -1,0 +1,184 @@
+package history
+
+import (
+	"math"
+	"math/rand/v2"
+	"reflect"
+	"testing"
+
+	"sockline/sensors"
+	"sockline/sensors/quantity"
+)
+
+func TestForms(t *testing.T) {
+	// Numbers that a decoder would have computed at run time, not the compiler.
+	knots, kmh := func(v float64) float64 { return v * quantity.Knot }, func(v float64) float64 { return v * quantity.KilometrePerHour }
+	// The numbers follow from the doc of form: the smallest whole number that
+	// gives the value back in that form.
+	for _, row := range []struct {
+		name   string
+		v      float64
+		prefer form
+		want   form
+		n      int64
+	}{
+		{"hundredths stay hundredths", 5.1, formHundredth, formHundredth, 510},
+		{"a whole number", 7, formRaw, formOne, 7},
+		{"a tenth", 243.7, formRaw, formTenth, 2437},
+		{"a thousandth", 3.217, formTenth, formThousandth, 3217},
+		{"12.3 kt in m/s", knots(12.3), formHundredth, formTenthKnot, 123},
+		{"12.34 kt in m/s", knots(12.34), formHundredth, formHundredthKnot, 1234},
+		{"18.7 km/h in m/s", kmh(18.7), formTenth, formTenthKmh, 187},
+		{"negative", -0.5, formTenth, formTenth, -5},
+		{"the zero with a sign", math.Copysign(0, -1), formTenth, formRaw, 0},
+		{"the zero", 0, formTenth, formTenth, 0},
+		{"the square root of two", math.Sqrt2, formTenth, formRaw, 0},
+		{"not a number", math.NaN(), formTenth, formRaw, 0},
+		{"infinite", math.Inf(1), formTenth, formRaw, 0},
+		{"huge", 1e300, formTenth, formRaw, 0},
+	} {
+		if f, n := choose(row.v, row.prefer); f != row.want || n != row.n {
+			t.Errorf("%s: form %d, number %d; want %d, %d", row.name, f, n, row.want, row.n)
+		}
+	}
+}
+
+// sameReading compares bit for bit: NaN equals itself, -0 differs from 0.
+func sameReading(a, b sensors.Reading) bool {
+	bits := math.Float64bits
+	if bits(a.Speed) != bits(b.Speed) || bits(a.From) != bits(b.From) || bits(a.Gust) != bits(b.Gust) {
+		return false
+	}
+	a.Speed, a.From, a.Gust, b.Speed, b.From, b.Gust = 0, 0, 0, 0, 0, 0
+	return a == b
+}
+
+// anyReading draws a reading of every sort, sane and absurd.
+func anyReading(rng *rand.Rand, step sensors.Instant) sensors.Reading {
+	value := func() float64 {
+		switch rng.IntN(8) {
+		case 0:
+			return math.Float64frombits(rng.Uint64())
+		case 1:
+			return rng.NormFloat64() * 10
+		case 2:
+			return float64(rng.IntN(800)) / 10 * quantity.Knot
+		case 3:
+			return float64(rng.IntN(8000)) / 1000
+		case 4:
+			return 0
+		}
+		return float64(rng.IntN(36000)) / 100
+	}
+	r := sensors.Reading{
+		Station: rng.IntN(40), Time: step - sensors.Instant(rng.IntN(1000)), Speed: value(), From: value(),
+		HasGust: rng.IntN(2) == 0, Exercise: rng.IntN(9) == 0, Retained: rng.IntN(9) == 0,
+	}
+	r.Arrival = r.Time + sensors.Instant(rng.IntN(3000)-500)
+	if r.HasGust || rng.IntN(9) == 0 {
+		r.Gust = value()
+	}
+	if rng.IntN(20) == 0 {
+		r.Station, r.Time, r.Arrival = rng.Int()-rng.Int(), sensors.Instant(rng.Uint64()), sensors.Instant(rng.Uint64())
+	}
+	return r
+}
+
+func TestReadingsRoundTrip(t *testing.T) {
+	const seed = 11
+	rng := rand.New(rand.NewPCG(seed, 0))
+	for round := range 3000 {
+		step := sensors.Instant(rng.Int64N(1<<42)) * sensors.Second / 1000
+		rs := make([]sensors.Reading, rng.IntN(60))
+		for i := range rs {
+			rs[i] = anyReading(rng, step)
+		}
+		c := cursor{b: appendReadings(nil, step, rs)}
+		got := c.readings(step, nil)
+		if c.bad || len(c.b) != 0 || len(got) != len(rs) {
+			t.Fatalf("seed %d round %d: %d readings became %d, bad %v, %d bytes left", seed, round, len(rs), len(got), c.bad, len(c.b))
+		}
+		for i := range rs {
+			if !sameReading(rs[i], got[i]) {
+				t.Fatalf("seed %d round %d: reading %d\n was %+v\n is  %+v", seed, round, i, rs[i], got[i])
+			}
+		}
+	}
+}
+
+func TestSealFindsEveryFlippedBit(t *testing.T) {
+	step := start
+	key, body := stepKey(step), appendReadings([]byte{1}, step, readingsOf(step, 3))
+	sealed := seal(key, body)
+	for i := range len(sealed) * 8 {
+		bad := append([]byte(nil), sealed...)
+		bad[i/8] ^= 1 << (i % 8)
+		if _, err := unseal(key, bad); err == nil {
+			t.Fatalf("bit %d flipped in the value: not found", i)
+		}
+	}
+	for i := range len(key) * 8 {
+		bad := append([]byte(nil), key...)
+		bad[i/8] ^= 1 << (i % 8)
+		if _, err := unseal(bad, sealed); err == nil {
+			t.Fatalf("bit %d flipped in the key: not found", i)
+		}
+	}
+	for n := range len(sealed) {
+		if _, err := unseal(key, sealed[:n]); err == nil {
+			t.Fatalf("cut to %d bytes: not found", n)
+		}
+	}
+}
+
+func FuzzReadings(f *testing.F) {
+	f.Add(appendReadings(nil, start, readingsOf(start, 2)))
+	f.Add([]byte{0xff, 0xff, 0xff, 0xff, 0x0f, 1, 0, 0})
+	f.Fuzz(func(t *testing.T, b []byte) {
+		c := cursor{b: b}
+		rs := c.readings(start, nil)
+		if c.bad {
+			return
+		}
+		// What was read can be written and read again, whatever it was.
+		again := cursor{b: appendReadings(nil, start, rs)}
+		got := again.readings(start, nil)
+		if again.bad || len(got) != len(rs) {
+			t.Fatalf("%d readings became %d", len(rs), len(got))
+		}
+		for i := range rs {
+			if !sameReading(rs[i], got[i]) {
+				t.Fatalf("was %+v, is %+v", rs[i], got[i])
+			}
+		}
+	})
+}
+
+func TestStepFor(t *testing.T) {
+	st := Step{Stations: []string{"far07", "mid", "gone"}, Readings: []sensors.Reading{{Station: 0}, {Station: 1}, {Station: 2}, {Station: 1, Speed: 3}}}
+	for _, row := range []struct {
+		name string
+		ids  []string
+		want []sensors.Reading
+	}{
+		{"the same list", []string{"far07", "mid", "gone"}, st.Readings},
+		{"one gone, others moved", []string{"mid", "new", "far07"}, []sensors.Reading{{Station: 2}, {Station: 0}, {Station: 0, Speed: 3}}},
+		{"none left", []string{"new"}, []sensors.Reading{}},
+	} {
+		if got := st.For(row.ids); !reflect.DeepEqual(got, row.want) {
+			t.Errorf("%s: %+v, want %+v", row.name, got, row.want)
+		}
+	}
+}
+
+func TestKeysOrder(t *testing.T) {
+	instants := []sensors.Instant{math.MinInt64, -86400000, -1000, 0, 1000, start, start + 1000, math.MaxInt64}
+	for i, at := range instants {
+		if keyInstant(instantKey(at)) != at {
+			t.Errorf("%d does not come back from its key", at)
+		}
+		if i > 0 && string(instantKey(instants[i-1])) >= string(instantKey(at)) {
+			t.Errorf("the key of %d does not sort before that of %d", instants[i-1], at)
+		}
+	}
+}

@@ -1,0 +1,377 @@
+package history
+
+import (
+	"bytes"
+	"crypto/sha256"
+	"encoding/binary"
+	"encoding/json"
+	"fmt"
+
+	bolt "go.etcd.io/bbolt"
+
+	"sockline/alerting/lifecycle"
+	"sockline/sensors"
+)
+
+// Kind is what a journal record is about. The numbers are on disk: never
+// change one.
+type Kind uint8
+
+// The kinds of record.
+const (
+	KindIssue         Kind = 1 // an issue of an alert
+	KindConfiguration Kind = 2 // a configuration that takes effect, as its file has it
+	KindSoftware      Kind = 3 // the version of the program
+	KindStart         Kind = 4 // the daemon begins
+	KindStop          Kind = 5 // the daemon ends in order
+	KindGap           Kind = 6 // something was not kept: a Gap as JSON
+	KindDamage        Kind = 7 // a file was found damaged: text
+	KindTable         Kind = 8 // a learnt table that takes effect
+)
+
+// String is the kind's word.
+func (k Kind) String() string {
+	switch k {
+	case KindIssue:
+		return "issue"
+	case KindConfiguration:
+		return "configuration"
+	case KindSoftware:
+		return "software"
+	case KindStart:
+		return "start"
+	case KindStop:
+		return "stop"
+	case KindGap:
+		return "gap"
+	case KindDamage:
+		return "damage"
+	case KindTable:
+		return "table"
+	}
+	return fmt.Sprintf("kind %d", uint8(k))
+}
+
+// Entry is something for the journal that is not an issue of an alert.
+type Entry struct {
+	Kind    Kind
+	At      sensors.Instant
+	Payload []byte // not changed after it is handed over
+}
+
+// Gap is the payload of a KindGap record: what of these steps was given up.
+// The steps are as first and last dropped; others between them may be there.
+type Gap struct {
+	From     sensors.Instant `json:"from_ms"`
+	To       sensors.Instant `json:"to_ms"`
+	Steps    uint64          `json:"steps"`
+	Readings uint64          `json:"readings"`
+	Records  uint64          `json:"records"`
+	Why      string          `json:"why"`
+}
+
+// Record is one record of the journal.
+type Record struct {
+	Seq     uint64 // from 1, without holes
+	Kind    Kind
+	At      sensors.Instant
+	Payload []byte
+	Hash    [sha256.Size]byte // of the record before and this one
+}
+
+// Issue is what a record of KindIssue holds.
+func (r Record) Issue() (Issue, error) {
+	if r.Kind != KindIssue {
+		return Issue{}, fmt.Errorf("journal record %d is a %s, not an issue", r.Seq, r.Kind)
+	}
+	p, err := parseIssue(r.Payload)
+	if err != nil {
+		return Issue{}, fmt.Errorf("journal record %d: %w", r.Seq, err)
+	}
+	is := Issue{Object: bytes.Clone(p.object)}
+	if err := json.Unmarshal(p.alert, &is.Alert); err != nil {
+		return Issue{}, fmt.Errorf("journal record %d: its alert: %w", r.Seq, err)
+	}
+	return is, nil
+}
+
+// recordVersion is the first byte of each record.
+const (
+	recordVersion = 1
+	recordHeader  = 10 // version, kind, time
+)
+
+// head is the end of the chain: the last sequence and its hash.
+type head struct {
+	seq  uint64
+	hash [sha256.Size]byte
+}
+
+// next is the record that follows the head, as it is stored.
+func (h head) next(kind Kind, at sensors.Instant, payload []byte) (value []byte, after head) {
+	value = make([]byte, 0, recordHeader+len(payload)+sha256.Size)
+	value = append(value, recordVersion, byte(kind))
+	value = binary.BigEndian.AppendUint64(value, uint64(at))
+	value = append(value, payload...)
+	after = head{seq: h.seq + 1, hash: link(h.hash, h.seq+1, value)}
+	return append(value, after.hash[:]...), after
+}
+
+// link is SHA-256 of the hash before, the sequence (8 bytes, big endian) and
+// the content.
+func link(before [sha256.Size]byte, seq uint64, content []byte) (out [sha256.Size]byte) {
+	h := sha256.New()
+	h.Write(before[:])
+	h.Write(seqKey(seq))
+	h.Write(content)
+	h.Sum(out[:0])
+	return out
+}
+
+func seqKey(seq uint64) []byte { return binary.BigEndian.AppendUint64(nil, seq) }
+
+// parseRecord reads a stored record. The payload is not copied.
+func parseRecord(key, value []byte) (Record, error) {
+	if len(key) != 8 {
+		return Record{}, damaged("a journal record has a key of %d bytes", len(key))
+	}
+	r := Record{Seq: binary.BigEndian.Uint64(key)}
+	if len(value) < recordHeader+sha256.Size {
+		return r, damaged("journal record %d is too short", r.Seq)
+	}
+	if value[0] != recordVersion {
+		return r, damaged("journal record %d has the unknown version %d", r.Seq, value[0])
+	}
+	end := len(value) - sha256.Size
+	r.Kind = Kind(value[1])
+	r.At = sensors.Instant(binary.BigEndian.Uint64(value[2:]))
+	r.Payload = value[recordHeader:end]
+	copy(r.Hash[:], value[end:])
+	return r, nil
+}
+
+// issuePayload is the payload of an issue: what the index needs stands before
+// the two JSON texts, so that the index is rebuilt without parsing them.
+type issuePayload struct {
+	id             string
+	opened, closed sensors.Instant // closed is 0 while open
+	object, alert  []byte
+}
+
+func (p issuePayload) encode() []byte {
+	b := make([]byte, 0, len(p.id)+len(p.object)+len(p.alert)+32)
+	b = appendString(b, p.id)
+	b = binary.AppendVarint(b, int64(p.opened))
+	b = binary.AppendVarint(b, int64(p.closed))
+	b = appendString(b, p.object)
+	return appendString(b, p.alert)
+}
+
+func parseIssue(b []byte) (issuePayload, error) {
+	c := cursor{b: b}
+	p := issuePayload{
+		id:     string(c.bytes(c.uvarint())),
+		opened: sensors.Instant(c.varint()),
+		closed: sensors.Instant(c.varint()),
+		object: c.bytes(c.uvarint()),
+		alert:  c.bytes(c.uvarint()),
+	}
+	if c.bad || len(c.b) != 0 {
+		return p, damaged("its content is not an issue of an alert")
+	}
+	return p, nil
+}
+
+// encodeIssue is the payload for an issue.
+func encodeIssue(is Issue) ([]byte, error) {
+	alert, err := json.Marshal(is.Alert)
+	if err != nil {
+		return nil, fmt.Errorf("write alert %s as JSON: %w", is.Alert.ID, err)
+	}
+	closed := sensors.Instant(0)
+	if is.Alert.State == lifecycle.Closed {
+		closed = is.Alert.Closed
+	}
+	p := issuePayload{id: is.Alert.ID, opened: is.Alert.Opened, closed: closed, object: is.Object, alert: alert}
+	return p.encode(), nil
+}
+
+// eventRow is what the index holds of an event. The index is derived: it can
+// be made again from the records.
+type eventRow struct {
+	closed sensors.Instant // 0 while open
+	last   sensors.Instant // of the newest issue
+	seqs   []uint64        // of its issues, ascending
+}
+
+func (r eventRow) encode() []byte {
+	b := binary.AppendVarint(nil, int64(r.closed))
+	b = binary.AppendVarint(b, int64(r.last))
+	b = binary.AppendUvarint(b, uint64(len(r.seqs)))
+	before := uint64(0)
+	for _, s := range r.seqs {
+		b = binary.AppendUvarint(b, s-before)
+		before = s
+	}
+	return b
+}
+
+func parseEventRow(b []byte) (eventRow, error) {
+	c := cursor{b: b}
+	r := eventRow{closed: sensors.Instant(c.varint()), last: sensors.Instant(c.varint())}
+	n := c.uvarint()
+	if c.bad || n > uint64(len(c.b)) {
+		return r, errBlock
+	}
+	r.seqs = make([]uint64, 0, n)
+	before := uint64(0)
+	for range n {
+		before += c.uvarint()
+		r.seqs = append(r.seqs, before)
+	}
+	if c.bad || len(c.b) != 0 {
+		return r, errBlock
+	}
+	return r, nil
+}
+
+// add takes in an issue; one that is already there changes nothing, so that a
+// record may be written twice.
+func (r *eventRow) add(seq uint64, at sensors.Instant, p issuePayload) {
+	if n := len(r.seqs); n > 0 && r.seqs[n-1] >= seq {
+		return
+	}
+	r.seqs = append(r.seqs, seq)
+	r.last, r.closed = at, p.closed
+}
+
+func eventKey(p issuePayload) []byte { return append(instantKey(p.opened), p.id...) }
+
+// putRecord writes a record under its sequence and brings the index up to it.
+func putRecord(tx *bolt.Tx, seq uint64, value []byte) error {
+	records := tx.Bucket([]byte(bucketRecords))
+	records.FillPercent = 1 // keys only ever rise
+	key := seqKey(seq)
+	if err := records.Put(key, value); err != nil {
+		return err
+	}
+	r, err := parseRecord(key, value)
+	if err != nil || r.Kind != KindIssue {
+		return err
+	}
+	p, err := parseIssue(r.Payload)
+	if err != nil {
+		return err
+	}
+	events, ids := tx.Bucket([]byte(bucketEvents)), tx.Bucket([]byte(bucketIDs))
+	at := eventKey(p)
+	var row eventRow
+	if stored := events.Get(at); stored != nil {
+		// A row that went bad since the start must not stop the recording: it
+		// begins anew here, and the next opening rebuilds the whole index.
+		if body, err := unseal(at, stored); err == nil {
+			if row, err = parseEventRow(body); err != nil {
+				row = eventRow{}
+			}
+		}
+	}
+	row.add(seq, r.At, p)
+	if err := events.Put(at, seal(at, row.encode())); err != nil {
+		return err
+	}
+	id := []byte(p.id)
+	return ids.Put(id, seal(id, instantKey(p.opened)))
+}
+
+// lastRecord is the end of the stored chain.
+func lastRecord(tx *bolt.Tx) head {
+	c := tx.Bucket([]byte(bucketRecords)).Cursor()
+	for key, value := c.Last(); key != nil; key, value = c.Prev() {
+		if len(key) == 8 { // any other is damage: the chain goes on without it
+			r, _ := parseRecord(key, value) // a broken one has a zero hash, as in chain.check
+			return head{seq: r.Seq, hash: r.Hash}
+		}
+	}
+	return head{}
+}
+
+// chain walks the records in order and finds where the chain is broken.
+type chain struct {
+	head   head
+	first  uint64 // first broken sequence, 0 if none
+	broken uint64
+	index  map[string]eventRow // by event key
+}
+
+func (c *chain) fault(seq uint64) {
+	if c.first == 0 {
+		c.first = seq
+	}
+	c.broken++
+}
+
+// check takes in the next record as stored.
+func (c *chain) check(key, value []byte) {
+	r, err := parseRecord(key, value)
+	want := c.head.seq + 1
+	switch {
+	case len(key) == 8 && r.Seq != want:
+		c.fault(want) // a record is missing
+	case err != nil:
+		c.fault(want)
+	case link(c.head.hash, r.Seq, value[:len(value)-sha256.Size]) != r.Hash:
+		c.fault(r.Seq)
+	case r.Kind == KindIssue:
+		if p, err := parseIssue(r.Payload); err == nil {
+			at := string(eventKey(p))
+			row := c.index[at]
+			row.add(r.Seq, r.At, p)
+			c.index[at] = row
+		}
+	}
+	if len(key) == 8 {
+		// Go on from the stored hash, so that one broken record breaks no
+		// other except where its own stored hash is what was changed.
+		c.head = head{seq: r.Seq, hash: r.Hash}
+	}
+}
+
+// walk shows fn every record from the sequence from on, in short
+// transactions; key and value are copies.
+func walk(f *file, from uint64, fn func(key, value []byte) error) error {
+	const chunk = 512
+	type pair struct{ key, value []byte }
+	next := seqKey(from)
+	for {
+		var pairs []pair
+		err := f.view(func(tx *bolt.Tx) error {
+			c := tx.Bucket([]byte(bucketRecords)).Cursor()
+			for k, v := c.Seek(next); k != nil && len(pairs) < chunk; k, v = c.Next() {
+				pairs = append(pairs, pair{bytes.Clone(k), bytes.Clone(v)})
+			}
+			return nil
+		})
+		if err != nil {
+			return err
+		}
+		for _, p := range pairs {
+			if err := fn(p.key, p.value); err != nil {
+				return err
+			}
+		}
+		if len(pairs) < chunk {
+			return nil
+		}
+		next = append(bytes.Clone(pairs[chunk-1].key), 0) // just past it
+	}
+}
+
+// walkChain checks the whole chain.
+func walkChain(f *file) (*chain, error) {
+	c := &chain{index: map[string]eventRow{}}
+	err := walk(f, 0, func(key, value []byte) error {
+		c.check(key, value)
+		return nil
+	})
+	return c, err
+}
