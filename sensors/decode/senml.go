@@ -92,6 +92,7 @@ type pack struct {
 	fields    [fieldCount]token // of the record at hand, where present says so
 	present   uint32            // bit set of fields
 	unitSpace []byte            // room for an escaped unit
+	record    record            // the one at hand, resolved
 }
 
 // record is a resolved record (section 4.6): the base fields are applied and
@@ -108,7 +109,7 @@ type record struct {
 // senML decodes a pack.
 func (d *Decoder) senML(dst []sensors.Reading, m sensors.Message, variationDeg float64) (readings []sensors.Reading, exercise bool) {
 	d.groups = d.groups[:0]
-	if !d.records(m.Payload, func(p *pack, r record) {
+	if !d.records(m.Payload, func(p *pack, r *record) {
 		if d.collect(p, r, m.Received) {
 			exercise = true
 		}
@@ -128,7 +129,7 @@ func (d *Decoder) senML(dst []sensors.Reading, m sensors.Message, variationDeg f
 // records walks a pack and hands out its resolved records. It returns false if
 // the pack must be refused: one broken record spoils it, since what else it
 // says cannot be known.
-func (d *Decoder) records(payload []byte, each func(*pack, record)) bool {
+func (d *Decoder) records(payload []byte, each func(*pack, *record)) bool {
 	p := &d.pack
 	p.begin(payload)
 	d.names = d.names[:0]
@@ -141,11 +142,10 @@ func (d *Decoder) records(payload []byte, each func(*pack, record)) bool {
 		return false
 	}
 	for more := !p.scan.accept(']'); more; {
-		r, ok := d.record(p)
-		if !ok {
+		if !d.record(p) {
 			return false
 		}
-		each(p, r)
+		each(p, &p.record)
 		switch {
 		case p.scan.accept(','):
 		case p.scan.accept(']'):
@@ -170,22 +170,22 @@ func (p *pack) begin(data []byte) {
 	p.time, p.value, p.sum, p.version = 0, 0, 0, senMLVersion
 }
 
-// record reads and resolves the next record. ok is false if the whole pack
-// must be refused, which is then on record.
-func (d *Decoder) record(p *pack) (r record, ok bool) {
+// record reads the next record and resolves it into p.record. It returns false
+// if the whole pack must be refused, which is then on record.
+func (d *Decoder) record(p *pack) bool {
 	p.count++
 	if !d.fields(p) {
-		return r, false
+		return false
 	}
 	if p.has(fieldVersion) {
 		version := p.fields[fieldVersion].number
 		if version > senMLVersion || version < 1 || version != math.Trunc(version) {
 			d.refuse(NotUnderstood, "record %d: version %v; versions 1 to %d are understood", p.count, version, senMLVersion)
-			return r, false
+			return false
 		}
 		if p.count > 1 && version != p.version {
 			d.refuse(Contradiction, "record %d: version %v after version %v in one pack", p.count, version, p.version)
-			return r, false
+			return false
 		}
 		p.version = version
 	}
@@ -282,9 +282,11 @@ func (d *Decoder) bases(p *pack) {
 
 // resolve applies the base fields. A record that holds base fields only comes
 // out without a name.
-func (d *Decoder) resolve(p *pack) (r record, ok bool) {
+func (d *Decoder) resolve(p *pack) bool {
+	p.record = record{}
+	r := &p.record
 	if p.present&(valueFields|1<<fieldName|1<<fieldSum) == 0 {
-		return r, true
+		return true
 	}
 	start := len(d.names)
 	d.names = append(d.names, p.name...)
@@ -297,7 +299,7 @@ func (d *Decoder) resolve(p *pack) (r record, ok bool) {
 	if !validName(r.name) {
 		d.refuse(Malformed, "record %d: %s is not a SenML name: letters, digits and - : . / _, a letter or digit first",
 			p.count, excerpt(r.name))
-		return r, false
+		return false
 	}
 	r.unit = p.unit
 	if p.has(fieldUnit) {
@@ -307,13 +309,16 @@ func (d *Decoder) resolve(p *pack) (r record, ok bool) {
 	if p.has(fieldTime) {
 		r.time += p.fields[fieldTime].number
 	}
-	for _, field := range [...]int{fieldValue, fieldString, fieldBoolean, fieldData} {
-		if p.has(field) {
-			r.value = p.fields[field]
-		}
-	}
-	if r.value.kind == numeric {
+	switch {
+	case p.has(fieldValue):
+		r.value = p.fields[fieldValue]
 		r.value.number += p.value
+	case p.has(fieldString):
+		r.value = p.fields[fieldString]
+	case p.has(fieldBoolean):
+		r.value = p.fields[fieldBoolean]
+	case p.has(fieldData):
+		r.value = p.fields[fieldData]
 	}
 	if p.has(fieldSum) {
 		r.sum = p.fields[fieldSum]
@@ -322,7 +327,7 @@ func (d *Decoder) resolve(p *pack) (r record, ok bool) {
 	if p.has(fieldUpdate) {
 		r.update = p.fields[fieldUpdate]
 	}
-	return r, true
+	return true
 }
 
 // validName checks the characters of section 4.5.1. Square brackets are taken
@@ -376,7 +381,7 @@ type group struct {
 
 // collect puts a record into its group. It reports whether the record marks
 // the pack as synthetic.
-func (d *Decoder) collect(p *pack, r record, received sensors.Instant) (exercise bool) {
+func (d *Decoder) collect(p *pack, r *record, received sensors.Instant) (exercise bool) {
 	start := len(d.names) - len(r.name)
 	role, prefix, ok := roleOf(r.name)
 	if !ok {
@@ -421,7 +426,7 @@ func (d *Decoder) group(at sensors.Instant, prefix []byte, start, place int) *gr
 
 // quantity checks the value and unit of a record and turns it into SI. What is
 // wrong with it is then on record.
-func (d *Decoder) quantity(p *pack, r record, role int) (float64, bool) {
+func (d *Decoder) quantity(p *pack, r *record, role int) (float64, bool) {
 	switch r.value.kind {
 	case numeric:
 	case absent:

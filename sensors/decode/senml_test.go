@@ -51,7 +51,7 @@ func (r resolved) show() string {
 // resolveAll walks a pack and shows its resolved records.
 func resolveAll(d *Decoder, payload []byte, now sensors.Instant) (shown []string, ok bool) {
 	d.faults = nil
-	ok = d.records(payload, func(p *pack, r record) {
+	ok = d.records(payload, func(p *pack, r *record) {
 		if r.name == nil {
 			return
 		}

@@ -134,9 +134,9 @@ func (c *Checker) persistence(r sensors.Reading) Flags {
 	if r.Speed > stuckAbove && c.wind.lasts(enough) {
 		flags |= FlagStuck
 	}
-	// The speed has varied if its own run is shorter. An instrument that stands
-	// still as a whole is only called stuck.
-	if flags == 0 && c.vane.lasts(stuckVaneFor) && c.wind.start > c.vane.start {
+	// An instrument that stands still as a whole is only called stuck. If it is
+	// not, then the speed has varied: else both runs would be of one length.
+	if flags == 0 && c.vane.lasts(stuckVaneFor) {
 		flags |= FlagStuckVane
 	}
 	return flags
