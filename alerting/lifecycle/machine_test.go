@@ -201,6 +201,17 @@ func TestPlays(t *testing.T) {
 			},
 		},
 		{
+			name: "so does one of the same level",
+			spans: []span{
+				seen(1, change(12, one, one)),
+				{steps: 1, loss: at(1500, 200, change(12, one, one)), observed: []airfield.Interval{{From: 2000, To: -1280}}},
+			},
+			want: []string{
+				"0 r1 0>1 open: level noticeable met with probability 0.90",
+				"1 r2 1>1 open: moved by 1400 m",
+			},
+		},
+		{
 			name: "the ground between the ends need not be observed",
 			spans: []span{{steps: 4, loss: change(12, one, one),
 				observed: []airfield.Interval{{From: 4000, To: 2500}, {From: 1300, To: -1280}}}},
@@ -307,6 +318,20 @@ func TestPeakAndLastMeasuredValues(t *testing.T) {
 	}
 	if a.Observed || magnitude(a.Change/quantity.Knot+14) > 1e-9 || a.MeasuredAt.Sub(start) != 32*time.Second {
 		t.Errorf("out of sight: observed %v, change %.1f kt, measured after %v", a.Observed, a.Change/quantity.Knot, a.MeasuredAt.Sub(start))
+	}
+}
+
+// Once a marked reading took part, the alert stays marked.
+func TestExerciseStays(t *testing.T) {
+	m := New(skerry())
+	as := []hazard.Assessment{{Path: 0, Observed: whole, Loss: change(12, 1, 1)}}
+	for s, want := range []bool{false, false, true, true} {
+		as[0].Exercise = s == 2
+		as[0].Loss.AtEdge = s%2 == 1 // so that every step is issued
+		ts := m.Step(start.Add(time.Duration(s)*time.Second), as, nil)
+		if len(ts) != 1 || ts[0].Alert.Exercise != want {
+			t.Fatalf("step %d: %+v, want exercise %v", s, ts, want)
+		}
 	}
 }
 

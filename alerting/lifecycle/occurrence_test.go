@@ -36,6 +36,8 @@ func TestOccurrences(t *testing.T) {
 			[]event{{0, 0, 2900, 1250}, {0, 2, 2900, 1250}}, []string{first, second}},
 		{"a third joins the second, not the first",
 			[]event{{0, 0, 2900, 1250}, {0, 2, 2900, 1250}, {20, 1, -3000, -4000}}, []string{first, second, second}},
+		{"one that overlaps two joins the earlier",
+			[]event{{0, 2, 2900, 1250}, {10, 0, 2900, 1250}, {20, 1, 1000, -2600}}, []string{first, "skerrymoor-20260701T141513Z", first}},
 		// Places 499 and 501 m apart along one centreline: 1250 - 751 = 499.
 		{"499 m apart", []event{{0, 0, 2900, 1250}, {10, 1, 751, 400}}, []string{first, first}},
 		{"501 m apart", []event{{0, 0, 2900, 1250}, {10, 1, 749, 400}}, []string{first, "skerrymoor-20260701T141513Z"}},

@@ -7,20 +7,22 @@ import (
 	"sockline/sensors"
 )
 
-// Restore takes the alerts that were open as of asOf, each as last issued, into
-// a machine that has none, and appends to dst the closings of those that
-// cannot go on: last issued more than 10 min before asOf
+// Restore puts the alerts that were open as of asOf, each as last issued, in
+// the place of whatever the machine holds (what it opened while the stages
+// before it were warmed up was never told to anyone), and appends to dst the
+// closings of those that cannot go on: last issued more than 10 min before asOf
 // (expired-while-down), or on a path that is no longer configured
 // (path-withdrawn).
 //
-// An alert issued no more than 5 s before asOf was not interrupted: given the
-// steps after its last issue again, it goes on exactly as it would have.
-// Steps up to asOf may therefore be repeated: they bring the alerts up to
-// date, each from its own last issue on, and issue nothing. After a longer gap
-// the hold counts from asOf and the trend begins anew, since what happened in
-// between was not seen.
+// An alert issued no more than 5 s before asOf was not interrupted. To go on
+// exactly as it would have, it needs the steps since its last issue: so a
+// replay restores before the step asOf - 5 s. The steps up to asOf then bring
+// each alert up to date from its own last issue on, and issue nothing. After a
+// longer gap the hold counts from asOf and the trend begins anew, since what
+// happened in between was not seen.
 func (m *Machine) Restore(alerts []Alert, asOf sensors.Instant, dst []Transition) []Transition {
-	m.asOf = asOf
+	clear(m.slots)
+	m.recent, m.asOf = nil, asOf
 	for _, a := range alerts {
 		s, because := m.home(&a, asOf)
 		if s == nil {

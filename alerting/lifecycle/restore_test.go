@@ -77,6 +77,44 @@ func TestHoldCountsFromTheRestart(t *testing.T) {
 	}
 }
 
+// What a machine opened while it was warmed up gives way to what was told, and
+// the steps up to asOf bring it up to date in silence.
+func TestRestoreAfterWarmingUp(t *testing.T) {
+	told := openAlert(t, 41) // last issued at 40 s
+	level := alerting.Noticeable
+	as := []hazard.Assessment{
+		{Path: 0, Observed: whole, Loss: change(12, level, level)},
+		{Path: 2, Observed: whole, Loss: change(12, level, level)},
+	}
+	m := New(skerry())
+	asOf := told.Updated.Add(4 * time.Second)
+	for T := told.Updated.Add(-20 * time.Second); T <= asOf.Add(-6*time.Second); T += sensors.Second {
+		m.Step(T, as, nil)
+	}
+	if len(m.Open(nil)) != 2 {
+		t.Fatal("warming up was meant to open alerts")
+	}
+	if closed := m.Restore([]Alert{told}, asOf, nil); len(closed) != 0 {
+		t.Fatalf("closed %+v", closed)
+	}
+	as[0].Loss.Median *= 2 // would be told at once
+	for T := asOf.Add(-5 * time.Second); T <= asOf; T += sensors.Second {
+		if ts := m.Step(T, as, nil); len(ts) != 0 {
+			t.Fatalf("issued at %v, up to %v: %+v", T, asOf, ts)
+		}
+	}
+	if open := m.Open(nil); len(open) != 1 || open[0].ID != told.ID || open[0].Revision != told.Revision {
+		t.Fatalf("open %+v", open)
+	}
+	ts := m.Step(asOf+sensors.Second, as, nil)
+	if len(ts) != 2 || ts[0].Alert.ID != told.ID || ts[0].Alert.Revision != told.Revision+1 || ts[1].Alert.Revision != 1 {
+		t.Errorf("after %v: %+v", asOf, ts)
+	}
+	if peak := ts[0].Alert.PeakAt; peak != told.Updated+sensors.Second {
+		t.Errorf("the peak at %v was missed: %v", told.Updated+sensors.Second, peak)
+	}
+}
+
 func TestRebase(t *testing.T) {
 	level := alerting.Noticeable
 	m := New(skerry())
