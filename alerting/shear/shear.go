@@ -1,0 +1,248 @@
+// Package shear turns the posterior of the wind field into the headwind along
+// a stretch of path: the profile, and the distribution of M, the greatest loss
+// (or gain) of headwind between two observed points at most 4 km apart. Next:
+// hazard.
+//
+// A maximum over pairs is biased if one pair is picked first, so M is taken in
+// every joint draw, and its distribution is that of the draws.
+package shear
+
+import (
+	"math"
+	"slices"
+
+	"sockline/alerting/windfield"
+)
+
+// Spacing between the points of a profile, m.
+const Spacing = 200.0
+
+const (
+	// reachPoints: pairs are at most 4 km apart.
+	reachPoints = int(4000 / Spacing)
+	// kilometrePoints: the F-factor is averaged over 1 km.
+	kilometrePoints = int(1000 / Spacing)
+	// slopeLength is 1000 ft, over which the greatest slope is stated, m.
+	slopeLength = 304.8
+	// tie: pairs of the mean profile whose changes differ by less are equal:
+	// 0.05 kt in m/s.
+	tie = 0.05 * 1852.0 / 3600.0
+)
+
+// Side is the greatest loss, or the greatest gain, along a stretch. Speeds are
+// magnitudes in m/s.
+type Side struct {
+	Sorted    []float64 // M of every draw, ascending
+	Kilometre []float64 // greatest change over 1 km of every draw, ascending
+	sign      float64   // 1: a fall of the headwind, -1: a rise
+}
+
+// Place is where the mean profile changes most.
+type Place struct {
+	Enter, End int     // points of the stretch, in its own order
+	Change     float64 // of the mean profile between them, m/s, not negative
+	MaxSlope   float64 // greatest change over 1000 ft between them, 1/s
+}
+
+// Quantile of M, by linear interpolation between the draws.
+func (s *Side) Quantile(p float64) float64 { return quantile(s.Sorted, p) }
+
+// KilometreMedian is the median of the greatest change over 1 km, m/s.
+func (s *Side) KilometreMedian() float64 { return quantile(s.Kilometre, 0.5) }
+
+// AtLeast is P(M >= change).
+func (s *Side) AtLeast(change float64) float64 { return share(s.Sorted, change) }
+
+// Stretch is a line of points in the order of one flight and what was found on
+// it. Reversing the flight leaves loss and gain what they are (the headwind
+// changes its sign and the order), so the two directions share it.
+type Stretch struct {
+	Points   []int  // targets of the wind field, in the order of flight
+	Observed []bool // of each point
+
+	Loss, Gain Side
+	Mean       []float64 // headwind of the mean profile at each point, m/s, in this flight's direction
+
+	// joint holds, for each draw in its own order, M and the greatest change
+	// over 1 km of the loss: P(either) needs both.
+	jointLoss, jointKilometre []float64
+
+	line, prefixMax, suffixMax, prefixMin, suffixMin []float64
+}
+
+// NewStretch prepares a stretch over targets in the order of flight.
+func NewStretch(points []int) *Stretch {
+	n := len(points)
+	draws := func() []float64 { return make([]float64, windfield.Draws) }
+	s := &Stretch{Points: points, Observed: make([]bool, n), Mean: make([]float64, n)}
+	s.Loss = Side{Sorted: draws(), Kilometre: draws(), sign: 1}
+	s.Gain = Side{Sorted: draws(), Kilometre: draws(), sign: -1}
+	s.jointLoss, s.jointKilometre = draws(), draws()
+	for _, p := range []*[]float64{&s.line, &s.prefixMax, &s.suffixMax, &s.prefixMin, &s.suffixMin} {
+		*p = make([]float64, n)
+	}
+	return s
+}
+
+// Measure finds loss and gain on the observed points. At least two must be
+// observed.
+func (s *Stretch) Measure(p *windfield.Posterior) {
+	nt := len(p.Mean)
+	for d := range windfield.Draws {
+		row := p.Draws[d*nt : (d+1)*nt]
+		for i, t := range s.Points {
+			s.line[i] = row[t]
+		}
+		loss, gain := s.extremes()
+		lossKm, gainKm := s.kilometre()
+		s.Loss.Sorted[d], s.Gain.Sorted[d] = loss, gain
+		s.Loss.Kilometre[d], s.Gain.Kilometre[d] = lossKm, gainKm
+		s.jointLoss[d], s.jointKilometre[d] = loss, lossKm
+	}
+	slices.Sort(s.Loss.Sorted)
+	slices.Sort(s.Gain.Sorted)
+	slices.Sort(s.Loss.Kilometre)
+	slices.Sort(s.Gain.Kilometre)
+	for i, t := range s.Points {
+		s.Mean[i] = p.Mean[t]
+	}
+}
+
+// EitherAtLeast is the probability that the loss reaches change (m/s), or its
+// greatest part over 1 km reaches kilometre (m/s).
+func (s *Stretch) EitherAtLeast(change, kilometre float64) float64 {
+	n := 0
+	for d, m := range s.jointLoss {
+		if m >= change || s.jointKilometre[d] >= kilometre {
+			n++
+		}
+	}
+	return float64(n) / windfield.Draws
+}
+
+// extremes of line: the greatest fall and the greatest rise from a point to a
+// later one at most reachPoints on, over observed points. Running extremes in
+// blocks give the extreme of every window (M. van Herk, "A fast algorithm for
+// local minimum and maximum filters", Pattern Recognition Letters 13, 1992;
+// from memory).
+func (s *Stretch) extremes() (fall, rise float64) {
+	const width = reachPoints + 1
+	n := len(s.line)
+	up, down := math.Inf(-1), math.Inf(1)
+	for i, v := range s.line {
+		if i%width == 0 {
+			up, down = math.Inf(-1), math.Inf(1)
+		}
+		if s.Observed[i] {
+			up, down = max(up, v), min(down, v)
+		}
+		s.prefixMax[i], s.prefixMin[i] = up, down
+	}
+	up, down = math.Inf(-1), math.Inf(1)
+	for i := n - 1; i >= 0; i-- {
+		if i%width == width-1 {
+			up, down = math.Inf(-1), math.Inf(1)
+		}
+		if s.Observed[i] {
+			up, down = max(up, s.line[i]), min(down, s.line[i])
+		}
+		s.suffixMax[i], s.suffixMin[i] = up, down
+	}
+	for j, v := range s.line {
+		if !s.Observed[j] {
+			continue
+		}
+		i := max(j-reachPoints, 0)
+		fall = max(fall, max(s.suffixMax[i], s.prefixMax[j])-v)
+		rise = max(rise, v-min(s.suffixMin[i], s.prefixMin[j]))
+	}
+	return fall, rise
+}
+
+// kilometre is the greatest fall and rise over 1 km.
+func (s *Stretch) kilometre() (fall, rise float64) {
+	for j := kilometrePoints; j < len(s.line); j++ {
+		i := j - kilometrePoints
+		if s.Observed[i] && s.Observed[j] {
+			d := s.line[i] - s.line[j]
+			fall, rise = max(fall, d), max(rise, -d)
+		}
+	}
+	return fall, rise
+}
+
+// Place finds the pair of points between which the mean profile changes most.
+// before holds each point's distance before the threshold of the path that
+// asks, in m. Among changes within 0.05 kt of the greatest, the pair whose far
+// end is nearest the threshold wins, then the shorter.
+func (s *Stretch) Place(side *Side, before []float64) Place {
+	p := Place{Change: math.Inf(-1)}
+	s.pairs(side.sign, func(i, j int, change float64) { p.Change = max(p.Change, change) })
+	least := p.Change - tie
+	far, length := math.Inf(1), math.Inf(1)
+	s.pairs(side.sign, func(i, j int, change float64) {
+		if change < least {
+			return
+		}
+		f := max(math.Abs(before[i]), math.Abs(before[j]))
+		l := math.Abs(before[i] - before[j])
+		if f < far || (f == far && l < length) {
+			far, length, p.Enter, p.End = f, l, i, j
+		}
+	})
+	p.Change = max(p.Change, 0)
+	p.MaxSlope = s.steepest(side, p)
+	return p
+}
+
+// pairs calls fn with every pair of observed points at most 4 km apart.
+func (s *Stretch) pairs(sign float64, fn func(i, j int, change float64)) {
+	for i := range s.Mean {
+		if !s.Observed[i] {
+			continue
+		}
+		for j := i + 1; j < len(s.Mean) && j <= i+reachPoints; j++ {
+			if s.Observed[j] {
+				fn(i, j, sign*(s.Mean[i]-s.Mean[j]))
+			}
+		}
+	}
+}
+
+// steepest is the greatest change over 1000 ft of the mean profile between the
+// ends of the side, per metre, scaled to the median of M: the mean profile is
+// flatter than any of the profiles it is the mean of.
+func (s *Stretch) steepest(side *Side, p Place) float64 {
+	length := float64(p.End-p.Enter) * Spacing
+	if length <= 0 || p.Change <= 0 {
+		return 0
+	}
+	step := math.Min(slopeLength, length)
+	best := 0.0
+	for from := 0.0; from+step <= length+1e-9; from += Spacing / 4 {
+		a := s.at(float64(p.Enter) + from/Spacing)
+		b := s.at(float64(p.Enter) + (from+step)/Spacing)
+		best = math.Max(best, side.sign*(a-b)/step)
+	}
+	return best * side.Quantile(0.5) / p.Change
+}
+
+// at is the mean profile between its points.
+func (s *Stretch) at(i float64) float64 {
+	k := min(int(i), len(s.Mean)-2)
+	f := i - float64(k)
+	return float64(s.Mean[k]*(1-f)) + float64(s.Mean[k+1]*f)
+}
+
+func quantile(sorted []float64, p float64) float64 {
+	x := p * float64(len(sorted)-1)
+	k := min(int(x), len(sorted)-2)
+	f := x - float64(k)
+	return float64(sorted[k]*(1-f)) + float64(sorted[k+1]*f)
+}
+
+// share of the values that are at least limit.
+func share(sorted []float64, limit float64) float64 {
+	i, _ := slices.BinarySearch(sorted, limit)
+	return float64(len(sorted)-i) / float64(len(sorted))
+}

@@ -1,0 +1,194 @@
+package windfield
+
+import (
+	"fmt"
+	"math"
+
+	"gonum.org/v1/gonum/blas"
+	"gonum.org/v1/gonum/blas/blas64"
+	"gonum.org/v1/gonum/lapack/lapack64"
+
+	"sockline/sensors/averages"
+)
+
+const blocks = averages.Blocks
+
+// entry is everything that follows from which masts are live and how noisy
+// their means are, and not from what they say: one set of gains for each
+// ambient state. Entries are cached.
+type entry struct {
+	live   []int     // masts in use, ascending
+	n      int       // observations: blocks x live x 2, block-major
+	noise  []float64 // [block][live] error variance of one component, m2/s2
+	bank   []float64 // [template][live x 2] unit winds at the live masts
+	states []*state
+}
+
+// state holds the gains of one ambient state.
+type state struct {
+	inverse  []float64 // n x n, K^-1
+	logDet   float64   // of K
+	gain     []float64 // targets x n: posterior mean headwind = gain . y
+	factor   []float64 // targets x targets lower factor of the posterior covariance
+	noise    []float64 // draws x targets: fixed draws of the posterior error; nil until wanted
+	outflows *outflows // nil until wanted
+}
+
+// outflows holds, for one ambient state, what each template's evidence and
+// effect need. See outflow.go.
+type outflows struct {
+	precision []float64 // [template][6] P = (C^-1 + M)^-1, packed symmetric
+	logOdds   []float64 // [template] -1/2 log |I + C M|
+	nowWeight [blocks]float64
+	nowRest   float64 // variance of today's strength that the blocks leave open, m2/s2
+	lines     [][]float64
+}
+
+// newEntry computes the gains for one set of live masts and noise.
+func (e *Estimator) newEntry(live []int, noise []float64) (*entry, error) {
+	n := blocks * len(live) * 2
+	en := &entry{
+		live:  append([]int(nil), live...),
+		noise: append([]float64(nil), noise...),
+		n:     n,
+	}
+	nl := len(live)
+	en.bank = make([]float64, len(e.bank.templates)*2*nl)
+	for j := range e.bank.templates {
+		for i, m := range live {
+			src := (j*e.bank.masts + m) * 2
+			dst := (j*nl + i) * 2
+			en.bank[dst], en.bank[dst+1] = e.bank.atMast[src], e.bank.atMast[src+1]
+		}
+	}
+	en.states = make([]*state, len(e.prior.Fields))
+	for k, f := range e.prior.Fields {
+		s, err := e.newState(en, f)
+		if err != nil {
+			return nil, fmt.Errorf("ambient state %d with %d masts: %w", k, nl, err)
+		}
+		en.states[k] = s
+	}
+	return en, nil
+}
+
+// meanCovariance is the prior covariance of the common mean wind, one
+// component, over dt seconds.
+func (p *Prior) meanCovariance(dt float64) float64 {
+	return float64(p.MeanDeviation*p.MeanDeviation) +
+		float64(p.DriftDeviation*p.DriftDeviation)*math.Exp(-dt/p.DriftTime)
+}
+
+func (e *Estimator) newState(en *entry, f Field) (*state, error) {
+	n, nl := en.n, len(en.live)
+	k := make([]float64, n*n)
+	for b := range blocks {
+		for c := range blocks {
+			dt := math.Abs(e.ages[b] - e.ages[c])
+			mean := e.prior.meanCovariance(dt)
+			fade := math.Exp(-dt / f.Time)
+			for i, mi := range en.live {
+				for j, mj := range en.live {
+					ee, eno, nn := covariance(f, e.masts[mi].X-e.masts[mj].X, e.masts[mi].Y-e.masts[mj].Y)
+					r, q := (b*nl+i)*2, (c*nl+j)*2
+					k[r*n+q] = mean + float64(fade*ee)
+					k[r*n+q+1] = float64(fade * eno)
+					k[(r+1)*n+q] = float64(fade * eno)
+					k[(r+1)*n+q+1] = mean + float64(fade*nn)
+				}
+			}
+		}
+	}
+	for b := range blocks {
+		for i := range nl {
+			r := (b*nl + i) * 2
+			v := en.noise[b*nl+i]
+			k[r*n+r] += v
+			k[(r+1)*n+r+1] += v
+		}
+	}
+	s := &state{}
+	tri, ok := lapack64.Potrf(blas64.Symmetric{Uplo: blas.Upper, N: n, Data: k, Stride: n})
+	if !ok {
+		return nil, fmt.Errorf("the covariance of the means is not positive definite")
+	}
+	for i := range n {
+		s.logDet += 2 * math.Log(tri.Data[i*n+i])
+	}
+	lapack64.Potri(tri)
+	for i := range n {
+		for j := range i {
+			k[i*n+j] = k[j*n+i]
+		}
+	}
+	s.inverse = k
+	e.addGain(en, s, f)
+	return s, nil
+}
+
+// addGain computes the posterior of the headwind at every target: its gain on
+// the observations and the factor of its covariance.
+func (e *Estimator) addGain(en *entry, s *state, f Field) {
+	n, nl, nt := en.n, len(en.live), len(e.targets)
+	cross := make([]float64, nt*n)
+	for t, g := range e.targets {
+		for b := range blocks {
+			dt := e.ages[b]
+			mean := e.prior.meanCovariance(dt)
+			fade := math.Exp(-dt / f.Time)
+			for i, m := range en.live {
+				ee, eno, nn := covariance(f, g.X-e.masts[m].X, g.Y-e.masts[m].Y)
+				o := t*n + (b*nl+i)*2
+				cross[o] = g.headwind(mean+float64(fade*ee), float64(fade*eno))
+				cross[o+1] = g.headwind(float64(fade*eno), mean+float64(fade*nn))
+			}
+		}
+	}
+	s.gain = make([]float64, nt*n)
+	blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(nt, n, cross), mat(n, n, s.inverse), 0, mat(nt, n, s.gain))
+	cov := make([]float64, nt*nt)
+	mean := e.prior.meanCovariance(0)
+	for i, a := range e.targets {
+		for j, b := range e.targets {
+			ee, eno, nn := covariance(f, a.X-b.X, a.Y-b.Y)
+			// Var(-t.(u,v)) with both unit vectors.
+			cov[i*nt+j] = float64(a.East*b.East)*(mean+ee) + float64(a.North*b.North)*(mean+nn) +
+				(float64(a.East*b.North)+float64(a.North*b.East))*eno
+		}
+	}
+	blas64.Gemm(blas.NoTrans, blas.Trans, -1, mat(nt, n, s.gain), mat(nt, n, cross), 1, mat(nt, nt, cov))
+	// Jitter: the posterior covariance is singular to rounding where a target
+	// stands beside a mast.
+	jitter := 1e-6 + 1e-6*float64(f.Deviation*f.Deviation)
+	for tries := 0; ; tries++ {
+		work := append([]float64(nil), cov...)
+		for i := range nt {
+			work[i*nt+i] += jitter
+		}
+		if _, ok := lapack64.Potrf(blas64.Symmetric{Uplo: blas.Lower, N: nt, Data: work, Stride: nt}); ok || tries == 6 {
+			s.factor = work
+			return
+		}
+		jitter *= 10
+	}
+}
+
+// draws are the fixed draws of the posterior error of every target, in m/s:
+// factor . z with the stored normal draws z.
+func (e *Estimator) draws(s *state) []float64 {
+	if s.noise == nil {
+		nt := len(e.targets)
+		s.noise = make([]float64, Draws*nt)
+		copy(s.noise, e.normals)
+		tri := blas64.Triangular{Uplo: blas.Lower, Diag: blas.NonUnit, N: nt, Data: s.factor, Stride: nt}
+		// noise = normals . factor^T
+		blas64.Trmm(blas.Right, blas.Trans, 1, tri, mat(Draws, nt, s.noise))
+	}
+	return s.noise
+}
+
+func mat(rows, cols int, data []float64) blas64.General {
+	return blas64.General{Rows: rows, Cols: cols, Stride: cols, Data: data}
+}
+
+func vec(data []float64) blas64.Vector { return blas64.Vector{N: len(data), Inc: 1, Data: data} }

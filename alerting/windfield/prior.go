@@ -1,0 +1,49 @@
+package windfield
+
+// Prior is what is believed about the wind before this step's means are
+// looked at. It is a mixture: the air is in one of a few ambient states, and
+// now and then an outflow lies over it. The weights of the states are learnt
+// from the last minutes; the numbers here were tuned on synthetic episodes
+// whose seeds are kept apart from those used for reporting.
+type Prior struct {
+	Fields []Field // ambient states, calmest first
+
+	MeanDeviation  float64 // of the common mean wind, one component, m/s: as good as unknown
+	DriftDeviation float64 // how far the common mean strays, one component, m/s ...
+	DriftTime      float64 // ... with this correlation time, s
+
+	Instrument         float64 // standard error of a mast's mean that averaging does not lower, m/s
+	OutflowShare       float64 // prior probability that an outflow is under way near the masts
+	OutflowStrength    float64 // scale of its greatest wind at mast height (half-normal), m/s
+	OutflowTime        float64 // correlation time of its strength, s
+	OutflowRadii       []float64
+	OutflowSpacing     float64 // between template centres, m
+	OutflowMargin      float64 // how far from a mast a centre may lie, m
+	OutflowFieldsBelow int     // outflows are tried on the ambient states before this one
+
+	LeastStateShare float64 // no ambient state is ever believed less than this before a step
+}
+
+// DefaultPrior is the prior in force.
+func DefaultPrior() Prior {
+	field := func(sd, length float64) Field {
+		return Field{Deviation: sd, Length: length, Irrotational: 0.5, Time: 150}
+	}
+	return Prior{
+		Fields: []Field{
+			field(0.25, 1000), field(0.6, 1000), field(1.1, 1000), field(1.9, 1000), field(3.5, 1300),
+		},
+		MeanDeviation:      20,
+		DriftDeviation:     2,
+		DriftTime:          300,
+		Instrument:         0.25,
+		OutflowShare:       0.03,
+		OutflowStrength:    6,
+		OutflowTime:        90,
+		OutflowRadii:       []float64{500, 850, 1400},
+		OutflowSpacing:     500,
+		OutflowMargin:      1600,
+		OutflowFieldsBelow: 4,
+		LeastStateShare:    0.01,
+	}
+}

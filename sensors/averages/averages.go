@@ -1,0 +1,334 @@
+// Package averages turns the checked readings of each mast into what the
+// analysis works on: block means of the wind vector, the turbulence around
+// them, and the two-minute wind that people read. One Snapshot per step. Next:
+// alerting/windfield.
+//
+// Everything is kept in one bin per second, so that irregular and fast
+// instruments weigh the same as slow ones. Directions are never averaged as
+// numbers: only vector components are.
+package averages
+
+import (
+	"math"
+	"time"
+
+	"sockline/sensors"
+	"sockline/sensors/quality"
+	"sockline/sensors/quantity"
+)
+
+// memory is how many seconds of bins a mast keeps: ten minutes of turbulence,
+// the longest block sequence before it, and the minute by which the turbulence
+// estimate may lag.
+const memory = 1024
+
+// Blocks is the number of consecutive stretches of the recent past whose means
+// the analysis uses, newest first.
+const Blocks = 3
+
+// State of a mast.
+type State uint8
+
+// The states of a mast. Only a live mast serves any ground.
+const (
+	Lost     State = iota // nothing for over a minute, or never
+	Stale                 // nothing for longer than its stale_after
+	Starting              // reporting, but its window is less than two thirds full
+	Live
+)
+
+// String is the state's word.
+func (s State) String() string {
+	switch s {
+	case Lost:
+		return "lost"
+	case Stale:
+		return "stale"
+	case Starting:
+		return "starting"
+	case Live:
+		return "live"
+	}
+	return "unknown"
+}
+
+// lostAfter is when a stale mast is called lost.
+const lostAfter = time.Minute
+
+// Block is the vector mean of one stretch of the recent past.
+type Block struct {
+	East, North float64 // m/s
+	Present     bool    // at least two thirds of the expected seconds hold data
+}
+
+// Mast is what a snapshot says of one mast.
+type Mast struct {
+	State    State
+	Blocks   [Blocks]Block
+	Last     sensors.Instant // event time of the newest reading, 0 if none is remembered
+	Exercise bool            // a reading of the newest window marks itself as synthetic
+
+	Turbulence Turbulence // from the ten minutes before the blocks
+}
+
+// TwoMinute is the wind of the last two minutes after ICAO Annex 3 practice:
+// vector mean, and the greatest 3 s mean of the last ten minutes.
+type TwoMinute struct {
+	Mean          quantity.Vector // m/s
+	Speed         float64         // scalar mean, m/s
+	Gust          float64         // greatest 3 s mean of the last 10 min, m/s
+	SpreadDegrees float64         // between the extreme directions of the last 2 min
+}
+
+// Snapshot is the state of every mast at one step. It is made only by
+// Recorder.Snapshot and is valid until the next one.
+type Snapshot struct {
+	at    sensors.Instant
+	masts []Mast
+}
+
+// At is the step.
+func (s *Snapshot) At() sensors.Instant { return s.at }
+
+// Len is the number of masts, live or not.
+func (s *Snapshot) Len() int { return len(s.masts) }
+
+// Mast is the state of the mast with the index of its station.
+func (s *Snapshot) Mast(i int) *Mast { return &s.masts[i] }
+
+// Layout is how the recent past is cut into blocks.
+type Layout struct {
+	Seconds [Blocks]int // length of each block, newest first
+}
+
+// NewLayout cuts the past for an analysis window: the newest block is a third
+// of the window, the next two thirds, the oldest twice the window. The window
+// itself (the first two) must be two thirds full before a mast is live.
+func NewLayout(window time.Duration) Layout {
+	s := max(int(window/time.Second), 6)
+	return Layout{Seconds: [Blocks]int{s / 3, s - s/3, 2 * s}}
+}
+
+// Age is the age of the middle of block b in seconds.
+func (l Layout) Age(b int) float64 {
+	start := 0
+	for i := range b {
+		start += l.Seconds[i]
+	}
+	return float64(start) + float64(l.Seconds[b])/2
+}
+
+// Total is the length of all blocks together in seconds.
+func (l Layout) Total() int {
+	n := 0
+	for _, s := range l.Seconds {
+		n += s
+	}
+	return n
+}
+
+// bin holds the readings of one second.
+type bin struct {
+	second      sensors.Instant // end of the second; 0 when never used
+	east, north float64         // sums, m/s
+	speed       float64         // sum, m/s
+	n           int
+	exercise    bool
+}
+
+type mast struct {
+	interval   int // seconds between reports, at least 1
+	staleAfter time.Duration
+	last       sensors.Instant
+	bins       [memory]bin
+	turbulence Turbulence
+}
+
+// Recorder keeps the bins of every mast. Not safe for concurrent use.
+type Recorder struct {
+	layout   Layout
+	masts    []mast
+	snapshot Snapshot
+}
+
+// NewRecorder keeps bins for the stations, in their order.
+func NewRecorder(stations []sensors.Station, layout Layout) *Recorder {
+	r := &Recorder{layout: layout, masts: make([]mast, len(stations))}
+	for i, s := range stations {
+		r.masts[i].interval = max(int((s.Interval+time.Second-1)/time.Second), 1)
+		r.masts[i].staleAfter = s.StaleAfter
+	}
+	r.snapshot.masts = make([]Mast, len(stations))
+	return r
+}
+
+// Add records a reading that quality did not reject. Readings come in event
+// order within a step.
+func (r *Recorder) Add(c quality.Checked) {
+	if !c.Usable() {
+		return
+	}
+	rd := c.Reading()
+	m := &r.masts[rd.Station]
+	second := rd.Time.CeilSecond()
+	b := &m.bins[slot(second)]
+	if b.second != second {
+		*b = bin{second: second}
+	}
+	v := quantity.FromDirection(rd.Speed, rd.From)
+	b.east += v.East
+	b.north += v.North
+	b.speed += rd.Speed
+	b.n++
+	b.exercise = b.exercise || rd.Exercise
+	m.last = max(m.last, rd.Time)
+}
+
+// slot is the place of a second in the ring.
+func slot(second sensors.Instant) int { return int((second / sensors.Second) & (memory - 1)) }
+
+// at is the bin of the second that ends at s, or nil when it holds nothing.
+func (m *mast) at(s sensors.Instant) *bin {
+	b := &m.bins[slot(s)]
+	if b.second != s || b.n == 0 {
+		return nil
+	}
+	return b
+}
+
+// Snapshot is what is known at step t. The result is overwritten by the next
+// call.
+func (r *Recorder) Snapshot(t sensors.Instant) *Snapshot {
+	r.snapshot.at = t
+	minute := (t/sensors.Second)%60 == 0
+	for i := range r.masts {
+		m := &r.masts[i]
+		if minute {
+			// Once a UTC minute, so that the estimate (and with it the gain
+			// cache) changes seldom and depends on nothing but the bins.
+			m.turbulence = m.estimateTurbulence(t, r.layout)
+		}
+		r.fill(&r.snapshot.masts[i], m, t)
+	}
+	return &r.snapshot
+}
+
+func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
+	*out = Mast{Last: m.last, Turbulence: m.turbulence}
+	age := t.Sub(m.last)
+	switch {
+	case m.last == 0 || age > lostAfter:
+		out.State = Lost
+		return
+	case age > m.staleAfter:
+		out.State = Stale
+		return
+	}
+	end := t
+	filled, want := 0, 0
+	for b, seconds := range r.layout.Seconds {
+		blk := &out.Blocks[b]
+		n := 0
+		for k := range seconds {
+			bn := m.at(end - sensors.Instant(k)*sensors.Second)
+			if bn == nil {
+				continue
+			}
+			blk.East += bn.east / float64(bn.n)
+			blk.North += bn.north / float64(bn.n)
+			out.Exercise = out.Exercise || bn.exercise
+			n++
+		}
+		end -= sensors.Instant(seconds) * sensors.Second
+		expected := max(seconds/m.interval, 1)
+		if n > 0 {
+			blk.East /= float64(n)
+			blk.North /= float64(n)
+			blk.Present = 3*n >= 2*expected
+		}
+		if b < 2 {
+			filled += n
+			want += expected
+		}
+	}
+	out.State = Starting
+	// The newest block must hold something itself: a mast whose last seconds
+	// are missing says nothing of now.
+	if 3*filled >= 2*want && out.Blocks[0].Present {
+		out.State = Live
+	}
+}
+
+// TwoMinute is the wind of a station at step t as people read it; false unless
+// two thirds of the two minutes hold data. It is computed on request: the
+// analysis does not need it.
+func (r *Recorder) TwoMinute(station int, t sensors.Instant) (TwoMinute, bool) {
+	m := &r.masts[station]
+	var w TwoMinute
+	n := 0
+	for k := range 120 {
+		b := m.at(t - sensors.Instant(k)*sensors.Second)
+		if b == nil {
+			continue
+		}
+		w.Mean.East += b.east / float64(b.n)
+		w.Mean.North += b.north / float64(b.n)
+		w.Speed += b.speed / float64(b.n)
+		n++
+	}
+	if 3*n < 2*120/m.interval {
+		return TwoMinute{}, false
+	}
+	w.Mean.East /= float64(n)
+	w.Mean.North /= float64(n)
+	w.Speed /= float64(n)
+	w.SpreadDegrees = m.spread(t, w.Mean)
+	w.Gust = m.gust(t)
+	return w, true
+}
+
+// spread is the angle between the extreme directions of the last two minutes,
+// seen from the mean direction, in degrees up to 360.
+func (m *mast) spread(t sensors.Instant, mean quantity.Vector) float64 {
+	lo, hi := 0.0, 0.0
+	from := mean.From()
+	for k := range 120 {
+		b := m.at(t - sensors.Instant(k)*sensors.Second)
+		if b == nil {
+			continue
+		}
+		v := quantity.Vector{East: b.east, North: b.north}
+		d := quantity.NormalizeDegrees(v.From()-from+180) - 180
+		lo, hi = math.Min(lo, d), math.Max(hi, d)
+	}
+	return hi - lo
+}
+
+// gust is the greatest mean of three consecutive seconds in the last ten
+// minutes (WMO-No. 8: gust by a 3 s running mean; from memory). Instruments
+// slower than one report a second give the greatest report instead.
+func (m *mast) gust(t sensors.Instant) float64 {
+	width := 3
+	if m.interval > 1 {
+		width = 1
+	}
+	best, run, sum := 0.0, 0, 0.0
+	for k := 599; k >= 0; k-- {
+		b := m.at(t - sensors.Instant(k)*sensors.Second)
+		if b == nil {
+			run, sum = 0, 0
+			continue
+		}
+		sum += b.speed / float64(b.n)
+		run++
+		if run > width {
+			old := m.at(t - sensors.Instant(k+width)*sensors.Second)
+			sum -= old.speed / float64(old.n)
+			run = width
+		}
+		if run == width {
+			best = math.Max(best, sum/float64(width))
+		}
+	}
+	return best
+}

@@ -1,0 +1,185 @@
+package averages
+
+import (
+	"math"
+
+	"sockline/sensors"
+)
+
+// Turbulence is what the wind does about its slow course at one mast, as a
+// first-order autoregressive process: variance of one horizontal component and
+// integral time. The mean of it over w seconds has the variance
+// MeanVariance(w).
+type Turbulence struct {
+	Variance float64 // m2/s2, mean of the two components
+	Time     float64 // s
+	Seconds  int     // seconds of data it rests on; 0: not measured yet
+}
+
+// MeanVariance is the variance in m2/s2 of a mean over w seconds:
+// sigma2 (2/a)(1 - (1 - exp(-a))/a) with a = w/T, the variance of the mean of
+// an exponentially correlated signal (G.I. Taylor, "Diffusion by continuous
+// movements", Proc. London Math. Soc. 20, 1921; from memory).
+func (t Turbulence) MeanVariance(w float64) float64 {
+	a := w / t.Time
+	return t.Variance * (2 / a) * (1 - (1-math.Exp(-a))/a)
+}
+
+const (
+	turbulenceSpan  = 600 // s of data before the blocks
+	turbulenceLeast = 180 // s of data below which nothing is said
+	detrendHalf     = 30  // s on either side of the running mean that is removed
+	lagShort        = 2   // s; lag 0 would include the instrument's white noise
+	lagLong         = 6   // s
+)
+
+// Bounds of the integral time in seconds. At 10 m height L1 is about 57 m
+// (IEC 61400-1, from memory), so T runs from 3 s in a gale to 20 s in light air.
+const (
+	leastTime = 2.0
+	mostTime  = 20.0
+)
+
+// estimateTurbulence works on the ten minutes before the blocks in use, so
+// that an onset does not make the filter distrust the mast that sees it. The
+// slow course (a centred one-minute mean) is taken out first: it is signal.
+// Taking it out lowers every autocovariance by about the variance of a
+// one-minute mean, which is put back.
+func (m *mast) estimateTurbulence(t sensors.Instant, layout Layout) Turbulence {
+	if m.interval > 1 {
+		return m.coarseTurbulence(t, layout)
+	}
+	end := t - sensors.Instant(layout.Total())*sensors.Second
+	const n = turbulenceSpan
+	var east, north [n]float64 // oldest first
+	var have [n]bool
+	count := 0
+	for k := range n {
+		b := m.at(end - sensors.Instant(n-1-k)*sensors.Second)
+		if b == nil {
+			continue
+		}
+		east[k] = b.east / float64(b.n)
+		north[k] = b.north / float64(b.n)
+		have[k] = true
+		count++
+	}
+	if count < turbulenceLeast {
+		return Turbulence{}
+	}
+	ce := detrendedCovariances(&east, &have)
+	cn := detrendedCovariances(&north, &have)
+	short := (ce[0] + cn[0]) / 2
+	long := (ce[1] + cn[1]) / 2
+	if short <= 1e-4 {
+		return Turbulence{Variance: 1e-4, Time: 5, Seconds: count}
+	}
+	return solveTurbulence(short, long, count)
+}
+
+// solveTurbulence finds variance and time from the autocovariances at the two
+// lags: C(k) = sigma2 exp(-k/T) - V, where V is the variance of the removed
+// one-minute mean, itself a function of sigma2 and T. Three rounds settle it.
+func solveTurbulence(short, long float64, count int) Turbulence {
+	turb := Turbulence{Variance: short, Time: 5, Seconds: count}
+	lost := 0.0
+	for range 4 {
+		s, l := short+lost, math.Max(long+lost, 1e-6)
+		ratio := math.Max(s/l, 1.01)
+		turb.Time = min(max((lagLong-lagShort)/math.Log(ratio), leastTime), mostTime)
+		turb.Variance = s * math.Exp(lagShort/turb.Time)
+		lost = turb.MeanVariance(2*detrendHalf + 1)
+	}
+	return turb
+}
+
+// detrendedCovariances are the autocovariances at lagShort and lagLong of x
+// less its centred running mean.
+func detrendedCovariances(x *[turbulenceSpan]float64, have *[turbulenceSpan]bool) [2]float64 {
+	const n = turbulenceSpan
+	var residual [n]float64
+	var sum float64
+	var cnt int
+	lo, hi := 0, 0 // the running mean covers [lo, hi)
+	for k := range n {
+		for hi < n && hi <= k+detrendHalf {
+			if have[hi] {
+				sum += x[hi]
+				cnt++
+			}
+			hi++
+		}
+		for lo < k-detrendHalf {
+			if have[lo] {
+				sum -= x[lo]
+				cnt--
+			}
+			lo++
+		}
+		if have[k] {
+			residual[k] = x[k] - sum/float64(cnt)
+		}
+	}
+	var out [2]float64
+	for j, lag := range [2]int{lagShort, lagLong} {
+		c, pairs := 0.0, 0
+		// The first and last half minute have a lopsided running mean.
+		for k := detrendHalf; k+lag < n-detrendHalf; k++ {
+			if have[k] && have[k+lag] {
+				c += residual[k] * residual[k+lag]
+				pairs++
+			}
+		}
+		if pairs > 0 {
+			out[j] = c / float64(pairs)
+		}
+	}
+	return out
+}
+
+// coarseTurbulence serves instruments that report less than once a second:
+// too sparse for short lags, so half the variance of successive differences
+// with the time that the mean speed implies.
+func (m *mast) coarseTurbulence(t sensors.Instant, layout Layout) Turbulence {
+	end := t - sensors.Instant(layout.Total())*sensors.Second
+	var sum, speed float64
+	var pairs, n int
+	var before *bin
+	for k := turbulenceSpan - 1; k >= 0; k-- {
+		b := m.at(end - sensors.Instant(k)*sensors.Second)
+		if b == nil {
+			continue
+		}
+		n++
+		speed += b.speed / float64(b.n)
+		if before != nil && b.second-before.second <= 30*sensors.Second {
+			de := b.east/float64(b.n) - before.east/float64(before.n)
+			dn := b.north/float64(b.n) - before.north/float64(before.n)
+			sum += (float64(de*de) + float64(dn*dn)) / 2
+			pairs++
+		}
+		before = b
+	}
+	if n*m.interval < turbulenceLeast || pairs < 10 {
+		return Turbulence{}
+	}
+	return Turbulence{
+		Variance: math.Max(sum/float64(2*pairs), 1e-4),
+		Time:     ExpectedTime(speed / float64(n)),
+		Seconds:  n * m.interval,
+	}
+}
+
+// ExpectedTime is the integral time in seconds to expect at 10 m in a wind of
+// speed m/s: T = L1/V with L1 = 8.1 x 0.7 z = 56.7 m (IEC 61400-1 ed. 3, annex
+// B; from memory).
+func ExpectedTime(speed float64) float64 {
+	return min(max(56.7/math.Max(speed, 0.1), leastTime), mostTime)
+}
+
+// Expected is the turbulence to reckon with before any has been measured:
+// neutral intensity over roughly open ground, 0.2, with a floor for light air.
+func Expected(speed float64) Turbulence {
+	sigma := 0.2*speed + 0.2
+	return Turbulence{Variance: sigma * sigma, Time: ExpectedTime(speed)}
+}
