@@ -5,6 +5,7 @@ import (
 	"errors"
 	"hash/crc32"
 	"math"
+	"slices"
 
 	"sockline/sensors"
 	"sockline/sensors/quantity"
@@ -228,6 +229,7 @@ func (c *cursor) readings(step sensors.Instant, dst []sensors.Reading) []sensors
 		c.bad = true
 		return dst
 	}
+	dst = slices.Grow(dst, int(n))
 	station := -1
 	for n > 0 && !c.bad {
 		length := c.uvarint()

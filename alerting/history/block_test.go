@@ -1,9 +1,12 @@
 package history
 
 import (
+	"bytes"
+	"encoding/hex"
 	"math"
 	"math/rand/v2"
 	"reflect"
+	"strings"
 	"testing"
 
 	"sockline/sensors"
@@ -128,6 +131,42 @@ func TestSealFindsEveryFlippedBit(t *testing.T) {
 		if _, err := unseal(key, sealed[:n]); err == nil {
 			t.Fatalf("cut to %d bytes: not found", n)
 		}
+	}
+}
+
+// TestFormatExamples holds the two examples of format.md, which come from an
+// independent program: what is on disk must stay readable.
+func TestFormatExamples(t *testing.T) {
+	unhex := func(s string) []byte {
+		b, err := hex.DecodeString(strings.Join(strings.Fields(s), ""))
+		if err != nil {
+			t.Fatal(err)
+		}
+		return b
+	}
+	const step sensors.Instant = 1782907200000
+	key := unhex("80 00 00 00 6a 45 01 40")
+	value := unhex(`01 01 00 02 01 8a 26 f4 03 f0 01 fc 07 8a 26 aa 0b 01 0a 20 00 a0 01 ce 07 c0 25 bf 48 be ae`)
+	rs := []sensors.Reading{
+		{Station: 0, Time: step - 250, Arrival: step - 130, Speed: 5.1, From: 243.7, Gust: 7.25, HasGust: true},
+		{Station: 1, Time: step, Arrival: step + 80, Speed: 4.87, From: 240},
+	}
+	if got := seal(stepKey(step), appendReadings([]byte{1, 0}, step, rs)); !bytes.Equal(stepKey(step), key) || !bytes.Equal(got, value) {
+		t.Errorf("step written as % x under % x", got, stepKey(step))
+	}
+	st, err := decodeStep(rawStep{key: key, value: value}, map[uint64][]string{1: {"far07", "mid"}})
+	if err != nil || st.At != step || !reflect.DeepEqual(st.Readings, rs) {
+		t.Errorf("step read as %+v, %v", st, err)
+	}
+
+	record := unhex(`01 04 00 00 01 9f 1d 8c e2 00 7b 22 76 65 72 73 69 6f 6e 22 3a 22 31 22 7d
+		46 be c9 d3 0e ac 59 54 0e 7b 3c 38 6f 21 37 93 4f da 9b ae 73 61 c4 db ed 6a 23 af 43 11 58 bd`)
+	if got, after := (head{}).next(KindStart, step, []byte(`{"version":"1"}`)); !bytes.Equal(got, record) || after.seq != 1 {
+		t.Errorf("record written as % x", got)
+	}
+	r, err := parseRecord(seqKey(1), record)
+	if err != nil || r.Seq != 1 || r.Kind != KindStart || r.At != step || string(r.Payload) != `{"version":"1"}` {
+		t.Errorf("record read as %+v, %v", r, err)
 	}
 }
 

@@ -58,7 +58,7 @@ func rows(tx *bolt.Tx, to sensors.Instant, keep func(keyedRow) bool) ([]keyedRow
 	)
 	if to == 0 {
 		k, v = c.Last()
-	} else if k, v = c.Seek(instantKey(to)); k == nil {
+	} else if k, _ = c.Seek(instantKey(to)); k == nil {
 		k, v = c.Last()
 	} else {
 		k, v = c.Prev()

@@ -63,11 +63,11 @@ func TestDiskFull(t *testing.T) {
 	if err := syscall.Mount("tmpfs", dir, "tmpfs", 0, "size=4m"); err != nil {
 		t.Skipf("no right to mount a tmpfs: %v", err)
 	}
-	defer func() {
+	t.Cleanup(func() {
 		if err := syscall.Unmount(dir, 0); err != nil {
 			t.Errorf("unmount: %v", err)
 		}
-	}()
+	})
 	s := mustOpen(t, dir, Options{})
 	var out tally
 	w := mustWriter(t, s, WriterOptions{Release: out.take, After: tenfold})
@@ -127,6 +127,22 @@ func TestDiskFull(t *testing.T) {
 	if err := s.Close(); err != nil {
 		t.Fatal(err)
 	}
+	// A start on a full disk: what is there is read, and alerts go out.
+	fillDisk(t, ballast)
+	s = mustOpen(t, dir, Options{})
+	defer s.Close()
+	if open, err := s.OpenAlerts(step); err != nil || len(open) > 1 {
+		t.Errorf("open alerts after a start on a full disk: %v, %v", open, err)
+	}
+	w = mustWriter(t, s, WriterOptions{Release: out.take, After: tenfold})
+	for !s.Health().Degraded {
+		submit()
+		eventually(t, "an alert released after a start on a full disk", func() bool { r, u := out.counts(); return r+u == issues })
+	}
+	if err := os.Remove(ballast); err != nil {
+		t.Fatal(err)
+	}
+	mustCloseWriter(t, w)
 	t.Logf("%d rounds: %d recorded, %d unrecorded, %d failed commits", rounds, recorded, unrecorded, h.Failed)
 }
 

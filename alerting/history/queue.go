@@ -24,7 +24,8 @@ type item struct {
 	stations []string
 	body     []byte // readings
 	late     []byte // nil if none
-	readings int
+	lates    int    // readings in late
+	readings int    // in both
 	drafts   []draft
 	done     chan struct{} // closed when all is on disk
 }

@@ -141,11 +141,12 @@ func decodeStep(r rawStep, tables map[uint64][]string) (Step, error) {
 	if !ok {
 		return Step{}, fmt.Errorf("step %s %w", at, errNewTable)
 	}
+	late := c.uvarint()
 	st := Step{At: at, Stations: ids, Readings: c.readings(at, nil)}
 	if c.bad || len(c.b) != 0 {
 		return Step{}, fmt.Errorf("step %s %w", at, errBlock)
 	}
-	if r.late != nil {
+	if late > 0 {
 		body, err := unseal(r.key, r.late)
 		if err != nil {
 			return Step{}, fmt.Errorf("late readings of step %s %w", at, err)
@@ -153,7 +154,7 @@ func decodeStep(r rawStep, tables map[uint64][]string) (Step, error) {
 		c := cursor{b: body}
 		c.uvarint() // the same list of stations
 		st.Late = c.late(at)
-		if c.bad || len(c.b) != 0 {
+		if c.bad || len(c.b) != 0 || uint64(len(st.Late)) != late {
 			return Step{}, fmt.Errorf("late readings of step %s %w", at, errBlock)
 		}
 	}

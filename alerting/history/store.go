@@ -44,6 +44,7 @@ type Store struct {
 	shelf    shelf
 	journal  *file // held open; nil when read-only
 	head     head  // end of the chain; after Open only the Writer touches it
+	writing  atomic.Bool
 
 	healthMu sync.Mutex // writers of health
 	health   atomic.Pointer[Health]

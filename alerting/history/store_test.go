@@ -2,10 +2,12 @@ package history
 
 import (
 	"errors"
+	"fmt"
 	"os"
 	"path/filepath"
 	"reflect"
 	"strings"
+	"sync"
 	"testing"
 	"time"
 
@@ -233,6 +235,62 @@ func TestJournalKinds(t *testing.T) {
 	})
 	if want := []string{"start", "configuration", "issue", "stop"}; err != nil || !reflect.DeepEqual(kinds, want) {
 		t.Errorf("kinds %v, want %v; %v", kinds, want, err)
+	}
+}
+
+// TestReadWhileWriting asks everything at once while steps come in and files
+// are opened again as after failures; the race detector looks on.
+func TestReadWhileWriting(t *testing.T) {
+	s := mustOpen(t, t.TempDir(), Options{Keep: time.Hour})
+	defer s.Close()
+	w := mustWriter(t, s, WriterOptions{After: tenfold})
+	if _, err := s.Writer(WriterOptions{}); err == nil {
+		t.Error("a second writer")
+	}
+	stop := make(chan struct{})
+	var readers sync.WaitGroup
+	for _, ask := range []func() error{
+		func() error { return s.Readings(0, 1<<50, func(Step) error { return nil }) },
+		func() error { return s.Journal(1, func(Record) error { return nil }) },
+		func() error { _, err := s.Events(Filter{Limit: 5}); return err },
+		func() error { _, err := s.OpenAlerts(1 << 50); return err },
+		func() error { _, err := s.Prune(start); return err },
+		func() error { _, _, err := s.LastStep(); return err },
+		func() error {
+			if r, err := s.Verify(); err != nil || !r.OK() {
+				return fmt.Errorf("%+v, %w", r, err)
+			}
+			return nil
+		},
+	} {
+		readers.Go(func() {
+			for {
+				if err := ask(); err != nil {
+					t.Error(err)
+					return
+				}
+				select {
+				case <-stop:
+					return
+				default:
+				}
+			}
+		})
+	}
+	for i := range 150 { // crosses midnight
+		w.Submit(batchOf(start + sensors.Instant(i)*sensors.Second))
+		if i%50 == 0 {
+			if err := s.journal.reopen(); err != nil {
+				t.Error(err)
+			}
+		}
+		eventually(t, "a short queue", func() bool { return s.Health().Commits > uint64(i/10) })
+	}
+	mustCloseWriter(t, w)
+	close(stop)
+	readers.Wait()
+	if c := mustContent(t, s); len(c.Steps) != 150 || s.Health().Degraded {
+		t.Errorf("%d steps, health %+v", len(c.Steps), s.Health())
 	}
 }
 

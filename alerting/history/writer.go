@@ -64,6 +64,9 @@ func (s *Store) Writer(opts WriterOptions) (*Writer, error) {
 	if s.readOnly {
 		return nil, errors.New("write to the history: it is open for reading only")
 	}
+	if !s.writing.CompareAndSwap(false, true) {
+		return nil, errors.New("write to the history: it has a writer already")
+	}
 	if opts.After == nil {
 		opts.After = time.After
 	}
@@ -86,7 +89,7 @@ func (w *Writer) Submit(b Batch) {
 	it := &item{step: b.Step.CeilSecond(), hasStep: true, stations: b.Stations, readings: len(b.Readings) + len(b.Late)}
 	it.body = appendReadings(nil, it.step, b.Readings)
 	if len(b.Late) > 0 {
-		it.late = appendLate(nil, it.step, b.Late)
+		it.late, it.lates = appendLate(nil, it.step, b.Late), len(b.Late)
 	}
 	for _, e := range b.Entries {
 		it.drafts = append(it.drafts, draft{kind: e.Kind, at: e.At, payload: e.Payload})
@@ -219,6 +222,7 @@ func (w *Writer) await(o outgoing) bool {
 // run takes what is queued and commits it, in order, until closed.
 func (w *Writer) run() {
 	defer close(w.done)
+	defer w.s.writing.Store(false)
 	defer w.closeDay()
 	now := make(chan time.Time)
 	close(now)
@@ -332,7 +336,10 @@ func (w *Writer) writeDay(name string, items []*item) error {
 				return err
 			}
 			key, id := stepKey(it.step), binary.AppendUvarint(nil, uint64(known.id))
-			if err := steps.Put(key, seal(key, append(bytes.Clone(id), it.body...))); err != nil {
+			// How many late ones there are stands with the step, so that their
+			// loss is seen.
+			body := append(binary.AppendUvarint(bytes.Clone(id), uint64(it.lates)), it.body...)
+			if err := steps.Put(key, seal(key, body)); err != nil {
 				return err
 			}
 			if it.late != nil {
