@@ -81,6 +81,9 @@ func (c *Clock) Now() sensors.Instant {
 	return c.last
 }
 
+// Stamp is Now, whatever the message.
+func (c *Clock) Stamp(string, []byte) sensors.Instant { return c.Now() }
+
 // Offset is how far the host clock is ahead of the arrival clock (negative:
 // behind), speed aside. A magnitude above OffsetLimit means that the host
 // clock was stepped, or that the host was suspended.

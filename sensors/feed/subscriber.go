@@ -5,6 +5,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"sync"
 	"sync/atomic"
 
 	mqtt "github.com/eclipse/paho.mqtt.golang"
@@ -28,18 +29,27 @@ type SubscribeOptions struct {
 	ClientID string   // a name; the host and a random part are added
 	Topics   []string // topic filters
 	Queue    int      // messages that may wait; DefaultQueue if 0
-	Clock    *Clock   // stamps the messages
+	Clock    Stamper  // stamps the messages; a *Clock but for demonstrations
 	Log      zerolog.Logger
 	// OnState is called at each change of state, from one goroutine; it must
 	// not call Close. May be nil.
 	OnState func(connected, subscribed bool)
 }
 
+// Stamper gives the arrival stamp of a message. Stamps never go back. It is
+// called for one message at a time, and must not wait for anything.
+type Stamper interface {
+	Stamp(topic string, payload []byte) sensors.Instant
+}
+
 // Subscriber is one connection on which messages come in. It never gives up:
 // whatever happens to the broker, it connects and subscribes again.
 type Subscriber struct {
-	session  *session
-	clock    *Clock
+	session *session
+	clock   Stamper
+	// order is held from the stamp to the queue, so that the queue is in the
+	// order of the stamps whoever puts something into it.
+	order    sync.Mutex
 	queue    chan sensors.Message
 	received atomic.Uint64
 	dropped  atomic.Uint64
@@ -85,16 +95,32 @@ func (s *Subscriber) take(m mqtt.Message) {
 		s.oversize.Add(1)
 		return
 	}
-	select {
-	case s.queue <- sensors.Message{
-		Topic: m.Topic(), Payload: bytes.Clone(payload), Received: s.clock.Now(), Retained: m.Retained(),
-	}:
-	default:
+	if !s.put(sensors.Message{Topic: m.Topic(), Payload: bytes.Clone(payload), Retained: m.Retained()}) {
 		s.dropped.Add(1)
 	}
 }
 
-// Messages is the queue. It is never closed; Done tells the end.
+// put stamps a message and queues it; false if the queue is full.
+func (s *Subscriber) put(m sensors.Message) bool {
+	s.order.Lock()
+	defer s.order.Unlock()
+	m.Received = s.clock.Stamp(m.Topic, m.Payload)
+	select {
+	case s.queue <- m:
+		return true
+	default:
+		return false
+	}
+}
+
+// Tick queues an empty message (no topic, no payload) with the stamp of this
+// moment: whoever takes it from the queue has seen everything that arrived
+// before. It never waits; with a full queue there is no need of it, because
+// the messages ahead carry the time.
+func (s *Subscriber) Tick() { s.put(sensors.Message{}) }
+
+// Messages is the queue, in the order of the stamps. It is never closed; Done
+// tells the end.
 func (s *Subscriber) Messages() <-chan sensors.Message { return s.queue }
 
 // Done is closed when the subscriber has ended.
