@@ -1,0 +1,65 @@
+package main
+
+import (
+	"fmt"
+	"io"
+	"os"
+	"strings"
+	"time"
+
+	"golang.org/x/term"
+)
+
+const (
+	progressAfter = 2 * time.Second        // what is over sooner needs no bar
+	progressEvery = 200 * time.Millisecond // between two drawings
+	progressWidth = 30                     // characters
+)
+
+// progress draws how far a command has come: on a terminal only, and only
+// once it has taken a while.
+type progress struct {
+	out        io.Writer // nil where nobody would see it
+	now        func() time.Time
+	label      string
+	began, was time.Time
+	calls      uint
+	drawn      bool
+}
+
+// newProgress begins a bar. Its drawings go to the standard error of p.
+func newProgress(p *program, label string) *progress {
+	g := &progress{now: p.now, label: label}
+	if f, ok := p.stderr.(*os.File); ok && term.IsTerminal(int(f.Fd())) {
+		g.out = f
+		g.began = g.now()
+		g.was = g.began
+	}
+	return g
+}
+
+// at draws the share (0 to 1) that is done. It looks at the clock on every
+// 64th call only, because a replay calls it with each step.
+func (g *progress) at(share func() float64) {
+	if g.out == nil {
+		return
+	}
+	if g.calls++; g.calls%64 != 0 {
+		return
+	}
+	now := g.now()
+	if now.Sub(g.began) < progressAfter || now.Sub(g.was) < progressEvery {
+		return
+	}
+	g.was, g.drawn = now, true
+	done := min(max(share(), 0), 1)
+	n := int(done * progressWidth)
+	fmt.Fprintf(g.out, "\r%s [%s%s] %3.0f %%", g.label, strings.Repeat("=", n), strings.Repeat(" ", progressWidth-n), done*100)
+}
+
+// end wipes the bar away.
+func (g *progress) end() {
+	if g.drawn {
+		fmt.Fprintf(g.out, "\r%s\r", strings.Repeat(" ", len(g.label)+progressWidth+9))
+	}
+}
