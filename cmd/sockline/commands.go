@@ -45,6 +45,8 @@ type command struct {
 func commands() []command {
 	return []command{
 		simulateCommand(),
+		recordCommand(),
+		replayCommand(),
 		versionCommand(),
 	}
 }

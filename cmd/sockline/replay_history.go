@@ -1,0 +1,163 @@
+package main
+
+import (
+	"errors"
+	"fmt"
+	"time"
+
+	"sockline/alerting/engine"
+	"sockline/alerting/history"
+	"sockline/alerting/lifecycle"
+	"sockline/sensors"
+)
+
+// restoreLead is how long before the moment they are known for alerts are
+// restored, so that one that was issued just before it is taken on from its
+// own last issue: see lifecycle.Machine.Restore.
+const restoreLead = 5 * time.Second
+
+// history replays the readings of a history. A replay from the middle takes
+// the alerts that were open two hours before it, and runs from there silently;
+// the stages before the alerts have had two hours more by then.
+func (r *replayer) history(dir string) error {
+	store, err := history.ReadOnly(dir)
+	if err != nil {
+		if errors.Is(err, history.ErrInUse) {
+			return fmt.Errorf("%w; to replay while the daemon runs, give a copy of the directory", err)
+		}
+		return err
+	}
+	h := &historyReplay{replayer: r, ids: make([]string, len(r.cfg.Stations))}
+	for i, s := range r.cfg.Stations {
+		h.ids[i] = s.ID
+	}
+	begin, end := sensors.Instant(0), r.to
+	if end == 0 {
+		last, ok, err := store.LastStep()
+		if err != nil {
+			return fmt.Errorf("replay the history: %w", err)
+		}
+		if !ok {
+			r.note("the history holds no readings")
+			return store.Close()
+		}
+		end = last + sensors.Second
+	}
+	if r.from != 0 {
+		begin = r.from.Add(-2 * engine.Memory)
+		h.asOf = r.from.Add(-engine.Memory)
+		if h.open, err = store.OpenAlerts(h.asOf); err != nil {
+			return fmt.Errorf("find the alerts that were open at %s: %w", h.asOf, err)
+		}
+	}
+	if h.starts, err = startsOf(store); err != nil {
+		return fmt.Errorf("replay the history: %w", err)
+	}
+	r.share = func() float64 {
+		return float64(r.engine.LastStep()-h.first) / float64(max(end-h.first, 1))
+	}
+	err = store.Readings(begin, end, h.stored)
+	if err != nil && !errors.Is(err, errReplayed) {
+		err = fmt.Errorf("replay the history: %w", err)
+	}
+	return errors.Join(err, store.Close())
+}
+
+// startsOf lists when the daemon was started, ascending.
+func startsOf(store *history.Store) ([]sensors.Instant, error) {
+	var starts []sensors.Instant
+	err := store.Journal(1, func(rec history.Record) error {
+		if rec.Kind == history.KindStart {
+			starts = append(starts, rec.At)
+		}
+		return nil
+	})
+	return starts, err
+}
+
+// historyReplay is the state between the stored steps.
+type historyReplay struct {
+	*replayer
+	ids    []string          // of the configured stations
+	first  sensors.Instant   // the first stored step
+	starts []sensors.Instant // of the daemon
+	open   []lifecycle.Alert // to be restored
+	asOf   sensors.Instant   // as they were then; 0 once done, or for nothing to restore
+}
+
+// stored takes the next stored step, and all steps without readings that lie
+// between the one before and it.
+func (h *historyReplay) stored(st history.Step) error {
+	last := h.engine.LastStep()
+	if last == 0 {
+		h.first, last = st.At, st.At-sensors.Second
+		if err := h.engine.SkipTo(last); err != nil {
+			return err
+		}
+	}
+	if start, ok := h.startIn(last, st.At); ok {
+		if err := h.restart(start, st.At); err != nil {
+			return err
+		}
+	} else if err := h.silence(st.At); err != nil {
+		return err
+	}
+	for _, reading := range st.For(h.ids) {
+		h.engine.Stored(reading)
+	}
+	return h.next(st.At)
+}
+
+// silence closes the steps without readings before the step at.
+func (h *historyReplay) silence(at sensors.Instant) error {
+	for t := h.engine.LastStep() + sensors.Second; t < at; t = h.engine.LastStep() + sensors.Second {
+		if err := h.leaveOut(t, at); err != nil {
+			return err
+		}
+		if t = h.engine.LastStep() + sensors.Second; t >= at {
+			return nil
+		}
+		if err := h.next(t); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// next closes one step, and restores the alerts of the journal when it is time.
+func (h *historyReplay) next(t sensors.Instant) error {
+	if h.asOf != 0 && t >= h.asOf.Add(-restoreLead) {
+		h.engine.Restore(h.open, h.asOf)
+		h.asOf, h.open = 0, nil
+	}
+	return h.step(t)
+}
+
+// startIn is the last start of the daemon after the step last whose first step
+// was at: there is one only if steps are missing between them.
+func (h *historyReplay) startIn(last, at sensors.Instant) (sensors.Instant, bool) {
+	if at-last <= sensors.Second || last < h.first {
+		return 0, false
+	}
+	var found sensors.Instant
+	for _, s := range h.starts {
+		if s > last && s <= at {
+			found = s
+		}
+	}
+	return found, found != 0
+}
+
+// restart goes through a time in which the daemon was down: nothing was
+// issued, and at its start it took up the alerts as it had left them.
+func (h *historyReplay) restart(start, at sensors.Instant) error {
+	open := h.engine.Alerts(nil)
+	h.muted = true
+	err := h.silence(at)
+	h.muted = false
+	if err != nil {
+		return err
+	}
+	asOf := min(start.FloorSecond(), at-sensors.Second)
+	return h.print(asOf, h.engine.Restore(open, asOf))
+}
