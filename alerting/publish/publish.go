@@ -110,6 +110,9 @@ type Options struct {
 	Tick        <-chan time.Time // every Tick or so
 	Log         zerolog.Logger
 	MaxAlerts   int // alerts kept at most; 0 for the default
+	// Listen is how long a new connection listens for another instance; 0 for
+	// ListenFor. Only a program that owns its broker may make it shorter.
+	Listen time.Duration
 }
 
 // exerciseRoot is the first level of every exercise topic.

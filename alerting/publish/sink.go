@@ -69,6 +69,9 @@ func New(broker Broker, opts Options) (*Sink, error) {
 	if opts.MaxAlerts <= 0 {
 		opts.MaxAlerts = defaultMaxAlerts
 	}
+	if opts.Listen <= 0 {
+		opts.Listen = ListenFor
+	}
 	s := &Sink{
 		broker: broker,
 		opts:   opts,
@@ -221,7 +224,7 @@ func (s *Sink) beginSession(now time.Time) {
 		s.enter(Sending, "")
 		return
 	}
-	s.listenEnd = now.Add(ListenFor)
+	s.listenEnd = now.Add(s.opts.Listen)
 	s.enter(Listening, "")
 }
 

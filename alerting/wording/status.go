@@ -19,6 +19,9 @@ type Status struct {
 	Condition      alerting.Condition
 	At, ValidUntil sensors.Instant
 	Live, Total    int      // masts
+	Connected      bool     // to the broker of the readings
+	Subscribed     bool     // and every topic of the masts is granted
+	ClockOffset    float64  // of the host clock from the arrival clock, s
 	Degraded       string   // why the history may miss things; empty while it is whole
 	Remarks        []string // whole sentences
 	Exercise       bool
@@ -26,9 +29,11 @@ type Status struct {
 
 // JSON is the status object of the outside face.
 func (s *Status) JSON() []byte {
-	var masts, history, o object
+	var masts, broker, history, o object
 	masts.count("live", s.Live)
 	masts.count("total", s.Total)
+	broker.flag("connected", s.Connected)
+	broker.flag("subscribed", s.Subscribed)
 	history.flag("degraded", s.Degraded != "")
 	history.text("reason", s.Degraded)
 	o.text("condition", string(s.Condition))
@@ -37,6 +42,8 @@ func (s *Status) JSON() []byte {
 	o.time("at", s.At)
 	o.time("valid_until", s.ValidUntil)
 	o.raw("stations", masts.end())
+	o.raw("broker", broker.end())
+	o.fixed("clock_offset_s", s.ClockOffset, 1)
 	o.raw("history", history.end())
 	o.list("remarks", s.Remarks)
 	o.text("version", s.Version)

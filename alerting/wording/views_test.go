@@ -145,10 +145,10 @@ func TestStatus(t *testing.T) {
 	s := Status{
 		Airfield: "skerrymoor", Instance: "7f3a", Version: "0.1.0", Condition: alerting.PartlyObserving,
 		At: peaked, ValidUntil: peaked + 5*sensors.Second, Live: 6, Total: 8,
-		Degraded: "the disk is full", Remarks: []string{EmbeddedBroker},
+		Connected: true, ClockOffset: -0.72, Degraded: "the disk is full", Remarks: []string{EmbeddedBroker},
 	}
 	want := `{"condition":"partly-observing","instance":"7f3a","airfield":"skerrymoor","at":"2026-07-01T14:15:41Z","valid_until":"2026-07-01T14:15:46Z",` +
-		`"stations":{"live":6,"total":8},"history":{"degraded":true,"reason":"the disk is full"},` +
+		`"stations":{"live":6,"total":8},"broker":{"connected":true,"subscribed":false},"clock_offset_s":-0.7,"history":{"degraded":true,"reason":"the disk is full"},` +
 		`"remarks":["The broker is built in: nobody is told when this program stops."],"version":"0.1.0","exercise":false,` +
 		`"notice":` + string(appendString(nil, alerting.Notice)) + `}`
 	if got := string(s.JSON()); got != want {
