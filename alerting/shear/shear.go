@@ -152,9 +152,15 @@ func (s *Stretch) extremes() (fall, rise float64) {
 		if !s.Observed[j] {
 			continue
 		}
-		i := max(j-reachPoints, 0)
-		fall = max(fall, max(s.suffixMax[i], s.prefixMax[j])-v)
-		rise = max(rise, v-min(s.suffixMin[i], s.prefixMin[j]))
+		// The window from j-reachPoints to j is as long as a block, so it is
+		// the end of one block and the beginning of the next. Before the first
+		// full window it is a beginning only.
+		high, low := s.prefixMax[j], s.prefixMin[j]
+		if i := j - reachPoints; i >= 0 {
+			high, low = max(high, s.suffixMax[i]), min(low, s.suffixMin[i])
+		}
+		fall = max(fall, high-v)
+		rise = max(rise, v-low)
 	}
 	return fall, rise
 }

@@ -105,23 +105,26 @@ func (e *Estimator) entryFor(s *averages.Snapshot) *entry {
 	return en
 }
 
-// blockNoise is the error variance of every block of every live mast, from the
-// rounded steps alone.
+// blockNoise is the error covariance of the block means of every live mast,
+// [live][block][block], from the rounded steps alone. Turbulence outlives a
+// block, so the errors of neighbouring blocks are correlated; taken for
+// independent they would pass for a wind field that stays.
 func (e *Estimator) blockNoise(timeStep int) []float64 {
-	nl := len(e.live)
 	e.noise = e.noise[:0]
 	unit := averages.Turbulence{Variance: 1, Time: timeSteps[timeStep]}
 	first := unit.MeanVariance(float64(e.layout.Seconds[0]))
 	instrument := float64(e.prior.Instrument * e.prior.Instrument)
-	for b := range blocks {
-		ratio := unit.MeanVariance(float64(e.layout.Seconds[b])) / first
-		for i := range nl {
-			step := e.steps[2+2*i]
-			v := noiseLeast*math.Pow(noiseRatio, float64(step&15))*ratio + instrument
-			if step>>4&(1<<b) != 0 {
-				v = absentVariance
+	for i := range e.live {
+		step := e.steps[2+2*i]
+		scale := noiseLeast * math.Pow(noiseRatio, float64(step&15)) / first
+		for b := range blocks {
+			for c := range blocks {
+				v := scale*e.layout.Covariance(unit, b, c) + instrument
+				if b == c && step>>4&(1<<b) != 0 {
+					v += absentVariance
+				}
+				e.noise = append(e.noise, v)
 			}
-			e.noise = append(e.noise, v)
 		}
 	}
 	return e.noise

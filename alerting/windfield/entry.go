@@ -17,31 +17,22 @@ const blocks = averages.Blocks
 // their means are, and not from what they say: one set of gains for each
 // ambient state. Entries are cached.
 type entry struct {
-	live   []int     // masts in use, ascending
-	n      int       // observations: blocks x live x 2, block-major
-	noise  []float64 // [block][live] error variance of one component, m2/s2
-	bank   []float64 // [template][live x 2] unit winds at the live masts
-	states []*state
+	live     []int     // masts in use, ascending
+	n        int       // observations: blocks x live x 2, block-major
+	noise    []float64 // [block][live] error variance of one component, m2/s2
+	outflows []float64 // unit winds of every outflow at the live masts; see outflowBank.atLive
+	fronts   []float64 // the same of every front; see frontBank.atLive
+	states   []*state
 }
 
 // state holds the gains of one ambient state.
 type state struct {
-	inverse  []float64 // n x n, K^-1
-	logDet   float64   // of K
-	gain     []float64 // targets x n: posterior mean headwind = gain . y
-	factor   []float64 // targets x targets lower factor of the posterior covariance
-	noise    []float64 // draws x targets: fixed draws of the posterior error; nil until wanted
-	outflows *outflows // nil until wanted
-}
-
-// outflows holds, for one ambient state, what each template's evidence and
-// effect need. See outflow.go.
-type outflows struct {
-	precision []float64 // [template][6] P = (C^-1 + M)^-1, packed symmetric
-	logOdds   []float64 // [template] -1/2 log |I + C M|
-	nowWeight [blocks]float64
-	nowRest   float64 // variance of today's strength that the blocks leave open, m2/s2
-	lines     [][]float64
+	inverse  []float64   // n x n, K^-1
+	logDet   float64     // of K
+	gain     []float64   // targets x n: posterior mean headwind = gain . y
+	factor   []float64   // targets x targets lower factor of the posterior covariance
+	noise    []float64   // draws x targets: fixed draws of the posterior error; nil until wanted
+	patterns []*patterns // by class; nil until wanted
 }
 
 // newEntry computes the gains for one set of live masts and noise.
@@ -52,20 +43,13 @@ func (e *Estimator) newEntry(live []int, noise []float64) (*entry, error) {
 		noise: append([]float64(nil), noise...),
 		n:     n,
 	}
-	nl := len(live)
-	en.bank = make([]float64, len(e.bank.templates)*2*nl)
-	for j := range e.bank.templates {
-		for i, m := range live {
-			src := (j*e.bank.masts + m) * 2
-			dst := (j*nl + i) * 2
-			en.bank[dst], en.bank[dst+1] = e.bank.atMast[src], e.bank.atMast[src+1]
-		}
-	}
+	en.outflows = e.outflows.atLive(live)
+	en.fronts = e.fronts.atLive(live)
 	en.states = make([]*state, len(e.prior.Fields))
 	for k, f := range e.prior.Fields {
 		s, err := e.newState(en, f)
 		if err != nil {
-			return nil, fmt.Errorf("ambient state %d with %d masts: %w", k, nl, err)
+			return nil, fmt.Errorf("ambient state %d with %d masts: %w", k, len(live), err)
 		}
 		en.states[k] = s
 	}
@@ -99,15 +83,17 @@ func (e *Estimator) newState(en *entry, f Field) (*state, error) {
 			}
 		}
 	}
-	for b := range blocks {
-		for i := range nl {
-			r := (b*nl + i) * 2
-			v := en.noise[b*nl+i]
-			k[r*n+r] += v
-			k[(r+1)*n+r+1] += v
+	for i := range nl {
+		for b := range blocks {
+			for c := range blocks {
+				v := en.noise[(i*blocks+b)*blocks+c]
+				r, q := (b*nl+i)*2, (c*nl+i)*2
+				k[r*n+q] += v
+				k[(r+1)*n+q+1] += v
+			}
 		}
 	}
-	s := &state{}
+	s := &state{patterns: make([]*patterns, len(e.classes))}
 	tri, ok := lapack64.Potrf(blas64.Symmetric{Uplo: blas.Upper, N: n, Data: k, Stride: n})
 	if !ok {
 		return nil, fmt.Errorf("the covariance of the means is not positive definite")

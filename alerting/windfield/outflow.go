@@ -7,151 +7,158 @@ import (
 	"gonum.org/v1/gonum/blas/blas64"
 )
 
-// An outflow template adds a wind a(x) A(t): a known pattern times an unknown
-// strength that changes over the blocks, A ~ N(0, C) with
-// C_bc = s2 exp(-|age_b - age_c| / OutflowTime), and must be positive today.
-// With Phi = the pattern at the masts for each block, K the covariance of the
-// observations without it, M = Phi' K^-1 Phi and b = Phi' K^-1 y, generalised
-// least squares gives (Sherman-Morrison-Woodbury)
-//
-//	A | y ~ N(P b, P),  P = (C^-1 + M)^-1
-//	log p(y | template) - log p(y) = 1/2 b' P b - 1/2 log |I + C M|
+// outflowBank is every outflow that is tried: centres on a square grid around
+// the masts, each with a few radii and both radial shapes. The strengths A are
+// those of the blocks, C_bc = s2 exp(-|age_b - age_c| / OutflowTime): an
+// outflow grows and fades within minutes.
+type outflowBank struct {
+	templates []template
+	masts     int
+	targets   int
+	atMast    []float64 // [template][mast][east, north]: unit wind at each mast
+	atTarget  []float64 // [template][target]: unit headwind at each target
+	c         [6]float64
+	q         [dims]float64
+	rest      float64
+}
 
-// strengthPrior is C, its inverse and today's weights on the blocks.
-func (e *Estimator) strengthPrior() (inv [6]float64, c [6]float64, now [blocks]float64, rest float64) {
-	s2 := float64(e.prior.OutflowStrength * e.prior.OutflowStrength)
-	cov := func(dt float64) float64 { return s2 * math.Exp(-math.Abs(dt)/e.prior.OutflowTime) }
+func newOutflowBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior) *outflowBank {
+	b := &outflowBank{masts: len(masts), targets: len(targets)}
+	b.templates = outflowTemplates(masts, p)
+	b.atMast = make([]float64, len(b.templates)*2*len(masts))
+	b.atTarget = make([]float64, len(b.templates)*len(targets))
+	for j, t := range b.templates {
+		for i, s := range masts {
+			east, north := t.wind(s.X, s.Y)
+			b.atMast[(j*len(masts)+i)*2] = east
+			b.atMast[(j*len(masts)+i)*2+1] = north
+		}
+		for i, g := range targets {
+			east, north := t.wind(g.X, g.Y)
+			b.atTarget[j*len(targets)+i] = g.headwind(east, north)
+		}
+	}
+	b.c, b.q, b.rest = strengthPrior(p.OutflowStrength, p.OutflowTime, ages)
+	return b
+}
+
+// strengthPrior is C of the blocks' strengths, today's regression q on them,
+// and what they leave open of today's variance.
+func strengthPrior(scale, time float64, ages [blocks]float64) (c [6]float64, q [dims]float64, rest float64) {
+	s2 := float64(scale * scale)
+	cov := func(dt float64) float64 { return s2 * math.Exp(-math.Abs(dt)/time) }
 	k := 0
+	var toNow [dims]float64
 	for b := range blocks {
+		toNow[b] = cov(ages[b])
 		for d := b; d < blocks; d++ {
-			c[k] = cov(e.ages[b] - e.ages[d])
+			c[k] = cov(ages[b] - ages[d])
 			k++
 		}
 	}
-	inv, _ = invert3(c)
-	var toNow [blocks]float64
-	for b := range blocks {
-		toNow[b] = cov(e.ages[b])
-	}
-	now = mul3(inv, toNow)
+	inv, _ := invert3(c)
+	q = mul3(inv, toNow)
 	rest = s2
 	for b := range blocks {
-		rest -= float64(now[b] * toNow[b])
+		rest -= float64(q[b] * toNow[b])
 	}
-	return inv, c, now, rest
+	return c, q, rest
 }
 
-// outflows computes, once for a state, what the evidence of every template
-// needs.
-func (e *Estimator) outflows(en *entry, s *state) *outflows {
-	if s.outflows != nil {
-		return s.outflows
+func outflowTemplates(masts []Mast, p Prior) []template {
+	var list []template
+	minX, minY, maxX, maxY := bounds(masts)
+	m := p.OutflowMargin
+	// The grid is anchored on whole multiples of the spacing, so that adding a
+	// mast adds centres and moves none.
+	first := func(v float64) float64 { return math.Ceil((v-m)/p.OutflowSpacing) * p.OutflowSpacing }
+	for y := first(minY); y <= maxY+m; y += p.OutflowSpacing {
+		for x := first(minX); x <= maxX+m; x += p.OutflowSpacing {
+			if !near(masts, x, y, m) {
+				continue
+			}
+			for _, radius := range p.OutflowRadii {
+				for _, s := range []shape{broad, compact} {
+					list = append(list, template{x: x, y: y, radius: radius, shape: s})
+				}
+			}
+		}
 	}
-	nj, w := len(e.bank.templates), 2*len(en.live)
-	inv, c, now, rest := e.strengthPrior()
-	o := &outflows{
-		precision: make([]float64, nj*6),
-		logOdds:   make([]float64, nj),
-		nowWeight: now,
-		nowRest:   rest,
-		lines:     make([][]float64, nj),
+	return list
+}
+
+func bounds(masts []Mast) (minX, minY, maxX, maxY float64) {
+	minX, minY = math.Inf(1), math.Inf(1)
+	maxX, maxY = math.Inf(-1), math.Inf(-1)
+	for _, s := range masts {
+		minX, maxX = math.Min(minX, s.X), math.Max(maxX, s.X)
+		minY, maxY = math.Min(minY, s.Y), math.Max(maxY, s.Y)
 	}
-	// M = Phi' K^-1 Phi, one block pair at a time: (bank . K^-1_bc) row-dot bank.
-	tmp := make([]float64, nj*w)
-	m := make([]float64, nj*6)
+	return minX, minY, maxX, maxY
+}
+
+func near(masts []Mast, x, y, reach float64) bool {
+	for _, s := range masts {
+		if math.Hypot(x-s.X, y-s.Y) <= reach {
+			return true
+		}
+	}
+	return false
+}
+
+// atLive is the unit winds at the live masts only: [template][live][2].
+func (b *outflowBank) atLive(live []int) []float64 {
+	nl := len(live)
+	out := make([]float64, len(b.templates)*2*nl)
+	for j := range b.templates {
+		for i, m := range live {
+			src, dst := (j*b.masts+m)*2, (j*nl+i)*2
+			out[dst], out[dst+1] = b.atMast[src], b.atMast[src+1]
+		}
+	}
+	return out
+}
+
+func (b *outflowBank) count() int { return len(b.templates) }
+
+func (b *outflowBank) prior(int) ([6]float64, [dims]float64, float64) { return b.c, b.q, b.rest }
+
+// project: the wind of each strength stands in its own block only.
+func (b *outflowBank) project(en *entry, w, out []float64) {
+	n, width := len(b.templates), 2*len(en.live)
+	for d := range blocks {
+		blas64.Gemv(blas.NoTrans, 1, mat(n, width, en.outflows), vec(w[d*width:(d+1)*width]), 0, vec(out[d*n:(d+1)*n]))
+	}
+}
+
+func (b *outflowBank) gram(en *entry, s *state, m []float64) {
+	n, w := len(b.templates), 2*len(en.live)
+	tmp := make([]float64, n*w)
 	k := 0
-	for b := range blocks {
-		for d := b; d < blocks; d++ {
-			sub := blas64.General{Rows: w, Cols: w, Stride: en.n, Data: s.inverse[b*w*en.n+d*w:]}
-			blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(nj, w, en.bank), sub, 0, mat(nj, w, tmp))
-			for j := range nj {
-				m[j*6+k] = blas64.Dot(vec(tmp[j*w:(j+1)*w]), vec(en.bank[j*w:(j+1)*w]))
+	for r := range blocks {
+		for c := r; c < blocks; c++ {
+			sub := blas64.General{Rows: w, Cols: w, Stride: en.n, Data: s.inverse[r*w*en.n+c*w:]}
+			blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(n, w, en.outflows), sub, 0, mat(n, w, tmp))
+			for j := range n {
+				m[j*6+k] = blas64.Dot(vec(tmp[j*w:(j+1)*w]), vec(en.outflows[j*w:(j+1)*w]))
 			}
 			k++
 		}
 	}
-	_, logDetC := invert3(c)
-	for j := range nj {
-		var sum [6]float64
-		for i := range sum {
-			sum[i] = inv[i] + m[j*6+i]
-		}
-		p, logDet := invert3(sum)
-		copy(o.precision[j*6:], p[:])
-		o.logOdds[j] = -(logDet + logDetC) / 2 // |I + C M| = |C| |C^-1 + M|
-	}
-	s.outflows = o
-	return o
 }
 
-// line is the effect of one template on the targets, for one state:
-// [0..blocks) what a unit of each block's strength adds to the posterior mean,
-// [blocks] the pattern itself. Computed once, when first drawn.
-func (e *Estimator) line(en *entry, s *state, o *outflows, j int) []float64 {
-	if o.lines[j] != nil {
-		return o.lines[j]
-	}
-	nt, w := len(e.targets), 2*len(en.live)
-	out := make([]float64, (blocks+1)*nt)
-	pattern := e.bank.atTarget[j*nt : (j+1)*nt]
-	for b := range blocks {
-		dst := out[b*nt : (b+1)*nt]
-		for t := range nt {
-			row := s.gain[t*en.n+b*w : t*en.n+(b+1)*w]
-			dst[t] = float64(o.nowWeight[b]*pattern[t]) - blas64.Dot(vec(row), vec(en.bank[j*w:(j+1)*w]))
-		}
-	}
-	copy(out[blocks*nt:], pattern)
-	o.lines[j] = out
-	return out
+func (b *outflowBank) column(en *entry, j, d int, dst []float64) {
+	w := 2 * len(en.live)
+	clear(dst)
+	copy(dst[d*w:(d+1)*w], en.outflows[j*w:(j+1)*w])
 }
 
-// strength is the posterior of one template's strength.
-type strength struct {
-	mean   [blocks]float64 // of the blocks' strengths, m/s
-	share  [blocks]float64 // regression of the blocks' strengths on today's
-	now    float64         // mean of today's strength before it is held positive, m/s
-	spread float64         // its standard deviation, m/s
+func (b *outflowBank) now(j, d int, dst []float64) {
+	for t, v := range b.atTarget[j*b.targets : (j+1)*b.targets] {
+		dst[t] = float64(b.q[d] * v)
+	}
 }
 
-func (o *outflows) strength(j int, b [blocks]float64) strength {
-	p := [6]float64(o.precision[j*6 : j*6+6])
-	var s strength
-	s.mean = mul3(p, b)
-	pq := mul3(p, o.nowWeight)
-	v := o.nowRest
-	for i := range blocks {
-		s.now += float64(o.nowWeight[i] * s.mean[i])
-		v += float64(o.nowWeight[i] * pq[i])
-	}
-	for i := range blocks {
-		s.share[i] = pq[i] / v
-	}
-	s.spread = math.Sqrt(v)
-	return s
-}
-
-// invert3 inverts a symmetric positive definite 3x3 matrix packed as
-// (00, 01, 02, 11, 12, 22) and gives the logarithm of its determinant.
-func invert3(a [6]float64) (inv [6]float64, logDet float64) {
-	c00 := float64(a[3]*a[5]) - float64(a[4]*a[4])
-	c01 := float64(a[2]*a[4]) - float64(a[1]*a[5])
-	c02 := float64(a[1]*a[4]) - float64(a[2]*a[3])
-	det := float64(a[0]*c00) + float64(a[1]*c01) + float64(a[2]*c02)
-	inv = [6]float64{
-		c00 / det, c01 / det, c02 / det,
-		(float64(a[0]*a[5]) - float64(a[2]*a[2])) / det,
-		(float64(a[1]*a[2]) - float64(a[0]*a[4])) / det,
-		(float64(a[0]*a[3]) - float64(a[1]*a[1])) / det,
-	}
-	return inv, math.Log(det)
-}
-
-// mul3 is a packed symmetric 3x3 matrix times a vector.
-func mul3(a [6]float64, x [3]float64) [3]float64 {
-	return [3]float64{
-		float64(a[0]*x[0]) + float64(a[1]*x[1]) + float64(a[2]*x[2]),
-		float64(a[1]*x[0]) + float64(a[3]*x[1]) + float64(a[4]*x[2]),
-		float64(a[2]*x[0]) + float64(a[4]*x[1]) + float64(a[5]*x[2]),
-	}
+func (b *outflowBank) innovation(j int, dst []float64) {
+	copy(dst, b.atTarget[j*b.targets:(j+1)*b.targets])
 }

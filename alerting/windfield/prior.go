@@ -12,14 +12,23 @@ type Prior struct {
 	DriftDeviation float64 // how far the common mean strays, one component, m/s ...
 	DriftTime      float64 // ... with this correlation time, s
 
-	Instrument         float64 // standard error of a mast's mean that averaging does not lower, m/s
-	OutflowShare       float64 // prior probability that an outflow is under way near the masts
-	OutflowStrength    float64 // scale of its greatest wind at mast height (half-normal), m/s
-	OutflowTime        float64 // correlation time of its strength, s
-	OutflowRadii       []float64
-	OutflowSpacing     float64 // between template centres, m
-	OutflowMargin      float64 // how far from a mast a centre may lie, m
-	OutflowFieldsBelow int     // outflows are tried on the ambient states before this one
+	Instrument      float64 // standard error of a mast's mean that averaging does not lower, m/s
+	OutflowShare    float64 // prior probability that an outflow is under way near the masts
+	OutflowStrength float64 // scale of its greatest wind at mast height (half-normal), m/s
+	OutflowTime     float64 // correlation time of its strength, s
+	OutflowRadii    []float64
+	OutflowSpacing  float64 // between template centres, m
+	OutflowMargin   float64 // how far from a mast a centre may lie, m
+
+	FrontShare    float64   // prior probability that a gust front is passing
+	FrontStrength float64   // scale of the change of wind along its motion (half-normal), m/s
+	FrontAcross   float64   // standard deviation of the change across it, m/s
+	FrontHeadings int       // number of headings tried
+	FrontSpeeds   []float64 // m/s
+	FrontSpacing  float64   // between the places tried, m
+	FrontWidth    float64   // half width of the change, m
+
+	PatternsBelow int // outflows and fronts are tried on the ambient states before this one
 
 	LeastStateShare float64 // no ambient state is ever believed less than this before a step
 }
@@ -31,19 +40,26 @@ func DefaultPrior() Prior {
 	}
 	return Prior{
 		Fields: []Field{
-			field(0.25, 1000), field(0.6, 1000), field(1.1, 1000), field(1.9, 1000), field(3.5, 1300),
+			field(0.25, 1000), field(0.6, 1000), field(1.1, 1000), field(1.8, 1000),
 		},
-		MeanDeviation:      20,
-		DriftDeviation:     2,
-		DriftTime:          300,
-		Instrument:         0.25,
-		OutflowShare:       0.03,
-		OutflowStrength:    6,
-		OutflowTime:        90,
-		OutflowRadii:       []float64{500, 850, 1400},
-		OutflowSpacing:     500,
-		OutflowMargin:      1600,
-		OutflowFieldsBelow: 4,
-		LeastStateShare:    0.01,
+		MeanDeviation:   20,
+		DriftDeviation:  2,
+		DriftTime:       300,
+		Instrument:      0.25,
+		OutflowShare:    0.03,
+		OutflowStrength: 6,
+		OutflowTime:     90,
+		OutflowRadii:    []float64{500, 850, 1400},
+		OutflowSpacing:  500,
+		OutflowMargin:   1600,
+		FrontShare:      0.02,
+		FrontStrength:   7,
+		FrontAcross:     4,
+		FrontHeadings:   16,
+		FrontSpeeds:     []float64{5, 10, 16},
+		FrontSpacing:    300,
+		FrontWidth:      300,
+		PatternsBelow:   4,
+		LeastStateShare: 0.01,
 	}
 }

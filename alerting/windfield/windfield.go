@@ -4,8 +4,8 @@
 //
 // The prior is a mixture. Around an unknown common mean the air is in one of a
 // few ambient states (Gaussian processes of different strength, kernel.go), and
-// an outflow of unknown place, size and strength may lie over it (bank.go,
-// outflow.go). Each step weighs the mixture by how well it explains the block
+// an outflow of unknown place, size and strength (outflow.go) or a gust front
+// (front.go) may lie over it. Each step weighs the mixture by how well it explains the block
 // means of all live masts; so calm air does not fill gaps with imagined shear,
 // an onset is not smoothed away, and peaks between masts are restored.
 package windfield
@@ -42,21 +42,25 @@ type Posterior struct {
 	Mean         []float64 // headwind at each target, m/s
 	Draws        []float64 // [Draws][target] joint draws of it, m/s
 	OutflowShare float64   // posterior probability that an outflow is under way
+	FrontShare   float64   // posterior probability that a front is passing
 }
 
 // Estimator holds the gains and the little state that persists: the evidence
 // for the ambient states over the last minutes. Not safe for concurrent use.
 type Estimator struct {
-	prior   Prior
-	masts   []Mast
-	targets []Target
-	layout  averages.Layout
-	ages    [blocks]float64
-	bank    *bank
-	normals []float64 // [Draws][target] fixed standard normal draws
-	order   [Draws]int
-	cache   cache
-	memory  ambientMemory
+	prior    Prior
+	masts    []Mast
+	targets  []Target
+	layout   averages.Layout
+	ages     [blocks]float64
+	outflows *outflowBank
+	fronts   *frontBank
+	classes  []class        // outflows, fronts
+	normals  []float64      // [Draws][target] fixed standard normal draws
+	order    [Draws]int     // which stored draw each draw uses
+	levels   [Draws]float64 // probability level of each draw's strength
+	cache    cache
+	memory   ambientMemory
 
 	// Scratch and result, sized once.
 	live      []int
@@ -64,8 +68,9 @@ type Estimator struct {
 	noise     []float64
 	y         []float64
 	w         []float64
-	b         []float64 // [template][block]
-	evidence  []float64 // per template of one state
+	b         [][]float64 // [class][strength][pattern]
+	evidence  []float64   // per pattern of one class and state
+	column    []float64
 	base      []float64
 	slope     []float64
 	stateLog  []float64
@@ -78,11 +83,10 @@ type Estimator struct {
 }
 
 // part is one component of the mixture after the step: an ambient state, with
-// or without an outflow template.
+// or without a pattern over it.
 type part struct {
-	state    int
-	template int // -1: none
-	weight   float64
+	state, class, pattern int // class -1: none
+	weight                float64
 }
 
 // New prepares an estimator for masts and targets (m in one local plane).
@@ -91,26 +95,33 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	for b := range blocks {
 		e.ages[b] = layout.Age(b)
 	}
-	e.bank = newBank(masts, targets, prior)
+	e.outflows = newOutflowBank(masts, targets, e.ages, prior)
+	e.fronts = newFrontBank(masts, targets, e.ages, prior)
+	e.classes = []class{e.outflows, e.fronts}
 	e.normals = fixedNormals(len(targets))
 	for d := range Draws {
 		e.order[d] = reverseBits(d)
+		e.levels[d] = (float64(reverseBits((37*d+11)%Draws)) + 0.5) / Draws
 	}
-	nj, n := len(e.bank.templates), blocks*2*len(masts)
+	n, most, total := blocks*2*len(masts), 0, 0
+	for _, c := range e.classes {
+		most, total = max(most, c.count()), total+c.count()
+		e.b = append(e.b, make([]float64, dims*c.count()))
+	}
 	e.cache = newCache()
 	e.memory = newAmbientMemory(len(prior.Fields))
-	e.noise = make([]float64, 0, blocks*len(masts))
+	e.noise = make([]float64, 0, blocks*blocks*len(masts))
 	e.live = make([]int, 0, len(masts))
 	e.steps = make([]uint8, 0, 2*len(masts)+1)
 	e.y = make([]float64, n)
 	e.w = make([]float64, n)
-	e.b = make([]float64, blocks*nj)
-	e.evidence = make([]float64, nj)
+	e.evidence = make([]float64, most)
+	e.column = make([]float64, n)
 	e.base = make([]float64, len(targets))
 	e.slope = make([]float64, len(targets))
 	e.stateLog = make([]float64, len(prior.Fields))
 	e.weights = make([]float64, len(prior.Fields))
-	e.parts = make([]part, 0, len(prior.Fields)*(nj+1))
+	e.parts = make([]part, 0, len(prior.Fields)*(total+1))
 	e.times = make([]float64, 0, len(masts))
 	e.bases = make([]float64, 0, len(masts))
 	e.posterior.Mean = make([]float64, len(targets))
@@ -184,7 +195,7 @@ func (e *Estimator) observe(s *averages.Snapshot, en *entry) {
 func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	e.memory.shares(t, e.prior.LeastStateShare, e.weights)
 	for k, s := range en.states {
-		blas64.Symv(1, blas64.Symmetric{Uplo: blas.Upper, N: en.n, Data: s.inverse, Stride: en.n}, vec(e.y), 0, vec(e.w))
+		e.solve(en, s)
 		e.stateLog[k] = -(blas64.Dot(vec(e.y), vec(e.w)) + s.logDet) / 2
 	}
 	top := math.Inf(-1)
@@ -192,69 +203,80 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 		top = math.Max(top, l+math.Log(e.weights[k]))
 	}
 	e.parts = e.parts[:0]
-	total, withOutflow := 0.0, 0.0
+	total := 0.0
 	for k := range en.states {
-		w := (1 - e.prior.OutflowShare) * e.weights[k] * math.Exp(e.stateLog[k]-top)
-		e.parts = append(e.parts, part{state: k, template: -1, weight: w})
+		w := (1 - e.prior.OutflowShare - e.prior.FrontShare) * e.weights[k] * math.Exp(e.stateLog[k]-top)
+		e.parts = append(e.parts, part{state: k, class: -1, weight: w})
 		total += w
 	}
+	shares := [...]float64{e.prior.OutflowShare, e.prior.FrontShare}
+	var found [len(shares)]float64
 	for k, s := range en.states {
-		if k >= e.prior.OutflowFieldsBelow || e.weights[k] < 2*e.prior.LeastStateShare {
+		if k >= e.prior.PatternsBelow || e.weights[k] < 2*e.prior.LeastStateShare {
 			continue
 		}
-		w := e.weighOutflows(en, s, k, top, total)
-		total += w
-		withOutflow += w
-		e.stateLog[k] += math.Log1p(w / e.parts[k].weight)
+		e.solve(en, s)
+		gained := 0.0
+		for c := range e.classes {
+			w := e.weighPatterns(en, s, k, c, shares[c], top, total)
+			total += w
+			found[c] += w
+			gained += w
+		}
+		e.stateLog[k] += math.Log1p(gained / e.parts[k].weight)
 	}
 	e.memory.remember(t, e.stateLog)
 	for i := range e.parts {
 		e.parts[i].weight /= total
 	}
-	e.posterior.OutflowShare = withOutflow / total
+	e.posterior.OutflowShare = found[0] / total
+	e.posterior.FrontShare = found[1] / total
+}
+
+// solve fills w = K^-1 y of a state.
+func (e *Estimator) solve(en *entry, s *state) {
+	blas64.Symv(1, blas64.Symmetric{Uplo: blas.Upper, N: en.n, Data: s.inverse, Stride: en.n}, vec(e.y), 0, vec(e.w))
 }
 
 // negligible is the share of the whole mixture below which a part is left out.
 const negligible = 1e-5
 
-// weighOutflows appends the templates that matter on top of state k and gives
-// their summed weight. total is the weight found so far.
-func (e *Estimator) weighOutflows(en *entry, s *state, k int, top, total float64) float64 {
-	o := e.outflows(en, s)
-	blas64.Symv(1, blas64.Symmetric{Uplo: blas.Upper, N: en.n, Data: s.inverse, Stride: en.n}, vec(e.y), 0, vec(e.w))
-	nj, w := len(e.bank.templates), 2*len(en.live)
-	// b = bank . w_b for each block: the projections of the observations.
-	for b := range blocks {
-		blas64.Gemv(blas.NoTrans, 1, mat(nj, w, en.bank), vec(e.w[b*w:(b+1)*w]), 0,
-			blas64.Vector{N: nj, Inc: 1, Data: e.b[b*nj : (b+1)*nj]})
+// weighPatterns appends the patterns of class c that matter on top of state k
+// and gives their summed weight. w holds K^-1 y; total is the weight found so
+// far.
+func (e *Estimator) weighPatterns(en *entry, s *state, k, c int, share, top, total float64) float64 {
+	p := e.patternsFor(en, s, c)
+	n, b := e.classes[c].count(), e.b[c]
+	if n == 0 {
+		return 0
 	}
+	e.classes[c].project(en, e.w, b)
+	evidence := e.evidence[:n]
 	best := math.Inf(-1)
-	for j := range nj {
-		b0, b1, b2 := e.b[j], e.b[nj+j], e.b[2*nj+j]
-		p := o.precision[j*6 : j*6+6]
-		q := float64(p[0]*float64(b0*b0)) + float64(p[3]*float64(b1*b1)) + float64(p[5]*float64(b2*b2)) +
-			2*(float64(p[1]*float64(b0*b1))+float64(p[2]*float64(b0*b2))+float64(p[4]*float64(b1*b2)))
-		e.evidence[j] = q/2 + o.logOdds[j]
-		best = math.Max(best, e.evidence[j])
+	for j := range evidence {
+		b0, b1, b2 := b[j], b[n+j], b[2*n+j]
+		q := p.precision[j*6 : j*6+6 : j*6+6]
+		v := float64(q[0]*float64(b0*b0)) + float64(q[3]*float64(b1*b1)) + float64(q[5]*float64(b2*b2)) +
+			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
+		evidence[j] = v/2 + p.logOdds[j]
+		best = max(best, evidence[j])
 	}
-	each := e.prior.OutflowShare * e.weights[k] / float64(nj)
-	scale := math.Log(each) + (e.stateLog[k] - top)
+	scale := math.Log(share*e.weights[k]/float64(n)) + (e.stateLog[k] - top)
 	// The factor for a positive strength is at most 2.
-	least := math.Log(negligible*total/float64(nj)) - scale - math.Ln2
+	least := math.Log(negligible*total/float64(n)) - scale - math.Ln2
 	if best < least {
 		return 0
 	}
-	least = math.Max(least, best-14)
+	least = max(least, best-14)
 	sum := 0.0
-	for j, l := range e.evidence {
+	for j, l := range evidence {
 		if l < least {
 			continue
 		}
-		st := o.strength(j, [blocks]float64{e.b[j], e.b[nj+j], e.b[2*nj+j]})
-		// Half-normal prior on today's strength: twice the posterior mass above 0.
-		weight := math.Exp(l+scale) * math.Erfc(-st.now/(st.spread*math.Sqrt2))
+		st := e.strengthOf(s, c, j, [dims]float64{b[j], b[n+j], b[2*n+j]})
+		weight := math.Exp(l+scale) * st.positive()
 		sum += weight
-		e.parts = append(e.parts, part{state: k, template: j, weight: weight})
+		e.parts = append(e.parts, part{state: k, class: c, pattern: j, weight: weight})
 	}
 	return sum
 }
@@ -265,33 +287,31 @@ func (e *Estimator) weighOutflows(en *entry, s *state, k int, top, total float64
 func (e *Estimator) draw(en *entry) {
 	nt := len(e.targets)
 	p := &e.posterior
-	for t := range p.Mean {
-		p.Mean[t] = 0
-	}
+	clear(p.Mean)
 	cum, i := e.parts[0].weight, 0
-	current := -1
+	current, solved := -1, -1
 	var st strength
-	lastState := -1
 	for d := range Draws {
 		u := (float64(d) + 0.5) / Draws
 		for u > cum && i < len(e.parts)-1 {
 			i++
 			cum += e.parts[i].weight
 		}
-		s := en.states[e.parts[i].state]
+		pt := e.parts[i]
+		s := en.states[pt.state]
 		if i != current {
-			if lastState != e.parts[i].state {
-				lastState = e.parts[i].state
-				blas64.Symv(1, blas64.Symmetric{Uplo: blas.Upper, N: en.n, Data: s.inverse, Stride: en.n}, vec(e.y), 0, vec(e.w))
+			if solved != pt.state {
+				solved = pt.state
+				e.solve(en, s)
 			}
-			st = e.shape(en, s, e.parts[i].template)
+			st = e.shape(en, s, pt)
 			current = i
 		}
 		row := p.Draws[d*nt : (d+1)*nt]
 		z := e.draws(s)[e.order[d]*nt : (e.order[d]+1)*nt]
 		excess := 0.0
-		if e.parts[i].template >= 0 {
-			excess = positiveNormal(st.now, st.spread, (float64(reverseBits((d*37+11)%Draws))+0.5)/Draws) - st.now
+		if pt.class >= 0 {
+			excess = positiveNormal(st.now, st.spread, e.levels[d]) - st.now
 		}
 		for t := range row {
 			v := e.base[t] + float64(excess*e.slope[t]) + z[t]
@@ -305,44 +325,28 @@ func (e *Estimator) draw(en *entry) {
 }
 
 // shape fills base (posterior mean headwind) and slope (what one more m/s of
-// outflow adds) for a part, and gives the strength of its outflow.
-func (e *Estimator) shape(en *entry, s *state, template int) strength {
-	nt, w := len(e.targets), 2*len(en.live)
+// the pattern's strength adds) for a part, and gives that strength.
+func (e *Estimator) shape(en *entry, s *state, pt part) strength {
+	nt := len(e.targets)
 	blas64.Gemv(blas.NoTrans, 1, mat(nt, en.n, s.gain), vec(e.y), 0, vec(e.base))
-	if template < 0 {
-		for t := range e.slope {
-			e.slope[t] = 0
-		}
+	if pt.class < 0 {
+		clear(e.slope)
 		return strength{}
 	}
-	o := e.outflows(en, s)
-	pattern := en.bank[template*w : (template+1)*w]
-	var b [blocks]float64
-	for k := range blocks {
-		b[k] = blas64.Dot(vec(pattern), vec(e.w[k*w:(k+1)*w]))
+	var b [dims]float64
+	for d := range dims {
+		e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
+		b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
 	}
-	st := o.strength(template, b)
-	line := e.line(en, s, o, template)
-	rest := 1.0
-	for k := range blocks {
-		rest -= float64(o.nowWeight[k] * st.share[k])
-	}
+	st := e.strengthOf(s, pt.class, pt.pattern, b)
+	line := e.line(en, s, pt.class, pt.pattern)
 	for t := range nt {
-		base, slope := e.base[t], float64(rest*line[blocks*nt+t])
-		for k := range blocks {
-			base += float64(st.mean[k] * line[k*nt+t])
-			slope += float64(st.share[k] * line[k*nt+t])
+		base, slope := e.base[t], float64(st.open*line[dims*nt+t])
+		for d := range dims {
+			base += float64(st.mean[d] * line[d*nt+t])
+			slope += float64(st.share[d] * line[d*nt+t])
 		}
 		e.base[t], e.slope[t] = base, slope
 	}
 	return st
-}
-
-// positiveNormal is the point of N(mean, sd) held above 0 with the probability
-// u below it.
-func positiveNormal(mean, sd, u float64) float64 {
-	below := math.Erfc(mean/(sd*math.Sqrt2)) / 2
-	p := below + float64(u*(1-below))
-	p = min(max(p, 1e-12), 1-1e-12)
-	return math.Max(mean+float64(sd*math.Sqrt2)*math.Erfinv(2*p-1), 0)
 }

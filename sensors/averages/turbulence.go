@@ -25,6 +25,25 @@ func (t Turbulence) MeanVariance(w float64) float64 {
 	return t.Variance * (2 / a) * (1 - (1-math.Exp(-a))/a)
 }
 
+// Covariance of the means of blocks b and c of one component, m2/s2, when the
+// turbulence is t. For two stretches of w1 and w2 seconds that are g seconds
+// apart, exponential correlation integrates to
+// sigma2 T2/(w1 w2) exp(-g/T) (1 - exp(-w1/T)) (1 - exp(-w2/T)).
+func (l Layout) Covariance(t Turbulence, b, c int) float64 {
+	if b == c {
+		return t.MeanVariance(float64(l.Seconds[b]))
+	}
+	if b > c {
+		b, c = c, b
+	}
+	gap := 0
+	for i := b + 1; i < c; i++ {
+		gap += l.Seconds[i]
+	}
+	w1, w2 := float64(l.Seconds[b])/t.Time, float64(l.Seconds[c])/t.Time
+	return t.Variance / float64(w1*w2) * math.Exp(-float64(gap)/t.Time) * (1 - math.Exp(-w1)) * (1 - math.Exp(-w2))
+}
+
 const (
 	turbulenceSpan  = 600 // s of data before the blocks
 	turbulenceLeast = 180 // s of data below which nothing is said
@@ -177,9 +196,10 @@ func ExpectedTime(speed float64) float64 {
 	return min(max(56.7/math.Max(speed, 0.1), leastTime), mostTime)
 }
 
-// Expected is the turbulence to reckon with before any has been measured:
-// neutral intensity over roughly open ground, 0.2, with a floor for light air.
+// Expected is the turbulence to reckon with before any has been measured, on
+// the cautious side: sigma1 = Iref (0.75 V + 5.6) with Iref = 0.14 (IEC 61400-1
+// ed. 3, class B, the 90 % point; from memory).
 func Expected(speed float64) Turbulence {
-	sigma := 0.2*speed + 0.2
+	sigma := 0.14 * (0.75*speed + 5.6)
 	return Turbulence{Variance: sigma * sigma, Time: ExpectedTime(speed)}
 }

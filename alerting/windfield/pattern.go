@@ -1,0 +1,166 @@
+package windfield
+
+import (
+	"math"
+
+	"gonum.org/v1/gonum/blas"
+	"gonum.org/v1/gonum/blas/blas64"
+)
+
+// A pattern is a wind of known shape and unknown strength that may lie over
+// the ambient field: an outflow (outflow.go) or a gust front (front.go). Its
+// strength is a vector A of up to three numbers, A ~ N(0, C); Phi is the wind
+// of each at the masts' blocks; a combination q.A, "today's strength", must be
+// positive. With K the covariance of the observations without it,
+// M = Phi' K^-1 Phi and b = Phi' K^-1 y, generalised least squares gives
+// (Sherman-Morrison-Woodbury)
+//
+//	A | y ~ N(P b, P),  P = (C^-1 + M)^-1
+//	log p(y | pattern) - log p(y) = 1/2 b' P b - 1/2 log |I + C M|
+//
+// and the positive strength multiplies the evidence by twice the posterior
+// probability of q.A > 0.
+
+// dims is the number of strengths of a pattern. One that needs fewer leaves
+// the last at zero wind.
+const dims = 3
+
+// class is one kind of pattern: its fixed part, and how its wind falls on the
+// observations of an entry.
+type class interface {
+	count() int
+	// prior gives C (packed), q, and the variance of today's strength that A
+	// leaves open, for pattern j.
+	prior(j int) (c [6]float64, q [dims]float64, rest float64)
+	// project fills b[d*count+j] with Phi_d' w for every pattern.
+	project(en *entry, w, b []float64)
+	// gram fills m[j*6..] with M = Phi' K^-1 Phi, packed.
+	gram(en *entry, s *state, m []float64)
+	// column writes Phi_d of pattern j into the n observations of dst.
+	column(en *entry, j, d int, dst []float64)
+	// now fills dst with the headwind at the targets of today's unit strength
+	// that A leaves open (the innovation), and for each d with the part of A_d
+	// in today's wind.
+	now(j, d int, dst []float64)
+	innovation(j int, dst []float64)
+}
+
+// patterns holds, for one class and one ambient state, what the evidence and
+// the effect of every pattern need.
+type patterns struct {
+	precision []float64 // [pattern][6] P, packed
+	logOdds   []float64 // -1/2 log |I + C M|
+	lines     [][]float64
+}
+
+// patternsFor computes, once for a state and class, what the evidence needs.
+func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
+	if s.patterns[k] != nil {
+		return s.patterns[k]
+	}
+	c := e.classes[k]
+	n := c.count()
+	p := &patterns{precision: make([]float64, n*6), logOdds: make([]float64, n), lines: make([][]float64, n)}
+	m := make([]float64, n*6)
+	c.gram(en, s, m)
+	for j := range n {
+		cov, _, _ := c.prior(j)
+		inv, logDetC := invert3(cov)
+		var sum [6]float64
+		for i := range sum {
+			sum[i] = inv[i] + m[j*6+i]
+		}
+		prec, logDet := invert3(sum)
+		copy(p.precision[j*6:], prec[:])
+		p.logOdds[j] = -(logDet + logDetC) / 2 // |I + C M| = |C| |C^-1 + M|
+	}
+	s.patterns[k] = p
+	return p
+}
+
+// line is the effect of pattern j on the targets: [d] what a unit of A_d adds
+// to the posterior mean headwind, then the innovation. Computed when first
+// drawn.
+func (e *Estimator) line(en *entry, s *state, k, j int) []float64 {
+	p := s.patterns[k]
+	if p.lines[j] != nil {
+		return p.lines[j]
+	}
+	nt := len(e.targets)
+	out := make([]float64, (dims+1)*nt)
+	column := make([]float64, en.n)
+	for d := range dims {
+		dst := out[d*nt : (d+1)*nt]
+		e.classes[k].now(j, d, dst)
+		e.classes[k].column(en, j, d, column)
+		blas64.Gemv(blas.NoTrans, -1, mat(nt, en.n, s.gain), vec(column), 1, vec(dst))
+	}
+	e.classes[k].innovation(j, out[dims*nt:])
+	p.lines[j] = out
+	return out
+}
+
+// strength is the posterior of one pattern's strength.
+type strength struct {
+	mean   [dims]float64 // of A
+	share  [dims]float64 // regression of A on today's strength
+	now    float64       // mean of today's strength before it is held positive
+	spread float64       // its standard deviation
+	open   float64       // regression of the innovation on today's strength
+}
+
+func (e *Estimator) strengthOf(s *state, k, j int, b [dims]float64) strength {
+	p := [6]float64(s.patterns[k].precision[j*6 : j*6+6])
+	_, q, rest := e.classes[k].prior(j)
+	var st strength
+	st.mean = mul3(p, b)
+	pq := mul3(p, q)
+	v := rest
+	for i := range dims {
+		st.now += float64(q[i] * st.mean[i])
+		v += float64(q[i] * pq[i])
+	}
+	for i := range dims {
+		st.share[i] = pq[i] / v
+	}
+	st.open = rest / v
+	st.spread = math.Sqrt(v)
+	return st
+}
+
+// positive is the factor that a positive strength puts on the evidence.
+func (st *strength) positive() float64 { return math.Erfc(-st.now / (st.spread * math.Sqrt2)) }
+
+// invert3 inverts a symmetric positive definite 3x3 matrix packed as
+// (00, 01, 02, 11, 12, 22) and gives the logarithm of its determinant.
+func invert3(a [6]float64) (inv [6]float64, logDet float64) {
+	c00 := float64(a[3]*a[5]) - float64(a[4]*a[4])
+	c01 := float64(a[2]*a[4]) - float64(a[1]*a[5])
+	c02 := float64(a[1]*a[4]) - float64(a[2]*a[3])
+	det := float64(a[0]*c00) + float64(a[1]*c01) + float64(a[2]*c02)
+	inv = [6]float64{
+		c00 / det, c01 / det, c02 / det,
+		(float64(a[0]*a[5]) - float64(a[2]*a[2])) / det,
+		(float64(a[1]*a[2]) - float64(a[0]*a[4])) / det,
+		(float64(a[0]*a[3]) - float64(a[1]*a[1])) / det,
+	}
+	return inv, math.Log(det)
+}
+
+// mul3 is a packed symmetric 3x3 matrix times a vector.
+func mul3(a [6]float64, x [3]float64) [3]float64 {
+	return [3]float64{
+		float64(a[0]*x[0]) + float64(a[1]*x[1]) + float64(a[2]*x[2]),
+		float64(a[1]*x[0]) + float64(a[3]*x[1]) + float64(a[4]*x[2]),
+		float64(a[2]*x[0]) + float64(a[4]*x[1]) + float64(a[5]*x[2]),
+	}
+}
+
+// positiveNormal is the point of N(mean, sd) held above 0 with the probability
+// u below it.
+func positiveNormal(mean, sd, u float64) float64 {
+	below := math.Erfc(mean/(sd*math.Sqrt2)) / 2
+	p := below + float64(u*(1-below))
+	p = min(max(p, 1e-12), 1-1e-12)
+	return math.Max(mean+float64(sd*math.Sqrt2)*math.Erfinv(2*p-1), 0)
+}
