@@ -198,7 +198,9 @@ func TestRealBroker(t *testing.T) {
 		t.Fatal(err)
 	}
 	broker.Run()
-	alertsFrom(t, reader, "a2")
+	// The reader may come back after the daemon, and then never sees it: what
+	// counts is that the broker has acknowledged it.
+	until(t, "the broker takes the alert of the outage", 15*time.Second, func() bool { return first.State().Issues == 2 })
 	until(t, "exactly one speaks again", 15*time.Second, func() bool {
 		modes := []publish.Mode{first.State().Mode, second.State().Mode}
 		return slices.Contains(modes, publish.Sending) && slices.Contains(modes, publish.Silent)
