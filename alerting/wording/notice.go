@@ -25,6 +25,9 @@ type Context struct {
 	// the slowest declared aircraft rather than a configured change.
 	Margin        float64
 	MarginIsStall bool
+	// Merged is the loss (m/s) from which on the third level is issued where it
+	// lies so close above the second that the two are one; 0 where they are not.
+	Merged float64
 }
 
 // Notice is one issue of an alert, ready to be told: the alert, its sentence,

@@ -161,6 +161,20 @@ func TestAlertSentences(t *testing.T) {
 			"The headwind falls by about 16 kt (13 to 19) on the way down to runway 07, between 2.9 and 1.2 km before the threshold, at mast height; growing. Level 3 of 3: steeper over 1 km than the limit set for the fastest aircraft here.",
 		},
 		{
+			"third level issued together with the second",
+			with(func(a *lifecycle.Alert) {
+				a.Change, a.ChangeLow, a.ChangeHigh, a.PeakChange = -16*kt, -19*kt, -13*kt, -16*kt
+			}), Context{Airfield: "skerrymoor", Margin: 17.3 * kt, MarginIsStall: true, Merged: 15 * kt},
+			"The headwind falls by about 16 kt (13 to 19) on the way down to runway 07, between 2.9 and 1.2 km before the threshold, at mast height; growing. Level 3 of 3: close to the stall margin of the slowest aircraft here.",
+		},
+		{
+			"third level issued together with the second, a configured margin",
+			with(func(a *lifecycle.Alert) {
+				a.Change, a.ChangeLow, a.ChangeHigh, a.PeakChange = -16*kt, -19*kt, -13*kt, -16*kt
+			}), Context{Airfield: "skerrymoor", Margin: 17 * kt, Merged: 15 * kt},
+			"The headwind falls by about 16 kt (13 to 19) on the way down to runway 07, between 2.9 and 1.2 km before the threshold, at mast height; growing. Level 3 of 3: close to the margin set for the aircraft here.",
+		},
+		{
 			"third level by a configured margin",
 			example(), Context{Airfield: "skerrymoor", Margin: 20 * kt},
 			"The headwind falls by about 28 kt (22 to 34) on the way down to runway 07, between 2.9 and 1.2 km before the threshold, at mast height; growing. Level 3 of 3: more than the margin set for the aircraft here.",

@@ -92,6 +92,10 @@ func meaning(a *lifecycle.Alert, c Context) string {
 			return "more than the margin set for the aircraft here"
 		case byLoss:
 			return "more than the stall margin of the slowest aircraft here"
+		case c.Merged > 0 && math.Abs(a.PeakChange) >= c.Merged && c.MarginIsStall:
+			return "close to the stall margin of the slowest aircraft here"
+		case c.Merged > 0 && math.Abs(a.PeakChange) >= c.Merged:
+			return "close to the margin set for the aircraft here"
 		}
 		return "steeper over 1 km than the limit set for the fastest aircraft here"
 	}

@@ -44,9 +44,13 @@ type command struct {
 // commands is the table of all commands, in the order of the usage text.
 func commands() []command {
 	return []command{
+		checkCommand(),
 		simulateCommand(),
 		recordCommand(),
 		replayCommand(),
+		tryCommand(),
+		eventsListCommand(),
+		eventsShowCommand(),
 		versionCommand(),
 	}
 }
@@ -79,17 +83,36 @@ func (p *program) run(ctx context.Context, args []string) int {
 	}
 	fs := newFlagSet(c)
 	act := c.setup(fs)
-	switch err := fs.Parse(rest); {
+	operands, err := parse(fs, rest)
+	switch {
 	case errors.Is(err, flag.ErrHelp):
 		fmt.Fprint(p.stdout, usage(c))
 		return exitDone
 	case err != nil:
 		return p.fail(c, usagef("%v", err))
+	case c.operands == "" && len(operands) > 0:
+		return p.fail(c, usagef("%q stands where only flags are expected", operands[0]))
 	}
-	if c.operands == "" && fs.NArg() > 0 {
-		return p.fail(c, usagef("%q follows the flags, where nothing is expected", fs.Arg(0)))
+	return p.fail(c, act(ctx, p, operands))
+}
+
+// parse reads flags and operands in any order. After -- everything is an
+// operand.
+func parse(fs *flag.FlagSet, args []string) (operands []string, err error) {
+	for len(args) > 0 {
+		if err := fs.Parse(args); err != nil {
+			return nil, err
+		}
+		rest := fs.Args()
+		if n := len(args) - len(rest); n > 0 && args[n-1] == "--" {
+			return append(operands, rest...), nil
+		}
+		if len(rest) == 0 {
+			break
+		}
+		operands, args = append(operands, rest[0]), rest[1:]
 	}
-	return p.fail(c, act(ctx, p, fs.Args()))
+	return operands, nil
 }
 
 // fail reports the error of a command, if there is one, and returns the exit

@@ -105,7 +105,7 @@ func record(ctx context.Context, p *program, cfg *config.Config, out string, len
 		return fmt.Errorf("%d messages were lost: the disk was too slow for them, or they were too long", dropped)
 	}
 	if !subscribed {
-		return fmt.Errorf("there was no contact with the broker %s: %w", cfg.Broker.Address, l.sub.State().Problem)
+		return noContact(cfg, l.sub.State())
 	}
 	end = l.clock.Now()
 	return nil
@@ -141,6 +141,18 @@ func recordUntil(ctx context.Context, p *program, cfg *config.Config, l *listene
 			return messages, subscribed || l.sub.State().Subscribed, nil
 		}
 	}
+}
+
+// noContact is the error of a command that could not listen or send.
+func noContact(cfg *config.Config, s feed.LinkState) error {
+	err := fmt.Errorf("broker %s: %s", cfg.Broker.Address, linkWords(s))
+	if s.Problem != nil {
+		err = fmt.Errorf("%w: %w", err, s.Problem)
+	}
+	if cfg.Broker.Embedded {
+		err = fmt.Errorf("%w (the built-in broker listens only while \"sockline run\" does)", err)
+	}
+	return err
 }
 
 func linkWords(s feed.LinkState) string {

@@ -36,10 +36,16 @@ func levels(cfg *config.Config) hazard.Levels {
 // wordingContext is what the words of an alert depend on besides the alert.
 func wordingContext(cfg *config.Config, exercise bool) wording.Context {
 	a := cfg.Alerts
+	l := levels(cfg)
+	merged := 0.0
+	if l.Merged() {
+		merged = min(l.Large, l.Margin)
+	}
 	// A derived margin that was raised to the least one is no longer the stall
 	// margin itself.
 	return wording.Context{
 		Airfield: cfg.Airfield.ID, Exercise: exercise,
 		Margin: a.Margin, MarginIsStall: a.MarginDerived && !a.MarginRaisedUp,
+		Merged: merged,
 	}
 }

@@ -132,7 +132,7 @@ func simulateToBroker(ctx context.Context, p *program, cfg *config.Config, scene
 	select {
 	case <-connected:
 	case <-time.After(contactWait):
-		return fmt.Errorf("connect to the broker %s: no contact within %v: %w", cfg.Broker.Address, contactWait, pub.State().Problem)
+		return noContact(cfg, pub.State())
 	case <-ctx.Done():
 		return nil
 	}
