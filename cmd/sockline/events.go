@@ -39,7 +39,7 @@ func eventsListCommand() command {
 		name: "events list", summary: "list the alerts that are kept in the history, newest first",
 		setup: func(fs *flag.FlagSet) action {
 			flags := defineEventFlags(fs)
-			from := instantFlag(fs, "from", "only events still open at or after this `TIME`")
+			from := instantFlag(fs, "from", "only events opened at or after this `TIME`")
 			to := instantFlag(fs, "to", "only events opened before this `TIME`")
 			open := fs.Bool("open", false, "only events that are open")
 			limit := fs.Int("limit", 100, "at most this `NUMBER`, from 1 to 1000")
@@ -133,10 +133,18 @@ func (s eventSource) list(ctx context.Context, f history.Filter) ([]json.RawMess
 	if store == nil {
 		return s.listRunning(ctx, f)
 	}
+	// The store counts an event by when it was open; here, as with the daemon,
+	// it counts by when it was opened.
+	limit := f.Limit
+	if f.From != 0 {
+		f.Limit = 0
+	}
 	events, err := store.Events(f)
-	objects := make([]json.RawMessage, len(events))
-	for i, e := range events {
-		objects[i] = e.Object
+	var objects []json.RawMessage
+	for _, e := range events {
+		if e.Opened >= f.From && len(objects) < limit {
+			objects = append(objects, e.Object)
+		}
 	}
 	return objects, errors.Join(err, store.Close())
 }

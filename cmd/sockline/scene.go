@@ -27,15 +27,27 @@ func loadScene(cfg *config.Config, name string) (*synthetic.Scene, error) {
 	} else if source, err = scenes.Source(name); err != nil {
 		return nil, usagef("%v; or give the path of a %s file", err, sceneSuffix)
 	}
+	// First of all: on the wrong airfield no place of the scene is known.
+	if id := airfieldOf(source); id != "" && id != cfg.Airfield.ID {
+		return nil, fmt.Errorf("scene %s plays on the airfield %q, but the configuration describes %q: choose a scene of this airfield",
+			name, id, cfg.Airfield.ID)
+	}
 	scene, err := synthetic.Parse(name, source, geometry{cfg.Airfield})
 	if err != nil {
 		return nil, fmt.Errorf("scene %s: %w", name, err)
 	}
-	if scene.Airfield != cfg.Airfield.ID {
-		return nil, fmt.Errorf("scene %s plays on the airfield %q, but the configuration describes %q: choose a scene of this airfield",
-			name, scene.Airfield, cfg.Airfield.ID)
-	}
 	return scene, nil
+}
+
+// airfieldOf is the airfield that a scene names; empty if none can be found,
+// which Parse explains.
+func airfieldOf(source []byte) string {
+	for line := range strings.Lines(string(source)) {
+		if words := strings.Fields(line); len(words) >= 2 && words[0] == "airfield" {
+			return words[1]
+		}
+	}
+	return ""
 }
 
 // stationSpecs is the masts as the generator of weather needs them. at gives
