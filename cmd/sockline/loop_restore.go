@@ -1,0 +1,111 @@
+package main
+
+import (
+	"errors"
+	"fmt"
+	"time"
+
+	"sockline/alerting"
+	"sockline/alerting/engine"
+	"sockline/alerting/history"
+	"sockline/alerting/lifecycle"
+	"sockline/sensors"
+)
+
+// aheadAtMost is how far the stored steps may lie ahead of the clock and still
+// be taken as those of the moment before: a restart within the same second.
+// Farther ahead, the host clock has been set back.
+const aheadAtMost = 10 * time.Second
+
+// restore brings the engine to where the last run left it: it reads back two
+// hours, closes their steps silently, and takes up the alerts that were open.
+// What cannot go on is closed with the first step. Without a history, the
+// engine begins with nothing. An error means that something could not be read;
+// the rest has been taken up.
+func (l *loop) restore(store *history.Store, now sensors.Instant) error {
+	last := now.Add(-l.engine.Lateness()).FloorSecond() - sensors.Second
+	stored, ok, err := store.LastStep()
+	if err != nil {
+		return fmt.Errorf("find the last stored step: %w", err)
+	}
+	if !ok {
+		return nil
+	}
+	switch ahead := stored.Sub(last); {
+	case ahead > aheadAtMost:
+		l.log.Error().Stringer("stored", stored).Stringer("now", now).
+			Msg("the history lies ahead of the clock; what it holds of the time to come will be replaced")
+	case ahead > 0:
+		// These steps are done: doing them again without their readings would
+		// replace what is stored.
+		last = stored
+	}
+	open, faults := store.OpenAlerts(max(last, stored))
+	open, foreign := l.divide(open, last)
+	// After a gap the alerts are taken up at its end; without one a few steps
+	// before, so that the steps since their last issue bring them up to date:
+	// see lifecycle.Machine.Restore.
+	at := last
+	if stored >= last {
+		at = last.Add(-restoreLead)
+	}
+	var closed []lifecycle.Transition
+	pending := true
+	next := sensors.Instant(0)
+	step := func(t sensors.Instant) {
+		if pending && t > at {
+			closed, pending = l.engine.Restore(open, last), false
+		}
+		l.engine.Step(t)
+		next = t + sensors.Second
+	}
+	err = store.Readings(last.Add(-engine.Memory), last+sensors.Second, func(st history.Step) error {
+		for next != 0 && next < st.At {
+			step(next)
+		}
+		for _, r := range st.For(l.ids) {
+			// Synthetic wind of an exercise must not carry over into real work,
+			// nor the reverse.
+			if r.Exercise == l.exercise {
+				l.engine.Stored(r)
+			}
+		}
+		step(st.At)
+		return nil
+	})
+	if next == 0 {
+		next = last
+	}
+	for next <= last {
+		step(next)
+	}
+	if pending {
+		closed = l.engine.Restore(open, last)
+	}
+	l.held = append(foreign, closed...)
+	return errors.Join(faults, err)
+}
+
+// divide keeps the alerts of this sort of work, exercise or not, and closes
+// the others: they cannot go on.
+func (l *loop) divide(open []lifecycle.Alert, at sensors.Instant) (own []lifecycle.Alert, closed []lifecycle.Transition) {
+	for _, a := range open {
+		if a.Exercise == l.exercise {
+			own = append(own, a)
+			continue
+		}
+		a.State, a.Closed, a.Because = lifecycle.Closed, at, lifecycle.ExpiredWhileDown
+		a.Trend, a.Updated = lifecycle.TrendUnknown, at
+		a.Revision++
+		closed = append(closed, lifecycle.Transition{At: at, Alert: a, From: a.Level, Why: "closed: the daemon no longer does this exercise"})
+	}
+	return own, closed
+}
+
+// toLevel is the level an issue leads to: none once it is closed.
+func toLevel(a *lifecycle.Alert) alerting.Level {
+	if a.State == lifecycle.Closed {
+		return alerting.NoLevel
+	}
+	return a.Level
+}

@@ -1,0 +1,336 @@
+package main
+
+import (
+	"cmp"
+	"encoding/json"
+	"fmt"
+	"math"
+	"slices"
+	"strings"
+	"sync"
+	"sync/atomic"
+	"time"
+
+	"sockline/alerting"
+	"sockline/alerting/airfield"
+	"sockline/alerting/engine"
+	"sockline/alerting/lifecycle"
+	"sockline/alerting/page"
+	"sockline/alerting/wording"
+	"sockline/config"
+	"sockline/sensors"
+	"sockline/sensors/averages"
+)
+
+// validFor is how long what is told of a step may be believed.
+const validFor = 5 * time.Second
+
+// gustsFrom is by how much a gust must exceed the mean to be told, m/s (ICAO
+// Annex 3, appendix 3: 5 m/s or 10 kt; from memory).
+const gustsFrom = 5.0
+
+// report is one step in words: what the page, the broker and the log tell.
+type report struct {
+	At        sensors.Instant
+	Condition alerting.Condition
+	Live      int // masts
+	Ends      []wording.EndWind
+	Paths     []wording.PathView
+	Stations  []stationHealth
+	Notices   []wording.Notice // issued in this step
+	Why       []string         // of each notice, for the log
+}
+
+// reporter makes reports. Owned by the loop's goroutine.
+type reporter struct {
+	cfg       *config.Config
+	exercise  bool
+	ends      []endMast
+	alerts    []lifecycle.Alert // reused
+	rejected  []uint64          // by station
+	variation func(sensors.Instant) (float64, error)
+}
+
+// endMast is a runway end and the mast that tells its wind.
+type endMast struct {
+	runway  string
+	bearing float64 // degrees true
+	mast    int     // index; -1: none within reach
+}
+
+func newReporter(cfg *config.Config, exercise bool) *reporter {
+	r := &reporter{cfg: cfg, exercise: exercise, rejected: make([]uint64, len(cfg.Stations))}
+	r.variation = func(t sensors.Instant) (float64, error) { return cfg.Airfield.Variation(t.Time()) }
+	for _, rw := range cfg.Airfield.Runways {
+		for _, e := range rw.Ends {
+			r.ends = append(r.ends, endMast{e.Designator, e.Bearing, nearest(cfg, e.Threshold)})
+		}
+	}
+	return r
+}
+
+// nearest is the mast that stands nearest to a threshold, and no farther than
+// its wind is taken to reach; -1 if none. It is the same mast whether it
+// reports or not: the wind of an end must not change its source unseen.
+func nearest(cfg *config.Config, threshold airfield.Point) int {
+	best, least := -1, cfg.Analysis.Reach
+	for i, m := range cfg.Airfield.Masts {
+		if d := math.Hypot(m.X-threshold.X, m.Y-threshold.Y); d <= least {
+			best, least = i, d
+		}
+	}
+	return best
+}
+
+// of puts a step into a report. The assessments and the snapshot belong to the
+// engine and are copied where the report outlives the step.
+func (r *reporter) of(e *engine.Engine, res *engine.Result) *report {
+	out := &report{At: res.At}
+	r.alerts = e.Alerts(r.alerts[:0])
+	observed := 0
+	for i := range res.Assessments {
+		v := r.path(i, res)
+		if v.Assessment.Complete && len(v.Assessment.Observed) > 0 {
+			observed++
+		}
+		out.Paths = append(out.Paths, v)
+	}
+	for i := range r.cfg.Stations {
+		h := r.station(i, e, res)
+		if h.State == averages.Live.String() {
+			out.Live++
+		}
+		out.Stations = append(out.Stations, h)
+	}
+	switch {
+	case observed == len(out.Paths) && out.Live > 0:
+		out.Condition = alerting.Observing
+	case observed > 0 && out.Live > 0:
+		out.Condition = alerting.PartlyObserving
+	default:
+		out.Condition = alerting.Blind
+	}
+	for _, end := range r.ends {
+		out.Ends = append(out.Ends, r.end(end, e, res))
+	}
+	return out
+}
+
+func (r *reporter) path(i int, res *engine.Result) wording.PathView {
+	p := r.cfg.Airfield.Paths[i]
+	v := wording.PathView{
+		Path: p, Assessment: res.Assessments[i], Exercise: r.exercise,
+		At: res.At, ValidUntil: res.At.Add(validFor),
+	}
+	a := &v.Assessment
+	a.Observed, a.Missing = slices.Clone(a.Observed), slices.Clone(a.Missing)
+	for _, open := range r.alerts {
+		if open.Runway == p.Runway() && open.Operation == p.Operation() {
+			v.Alerts = append(v.Alerts, open.ID)
+		}
+	}
+	v.State = wording.StateOf(len(v.Alerts) > 0, a)
+	return v
+}
+
+func (r *reporter) end(m endMast, e *engine.Engine, res *engine.Result) wording.EndWind {
+	w := wording.EndWind{Runway: m.runway, Exercise: r.exercise}
+	if m.mast < 0 {
+		w.Reason = fmt.Sprintf("no mast stands within %.0f m of it", r.cfg.Analysis.Reach)
+		return w
+	}
+	mast := res.Snapshot.Mast(m.mast)
+	w.Exercise = w.Exercise || mast.Exercise
+	id := r.cfg.Stations[m.mast].ID
+	if mast.State != averages.Live {
+		w.Reason = "the mast " + id + " is " + mast.State.String()
+		return w
+	}
+	wind, ok := e.TwoMinute(m.mast)
+	variation, err := r.variation(res.At)
+	switch {
+	case !ok:
+		w.Reason = "the mast " + id + " has not reported for two minutes yet"
+		return w
+	case err != nil:
+		w.Reason = "the magnetic variation is not known: " + err.Error()
+		return w
+	}
+	w.Observed = true
+	w.Mean, w.From = wind.Mean.Speed(), wind.Mean.From()
+	w.Gust, w.HasGust = wind.Gust, wind.Gust-wind.Speed >= gustsFrom
+	w.Headwind, w.Crosswind = wind.Mean.Headwind(m.bearing), wind.Mean.CrosswindFromRight(m.bearing)
+	w.Variation = variation
+	return w
+}
+
+// stationHealth is what is told of a mast, under the topic of its health.
+type stationHealth struct {
+	ID         string   `json:"id"`
+	State      string   `json:"state"`
+	Last       *string  `json:"last"`  // event time of its newest reading; null if none
+	AgeS       *float64 `json:"age_s"` // of that reading
+	Messages   uint64   `json:"messages"`
+	Readings   uint64   `json:"readings"`
+	Suspect    uint64   `json:"suspect"`
+	Rejected   uint64   `json:"rejected"`
+	Problem    string   `json:"problem"` // what was last wrong with a payload
+	At         string   `json:"at"`
+	ValidUntil string   `json:"valid_until"`
+	Exercise   bool     `json:"exercise"`
+	Notice     string   `json:"notice"`
+}
+
+func (r *reporter) station(i int, e *engine.Engine, res *engine.Result) stationHealth {
+	m, c := res.Snapshot.Mast(i), e.Counts()
+	h := stationHealth{
+		ID: r.cfg.Stations[i].ID, State: m.State.String(),
+		Messages: c.Messages[i], Readings: c.Accepted[i], Suspect: c.Suspect[i], Rejected: rejections(c, i), Problem: c.LastWhy[i],
+		At: seconds(res.At), ValidUntil: seconds(res.At.Add(validFor)),
+		Exercise: r.exercise || m.Exercise, Notice: alerting.Notice,
+	}
+	if m.Last != 0 {
+		last, age := m.Last.String(), res.At.Sub(m.Last).Seconds()
+		h.Last, h.AgeS = &last, &age
+	}
+	return h
+}
+
+func seconds(t sensors.Instant) string { return t.Time().Format("2006-01-02T15:04:05Z") }
+
+// sentence is the health in words.
+func (h *stationHealth) sentence() string {
+	s := strings.ToUpper(h.State[:1]) + h.State[1:]
+	if h.AgeS == nil {
+		s += "; nothing heard of it yet."
+	} else {
+		s += fmt.Sprintf("; its last reading is %.0f s old.", math.Max(0, *h.AgeS))
+	}
+	if h.Problem != "" {
+		s += " Last problem: " + strings.TrimSuffix(h.Problem, ".") + "."
+	}
+	return s
+}
+
+// object is the health as JSON.
+func (h *stationHealth) object() []byte {
+	b, err := json.Marshal(h)
+	if err != nil { // texts, whole numbers and an age always have a JSON form
+		return []byte("null")
+	}
+	return b
+}
+
+// viewOf is the page's view of a step, without alerts.
+func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
+	v := &page.View{
+		Made: made, At: rep.At, ValidUntil: rep.At.Add(validFor), Condition: rep.Condition,
+		Remarks: remarks(status), Exercise: status.Exercise, StatusJSON: status.JSON(),
+	}
+	for _, e := range rep.Ends {
+		v.Ends = append(v.Ends, page.End{Runway: e.Runway, Observed: e.Observed, Sentence: wording.EndText(e)})
+	}
+	for i := range rep.Paths {
+		p := &rep.Paths[i]
+		var gaps []string
+		for _, g := range airfield.Unobserved(p.Path, p.Assessment.Observed) {
+			gaps = append(gaps, fmt.Sprintf("%.0f to %.0f m before the threshold", g.From, g.To))
+		}
+		v.Paths = append(v.Paths, page.Path{Name: p.Path.Name(), State: p.State, Sentence: p.Text(), Unobserved: gaps, JSON: p.JSON()})
+		v.Exercise = v.Exercise || p.Assessment.Exercise
+	}
+	for i := range rep.Stations {
+		h := &rep.Stations[i]
+		v.Stations = append(v.Stations, page.Station{
+			ID: h.ID, State: h.State, Live: h.State == averages.Live.String(), Sentence: h.sentence(), JSON: h.object(),
+		})
+	}
+	return v
+}
+
+// remarks is what the page says of the daemon itself.
+func remarks(s *wording.Status) []string {
+	out := slices.Clone(s.Remarks)
+	if s.Degraded != "" {
+		out = append(out, "The history may miss what is told now: "+strings.TrimSuffix(s.Degraded, ".")+".")
+	}
+	return out
+}
+
+// board holds what the page shows: the last step, and the alerts that have
+// been released. Two goroutines write to it, the loop and the release; readers
+// load a pointer.
+type board struct {
+	view atomic.Pointer[page.View]
+
+	mu   sync.Mutex
+	step *page.View
+	open map[string]wording.Notice
+}
+
+func newBoard() *board { return &board{open: make(map[string]wording.Notice)} }
+
+// show puts up a step.
+func (b *board) show(v *page.View) {
+	b.mu.Lock()
+	defer b.mu.Unlock()
+	b.step = v
+	b.compose()
+}
+
+// release puts up an alert, or takes it down when it has closed.
+func (b *board) release(n wording.Notice) {
+	b.mu.Lock()
+	defer b.mu.Unlock()
+	if n.Closing() {
+		delete(b.open, n.ID())
+	} else {
+		b.open[n.ID()] = n
+	}
+	b.compose()
+}
+
+// openCount is how many alerts are up.
+func (b *board) openCount() int {
+	b.mu.Lock()
+	defer b.mu.Unlock()
+	return len(b.open)
+}
+
+// compose makes a new view: one that is up is never changed.
+func (b *board) compose() {
+	if b.step == nil {
+		return
+	}
+	v := *b.step
+	notices := make([]wording.Notice, 0, len(b.open))
+	for _, n := range b.open {
+		notices = append(notices, n)
+	}
+	slices.SortFunc(notices, worstFirst)
+	for _, n := range notices {
+		a := n.Alert()
+		v.Alerts = append(v.Alerts, page.Alert{
+			ID: n.ID(), Kind: a.Kind, Level: a.Level, Observed: a.Observed, Sentence: n.Text(), JSON: n.JSON(),
+		})
+		v.Exercise = v.Exercise || n.Exercise()
+	}
+	b.view.Store(&v)
+}
+
+// worstFirst orders alerts by level, a loss before a gain, then by size.
+func worstFirst(x, y wording.Notice) int {
+	a, b := x.Alert(), y.Alert()
+	loss := func(k alerting.Kind) int {
+		if k == alerting.HeadwindLoss {
+			return 0
+		}
+		return 1
+	}
+	return cmp.Or(
+		cmp.Compare(b.Level, a.Level),
+		cmp.Compare(loss(a.Kind), loss(b.Kind)),
+		cmp.Compare(math.Abs(b.Change), math.Abs(a.Change)),
+		strings.Compare(a.ID, b.ID),
+	)
+}
