@@ -1,0 +1,176 @@
+package averages
+
+import (
+	"encoding/csv"
+	"math"
+	"os"
+	"path/filepath"
+	"strconv"
+	"strings"
+	"testing"
+	"time"
+
+	"sockline/sensors"
+	"sockline/sensors/quality"
+	"sockline/sensors/quantity"
+)
+
+// table reads an outside table: comment lines, the names of the columns, rows.
+func table(t *testing.T, name string) []map[string]string {
+	t.Helper()
+	f, err := os.Open(filepath.Join("..", "..", "testdata", "outside", name))
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer f.Close()
+	r := csv.NewReader(f)
+	r.Comment = '#'
+	rows, err := r.ReadAll()
+	if err != nil {
+		t.Fatal(err)
+	}
+	var out []map[string]string
+	for _, row := range rows[1:] {
+		m := make(map[string]string, len(row))
+		for i, v := range row {
+			m[rows[0][i]] = v
+		}
+		out = append(out, m)
+	}
+	return out
+}
+
+func number(t *testing.T, text string) float64 {
+	t.Helper()
+	v, err := strconv.ParseFloat(text, 64)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return v
+}
+
+// epoch is a whole minute; second k of a table is measured k s after it.
+const epoch = sensors.Instant(1_782_907_200_000)
+
+// station reports once a second unless said otherwise.
+func station(interval time.Duration) sensors.Station {
+	return sensors.Station{ID: "m", Interval: interval, StaleAfter: max(3*time.Second, 3*interval)}
+}
+
+// feed makes a recorder of one station, and the function that gives it a
+// reading through the checks of quality.
+func feed(t *testing.T, st sensors.Station, window time.Duration) (*Recorder, func(at sensors.Instant, speed, from float64) quality.Checked) {
+	t.Helper()
+	r := NewRecorder([]sensors.Station{st}, NewLayout(window))
+	c := quality.NewChecker(st)
+	return r, func(at sensors.Instant, speed, from float64) quality.Checked {
+		checked := c.Check(sensors.Reading{Time: at, Arrival: at, Speed: speed, From: from})
+		r.Add(checked)
+		return checked
+	}
+}
+
+// The two-minute wind and the gust of ten minutes, against windows of a series
+// with a change of the wind and two gaps, worked out in R.
+func TestTwoMinuteWindAgainstTable(t *testing.T) {
+	series := table(t, "gust_series.csv")
+	windows := table(t, "gust_windows.csv")
+	r, add := feed(t, station(time.Second), 30*time.Second)
+	gusts := map[string]map[string]string{}
+	for _, w := range windows {
+		if w["window_s"] == "600" {
+			gusts[w["t_end_s"]] = w
+		}
+	}
+	next, means, tens := 0, 0, 0
+	for _, w := range windows {
+		if w["window_s"] != "120" {
+			continue
+		}
+		end := int(number(t, w["t_end_s"]))
+		// The window holds the samples up to, not at, its end; a sample at k
+		// belongs to the step k.
+		for ; next < len(series) && int(number(t, series[next]["t_s"])) < end; next++ {
+			k := sensors.Instant(number(t, series[next]["t_s"]))
+			if !add(epoch+k*sensors.Second, number(t, series[next]["speed_ms"]), number(t, series[next]["dir_deg"])).Usable() {
+				t.Fatalf("the sample at %d s is refused", k)
+			}
+		}
+		got, ok := r.TwoMinute(0, epoch+sensors.Instant(end-1)*sensors.Second)
+		if !ok {
+			t.Fatalf("no two-minute wind at %d s with %s of 120 samples", end, w["n"])
+		}
+		means++
+		// Both sides add 120 numbers of one digit after the point; the table has
+		// eight.
+		near(t, end, "vector speed", got.Mean.Speed(), number(t, w["vec_speed_ms"]), 1e-7)
+		near(t, end, "direction", got.Mean.From(), number(t, w["vec_dir_deg"]), 1e-7)
+		near(t, end, "scalar speed", got.Speed, number(t, w["scalar_speed_ms"]), 1e-7)
+		if ten, ok := gusts[w["t_end_s"]]; ok {
+			near(t, end, "gust", got.Gust, number(t, ten["gust3_ms"]), 1e-7)
+			tens++
+		}
+	}
+	if means < 25 || tens < 20 {
+		t.Errorf("%d windows of two minutes and %d of ten were compared; the table has more", means, tens)
+	}
+}
+
+func near(t *testing.T, at int, what string, got, want, within float64) {
+	t.Helper()
+	if d := math.Abs(got - want); d > within {
+		t.Errorf("at %d s: %s %.9f, the table has %.9f", at, what, got, want)
+	}
+}
+
+// A block is the vector mean of its seconds: against means of samples from
+// every side, worked out with numpy.
+func TestBlockMeanAgainstTable(t *testing.T) {
+	for _, row := range table(t, "vector_mean_wind.csv") {
+		dirs, speeds := strings.Split(row["dirs_deg"], ";"), strings.Split(row["speeds_ms"], ";")
+		n := len(dirs)
+		// The newest block is as long as the sample, and there is no other.
+		layout := Layout{Seconds: [Blocks]int{n, n, n}}
+		st := station(time.Second)
+		r := NewRecorder([]sensors.Station{st}, layout)
+		checker := quality.NewChecker(st)
+		last := epoch
+		for i := range n {
+			last = epoch + sensors.Instant(i)*sensors.Second
+			r.Add(checker.Check(sensors.Reading{Time: last, Arrival: last, Speed: number(t, speeds[i]), From: number(t, dirs[i])}))
+		}
+		b := r.Snapshot(last).Mast(0).Blocks[0]
+		if !b.Present {
+			t.Fatalf("case %s: the block is not there", row["case"])
+		}
+		v := quantity.Vector{East: b.East, North: b.North}
+		for _, c := range []struct {
+			name      string
+			got, want float64
+		}{
+			{"east", v.East, number(t, row["u_ms"])}, {"north", v.North, number(t, row["v_ms"])},
+			{"speed", v.Speed(), number(t, row["vec_speed_ms"])}, {"direction", v.From(), number(t, row["vec_dir_deg"])},
+		} {
+			if math.Abs(c.got-c.want) > 1e-6 { // the table has six digits
+				t.Errorf("case %s: %s %.7f, the table has %.7f", row["case"], c.name, c.got, c.want)
+			}
+		}
+	}
+}
+
+// Several readings of one second weigh as one, so that fast instruments weigh
+// no more than slow ones.
+func TestSecondsWeighTheSame(t *testing.T) {
+	st := station(time.Second)
+	r := NewRecorder([]sensors.Station{st}, Layout{Seconds: [Blocks]int{2, 2, 2}})
+	c := quality.NewChecker(st)
+	for k := range 10 { // ten readings of 10 m/s in one second
+		at := epoch - 900 + sensors.Instant(k)*100
+		r.Add(c.Check(sensors.Reading{Time: at, Arrival: at, Speed: 10, From: 180}))
+	}
+	at := epoch + sensors.Second
+	r.Add(c.Check(sensors.Reading{Time: at, Arrival: at, Speed: 4, From: 180}))
+	if got := r.Snapshot(at).Mast(0).Blocks[0].North; math.Abs(got-7) > 1e-12 {
+		t.Errorf("a second of 10 m/s and one of 4 m/s have the mean %g, want 7", got)
+	}
+}
