@@ -44,6 +44,7 @@ type command struct {
 // commands is the table of all commands, in the order of the usage text.
 func commands() []command {
 	return []command{
+		demoCommand(),
 		runCommand(),
 		checkCommand(),
 		simulateCommand(),

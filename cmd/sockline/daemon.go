@@ -78,15 +78,15 @@ type daemon struct {
 	input    atomic.Pointer[feed.Subscriber]
 	teardown teardown
 
-	subscribed atomic.Bool // it was, once
-	offsetTold bool        // the clock's offset is in the log
-	ready      chan struct{}
+	subscribed atomic.Bool   // it was, once
+	offsetTold bool          // the clock's offset is in the log
+	listening  chan struct{} // closed at the first subscription
 }
 
 // newDaemon makes a daemon and takes the addresses it listens on. It must be
 // run, or closed.
 func newDaemon(cfg *config.Config, o daemonOptions) (*daemon, error) {
-	d := &daemon{cfg: cfg, opts: o, log: o.log, instance: o.instance, board: newBoard(), ready: make(chan struct{})}
+	d := &daemon{cfg: cfg, opts: o, log: o.log, instance: o.instance, board: newBoard(), listening: make(chan struct{})}
 	if d.opts.notify == nil {
 		d.opts.notify = &notifier{}
 	}
@@ -196,7 +196,6 @@ func (d *daemon) pageURL() string { return "http://" + d.listener.Addr().String(
 func (d *daemon) Run(ctx context.Context) error {
 	err := d.start(context.WithoutCancel(ctx))
 	if err == nil {
-		close(d.ready)
 		d.keepHouse(ctx)
 		d.opts.notify.say("STOPPING=1", "STATUS=stopping")
 	}
@@ -292,6 +291,7 @@ func (d *daemon) startLoop(ctx context.Context) error {
 		Broker: d.broker, ClientID: d.clientID("in"), Topics: topics, Clock: d.opts.clock, Log: d.log,
 		OnState: func(_, subscribed bool) {
 			if subscribed && !d.subscribed.Swap(true) {
+				close(d.listening)
 				d.opts.notify.say("READY=1", "STATUS=observing "+d.cfg.Airfield.Name)
 			}
 		},
