@@ -45,11 +45,11 @@ func (e *Estimator) newEntry(live []int, noise []float64) (*entry, error) {
 	}
 	en.outflows = e.outflows.atLive(live)
 	en.fronts = e.fronts.atLive(live)
-	en.states = make([]*state, len(e.prior.Fields))
-	for k, f := range e.prior.Fields {
+	en.states = make([]*state, len(e.fields))
+	for k, f := range e.fields {
 		s, err := e.newState(en, f)
 		if err != nil {
-			return nil, fmt.Errorf("ambient state %d with %d masts: %w", k, len(live), err)
+			return nil, fmt.Errorf("state %d of the air with %d masts: %w", k, len(live), err)
 		}
 		en.states[k] = s
 	}

@@ -6,7 +6,13 @@ package windfield
 // from the last minutes; the numbers here were tuned on synthetic episodes
 // whose seeds are kept apart from those used for reporting.
 type Prior struct {
-	Fields []Field // ambient states, calmest first
+	Fields []Field // ambient states without a pattern, calmest first
+
+	// Disturbed is the air around an outflow or a front: no real one has
+	// exactly the shape of a template, and what is left over passes for a
+	// field of its own. Without it the nearest template would be believed far
+	// too firmly. All are equally likely.
+	Disturbed []Field
 
 	MeanDeviation  float64 // of the common mean wind, one component, m/s: as good as unknown
 	DriftDeviation float64 // how far the common mean strays, one component, m/s ...
@@ -28,19 +34,20 @@ type Prior struct {
 	FrontSpacing  float64   // between the places tried, m
 	FrontWidth    float64   // half width of the change, m
 
-	PatternsBelow int // outflows and fronts are tried on the ambient states before this one
-
 	LeastStateShare float64 // no ambient state is ever believed less than this before a step
 }
 
 // DefaultPrior is the prior in force.
 func DefaultPrior() Prior {
-	field := func(sd, length float64) Field {
-		return Field{Deviation: sd, Length: length, Irrotational: 0.5, Time: 150}
+	field := func(sd, length, time float64) Field {
+		return Field{Deviation: sd, Length: length, Irrotational: 0.5, Time: time}
 	}
 	return Prior{
 		Fields: []Field{
-			field(0.25, 1000), field(0.6, 1000), field(1.1, 1000), field(1.8, 1000),
+			field(0.25, 1000, 150), field(0.6, 1000, 150), field(1.1, 1000, 150), field(1.8, 1000, 120),
+		},
+		Disturbed: []Field{
+			field(0.8, 900, 90), field(1.6, 900, 90),
 		},
 		MeanDeviation:   20,
 		DriftDeviation:  2,
@@ -59,7 +66,6 @@ func DefaultPrior() Prior {
 		FrontSpeeds:     []float64{5, 10, 16},
 		FrontSpacing:    300,
 		FrontWidth:      300,
-		PatternsBelow:   4,
 		LeastStateShare: 0.01,
 	}
 }

@@ -13,6 +13,7 @@ package windfield
 import (
 	"math"
 	"math/rand/v2"
+	"slices"
 
 	"gonum.org/v1/gonum/blas"
 	"gonum.org/v1/gonum/blas/blas64"
@@ -52,6 +53,7 @@ type Estimator struct {
 	masts    []Mast
 	targets  []Target
 	layout   averages.Layout
+	fields   []Field // the ambient states of the prior, then its disturbed ones
 	ages     [blocks]float64
 	outflows *outflowBank
 	fronts   *frontBank
@@ -92,6 +94,7 @@ type part struct {
 // New prepares an estimator for masts and targets (m in one local plane).
 func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *Estimator {
 	e := &Estimator{prior: prior, masts: masts, targets: targets, layout: layout}
+	e.fields = slices.Concat(prior.Fields, prior.Disturbed)
 	for b := range blocks {
 		e.ages[b] = layout.Age(b)
 	}
@@ -119,9 +122,9 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.column = make([]float64, n)
 	e.base = make([]float64, len(targets))
 	e.slope = make([]float64, len(targets))
-	e.stateLog = make([]float64, len(prior.Fields))
+	e.stateLog = make([]float64, len(e.fields))
 	e.weights = make([]float64, len(prior.Fields))
-	e.parts = make([]part, 0, len(prior.Fields)*(total+1))
+	e.parts = make([]part, 0, len(e.fields)*(total+1))
 	e.times = make([]float64, 0, len(masts))
 	e.bases = make([]float64, 0, len(masts))
 	e.posterior.Mean = make([]float64, len(targets))
@@ -193,39 +196,41 @@ func (e *Estimator) observe(s *averages.Snapshot, en *entry) {
 // weigh fills parts with every component whose weight matters, in a fixed
 // order, and normalises.
 func (e *Estimator) weigh(t sensors.Instant, en *entry) {
+	ambient := len(e.prior.Fields)
 	e.memory.shares(t, e.prior.LeastStateShare, e.weights)
+	top := math.Inf(-1)
 	for k, s := range en.states {
 		e.solve(en, s)
 		e.stateLog[k] = -(blas64.Dot(vec(e.y), vec(e.w)) + s.logDet) / 2
-	}
-	top := math.Inf(-1)
-	for k, l := range e.stateLog {
-		top = math.Max(top, l+math.Log(e.weights[k]))
+		if k < ambient {
+			top = max(top, e.stateLog[k]+math.Log(e.weights[k]))
+		}
 	}
 	e.parts = e.parts[:0]
 	total := 0.0
-	for k := range en.states {
-		w := (1 - e.prior.OutflowShare - e.prior.FrontShare) * e.weights[k] * math.Exp(e.stateLog[k]-top)
+	plain := 1 - e.prior.OutflowShare - e.prior.FrontShare
+	for k := range ambient {
+		w := plain * e.weights[k] * math.Exp(e.stateLog[k]-top)
 		e.parts = append(e.parts, part{state: k, class: -1, weight: w})
 		total += w
 	}
 	shares := [...]float64{e.prior.OutflowShare, e.prior.FrontShare}
 	var found [len(shares)]float64
-	for k, s := range en.states {
-		if k >= e.prior.PatternsBelow || e.weights[k] < 2*e.prior.LeastStateShare {
-			continue
-		}
-		e.solve(en, s)
-		gained := 0.0
+	for k := ambient; k < len(en.states); k++ {
+		e.solve(en, en.states[k])
 		for c := range e.classes {
-			w := e.weighPatterns(en, s, k, c, shares[c], top, total)
+			w := e.weighPatterns(en, k, c, shares[c]/float64(len(e.prior.Disturbed)), top, total)
 			total += w
 			found[c] += w
-			gained += w
 		}
-		e.stateLog[k] += math.Log1p(gained / e.parts[k].weight)
 	}
-	e.memory.remember(t, e.stateLog)
+	// A state of the air is judged by what it explains with or without a
+	// pattern, so that an outflow does not pass for restless air afterwards.
+	patterned := found[0] + found[1]
+	for k := range ambient {
+		e.stateLog[k] = math.Log(float64(plain*math.Exp(e.stateLog[k]-top)) + patterned)
+	}
+	e.memory.remember(t, e.stateLog[:ambient])
 	for i := range e.parts {
 		e.parts[i].weight /= total
 	}
@@ -238,13 +243,20 @@ func (e *Estimator) solve(en *entry, s *state) {
 	blas64.Symv(1, blas64.Symmetric{Uplo: blas.Upper, N: en.n, Data: s.inverse, Stride: en.n}, vec(e.y), 0, vec(e.w))
 }
 
-// negligible is the share of the whole mixture below which a part is left out.
-const negligible = 1e-5
+// A pattern is left out when its share of the whole mixture is below
+// negligible (a few thousand of them together then hold less than one draw),
+// or when it explains the observations worse than the best of its class by
+// more than the factor exp(hopeless).
+const (
+	negligible = 2e-6
+	hopeless   = 9
+)
 
 // weighPatterns appends the patterns of class c that matter on top of state k
-// and gives their summed weight. w holds K^-1 y; total is the weight found so
-// far.
-func (e *Estimator) weighPatterns(en *entry, s *state, k, c int, share, top, total float64) float64 {
+// and gives their summed weight. w holds K^-1 y; share is the prior of the
+// class on this state, total the weight found so far.
+func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64) float64 {
+	s := en.states[k]
 	p := e.patternsFor(en, s, c)
 	n, b := e.classes[c].count(), e.b[c]
 	if n == 0 {
@@ -261,13 +273,13 @@ func (e *Estimator) weighPatterns(en *entry, s *state, k, c int, share, top, tot
 		evidence[j] = v/2 + p.logOdds[j]
 		best = max(best, evidence[j])
 	}
-	scale := math.Log(share*e.weights[k]/float64(n)) + (e.stateLog[k] - top)
+	scale := math.Log(share/float64(n)) + (e.stateLog[k] - top)
 	// The factor for a positive strength is at most 2.
-	least := math.Log(negligible*total/float64(n)) - scale - math.Ln2
+	least := math.Log(negligible*total) - scale - math.Ln2
 	if best < least {
 		return 0
 	}
-	least = max(least, best-14)
+	least = max(least, best-hopeless)
 	sum := 0.0
 	for j, l := range evidence {
 		if l < least {
