@@ -60,6 +60,9 @@ func (r *replayer) history(dir string) error {
 	if err != nil && !errors.Is(err, errReplayed) {
 		err = fmt.Errorf("replay the history: %w", err)
 	}
+	if h.gaps > 0 {
+		r.note("%d steps are not in the history though the daemon ran: they count as without readings", h.gaps)
+	}
 	return errors.Join(err, store.Close())
 }
 
@@ -79,10 +82,11 @@ func startsOf(store *history.Store) ([]sensors.Instant, error) {
 type historyReplay struct {
 	*replayer
 	ids    []string          // of the configured stations
-	first  sensors.Instant   // the first stored step
+	first  sensors.Instant   // the first step
 	starts []sensors.Instant // of the daemon
 	open   []lifecycle.Alert // to be restored
 	asOf   sensors.Instant   // as they were then; 0 once done, or for nothing to restore
+	gaps   int               // steps that are not stored though no start explains it
 }
 
 // stored takes the next stored step, and all steps without readings that lie
@@ -90,16 +94,23 @@ type historyReplay struct {
 func (h *historyReplay) stored(st history.Step) error {
 	last := h.engine.LastStep()
 	if last == 0 {
-		h.first, last = st.At, st.At-sensors.Second
+		last = st.At - sensors.Second
+		if h.asOf != 0 { // the alerts to be restored may be older than the readings
+			last = min(last, h.asOf.Add(-restoreLead)-sensors.Second)
+		}
+		h.first = last
 		if err := h.engine.SkipTo(last); err != nil {
 			return err
 		}
 	}
-	if start, ok := h.startIn(last, st.At); ok {
-		if err := h.restart(start, st.At); err != nil {
+	if asOf, ok := h.startIn(last, st.At); ok {
+		if err := h.restart(asOf, st.At); err != nil {
 			return err
 		}
-	} else if err := h.silence(st.At); err != nil {
+	} else if st.At > last+sensors.Second && last > h.first {
+		h.gaps += int((st.At-last)/sensors.Second) - 1
+	}
+	if err := h.silence(st.At); err != nil {
 		return err
 	}
 	for _, reading := range st.For(h.ids) {
@@ -133,31 +144,35 @@ func (h *historyReplay) next(t sensors.Instant) error {
 	return h.step(t)
 }
 
-// startIn is the last start of the daemon after the step last whose first step
-// was at: there is one only if steps are missing between them.
-func (h *historyReplay) startIn(last, at sensors.Instant) (sensors.Instant, bool) {
-	if at-last <= sensors.Second || last < h.first {
-		return 0, false
-	}
-	var found sensors.Instant
+// startIn is the moment as of which the daemon took up its alerts when it was
+// last started between two stored steps; false if it was not, or if it lost no
+// step by it: then it goes on as if nothing had been.
+func (h *historyReplay) startIn(last, at sensors.Instant) (asOf sensors.Instant, ok bool) {
 	for _, s := range h.starts {
-		if s > last && s <= at {
-			found = s
+		if a := takenUp(s, h.engine.Lateness()); a > last && a < at {
+			asOf, ok = a, true
 		}
 	}
-	return found, found != 0
+	return asOf, ok
+}
+
+// takenUp is the last step that a daemon started at this stamp counts as past.
+func takenUp(start sensors.Instant, lateness time.Duration) sensors.Instant {
+	return start.Add(-lateness).FloorSecond() - sensors.Second
 }
 
 // restart goes through a time in which the daemon was down: nothing was
 // issued, and at its start it took up the alerts as it had left them.
-func (h *historyReplay) restart(start, at sensors.Instant) error {
+func (h *historyReplay) restart(asOf, at sensors.Instant) error {
 	open := h.engine.Alerts(nil)
+	if h.asOf != 0 && asOf > h.asOf { // they are older than the first reading
+		open, h.open, h.asOf = h.open, nil, 0
+	}
 	h.muted = true
-	err := h.silence(at)
+	err := h.silence(min(asOf+sensors.Second, at))
 	h.muted = false
 	if err != nil {
 		return err
 	}
-	asOf := min(start.FloorSecond(), at-sensors.Second)
 	return h.print(asOf, h.engine.Restore(open, asOf))
 }
