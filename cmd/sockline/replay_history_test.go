@@ -7,8 +7,11 @@ import (
 	"testing"
 	"time"
 
+	"github.com/rs/zerolog"
+
 	"sockline/alerting/engine"
 	"sockline/alerting/history"
+	"sockline/alerting/lifecycle"
 	"sockline/alerting/wording"
 	"sockline/config"
 	"sockline/sensors"
@@ -64,7 +67,8 @@ type recorder struct {
 	store   *history.Store
 	writer  *history.Writer
 	ids     []string
-	printed strings.Builder // every issue
+	held    []lifecycle.Transition // of a start, to go out with the first step
+	printed strings.Builder        // every issue
 }
 
 func newRecorder(tb testing.TB, cfg *config.Config, dir string) *recorder {
@@ -101,7 +105,9 @@ func (r *recorder) closeDue(stamp sensors.Instant) {
 		for _, late := range result.Refused {
 			b.Late = append(b.Late, history.LateReading{Reading: late.Reading, Reason: string(late.Reason)})
 		}
-		for _, tr := range result.Transitions {
+		transitions := append(r.held, result.Transitions...)
+		r.held = nil
+		for _, tr := range transitions {
 			object := wording.Of(tr, wordingContext(r.cfg, true)).WithRecorded(true).JSON()
 			r.printed.Write(append(object, '\n'))
 			b.Issues = append(b.Issues, history.Issue{Alert: tr.Alert, Object: object})
@@ -117,6 +123,24 @@ func (r *recorder) close() {
 	if err := r.store.Close(); err != nil {
 		r.tb.Fatal(err)
 	}
+}
+
+// restart is what a new daemon does at a moment, in the place of one that has
+// ended.
+func (r *recorder) restart(dir string, now sensors.Instant) {
+	r.tb.Helper()
+	r.close()
+	next := newRecorder(r.tb, r.cfg, dir)
+	l, err := newLoop(r.cfg, true, zerolog.Nop())
+	if err != nil {
+		r.tb.Fatal(err)
+	}
+	if err := l.restore(next.store, now); err != nil {
+		r.tb.Fatal(err)
+	}
+	next.engine, next.held = l.engine, l.held
+	next.writer.Record(history.Entry{Kind: history.KindStart, At: now})
+	r.engine, r.store, r.writer, r.held = next.engine, next.store, next.writer, next.held
 }
 
 // recorded runs a scene into a new history; it gives the directory and every
@@ -178,6 +202,64 @@ func TestReplayHistory(t *testing.T) {
 	before := between(t, printed, start.Add(9*time.Minute+27*time.Second), start.Add(9*time.Minute+33*time.Second))
 	if !strings.Contains(before, `"state":"open"`) {
 		t.Error("no alert was open at 12:09:33: the test does not show what it should")
+	}
+}
+
+// TestReplayHistoryOverRestarts holds that the replay of a history in which
+// the daemon was down for a while gives what it issued before and after: alerts
+// that went on, and alerts that were too old to.
+func TestReplayHistoryOverRestarts(t *testing.T) {
+	const scene = `
+airfield   skerrymoor
+start      2026-07-01T14:00:00Z
+length     16 min
+seed       11
+wind       240 deg 6 kt
+turbulence C
+outflow    at 2000 m before 07 strength 26 kt radius 900 m starts 60 s grows 20 s holds 70 s fades 20 s
+outflow    at 2000 m before 07 strength 26 kt radius 900 m starts 860 s grows 20 s holds 50 s fades 20 s
+`
+	capture := simulated(t, scene)
+	messages, end := readCapture(t, capture)
+	cfg := loadSkerryMoor(t)
+	start := sensors.At(time.Date(2026, 7, 1, 14, 0, 0, 0, time.UTC))
+	for _, row := range []struct {
+		name     string
+		down, up time.Duration // since the start of the scene
+		because  string        // of a closing that must be there
+	}{
+		{"within a second", 120200 * time.Millisecond, 120700 * time.Millisecond, "below-level"},
+		{"3 s", 120200 * time.Millisecond, 123400 * time.Millisecond, "below-level"},
+		{"20 s", 120200 * time.Millisecond, 140700 * time.Millisecond, "below-level"},
+		{"11 min", 120200 * time.Millisecond, 790 * time.Second, "expired-while-down"},
+	} {
+		t.Run(row.name, func(t *testing.T) {
+			dir := t.TempDir()
+			r := newRecorder(t, cfg, dir)
+			down, up, restarted := start.Add(row.down), start.Add(row.up), false
+			for _, m := range messages {
+				if m.Received >= up && !restarted {
+					r.restart(dir, up)
+					restarted = true
+				}
+				if m.Received < down || restarted {
+					r.receive(m)
+				}
+			}
+			r.closeDue(end)
+			r.close()
+			printed := r.printed.String()
+			if !strings.Contains(printed, `"closed_because":"`+row.because+`"`) {
+				t.Errorf("nothing closed as %s: the test does not show what it should", row.because)
+			}
+			o := succeed(t, "replay", "--config", skerrymoor, "--history", dir)
+			if o.stdout != printed {
+				t.Error(firstDifference(o.stdout, printed))
+			}
+			if strings.Contains(o.stderr, "note:") {
+				t.Error(o.stderr)
+			}
+		})
 	}
 }
 
