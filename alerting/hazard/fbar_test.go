@@ -6,6 +6,7 @@ import (
 
 	"sockline/alerting"
 	"sockline/alerting/shear"
+	"sockline/alerting/windfield"
 	"sockline/sensors/quantity"
 )
 
@@ -78,16 +79,18 @@ func ramp(n int, first, slope float64, seen func(i int) bool) *shear.Stretch {
 	return s
 }
 
-// exact fills the draws with what the mean profile itself gives.
-func exact(s *shear.Stretch, loss, lossKilometre, gain float64) {
-	for _, side := range []struct {
-		s       *shear.Side
-		m, over float64
-	}{{&s.Loss, loss, lossKilometre}, {&s.Gain, gain, 0}} {
-		for d := range side.s.Sorted {
-			side.s.Sorted[d], side.s.Kilometre[d] = side.m, side.over
-		}
+// exact measures the stretch under a posterior that knows its mean profile for
+// certain.
+func exact(s *shear.Stretch) {
+	n := len(s.Mean)
+	p := &windfield.Posterior{Mean: s.Mean}
+	for range windfield.Draws {
+		p.Draws = append(p.Draws, s.Mean...)
 	}
+	for i := range n {
+		s.Points[i] = i
+	}
+	s.Measure(p)
 }
 
 func levels() Levels {
@@ -112,7 +115,7 @@ func TestJudgeKnownProfile(t *testing.T) {
 		reverse[i] = -before[i] - 1000 // from the other threshold, 1000 m on
 	}
 	s := ramp(n, first, slope, whole)
-	exact(s, 12*quantity.Knot, 6*quantity.Knot, 0)
+	exact(s)
 
 	var a Assessment
 	Judge(&a, s, View{Before: before}, levels())
@@ -175,7 +178,7 @@ func TestAtEdge(t *testing.T) {
 			for _, i := range test.unobserved {
 				s.Observed[i] = false
 			}
-			exact(s, 6, 6, 0)
+			exact(s)
 			var a Assessment
 			Judge(&a, s, View{Before: before}, levels())
 			if a.Loss.AtEdge != test.want {

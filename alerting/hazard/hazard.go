@@ -63,7 +63,7 @@ func Judge(a *Assessment, s *shear.Stretch, v View, l Levels) {
 	ground = max(ground, leastGround)
 	// F-bar counts for a loss only.
 	kilometre := LossOfFBar(l.MarginFBar, ground)
-	a.Loss.FBar = s.Loss.KilometreMedian() * ground / (quantity.StandardGravity * fbarLength)
+	a.Loss.FBar = s.KilometreLoss() * ground / (quantity.StandardGravity * fbarLength)
 	a.Loss.Probability[alerting.BeyondMargin] = s.EitherAtLeast(l.margin(), kilometre)
 	a.Loss.CloseProbability[alerting.BeyondMargin] = s.EitherAtLeast(l.margin()-l.Hysteresis, kilometre*0.9)
 	a.Loss.Level = highest(a.Loss.Probability, l, alerting.BeyondMargin)

@@ -32,9 +32,8 @@ const (
 // Side is the greatest loss, or the greatest gain, along a stretch. Speeds are
 // magnitudes in m/s.
 type Side struct {
-	Sorted    []float64 // M of every draw, ascending
-	Kilometre []float64 // greatest change over 1 km of every draw, ascending
-	sign      float64   // 1: a fall of the headwind, -1: a rise
+	Sorted []float64 // M of every draw, ascending
+	sign   float64   // 1: a fall of the headwind, -1: a rise
 }
 
 // Place is where the mean profile changes most.
@@ -46,9 +45,6 @@ type Place struct {
 
 // Quantile of M, by linear interpolation between the draws.
 func (s *Side) Quantile(p float64) float64 { return quantile(s.Sorted, p) }
-
-// KilometreMedian is the median of the greatest change over 1 km, m/s.
-func (s *Side) KilometreMedian() float64 { return quantile(s.Kilometre, 0.5) }
 
 // AtLeast is P(M >= change).
 func (s *Side) AtLeast(change float64) float64 { return share(s.Sorted, change) }
@@ -63,6 +59,8 @@ type Stretch struct {
 	Loss, Gain Side
 	Mean       []float64 // headwind of the mean profile at each point, m/s, in this flight's direction
 
+	kilometreSorted []float64 // greatest loss over 1 km of every draw, ascending
+
 	// joint holds, for each draw in its own order, M and the greatest change
 	// over 1 km of the loss: P(either) needs both.
 	jointLoss, jointKilometre []float64
@@ -75,8 +73,9 @@ func NewStretch(points []int) *Stretch {
 	n := len(points)
 	draws := func() []float64 { return make([]float64, windfield.Draws) }
 	s := &Stretch{Points: points, Observed: make([]bool, n), Mean: make([]float64, n)}
-	s.Loss = Side{Sorted: draws(), Kilometre: draws(), sign: 1}
-	s.Gain = Side{Sorted: draws(), Kilometre: draws(), sign: -1}
+	s.Loss = Side{Sorted: draws(), sign: 1}
+	s.Gain = Side{Sorted: draws(), sign: -1}
+	s.kilometreSorted = draws()
 	s.jointLoss, s.jointKilometre = draws(), draws()
 	for _, p := range []*[]float64{&s.line, &s.prefixMax, &s.suffixMax, &s.prefixMin, &s.suffixMin} {
 		*p = make([]float64, n)
@@ -94,19 +93,21 @@ func (s *Stretch) Measure(p *windfield.Posterior) {
 			s.line[i] = row[t]
 		}
 		loss, gain := s.extremes()
-		lossKm, gainKm := s.kilometre()
+		kilometre := s.kilometre()
 		s.Loss.Sorted[d], s.Gain.Sorted[d] = loss, gain
-		s.Loss.Kilometre[d], s.Gain.Kilometre[d] = lossKm, gainKm
-		s.jointLoss[d], s.jointKilometre[d] = loss, lossKm
+		s.kilometreSorted[d] = kilometre
+		s.jointLoss[d], s.jointKilometre[d] = loss, kilometre
 	}
 	slices.Sort(s.Loss.Sorted)
 	slices.Sort(s.Gain.Sorted)
-	slices.Sort(s.Loss.Kilometre)
-	slices.Sort(s.Gain.Kilometre)
+	slices.Sort(s.kilometreSorted)
 	for i, t := range s.Points {
 		s.Mean[i] = p.Mean[t]
 	}
 }
+
+// KilometreLoss is the median of the greatest loss over 1 km, m/s.
+func (s *Stretch) KilometreLoss() float64 { return quantile(s.kilometreSorted, 0.5) }
 
 // EitherAtLeast is the probability that the loss reaches change (m/s), or its
 // greatest part over 1 km reaches kilometre (m/s).
@@ -120,61 +121,79 @@ func (s *Stretch) EitherAtLeast(change, kilometre float64) float64 {
 	return float64(n) / windfield.Draws
 }
 
-// extremes of line: the greatest fall and the greatest rise from a point to a
-// later one at most reachPoints on, over observed points. Running extremes in
-// blocks give the extreme of every window (M. van Herk, "A fast algorithm for
-// local minimum and maximum filters", Pattern Recognition Letters 13, 1992;
-// from memory).
+// extremes of line: the greatest fall and the greatest rise from an observed
+// point to a later one at most reachPoints on. Running extremes in blocks give
+// the extreme of every window (M. van Herk, "A fast algorithm for local
+// minimum and maximum filters", Pattern Recognition Letters 13, 1992; from
+// memory): the window from j-reachPoints to j is as long as a block, so it is
+// the end of one block and the beginning of the next. Points that are not
+// observed carry an infinity that no extreme takes.
 func (s *Stretch) extremes() (fall, rise float64) {
 	const width = reachPoints + 1
-	n := len(s.line)
-	up, down := math.Inf(-1), math.Inf(1)
-	for i, v := range s.line {
+	line, n := s.line, len(s.line)
+	var up, down float64
+	for i, v := range line {
 		if i%width == 0 {
 			up, down = math.Inf(-1), math.Inf(1)
 		}
 		if s.Observed[i] {
-			up, down = max(up, v), min(down, v)
+			if v > up {
+				up = v
+			}
+			if v < down {
+				down = v
+			}
 		}
 		s.prefixMax[i], s.prefixMin[i] = up, down
 	}
+	// Only the blocks that a full window begins in need their ends.
 	up, down = math.Inf(-1), math.Inf(1)
-	for i := n - 1; i >= 0; i-- {
+	for i := (n/width)*width - 1; i >= 0; i-- {
 		if i%width == width-1 {
 			up, down = math.Inf(-1), math.Inf(1)
 		}
 		if s.Observed[i] {
-			up, down = max(up, s.line[i]), min(down, s.line[i])
+			if v := line[i]; v > up {
+				up = v
+			}
+			if v := line[i]; v < down {
+				down = v
+			}
 		}
 		s.suffixMax[i], s.suffixMin[i] = up, down
 	}
-	for j, v := range s.line {
+	for j, v := range line {
 		if !s.Observed[j] {
 			continue
 		}
-		// The window from j-reachPoints to j is as long as a block, so it is
-		// the end of one block and the beginning of the next. Before the first
-		// full window it is a beginning only.
 		high, low := s.prefixMax[j], s.prefixMin[j]
 		if i := j - reachPoints; i >= 0 {
-			high, low = max(high, s.suffixMax[i]), min(low, s.suffixMin[i])
+			if s.suffixMax[i] > high {
+				high = s.suffixMax[i]
+			}
+			if s.suffixMin[i] < low {
+				low = s.suffixMin[i]
+			}
 		}
-		fall = max(fall, high-v)
-		rise = max(rise, v-low)
+		if high-v > fall {
+			fall = high - v
+		}
+		if v-low > rise {
+			rise = v - low
+		}
 	}
 	return fall, rise
 }
 
-// kilometre is the greatest fall and rise over 1 km.
-func (s *Stretch) kilometre() (fall, rise float64) {
+// kilometre is the greatest fall over 1 km.
+func (s *Stretch) kilometre() (fall float64) {
 	for j := kilometrePoints; j < len(s.line); j++ {
 		i := j - kilometrePoints
-		if s.Observed[i] && s.Observed[j] {
-			d := s.line[i] - s.line[j]
-			fall, rise = max(fall, d), max(rise, -d)
+		if d := s.line[i] - s.line[j]; d > fall && s.Observed[i] && s.Observed[j] {
+			fall = d
 		}
 	}
-	return fall, rise
+	return fall
 }
 
 // Place finds the pair of points between which the mean profile changes most.

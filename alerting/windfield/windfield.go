@@ -240,7 +240,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 
 // solve fills w = K^-1 y of a state.
 func (e *Estimator) solve(en *entry, s *state) {
-	blas64.Symv(1, blas64.Symmetric{Uplo: blas.Upper, N: en.n, Data: s.inverse, Stride: en.n}, vec(e.y), 0, vec(e.w))
+	blas64.Gemv(blas.NoTrans, 1, mat(en.n, en.n, s.inverse), vec(e.y), 0, vec(e.w))
 }
 
 // A pattern is left out when its share of the whole mixture is below
