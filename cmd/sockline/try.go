@@ -131,7 +131,7 @@ func (t *trial) live(ctx context.Context, length time.Duration) error {
 		return err
 	}
 	defer l.close()
-	fmt.Fprintf(t.p.stderr, "listening to %s on %s for %v\n", t.station.Topic, t.cfg.Broker.Address, length)
+	fmt.Fprintf(t.p.stderr, "waiting %v for messages on %s\n", length, t.station.Topic)
 	timer := time.NewTimer(length)
 	defer timer.Stop()
 	for messages := 0; ; {
@@ -141,6 +141,8 @@ func (t *trial) live(ctx context.Context, length time.Duration) error {
 			if err := t.show(m, true); err != nil {
 				return err
 			}
+		case s := <-l.states:
+			fmt.Fprintf(t.p.stderr, "broker %s: %s\n", t.cfg.Broker.Address, linkWords(s))
 		case <-ctx.Done():
 			return nil
 		case <-timer.C:
