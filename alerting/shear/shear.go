@@ -65,7 +65,8 @@ type Stretch struct {
 	// over 1 km of the loss: P(either) needs both.
 	jointLoss, jointKilometre []float64
 
-	line, prefixMax, suffixMax, prefixMin, suffixMin []float64
+	line []float64 // one draw
+	seen []int     // the observed points
 }
 
 // NewStretch prepares a stretch over targets in the order of flight.
@@ -77,9 +78,8 @@ func NewStretch(points []int) *Stretch {
 	s.Gain = Side{Sorted: draws(), sign: -1}
 	s.kilometreSorted = draws()
 	s.jointLoss, s.jointKilometre = draws(), draws()
-	for _, p := range []*[]float64{&s.line, &s.prefixMax, &s.suffixMax, &s.prefixMin, &s.suffixMin} {
-		*p = make([]float64, n)
-	}
+	s.line = make([]float64, n)
+	s.seen = make([]int, 0, n)
 	return s
 }
 
@@ -87,6 +87,7 @@ func NewStretch(points []int) *Stretch {
 // observed.
 func (s *Stretch) Measure(p *windfield.Posterior) {
 	nt := len(p.Mean)
+	s.lookUp()
 	for d := range windfield.Draws {
 		row := p.Draws[d*nt : (d+1)*nt]
 		for i, t := range s.Points {
@@ -106,6 +107,16 @@ func (s *Stretch) Measure(p *windfield.Posterior) {
 	}
 }
 
+// lookUp lists the observed points.
+func (s *Stretch) lookUp() {
+	s.seen = s.seen[:0]
+	for i, observed := range s.Observed {
+		if observed {
+			s.seen = append(s.seen, i)
+		}
+	}
+}
+
 // KilometreLoss is the median of the greatest loss over 1 km, m/s.
 func (s *Stretch) KilometreLoss() float64 { return quantile(s.kilometreSorted, 0.5) }
 
@@ -122,67 +133,53 @@ func (s *Stretch) EitherAtLeast(change, kilometre float64) float64 {
 }
 
 // extremes of line: the greatest fall and the greatest rise from an observed
-// point to a later one at most reachPoints on. Running extremes in blocks give
-// the extreme of every window (M. van Herk, "A fast algorithm for local
-// minimum and maximum filters", Pattern Recognition Letters 13, 1992; from
-// memory): the window from j-reachPoints to j is as long as a block, so it is
-// the end of one block and the beginning of the next. Points that are not
-// observed carry an infinity that no extreme takes.
+// point to a later one at most reachPoints on, in one pass that keeps the
+// highest and the lowest of the window behind it. When the point that leaves
+// the window is one of them, the window is searched anew; that is seldom.
 func (s *Stretch) extremes() (fall, rise float64) {
-	const width = reachPoints + 1
-	line, n := s.line, len(s.line)
-	var up, down float64
-	for i, v := range line {
-		if i%width == 0 {
-			up, down = math.Inf(-1), math.Inf(1)
-		}
-		if s.Observed[i] {
-			if v > up {
-				up = v
-			}
-			if v < down {
-				down = v
-			}
-		}
-		s.prefixMax[i], s.prefixMin[i] = up, down
+	line, seen := s.line, s.seen
+	if len(seen) == 0 {
+		return 0, 0
 	}
-	// Only the blocks that a full window begins in need their ends.
-	up, down = math.Inf(-1), math.Inf(1)
-	for i := (n/width)*width - 1; i >= 0; i-- {
-		if i%width == width-1 {
-			up, down = math.Inf(-1), math.Inf(1)
-		}
-		if s.Observed[i] {
-			if v := line[i]; v > up {
-				up = v
-			}
-			if v := line[i]; v < down {
-				down = v
+	head := 0
+	high, low := line[seen[0]], line[seen[0]]
+	for k := 1; k < len(seen); k++ {
+		j := seen[k]
+		for ; seen[head] < j-reachPoints; head++ {
+			if gone := line[seen[head]]; gone == high || gone == low {
+				high, low = span(line, seen[head+1:k])
 			}
 		}
-		s.suffixMax[i], s.suffixMin[i] = up, down
-	}
-	for j, v := range line {
-		if !s.Observed[j] {
-			continue
+		v := line[j]
+		if d := high - v; d > fall {
+			fall = d
 		}
-		high, low := s.prefixMax[j], s.prefixMin[j]
-		if i := j - reachPoints; i >= 0 {
-			if s.suffixMax[i] > high {
-				high = s.suffixMax[i]
-			}
-			if s.suffixMin[i] < low {
-				low = s.suffixMin[i]
-			}
+		if d := v - low; d > rise {
+			rise = d
 		}
-		if high-v > fall {
-			fall = high - v
+		if v > high {
+			high = v
 		}
-		if v-low > rise {
-			rise = v - low
+		if v < low {
+			low = v
 		}
 	}
 	return fall, rise
+}
+
+// span is the highest and the lowest of line at the points; -Inf and +Inf for
+// none, which no change is measured from.
+func span(line []float64, points []int) (high, low float64) {
+	high, low = math.Inf(-1), math.Inf(1)
+	for _, i := range points {
+		if v := line[i]; v > high {
+			high = v
+		}
+		if v := line[i]; v < low {
+			low = v
+		}
+	}
+	return high, low
 }
 
 // kilometre is the greatest fall over 1 km.

@@ -42,6 +42,7 @@ func TestExtremesAgainstPlainSearch(t *testing.T) {
 				s.Observed[i] = rng.Float64() >= share
 			}
 			fall, rise, fallKm := plain(s.line, s.Observed)
+			s.lookUp()
 			gotFall, gotRise := s.extremes()
 			gotFallKm := s.kilometre()
 			// Differences of the same two numbers: equal to the bit.
@@ -63,6 +64,7 @@ func TestUnobservedPointsDoNotCount(t *testing.T) {
 		s.Observed[i] = i != 5
 	}
 	s.line[5] = 40
+	s.lookUp()
 	if fall, rise := s.extremes(); fall != 0 || rise != 0 {
 		t.Errorf("a peak on ground that is not observed counts: fall %g, rise %g", fall, rise)
 	}

@@ -50,7 +50,17 @@ type class interface {
 type patterns struct {
 	precision []float64 // [pattern][6] P, packed
 	logOdds   []float64 // -1/2 log |I + C M|
+	today     []float64 // [pattern][dims] P q: mean of today's strength on b
+	sharpness []float64 // 1 / (sqrt(2) its standard deviation)
 	lines     [][]float64
+}
+
+// positive is the factor that a positive strength puts on the evidence of
+// pattern j: twice the posterior probability of it.
+func (p *patterns) positive(j int, b0, b1, b2 float64) float64 {
+	t := p.today[j*dims : j*dims+dims : j*dims+dims]
+	now := float64(t[0]*b0) + float64(t[1]*b1) + float64(t[2]*b2)
+	return math.Erfc(-now * p.sharpness[j])
 }
 
 // patternsFor computes, once for a state and class, what the evidence needs.
@@ -60,11 +70,14 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 	}
 	c := e.classes[k]
 	n := c.count()
-	p := &patterns{precision: make([]float64, n*6), logOdds: make([]float64, n), lines: make([][]float64, n)}
+	p := &patterns{
+		precision: make([]float64, n*6), logOdds: make([]float64, n),
+		today: make([]float64, n*dims), sharpness: make([]float64, n), lines: make([][]float64, n),
+	}
 	m := make([]float64, n*6)
 	c.gram(en, s, m)
 	for j := range n {
-		cov, _, _ := c.prior(j)
+		cov, q, rest := c.prior(j)
 		inv, logDetC := invert3(cov)
 		var sum [6]float64
 		for i := range sum {
@@ -73,6 +86,13 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 		prec, logDet := invert3(sum)
 		copy(p.precision[j*6:], prec[:])
 		p.logOdds[j] = -(logDet + logDetC) / 2 // |I + C M| = |C| |C^-1 + M|
+		today := mul3(prec, q)
+		copy(p.today[j*dims:], today[:])
+		v := rest
+		for i := range dims {
+			v += float64(q[i] * today[i])
+		}
+		p.sharpness[j] = 1 / math.Sqrt(2*v)
 	}
 	s.patterns[k] = p
 	return p
@@ -127,9 +147,6 @@ func (e *Estimator) strengthOf(s *state, k, j int, b [dims]float64) strength {
 	st.spread = math.Sqrt(v)
 	return st
 }
-
-// positive is the factor that a positive strength puts on the evidence.
-func (st *strength) positive() float64 { return math.Erfc(-st.now / (st.spread * math.Sqrt2)) }
 
 // invert3 inverts a symmetric positive definite 3x3 matrix packed as
 // (00, 01, 02, 11, 12, 22) and gives the logarithm of its determinant.

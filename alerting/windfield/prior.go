@@ -62,9 +62,9 @@ func DefaultPrior() Prior {
 		FrontShare:      0.02,
 		FrontStrength:   7,
 		FrontAcross:     4,
-		FrontHeadings:   16,
-		FrontSpeeds:     []float64{5, 10, 16},
-		FrontSpacing:    300,
+		FrontHeadings:   12,
+		FrontSpeeds:     []float64{6, 13},
+		FrontSpacing:    400,
 		FrontWidth:      300,
 		LeastStateShare: 0.01,
 	}

@@ -285,8 +285,7 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 		if l < least {
 			continue
 		}
-		st := e.strengthOf(s, c, j, [dims]float64{b[j], b[n+j], b[2*n+j]})
-		weight := math.Exp(l+scale) * st.positive()
+		weight := math.Exp(l+scale) * p.positive(j, b[j], b[n+j], b[2*n+j])
 		sum += weight
 		e.parts = append(e.parts, part{state: k, class: c, pattern: j, weight: weight})
 	}
