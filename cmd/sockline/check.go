@@ -109,6 +109,7 @@ type checkLevels struct {
 // mergeWithinWords is hazard's own distance, for the sentence about it.
 const mergeWithinWords = "3 kt"
 
+// checkReportOf works out what a configuration means on the UTC day of now.
 func checkReportOf(cfg *config.Config, now time.Time) checkReport {
 	a := cfg.Airfield
 	r := checkReport{
@@ -213,6 +214,8 @@ func (r *checkReport) levels(cfg *config.Config) {
 		r.warn("The stall margin of the slowest aircraft, 23 %% of %.1f kt, is %.1f kt: a loss smaller than level 3 (%.1f kt) already uses it up.",
 			r.Levels.Slowest, r.Levels.StallMargin, r.Levels.Margin)
 	}
+	// Such a reading lands in the step in which it arrives: with a slow link
+	// that is a later one than the others' of the same moment.
 	for _, s := range cfg.Stations {
 		if s.Format == sensors.FormatNMEA0183 || (s.Fields != nil && s.Fields.Time == "") {
 			r.warn("Station %s sends no time: its readings count from their arrival, so a slow link shifts them.", s.ID)
@@ -220,6 +223,7 @@ func (r *checkReport) levels(cfg *config.Config) {
 	}
 }
 
+// round cuts what a reader cannot use: tenths of a metre, a knot, a degree.
 func round(x, parts float64) float64 { return math.Round(x*parts)/parts + 0 } // + 0: no minus zero
 
 func tenth(x float64) float64 { return round(x, 10) }

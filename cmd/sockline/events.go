@@ -94,6 +94,7 @@ type eventSource struct {
 	listen    string // address of the daemon's page; empty if it is not known
 }
 
+// source is where the flags say the events are.
 func (f eventFlags) source() (eventSource, error) {
 	if (*f.config == "") == (*f.directory == "") {
 		return eventSource{}, usagef("give either --config FILE or --history DIRECTORY")
@@ -149,6 +150,7 @@ func (s eventSource) list(ctx context.Context, f history.Filter) ([]json.RawMess
 	return objects, errors.Join(err, store.Close())
 }
 
+// listRunning asks the daemon what list would read.
 func (s eventSource) listRunning(ctx context.Context, f history.Filter) ([]json.RawMessage, error) {
 	query := url.Values{"limit": {strconv.Itoa(f.Limit)}}
 	for name, at := range map[string]sensors.Instant{"from": f.From, "to": f.To} {
@@ -211,6 +213,7 @@ func (s eventSource) ask(ctx context.Context, path string, answer any) error {
 		return fmt.Errorf("ask the daemon at %s: %w", s.listen, err)
 	}
 	if response.StatusCode != http.StatusOK {
+		// The daemon explains itself as RFC 9457 has it.
 		var problem struct{ Title, Detail string }
 		if json.Unmarshal(body, &problem) != nil || problem.Title == "" {
 			problem.Title = response.Status

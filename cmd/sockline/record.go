@@ -70,6 +70,7 @@ func (l *listener) close() {
 	<-l.sub.Done()
 }
 
+// topicsOf is the topics of the stations, in their order.
 func topicsOf(stations []sensors.Station) []string {
 	topics := make([]string, len(stations))
 	for i, s := range stations {
@@ -78,6 +79,8 @@ func topicsOf(stations []sensors.Station) []string {
 	return topics
 }
 
+// record writes a raw capture: every message as it came and as it was stamped,
+// whether or not anything can be made of it.
 func record(ctx context.Context, p *program, cfg *config.Config, out string, length time.Duration) (err error) {
 	w, err := feed.CreateCapture(out, cfg.Airfield.ID)
 	if err != nil {
@@ -92,6 +95,7 @@ func record(ctx context.Context, p *program, cfg *config.Config, out string, len
 	}
 	messages, subscribed, err := recordUntil(ctx, p, cfg, l, w, length)
 	l.close()
+	// What was stamped before the end belongs into the file.
 	for len(l.sub.Messages()) > 0 && err == nil {
 		messages++
 		err = w.Write(<-l.sub.Messages())
@@ -155,6 +159,7 @@ func noContact(cfg *config.Config, s feed.LinkState) error {
 	return err
 }
 
+// linkWords is the state of a connection in words.
 func linkWords(s feed.LinkState) string {
 	switch {
 	case s.Subscribed:

@@ -80,6 +80,8 @@ type replayer struct {
 	notes    []string // what else the operator must know, for the summary
 }
 
+// newReplayer prepares a replay of the steps from <= T < to. Whatever comes
+// out of it is an exercise: it is not happening now.
 func newReplayer(ctx context.Context, p *program, cfg *config.Config, from, to sensors.Instant) (*replayer, error) {
 	e, err := engine.New(engineSettings(cfg, true))
 	if err != nil {
@@ -131,6 +133,8 @@ func (r *replayer) step(t sensors.Instant) error {
 	if r.to != 0 && t >= r.to {
 		return errReplayed
 	}
+	// A step takes less than a millisecond: every thousandth is often enough
+	// to notice that the operator wants to stop.
 	if r.steps++; r.steps%1024 == 0 && r.ctx.Err() != nil {
 		return errors.New("stopped before the end")
 	}
@@ -149,6 +153,8 @@ func (r *replayer) print(t sensors.Instant, transitions []lifecycle.Transition) 
 		return nil
 	}
 	for _, tr := range transitions {
+		// Recorded, as the daemon's issue was: what is printed must be the same
+		// bytes.
 		n := wording.Of(tr, r.words).WithRecorded(true)
 		r.issues++
 		if n.Opening() {

@@ -23,6 +23,8 @@ func isPacked(path string) bool {
 // summarize says on standard error what was replayed and what of it was of no
 // use: nothing that is wrong with the input may pass in silence.
 func (r *replayer) summarize() {
+	// The wall clock is for this line alone: nothing that is printed as data
+	// may depend on it.
 	took := max(r.p.now().Sub(r.began).Seconds(), 1e-3)
 	w := r.p.stderr
 	fmt.Fprintf(w, "EXERCISE: %d readings in %d steps replayed in %.1f s (%.0f readings/s, %.0f times real time): %d alerts opened, %d issues\n",
@@ -49,7 +51,7 @@ func (r *replayer) summarize() {
 		if n := counts.Copies[i]; n > 0 {
 			parts = append(parts, fmt.Sprintf("%d copies", n))
 		}
-		if len(parts) > 0 {
+		if len(parts) > 0 { // a station without complaint needs no line
 			fmt.Fprintf(w, "station %s: %s", s.ID, strings.Join(parts, ", "))
 			if why := counts.LastWhy[i]; why != "" {
 				fmt.Fprintf(w, " (last: %s)", why)

@@ -26,19 +26,21 @@ func simulateCommand() command {
 			fs.StringVar(&o.to, "to", "", "write \"broker\" to send the messages to the broker of the configuration, in real `time`")
 			fs.BoolVar(&o.live, "exercise-on-live-broker", false, "send to a broker that is not on this machine: its daemons must know that this is an exercise")
 			return func(ctx context.Context, p *program, _ []string) error {
-				fs.Visit(func(f *flag.Flag) { o.seeded = o.seeded || f.Name == "seed" })
+				o.seeded = given(fs, "seed") // 0 is a seed like any other
 				return simulate(ctx, p, *cfg, o)
 			}
 		},
 	}
 }
 
+// simulateOptions is what the command line asked for.
 type simulateOptions struct {
 	scene, out, to string
 	seed           uint64
 	seeded, live   bool
 }
 
+// simulate plays a scene, into a file or to the broker.
 func simulate(ctx context.Context, p *program, path string, o simulateOptions) error {
 	switch {
 	case o.scene == "":
@@ -115,6 +117,7 @@ func simulateToBroker(ctx context.Context, p *program, cfg *config.Config, scene
 		return usagef("the broker %s is not on this machine: synthetic wind there could be taken for real wind; "+
 			"give --exercise-on-live-broker if everybody who listens knows of the exercise", cfg.Broker.Address)
 	}
+	// The publisher calls from its own goroutine and must not be held up.
 	connected := make(chan struct{}, 1)
 	pub, err := feed.NewPublisher(ctx, feed.PublisherOptions{
 		Broker: brokerOf(cfg), ClientID: "sockline-simulate",
@@ -136,6 +139,7 @@ func simulateToBroker(ctx context.Context, p *program, cfg *config.Config, scene
 	case <-ctx.Done():
 		return nil
 	}
+	// The scene's own date would make every reading years old on arrival.
 	scene.Start = sensors.At(p.now()).CeilSecond()
 	fmt.Fprintf(p.stderr, "EXERCISE: scene %s goes to %s for %v; a daemon takes it only when started with --exercise\n", scene.Name, cfg.Broker.Address, scene.Length)
 	sent, lost, bar := 0, 0, newProgress(p, "readings")

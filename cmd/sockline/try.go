@@ -91,6 +91,8 @@ type trial struct {
 	json      bool
 }
 
+// newTrial prepares the decoding of one station's messages, as the daemon
+// would decode them.
 func newTrial(p *program, cfg *config.Config, id string, asJSON bool) (*trial, error) {
 	i := slices.IndexFunc(cfg.Stations, func(s sensors.Station) bool { return s.ID == id })
 	if i < 0 {
@@ -194,6 +196,7 @@ func (t *trial) show(m sensors.Message, live bool) error {
 	return t.print(r)
 }
 
+// trialReadingOf is a reading as it is printed.
 func trialReadingOf(r sensors.Reading) trialReading {
 	// Three decimals of a m/s and of a degree: what is behind them is the
 	// rounding of a unit.
