@@ -285,4 +285,6 @@ func landingLoss(a alertLine) bool {
 
 func captureName(tb testing.TB) string { return filepath.Join(tb.TempDir(), "daemon.jsonl") }
 
-func (a alertLine) String() string { return fmt.Sprintf("%s revision %d %s", a.ID, a.Revision, a.State) }
+func (a alertLine) String() string {
+	return fmt.Sprintf("%s revision %d %s", a.ID, a.Revision, a.State)
+}
