@@ -71,10 +71,10 @@ func (r *replayer) captureEnd(c *feed.CaptureReader, last sensors.Instant, messa
 }
 
 // captureShare is how much of the file has been read, by lines of about the
-// same length. Of a compressed file only its size is known: text like this
-// packs to about an eighth.
+// same length. Of a compressed file only its size is known: readings in SenML
+// packed to an eighteenth (a day of eight masts, measured), so this is a guess.
 func captureShare(path string, c *feed.CaptureReader) func() float64 {
-	const line, packed = 240.0, 8.0
+	const line, packed = 240.0, 18.0
 	info, err := os.Stat(path)
 	if err != nil || info.Size() == 0 {
 		return func() float64 { return 0 }
