@@ -93,7 +93,7 @@ func (s *Stretch) Measure(p *windfield.Posterior) {
 		for i, t := range s.Points {
 			s.line[i] = row[t]
 		}
-		loss, gain := s.extremes()
+		loss, gain := s.extremes(s.line)
 		kilometre := s.kilometre()
 		s.Loss.Sorted[d], s.Gain.Sorted[d] = loss, gain
 		s.kilometreSorted[d] = kilometre
@@ -132,12 +132,12 @@ func (s *Stretch) EitherAtLeast(change, kilometre float64) float64 {
 	return float64(n) / windfield.Draws
 }
 
-// extremes of line: the greatest fall and the greatest rise from an observed
+// extremes of a line of the stretch: the greatest fall and the greatest rise from an observed
 // point to a later one at most reachPoints on, in one pass that keeps the
 // highest and the lowest of the window behind it. When the point that leaves
 // the window is one of them, the window is searched anew; that is seldom.
-func (s *Stretch) extremes() (fall, rise float64) {
-	line, seen := s.line, s.seen
+func (s *Stretch) extremes(line []float64) (fall, rise float64) {
+	seen := s.seen
 	if len(seen) == 0 {
 		return 0, 0
 	}
@@ -198,8 +198,12 @@ func (s *Stretch) kilometre() (fall float64) {
 // asks, in m. Among changes within 0.05 kt of the greatest, the pair whose far
 // end is nearest the threshold wins, then the shorter.
 func (s *Stretch) Place(side *Side, before []float64) Place {
-	p := Place{Change: math.Inf(-1)}
-	s.pairs(side.sign, func(i, j int, change float64) { p.Change = max(p.Change, change) })
+	s.lookUp()
+	fall, rise := s.extremes(s.Mean)
+	p := Place{Change: fall}
+	if side.sign < 0 {
+		p.Change = rise
+	}
 	least := p.Change - tie
 	far, length := math.Inf(1), math.Inf(1)
 	s.pairs(side.sign, func(i, j int, change float64) {
@@ -212,7 +216,6 @@ func (s *Stretch) Place(side *Side, before []float64) Place {
 			far, length, p.Enter, p.End = f, l, i, j
 		}
 	})
-	p.Change = max(p.Change, 0)
 	p.MaxSlope = s.steepest(side, p)
 	return p
 }

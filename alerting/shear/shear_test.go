@@ -43,7 +43,7 @@ func TestExtremesAgainstPlainSearch(t *testing.T) {
 			}
 			fall, rise, fallKm := plain(s.line, s.Observed)
 			s.lookUp()
-			gotFall, gotRise := s.extremes()
+			gotFall, gotRise := s.extremes(s.line)
 			gotFallKm := s.kilometre()
 			// Differences of the same two numbers: equal to the bit.
 			if gotFall != fall || gotRise != rise {
@@ -65,12 +65,12 @@ func TestUnobservedPointsDoNotCount(t *testing.T) {
 	}
 	s.line[5] = 40
 	s.lookUp()
-	if fall, rise := s.extremes(); fall != 0 || rise != 0 {
+	if fall, rise := s.extremes(s.line); fall != 0 || rise != 0 {
 		t.Errorf("a peak on ground that is not observed counts: fall %g, rise %g", fall, rise)
 	}
 	// The ground between two observed points need not be observed.
 	s.line[4], s.line[6] = 9, 2
-	if fall, _ := s.extremes(); fall != 8 {
+	if fall, _ := s.extremes(s.line); fall != 8 {
 		t.Errorf("the fall across the gap is %g, want 8", fall)
 	}
 }

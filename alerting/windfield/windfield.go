@@ -73,6 +73,7 @@ type Estimator struct {
 	b         [][]float64 // [class][strength][pattern]
 	evidence  []float64   // per pattern of one class and state
 	column    []float64
+	plain     []float64 // posterior mean headwind of a state without a pattern
 	base      []float64
 	slope     []float64
 	stateLog  []float64
@@ -120,6 +121,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.w = make([]float64, n)
 	e.evidence = make([]float64, most)
 	e.column = make([]float64, n)
+	e.plain = make([]float64, len(targets))
 	e.base = make([]float64, len(targets))
 	e.slope = make([]float64, len(targets))
 	e.stateLog = make([]float64, len(e.fields))
@@ -314,6 +316,7 @@ func (e *Estimator) draw(en *entry) {
 			if solved != pt.state {
 				solved = pt.state
 				e.solve(en, s)
+				blas64.Gemv(blas.NoTrans, 1, mat(nt, en.n, s.gain), vec(e.y), 0, vec(e.plain))
 			}
 			st = e.shape(en, s, pt)
 			current = i
@@ -336,11 +339,12 @@ func (e *Estimator) draw(en *entry) {
 }
 
 // shape fills base (posterior mean headwind) and slope (what one more m/s of
-// the pattern's strength adds) for a part, and gives that strength.
+// the pattern's strength adds) for a part, and gives that strength. w and plain
+// are those of the part's state.
 func (e *Estimator) shape(en *entry, s *state, pt part) strength {
 	nt := len(e.targets)
-	blas64.Gemv(blas.NoTrans, 1, mat(nt, en.n, s.gain), vec(e.y), 0, vec(e.base))
 	if pt.class < 0 {
+		copy(e.base, e.plain)
 		clear(e.slope)
 		return strength{}
 	}
@@ -352,7 +356,7 @@ func (e *Estimator) shape(en *entry, s *state, pt part) strength {
 	st := e.strengthOf(s, pt.class, pt.pattern, b)
 	line := e.line(en, s, pt.class, pt.pattern)
 	for t := range nt {
-		base, slope := e.base[t], float64(st.open*line[dims*nt+t])
+		base, slope := e.plain[t], float64(st.open*line[dims*nt+t])
 		for d := range dims {
 			base += float64(st.mean[d] * line[d*nt+t])
 			slope += float64(st.share[d] * line[d*nt+t])
