@@ -230,6 +230,18 @@ func (e *Engine) Step(t sensors.Instant) *Result {
 	return &e.result
 }
 
+// Warm closes the step T like Step, except that no path is judged and no alert
+// moves: for the steps before a Restore, which would throw their alerts away.
+// What later steps find is the same, in less than half the time.
+func (e *Engine) Warm(t sensors.Instant) {
+	e.last = t
+	e.take(t)
+	e.evaluateReadings()
+	s := e.recorder.Snapshot(t)
+	e.ground.update(s)
+	e.field.Step(s)
+}
+
 // take moves the readings of step t out of pending, in order and without
 // copies. Readings of earlier steps cannot be there.
 func (e *Engine) take(t sensors.Instant) {

@@ -195,9 +195,13 @@ func (a *archive) Events(q page.EventQuery) ([]json.RawMessage, error) {
 	if err != nil {
 		return nil, err
 	}
+	f := history.Filter{From: q.From, To: q.To, Open: q.Open}
+	if q.From == 0 {
+		f.Limit = q.Limit
+	}
 	// The store counts an event by when it was open, the page by when it
 	// opened: the older ones are left out here.
-	found, err := s.Events(history.Filter{From: q.From, To: q.To, Open: q.Open})
+	found, err := s.Events(f)
 	if err != nil && len(found) == 0 {
 		return nil, err
 	}

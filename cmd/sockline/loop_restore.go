@@ -53,11 +53,15 @@ func (l *loop) restore(store *history.Store, now sensors.Instant) error {
 	pending := true
 	next := sensors.Instant(0)
 	step := func(t sensors.Instant) {
-		if pending && t > at {
+		next = t + sensors.Second
+		if t <= at {
+			l.engine.Warm(t)
+			return
+		}
+		if pending {
 			closed, pending = l.engine.Restore(open, last), false
 		}
 		l.engine.Step(t)
-		next = t + sensors.Second
 	}
 	err = store.Readings(last.Add(-engine.Memory), last+sensors.Second, func(st history.Step) error {
 		for next != 0 && next < st.At {

@@ -232,11 +232,8 @@ func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 	}
 	for i := range rep.Paths {
 		p := &rep.Paths[i]
-		var gaps []string
-		for _, g := range airfield.Unobserved(p.Path, p.Assessment.Observed) {
-			gaps = append(gaps, fmt.Sprintf("%.0f to %.0f m before the threshold", g.From, g.To))
-		}
-		v.Paths = append(v.Paths, page.Path{Name: p.Path.Name(), State: p.State, Sentence: p.Text(), Unobserved: gaps, JSON: p.JSON()})
+		// Its sentence names the ground that is not observed.
+		v.Paths = append(v.Paths, page.Path{Name: p.Path.Name(), State: p.State, Sentence: p.Text(), JSON: p.JSON()})
 		v.Exercise = v.Exercise || p.Assessment.Exercise
 	}
 	for i := range rep.Stations {
