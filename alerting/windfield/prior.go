@@ -2,9 +2,10 @@ package windfield
 
 // Prior is what is believed about the wind before this step's means are
 // looked at. It is a mixture: the air is in one of a few ambient states, and
-// now and then an outflow lies over it. The weights of the states are learnt
-// from the last minutes; the numbers here were tuned on synthetic episodes
-// whose seeds are kept apart from those used for reporting.
+// now and then an outflow or a front lies over it, or a mast is wrong. The
+// weights of the ambient states are learnt from the last minutes; the numbers
+// of DefaultPrior were tuned on synthetic episodes whose seeds are kept apart
+// from those used for reporting.
 type Prior struct {
 	Fields []Field // ambient states without a pattern, calmest first
 
@@ -18,8 +19,12 @@ type Prior struct {
 	DriftDeviation float64 // how far the common mean strays, one component, m/s ...
 	DriftTime      float64 // ... with this correlation time, s
 
-	Instrument      float64 // standard error of a mast's mean that averaging does not lower, m/s
-	OutflowShare    float64 // prior probability that an outflow is under way near the masts
+	Instrument float64 // standard error of a mast's mean that averaging does not lower, m/s
+	// OutflowShare is the prior probability that an outflow is under way near
+	// the masts. It is far above any climatology, on purpose: a missed outflow
+	// costs more than a doubted one, and in gusty and convective air the
+	// evidence keeps it from opening alerts all the same.
+	OutflowShare    float64
 	OutflowStrength float64 // scale of its greatest wind at mast height (half-normal), m/s
 	OutflowTime     float64 // correlation time of its strength, s
 	OutflowRadii    []float64
@@ -33,6 +38,9 @@ type Prior struct {
 	FrontSpeeds   []float64 // m/s
 	FrontSpacing  float64   // between the places tried, m
 	FrontWidth    float64   // half width of the change, m
+
+	FaultShare     float64 // prior probability that one of the masts is wrong
+	FaultDeviation float64 // standard deviation of its error, one component, m/s
 
 	LeastStateShare float64 // no ambient state is ever believed less than this before a step
 }
@@ -53,8 +61,8 @@ func DefaultPrior() Prior {
 		DriftDeviation:  2,
 		DriftTime:       300,
 		Instrument:      0.25,
-		OutflowShare:    0.03,
-		OutflowStrength: 6,
+		OutflowShare:    0.2,
+		OutflowStrength: 7,
 		OutflowTime:     90,
 		OutflowRadii:    []float64{500, 850, 1400},
 		OutflowSpacing:  500,
@@ -66,6 +74,8 @@ func DefaultPrior() Prior {
 		FrontSpeeds:     []float64{6, 13},
 		FrontSpacing:    400,
 		FrontWidth:      300,
+		FaultShare:      0.005,
+		FaultDeviation:  8,
 		LeastStateShare: 0.01,
 	}
 }

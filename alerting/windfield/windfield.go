@@ -5,7 +5,7 @@
 // The prior is a mixture. Around an unknown common mean the air is in one of a
 // few ambient states (Gaussian processes of different strength, kernel.go), and
 // an outflow of unknown place, size and strength (outflow.go) or a gust front
-// (front.go) may lie over it. Each step weighs the mixture by how well it explains the block
+// (front.go) may lie over it, or one mast may be wrong (fault.go). Each step weighs the mixture by how well it explains the block
 // means of all live masts; so calm air does not fill gaps with imagined shear,
 // an onset is not smoothed away, and peaks between masts are restored.
 package windfield
@@ -44,6 +44,7 @@ type Posterior struct {
 	Draws        []float64 // [Draws][target] joint draws of it, m/s
 	OutflowShare float64   // posterior probability that an outflow is under way
 	FrontShare   float64   // posterior probability that a front is passing
+	Doubt        []float64 // posterior probability that each mast is wrong
 }
 
 // Estimator holds the gains and the little state that persists: the evidence
@@ -57,7 +58,7 @@ type Estimator struct {
 	ages     [blocks]float64
 	outflows *outflowBank
 	fronts   *frontBank
-	classes  []class        // outflows, fronts
+	classes  []class        // outflows, fronts, faults
 	normals  []float64      // [Draws][target] fixed standard normal draws
 	order    [Draws]int     // which stored draw each draw uses
 	levels   [Draws]float64 // probability level of each draw's strength
@@ -92,6 +93,9 @@ type part struct {
 	weight                float64
 }
 
+// faultClass is where the faults stand among the classes.
+const faultClass = 2
+
 // New prepares an estimator for masts and targets (m in one local plane).
 func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *Estimator {
 	e := &Estimator{prior: prior, masts: masts, targets: targets, layout: layout}
@@ -101,7 +105,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	}
 	e.outflows = newOutflowBank(masts, targets, e.ages, prior)
 	e.fronts = newFrontBank(masts, targets, e.ages, prior)
-	e.classes = []class{e.outflows, e.fronts}
+	e.classes = []class{e.outflows, e.fronts, &faultBank{masts: len(masts), targets: len(targets), deviation: prior.FaultDeviation}}
 	e.normals = fixedNormals(len(targets))
 	for d := range Draws {
 		e.order[d] = reverseBits(d)
@@ -129,6 +133,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.parts = make([]part, 0, len(e.fields)*(total+1))
 	e.times = make([]float64, 0, len(masts))
 	e.bases = make([]float64, 0, len(masts))
+	e.posterior.Doubt = make([]float64, len(masts))
 	e.posterior.Mean = make([]float64, len(targets))
 	e.posterior.Draws = make([]float64, Draws*len(targets))
 	return e
@@ -210,13 +215,13 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	}
 	e.parts = e.parts[:0]
 	total := 0.0
-	plain := 1 - e.prior.OutflowShare - e.prior.FrontShare
+	plain := 1 - e.prior.OutflowShare - e.prior.FrontShare - e.prior.FaultShare
 	for k := range ambient {
 		w := plain * e.weights[k] * math.Exp(e.stateLog[k]-top)
 		e.parts = append(e.parts, part{state: k, class: -1, weight: w})
 		total += w
 	}
-	shares := [...]float64{e.prior.OutflowShare, e.prior.FrontShare}
+	shares := [...]float64{e.prior.OutflowShare, e.prior.FrontShare, e.prior.FaultShare}
 	var found [len(shares)]float64
 	for k := ambient; k < len(en.states); k++ {
 		e.solve(en, en.states[k])
@@ -228,7 +233,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	}
 	// A state of the air is judged by what it explains with or without a
 	// pattern, so that an outflow does not pass for restless air afterwards.
-	patterned := found[0] + found[1]
+	patterned := found[0] + found[1] + found[2]
 	for k := range ambient {
 		e.stateLog[k] = math.Log(float64(plain*math.Exp(e.stateLog[k]-top)) + patterned)
 	}
@@ -238,11 +243,25 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	}
 	e.posterior.OutflowShare = found[0] / total
 	e.posterior.FrontShare = found[1] / total
+	e.doubt()
+}
+
+// doubt fills the probability that each mast is wrong.
+func (e *Estimator) doubt() {
+	clear(e.posterior.Doubt)
+	for _, p := range e.parts {
+		if p.class == faultClass {
+			e.posterior.Doubt[p.pattern] += p.weight
+		}
+	}
 }
 
 // solve fills w = K^-1 y of a state.
-func (e *Estimator) solve(en *entry, s *state) {
-	blas64.Gemv(blas.NoTrans, 1, mat(en.n, en.n, s.inverse), vec(e.y), 0, vec(e.w))
+func (e *Estimator) solve(en *entry, s *state) { multiply(en, s, e.y, e.w) }
+
+// multiply fills out with K^-1 x.
+func multiply(en *entry, s *state, x, out []float64) {
+	blas64.Gemv(blas.NoTrans, 1, mat(en.n, en.n, s.inverse), vec(x), 0, vec(out))
 }
 
 // A pattern is left out when its share of the whole mixture is below

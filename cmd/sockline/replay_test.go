@@ -82,7 +82,7 @@ func TestReplayFindsTheOutflow(t *testing.T) {
 		}
 	}
 	// The outflow grows from 14:01:00 to 14:01:20 and is gone at 14:02:30; the
-	// window is 30 s, the hold 60 s.
+	// window is 18 s, the hold 60 s.
 	start := time.Date(2026, 7, 1, 14, 1, 0, 0, time.UTC)
 	if d := level3.Sub(start); d < 0 || d > time.Minute {
 		t.Errorf("level 3 opens at %v, the outflow starts at %v", level3, start)

@@ -197,9 +197,9 @@ func ExpectedTime(speed float64) float64 {
 }
 
 // Expected is the turbulence to reckon with before any has been measured, on
-// the cautious side: sigma1 = Iref (0.75 V + 5.6) with Iref = 0.14 (IEC 61400-1
-// ed. 3, class B, the 90 % point; from memory).
+// the cautious side: sigma1 = Iref (0.75 V + 5.6) with Iref = 0.16 (IEC 61400-1
+// ed. 3, class A, the 90 % point; from memory).
 func Expected(speed float64) Turbulence {
-	sigma := 0.14 * (0.75*speed + 5.6)
+	sigma := 0.16 * (0.75*speed + 5.6)
 	return Turbulence{Variance: sigma * sigma, Time: ExpectedTime(speed)}
 }
