@@ -10,6 +10,7 @@ import (
 	"math/big"
 	"os"
 	"path/filepath"
+	"reflect"
 	"regexp"
 	"strings"
 	"testing"
@@ -71,7 +72,7 @@ func TestDeployedExample(t *testing.T) {
 	}
 	a, b := plain.Alerts, full.Alerts
 	if a.Noticeable != b.Noticeable || a.Large != b.Large || a.MarginFBar != b.MarginFBar || a.Confidence != b.Confidence ||
-		a.Hysteresis != b.Hysteresis || a.Hold != b.Hold || plain.Stations[0] != full.Stations[0] ||
+		a.Hysteresis != b.Hysteresis || a.Hold != b.Hold || !reflect.DeepEqual(plain.Stations[0], full.Stations[0]) ||
 		plain.Airfield.Runways[0] != full.Airfield.Runways[0] {
 		t.Errorf("%+v\n%+v", a, b)
 	}

@@ -70,7 +70,42 @@ type Station struct {
 	StaleAfter  time.Duration // without a reading for so long, it is stale
 	North       North         // what its directions are counted from
 	NorthOffset float64       // degrees added to its directions (a misaligned mast)
-	Fields      *FieldMap     // for FormatJSON, nil otherwise
+	Fields      *FieldMap     // for FormatJSON, nil otherwise; optional with Topics
+	Topics      *FieldTopics  // for FormatJSON: a topic for each quantity; nil: one for all
+
+	// Roughness of the ground around the mast, by the direction that the wind
+	// comes from, in clockwise order and all round. Empty: speeds are used as
+	// they are measured.
+	Roughness []RoughnessSector
+	// Exposure also brings the speed from that ground to open ground; without
+	// it only the height is corrected for.
+	Exposure bool
+}
+
+// RoughnessSector is the ground upwind of a mast in one sector.
+type RoughnessSector struct {
+	From, To float64 // degrees true, clockwise from From to To; equal: all round
+	Length   float64 // roughness length z0, m
+}
+
+// FieldTopics are the exact topics of a station that publishes each quantity by
+// itself, as a plain number or as JSON.
+type FieldTopics struct {
+	Speed     string
+	Direction string
+	Gust      string // optional
+}
+
+// AllTopics lists every topic of the station, its Topic first.
+func (s Station) AllTopics() []string {
+	if s.Topics == nil {
+		return []string{s.Topic}
+	}
+	all := []string{s.Topics.Speed, s.Topics.Direction}
+	if s.Topics.Gust != "" {
+		all = append(all, s.Topics.Gust)
+	}
+	return all
 }
 
 // FieldMap says where a mapped JSON payload keeps its values. A name is a

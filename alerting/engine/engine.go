@@ -284,7 +284,8 @@ func (e *Engine) evaluateReadings() {
 	}
 }
 
-// TwoMinute is the wind of a station as people read it.
-func (e *Engine) TwoMinute(station int) (averages.TwoMinute, bool) {
-	return e.recorder.TwoMinute(station, e.last)
+// Wind is the wind of a station as people read it, up to the last step. No
+// step works it out: it is for whoever asks between two.
+func (e *Engine) Wind(station int) (averages.Wind, bool) {
+	return e.recorder.Wind(station, e.last)
 }

@@ -25,10 +25,6 @@ import (
 // validFor is how long what is told of a step may be believed.
 const validFor = 5 * time.Second
 
-// gustsFrom is by how much a gust must exceed the mean to be told, m/s (ICAO
-// Annex 3, appendix 3: 5 m/s or 10 kt; from memory).
-const gustsFrom = 5.0
-
 // report is one step in words: what the page, the broker and the log tell.
 type report struct {
 	At        sensors.Instant
@@ -146,7 +142,7 @@ func (r *reporter) end(m endMast, e *engine.Engine, res *engine.Result) wording.
 		w.Reason = "the mast " + id + " is " + mast.State.String()
 		return w
 	}
-	wind, ok := e.TwoMinute(m.mast)
+	wind, ok := e.Wind(m.mast)
 	variation, err := r.variation(res.At)
 	switch {
 	case !ok:
@@ -157,9 +153,10 @@ func (r *reporter) end(m endMast, e *engine.Engine, res *engine.Result) wording.
 		return w
 	}
 	w.Observed = true
-	w.Mean, w.From = wind.Mean.Speed(), wind.Mean.From()
-	w.Gust, w.HasGust = wind.Gust, wind.Gust-wind.Speed >= gustsFrom
-	w.Headwind, w.Crosswind = wind.Mean.Headwind(m.bearing), wind.Mean.CrosswindFromRight(m.bearing)
+	mean := wind.Two.Vector
+	w.Mean, w.From = mean.Speed(), mean.From()
+	w.Gust, w.HasGust = wind.Period.Gust, wind.Gusting
+	w.Headwind, w.Crosswind = mean.Headwind(m.bearing), mean.CrosswindFromRight(m.bearing)
 	w.Variation = variation
 	return w
 }

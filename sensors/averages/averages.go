@@ -1,7 +1,7 @@
 // Package averages turns the checked readings of each mast into what the
-// analysis works on: block means of the wind vector, the turbulence around
-// them, and the two-minute wind that people read. One Snapshot per step. Next:
-// alerting/windfield.
+// analysis works on, block means of the wind vector and the turbulence around
+// them (one Snapshot per step), and, when asked, into the Wind that people
+// read: means, gusts, variation and shifts. Next: alerting/windfield.
 //
 // Everything is kept in one bin per second, so that irregular and fast
 // instruments weigh the same as slow ones. Directions are never averaged as
@@ -9,10 +9,10 @@
 package averages
 
 import (
-	"math"
 	"time"
 
 	"sockline/sensors"
+	"sockline/sensors/correction"
 	"sockline/sensors/quality"
 	"sockline/sensors/quantity"
 )
@@ -71,15 +71,6 @@ type Mast struct {
 	Turbulence Turbulence // from the ten minutes before the blocks
 }
 
-// TwoMinute is the wind of the last two minutes after ICAO Annex 3 practice:
-// vector mean, and the greatest 3 s mean of the last ten minutes.
-type TwoMinute struct {
-	Mean          quantity.Vector // m/s
-	Speed         float64         // scalar mean, m/s
-	Gust          float64         // greatest 3 s mean of the last 10 min, m/s
-	SpreadDegrees float64         // between the extreme directions of the last 2 min
-}
-
 // Snapshot is the state of every mast at one step. It is made only by
 // Recorder.Snapshot and is valid until the next one.
 type Snapshot struct {
@@ -132,12 +123,15 @@ type bin struct {
 	second      sensors.Instant // end of the second; 0 when never used
 	east, north float64         // sums, m/s
 	speed       float64         // sum, m/s
+	raw         float64         // sum as measured, before any correction, m/s
+	high, low   float64         // greatest and smallest reading, m/s
 	n           int
 	exercise    bool
 }
 
 type mast struct {
 	interval   int // seconds between reports, at least 1
+	corrector  *correction.Corrector
 	staleAfter time.Duration
 	last       sensors.Instant
 	bins       [memory]bin
@@ -149,6 +143,7 @@ type Recorder struct {
 	layout   Layout
 	masts    []mast
 	snapshot Snapshot
+	series   series // of the last Wind asked for
 }
 
 // NewRecorder keeps bins for the stations, in their order.
@@ -157,6 +152,7 @@ func NewRecorder(stations []sensors.Station, layout Layout) *Recorder {
 	for i, s := range stations {
 		r.masts[i].interval = max(int((s.Interval+time.Second-1)/time.Second), 1)
 		r.masts[i].staleAfter = s.StaleAfter
+		r.masts[i].corrector = correction.New(s)
 	}
 	r.snapshot.masts = make([]Mast, len(stations))
 	return r
@@ -175,10 +171,19 @@ func (r *Recorder) Add(c quality.Checked) {
 	if b.second != second {
 		*b = bin{second: second}
 	}
-	v := quantity.FromDirection(rd.Speed, rd.From)
+	// What was measured is not written over: the correction stands beside it.
+	speed := m.corrector.Of(rd).Speed
+	v := quantity.FromDirection(speed, rd.From)
 	b.east += v.East
 	b.north += v.North
-	b.speed += rd.Speed
+	b.speed += speed
+	b.raw += rd.Speed
+	if b.n == 0 || speed > b.high {
+		b.high = speed
+	}
+	if b.n == 0 || speed < b.low {
+		b.low = speed
+	}
 	b.n++
 	b.exercise = b.exercise || rd.Exercise
 	m.last = max(m.last, rd.Time)
@@ -257,78 +262,4 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 	if 3*filled >= 2*want && out.Blocks[0].Present {
 		out.State = Live
 	}
-}
-
-// TwoMinute is the wind of a station at step t as people read it; false unless
-// two thirds of the two minutes hold data. It is computed on request: the
-// analysis does not need it.
-func (r *Recorder) TwoMinute(station int, t sensors.Instant) (TwoMinute, bool) {
-	m := &r.masts[station]
-	var w TwoMinute
-	n := 0
-	for k := range 120 {
-		b := m.at(t - sensors.Instant(k)*sensors.Second)
-		if b == nil {
-			continue
-		}
-		w.Mean.East += b.east / float64(b.n)
-		w.Mean.North += b.north / float64(b.n)
-		w.Speed += b.speed / float64(b.n)
-		n++
-	}
-	if 3*n < 2*120/m.interval {
-		return TwoMinute{}, false
-	}
-	w.Mean.East /= float64(n)
-	w.Mean.North /= float64(n)
-	w.Speed /= float64(n)
-	w.SpreadDegrees = m.spread(t, w.Mean)
-	w.Gust = m.gust(t)
-	return w, true
-}
-
-// spread is the angle between the extreme directions of the last two minutes,
-// seen from the mean direction, in degrees up to 360.
-func (m *mast) spread(t sensors.Instant, mean quantity.Vector) float64 {
-	lo, hi := 0.0, 0.0
-	from := mean.From()
-	for k := range 120 {
-		b := m.at(t - sensors.Instant(k)*sensors.Second)
-		if b == nil {
-			continue
-		}
-		v := quantity.Vector{East: b.east, North: b.north}
-		d := quantity.NormalizeDegrees(v.From()-from+180) - 180
-		lo, hi = math.Min(lo, d), math.Max(hi, d)
-	}
-	return hi - lo
-}
-
-// gust is the greatest mean of three consecutive seconds in the last ten
-// minutes (WMO-No. 8: gust by a 3 s running mean; from memory). Instruments
-// slower than one report a second give the greatest report instead.
-func (m *mast) gust(t sensors.Instant) float64 {
-	width := 3
-	if m.interval > 1 {
-		width = 1
-	}
-	best, run, sum := 0.0, 0, 0.0
-	for k := 599; k >= 0; k-- {
-		b := m.at(t - sensors.Instant(k)*sensors.Second)
-		if b == nil {
-			run, sum = 0, 0
-			continue
-		}
-		sum += b.speed / float64(b.n)
-		run++
-		if run > width {
-			old := m.at(t - sensors.Instant(k+width)*sensors.Second)
-			sum -= old.speed / float64(old.n)
-			run = width
-		}
-		if run == width {
-			best = math.Max(best, sum/float64(width))
-		}
-	}
-	return best
 }

@@ -85,7 +85,7 @@ func TestSlowMast(t *testing.T) {
 			}
 		}
 	}
-	if w, ok := r.TwoMinute(0, epoch+600*sensors.Second); !ok || math.Abs(w.Speed-6.3) > 0.1 || math.Abs(w.Gust-6.6) > 1e-9 {
+	if w, ok := r.Wind(0, epoch+600*sensors.Second); !ok || math.Abs(w.Two.Speed-6.3) > 0.1 || math.Abs(w.Ten.Gust-6.6) > 1e-9 {
 		t.Errorf("two-minute wind %+v, %v; want a mean of 6.3 and the greatest report, 6.6", w, ok)
 	}
 }

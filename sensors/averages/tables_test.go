@@ -70,23 +70,14 @@ func feed(t *testing.T, st sensors.Station, window time.Duration) (*Recorder, fu
 	}
 }
 
-// The two-minute wind and the gust of ten minutes, against windows of a series
-// with a change of the wind and two gaps, worked out in R.
-func TestTwoMinuteWindAgainstTable(t *testing.T) {
+// Every window of a series with a change of the wind and two gaps, worked out
+// in R: means, deviations, gust with its time, lull, count.
+func TestMeansAgainstTable(t *testing.T) {
 	series := table(t, "gust_series.csv")
 	windows := table(t, "gust_windows.csv")
 	r, add := feed(t, station(time.Second), 30*time.Second)
-	gusts := map[string]map[string]string{}
+	next, two, ten := 0, 0, 0
 	for _, w := range windows {
-		if w["window_s"] == "600" {
-			gusts[w["t_end_s"]] = w
-		}
-	}
-	next, means, tens := 0, 0, 0
-	for _, w := range windows {
-		if w["window_s"] != "120" {
-			continue
-		}
 		end := int(number(t, w["t_end_s"]))
 		// The window holds the samples up to, not at, its end; a sample at k
 		// belongs to the step k.
@@ -96,23 +87,73 @@ func TestTwoMinuteWindAgainstTable(t *testing.T) {
 				t.Fatalf("the sample at %d s is refused", k)
 			}
 		}
-		got, ok := r.TwoMinute(0, epoch+sensors.Instant(end-1)*sensors.Second)
+		got, ok := r.Wind(0, epoch+sensors.Instant(end-1)*sensors.Second)
 		if !ok {
-			t.Fatalf("no two-minute wind at %d s with %s of 120 samples", end, w["n"])
+			t.Fatalf("no wind at %d s with %s samples", end, w["n"])
 		}
-		means++
-		// Both sides add 120 numbers of one digit after the point; the table has
-		// eight.
-		near(t, end, "vector speed", got.Mean.Speed(), number(t, w["vec_speed_ms"]), 1e-7)
-		near(t, end, "direction", got.Mean.From(), number(t, w["vec_dir_deg"]), 1e-7)
-		near(t, end, "scalar speed", got.Speed, number(t, w["scalar_speed_ms"]), 1e-7)
-		if ten, ok := gusts[w["t_end_s"]]; ok {
-			near(t, end, "gust", got.Gust, number(t, ten["gust3_ms"]), 1e-7)
-			tens++
+		m := got.Two
+		two++
+		if w["window_s"] == "600" {
+			m = got.Ten
+			ten++
+		}
+		if !m.Present || !m.Gusts || !m.Directed || m.Seconds != int(number(t, w["n"])) {
+			t.Errorf("at %d s: %+v, the table has %s samples", end, m, w["n"])
+		}
+		// Both sides add up to 600 numbers of one digit after the point; the
+		// table has eight.
+		near(t, end, "vector speed", m.Vector.Speed(), number(t, w["vec_speed_ms"]), 1e-7)
+		near(t, end, "direction", m.Vector.From(), number(t, w["vec_dir_deg"]), 1e-7)
+		near(t, end, "scalar speed", m.Speed, number(t, w["scalar_speed_ms"]), 1e-7)
+		near(t, end, "measured speed", m.Raw, number(t, w["scalar_speed_ms"]), 1e-7)
+		near(t, end, "speed deviation", m.SpeedDeviation, number(t, w["sd_speed_n1"]), 1e-7)
+		near(t, end, "gust", m.Gust, number(t, w["gust3_ms"]), 1e-7)
+		near(t, end, "lull", m.Lull, number(t, w["lull3_ms"]), 1e-7)
+		near(t, end, "greatest", m.Max, number(t, w["max1_ms"]), 1e-9)
+		// Of equal gusts the first one counts.
+		if at := int((m.GustAt - epoch) / sensors.Second); at != int(number(t, w["gust3_t_s"])) {
+			t.Errorf("at %d s: the gust was at %d s, the table has %s", end, at, w["gust3_t_s"])
+		}
+		// For one-humped samples the two definitions of the deviation agree
+		// within 0.2 degrees (standard deviations up to 20 degrees).
+		if sd := number(t, w["sd_circ_deg"]); sd < 20 {
+			near(t, end, "direction deviation", m.DirectionDeviation, sd, 0.2)
 		}
 	}
-	if means < 25 || tens < 20 {
-		t.Errorf("%d windows of two minutes and %d of ten were compared; the table has more", means, tens)
+	if two != 50 || ten < 20 {
+		t.Errorf("%d windows were compared, %d of them of ten minutes; the table has 50", two, ten)
+	}
+}
+
+// Mean direction and Yamartino's deviation against the table of R and NumPy,
+// with wraps at north, bimodal samples and such that have no mean.
+func TestCircularAgainstTable(t *testing.T) {
+	rows := table(t, "circular_stats.csv")
+	undefined := 0
+	for _, row := range rows {
+		var sin, cos float64
+		dirs := strings.Split(row["dirs_deg"], ";")
+		for _, d := range dirs {
+			s, c := math.Sincos(number(t, d) * (math.Pi / 180))
+			sin += s
+			cos += c
+		}
+		n := float64(len(dirs))
+		mean, deviation, ok := circular(sin/n, cos/n)
+		if defined := row["mean_defined"] == "1"; ok != defined {
+			t.Errorf("%s: the mean is defined: %v, the table has %v", row["name"], ok, defined)
+		}
+		if !ok {
+			undefined++
+		} else if d := math.Abs(turn(mean, number(t, row["mean_deg"]))); d > 2e-6 {
+			t.Errorf("%s: mean %.7f, the table has %s", row["name"], mean, row["mean_deg"])
+		}
+		if want := number(t, row["sd_yamartino_deg"]); math.Abs(deviation-want) > 2e-6 {
+			t.Errorf("%s: deviation %.7f, the table has %.7f", row["name"], deviation, want)
+		}
+	}
+	if len(rows) != 23 || undefined != 2 {
+		t.Errorf("%d samples, %d without a mean; the table has 23 and 2", len(rows), undefined)
 	}
 }
 
