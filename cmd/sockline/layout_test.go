@@ -150,7 +150,7 @@ var flow = [...][]string{
 	{"sensors/quantity"},
 	{"sensors", "alerting"},
 	{"sensors/decode", "sensors/synthetic", "sensors/feed"},
-	{"sensors/quality"},
+	{"sensors/quality", "sensors/correction"},
 	{"sensors/averages"},
 	{"alerting/airfield"},
 	{"alerting/windfield"},
@@ -198,7 +198,7 @@ func TestFlowDoesNotTurnBack(t *testing.T) {
 // inline are the packages that run in the one goroutine that owns the
 // evaluation: they wait for nothing and share nothing.
 var inline = [...]string{
-	"sensors", "sensors/quantity", "sensors/decode", "sensors/quality", "sensors/averages",
+	"sensors", "sensors/quantity", "sensors/decode", "sensors/quality", "sensors/correction", "sensors/averages",
 	"alerting", "alerting/airfield", "alerting/windfield", "alerting/shear", "alerting/hazard",
 	"alerting/lifecycle", "alerting/wording", "alerting/engine",
 }
