@@ -45,6 +45,7 @@ type Format string
 // The payload formats.
 const (
 	FormatSenMLJSON Format = "senml+json"
+	FormatSenMLCBOR Format = "senml+cbor"
 	FormatNMEA0183  Format = "nmea0183"
 	FormatJSON      Format = "json"
 )
@@ -64,7 +65,7 @@ type Station struct {
 	Latitude    float64       // WGS-84 degrees
 	Longitude   float64       // WGS-84 degrees
 	Height      float64       // of the anemometer above the ground, m
-	Topic       string        // exact MQTT topic, no wildcards
+	Topic       string        // exact MQTT topic, no wildcards; with Topics that of the speed
 	Format      Format        // how its payloads are written
 	Interval    time.Duration // how often it reports
 	StaleAfter  time.Duration // without a reading for so long, it is stale
@@ -80,6 +81,36 @@ type Station struct {
 	// Exposure also brings the speed from that ground to open ground; without
 	// it only the height is corrected for.
 	Exposure bool
+
+	CorrectClock bool // take the constant error of its clock out, not only name it
+	Book         Book
+	Maintenance  []Maintenance // in order of time, not overlapping
+}
+
+// Book is what is known of the instrument of a station: for people, nothing is
+// worked out from it. Dates are written 2026-07-01 and empty if not known.
+type Book struct {
+	Model, Serial                  string
+	Installed, Calibrated, NextDue string
+	Notes                          string
+}
+
+// Maintenance is a time in which a station is worked on: its readings are kept
+// and say nothing of the wind. From belongs to it, To does not.
+type Maintenance struct {
+	From, To Instant
+	Reason   string
+}
+
+// UnderMaintenance is the maintenance that a station is under at an instant;
+// false if none.
+func (s *Station) UnderMaintenance(at Instant) (Maintenance, bool) {
+	for _, m := range s.Maintenance {
+		if m.From <= at && at < m.To {
+			return m, true
+		}
+	}
+	return Maintenance{}, false
 }
 
 // RoughnessSector is the ground upwind of a mast in one sector.
@@ -113,8 +144,11 @@ func (s Station) AllTopics() []string {
 // object. Units are spelled as in the configuration ("m/s", "kt", "km/h",
 // "mph", "ft/s"; "deg", "rad").
 type FieldMap struct {
-	Speed         string
-	Direction     string
+	// Samples is the place of an array of measurements; the names of the
+	// others are then relative to each of its elements. Optional.
+	Samples       string
+	Speed         string // with FieldTopics optional: a payload is then a plain number
+	Direction     string // the same
 	Gust          string // optional
 	Time          string // optional
 	Exercise      string // optional; a boolean marking synthetic data. Default "exercise"

@@ -49,12 +49,15 @@ type Engine struct {
 	settings Settings
 	byTopic  map[string]int
 	decoders []*decode.Decoder
+	joining  []int // stations with a topic for each quantity
 	checkers []*quality.Checker
 	recorder *averages.Recorder
 	field    *windfield.Estimator
 	ground   *ground
 	machine  *lifecycle.Machine
 	counts   Counts
+
+	allowances []allowance // of messages and readings, by station
 
 	pending      []sensors.Reading // readings of steps that have not closed
 	late         []Refused         // since the last step
@@ -98,9 +101,18 @@ func New(s Settings) (*Engine, error) {
 		}
 		e.decoders = append(e.decoders, d)
 		e.checkers = append(e.checkers, quality.NewChecker(st))
-		e.byTopic[st.Topic] = i
+		for _, topic := range st.AllTopics() {
+			e.byTopic[topic] = i
+		}
+		if st.Topics != nil {
+			e.joining = append(e.joining, i)
+		}
 		ids[i] = st.ID
 	}
+	for _, d := range e.decoders {
+		d.Beware(ids)
+	}
+	e.allowances = newAllowances(s.Stations)
 	layout := averages.NewLayout(s.Window)
 	e.recorder = averages.NewRecorder(s.Stations, layout)
 	e.ground = newGround(s.Airfield, s.Reach)
@@ -170,11 +182,20 @@ func (e *Engine) Receive(m sensors.Message) (station, kept int, err error) {
 		return -1, 0, fmt.Errorf("topic %q belongs to no configured station", m.Topic)
 	}
 	e.counts.Messages[station]++
+	if err = e.allowances[station].message(m.Received); err != nil {
+		e.counts.rejected(station, err)
+		return station, 0, err
+	}
 	e.scratch, err = e.decoders[station].Decode(e.scratch[:0], m, e.variation(m.Received))
 	if err != nil {
 		e.counts.rejected(station, err)
 	}
-	for _, r := range e.scratch {
+	for i, r := range e.scratch {
+		if !e.allowances[station].reading() {
+			flood := tooManyReadings(len(e.scratch) - i)
+			e.counts.rejected(station, flood)
+			return station, kept, flood
+		}
 		if e.Offer(r) {
 			kept++
 		}
@@ -215,6 +236,7 @@ func (e *Engine) variation(t sensors.Instant) float64 {
 // Step closes the step T, which must follow the last one.
 func (e *Engine) Step(t sensors.Instant) *Result {
 	e.last = t
+	e.release(t)
 	e.take(t)
 	e.evaluateReadings()
 	snapshot := e.recorder.Snapshot(t)
@@ -235,6 +257,7 @@ func (e *Engine) Step(t sensors.Instant) *Result {
 // What later steps find is the same, in less than half the time.
 func (e *Engine) Warm(t sensors.Instant) {
 	e.last = t
+	e.release(t)
 	e.take(t)
 	e.evaluateReadings()
 	s := e.recorder.Snapshot(t)

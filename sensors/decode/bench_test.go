@@ -7,6 +7,8 @@ import (
 	"strings"
 	"testing"
 
+	"github.com/fxamacker/cbor/v2"
+
 	"sockline/sensors"
 	"sockline/sensors/quantity"
 )
@@ -146,6 +148,33 @@ func BenchmarkSenML(b *testing.B) {
 			}
 		}
 	})
+}
+
+func BenchmarkSenMLCBOR(b *testing.B) {
+	payload := inCBOR(b, []byte(benchSenML), true)
+	b.Run("decoder", func(b *testing.B) {
+		benchDecoder(b, sensors.Station{Format: sensors.FormatSenMLCBOR}, string(payload))
+	})
+	b.Run("fxamacker", func(b *testing.B) {
+		b.ReportAllocs()
+		for b.Loop() {
+			var records []struct {
+				Name  string  `cbor:"0,keyasint"`
+				Base  string  `cbor:"-2,keyasint"`
+				Time  float64 `cbor:"-3,keyasint"`
+				Unit  string  `cbor:"1,keyasint"`
+				Value float64 `cbor:"2,keyasint"`
+			}
+			if err := cbor.Unmarshal(payload, &records); err != nil || len(records) != 2 || records[0].Value != 6.43 {
+				b.Fatal(records, err)
+			}
+		}
+	})
+}
+
+// BenchmarkXDR is a wind with its least and greatest value.
+func BenchmarkXDR(b *testing.B) {
+	benchDecoder(b, sensors.Station{Format: sensors.FormatNMEA0183}, "$WIXDR,A,250.1,D,0,A,254.0,D,1,A,262.3,D,2,S,3.1,M,0,S,4.2,M,1,S,5.0,M,2*4A")
 }
 
 func benchHandFlat(b *testing.B) {

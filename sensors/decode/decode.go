@@ -2,24 +2,29 @@
 // of everything it refuses why. It is pure: the same bytes give the same
 // readings, and it reads no clock.
 //
-// Three payload formats are known.
+// These payload formats are known.
 //
-// SenML (RFC 8428) in JSON: records whose resolved name ends in "wind_speed"
+// SenML (RFC 8428) in JSON or CBOR: records whose resolved name ends in "wind_speed"
 // (m/s, km/h, kt, kn, mph, ft/s), "wind_direction" (deg or rad, where the wind
 // comes from) and, if there is one, "wind_gust". Speed and direction belong
 // together when what precedes those endings and the time are the same. A
 // boolean record whose name ends in "exercise" marks the whole pack as
-// synthetic.
+// synthetic. A pack whose names are those of another station is refused.
 //
-// NMEA 0183: MWV and MWD sentences, one or more a message, each with its
-// checksum; other sentences are passed over. The angle of MWV, R or T, is
-// counted from the zero of the instrument, which is the north of the station's
-// configuration. The proprietary sentence "$PSKLX,1*41" is sockline's own: it
+// NMEA 0183: MWV, MWD, MDA and XDR sentences, one or more a message, each with
+// its checksum; other sentences are passed over. The angle of MWV, R or T, and
+// of XDR is counted from the zero of the instrument, which is the north of the
+// station's configuration. Of XDR the angles (type A, in degrees) and the speeds
+// (type S, in M, N, K or S) of one message belong together: transducers named
+// 0, 1 and 2 are the least, mean and greatest value, those whose name begins
+// with WIND speak for themselves, and others are passed over. The proprietary sentence "$PSKLX,1*41" is sockline's own: it
 // marks every reading of its message as synthetic; "$PSKLX,0*40" says that
 // they are real.
 //
 // JSON with a field map: see sensors.FieldMap. Numbers may be written as
-// strings.
+// strings. One message may hold an array of samples, or each quantity may come
+// on a topic of its own; then a speed and a direction whose arrival stamps lie
+// within JoinWithin make a reading.
 //
 // A wind that is not there is never read as calm: an empty field, a null or a
 // status that says "not valid" gives no reading. What comes out goes to
@@ -30,6 +35,8 @@ import (
 	"fmt"
 	"math"
 
+	"github.com/fxamacker/cbor/v2"
+
 	"sockline/sensors"
 	"sockline/sensors/quantity"
 )
@@ -38,8 +45,11 @@ const (
 	// MaxPayload is the longest payload that is looked at, in bytes: hundreds
 	// of readings fit, and a flood of garbage costs little.
 	MaxPayload = 64 << 10
-	// MaxDepth is how deep JSON may nest; real payloads use four levels.
+	// MaxDepth is how deep JSON and CBOR may nest; real payloads use four levels.
 	MaxDepth = 32
+	// MaxReadings is the most readings that one message may hold: a minute of
+	// ten a second with room to spare.
+	MaxReadings = 1000
 	// MaxSpeed is the largest speed, in m/s, that is taken for a wind at all.
 	// It only keeps broken encodings out; package quality has the physical
 	// limit.
@@ -51,34 +61,58 @@ const (
 type Decoder struct {
 	station sensors.Station
 	index   int
+	others  map[string]string // ids of the other stations, by themselves
 
-	mapping mapping // for FormatJSON
+	mapping mapping      // for FormatJSON
+	joiner  joiner       // for FormatJSON with a topic for each quantity
+	cbor    cbor.DecMode // for FormatSenMLCBOR
 
 	// Of the message at hand; kept for their capacity.
 	faults Rejections
 	pack   pack
 	names  []byte  // resolved SenML names
 	groups []group // SenML records that belong together
-	text   []byte  // an unescaped JSON string
+	xdr    transducers
+	text   []byte // an unescaped JSON string
 }
 
 // New makes the decoder of a station; index is what its readings carry as
 // Station. The error names what the configuration of the station lacks.
 func New(station sensors.Station, index int) (*Decoder, error) {
 	d := &Decoder{station: station, index: index}
+	if station.Topics != nil && station.Format != sensors.FormatJSON {
+		return nil, fmt.Errorf("station %q: format %q on a topic for each quantity is not known; expected %q",
+			station.ID, station.Format, sensors.FormatJSON)
+	}
+	var err error
 	switch station.Format {
 	case sensors.FormatSenMLJSON, sensors.FormatNMEA0183:
+	case sensors.FormatSenMLCBOR:
+		if d.cbor, err = newCBOR(); err != nil {
+			return nil, fmt.Errorf("station %q: prepare for CBOR: %w", station.ID, err)
+		}
 	case sensors.FormatJSON:
-		mapping, err := compile(station.Fields)
-		if err != nil {
+		if d.mapping, err = compile(station.Fields, station.Topics); err != nil {
 			return nil, fmt.Errorf("station %q: fields: %w", station.ID, err)
 		}
-		d.mapping = mapping
+		d.joiner = newJoiner(station.Topics)
 	default:
-		return nil, fmt.Errorf("station %q: format %q is not known; expected %q, %q or %q",
-			station.ID, station.Format, sensors.FormatSenMLJSON, sensors.FormatNMEA0183, sensors.FormatJSON)
+		return nil, fmt.Errorf("station %q: format %q is not known; expected %q, %q, %q or %q", station.ID, station.Format,
+			sensors.FormatSenMLJSON, sensors.FormatSenMLCBOR, sensors.FormatNMEA0183, sensors.FormatJSON)
 	}
 	return d, nil
+}
+
+// Beware tells the decoder the ids of all stations, so that a payload that
+// names another one is refused: a mast that was given the wrong name would
+// otherwise put its wind at the wrong place.
+func (d *Decoder) Beware(ids []string) {
+	d.others = make(map[string]string, len(ids))
+	for _, id := range ids {
+		if id != d.station.ID {
+			d.others[id] = id
+		}
+	}
 }
 
 // Decode appends the readings of m to dst. variationDeg is the magnetic
@@ -96,12 +130,16 @@ func (d *Decoder) Decode(dst []sensors.Reading, m sensors.Message, variationDeg 
 	var exercise bool
 	first := len(dst)
 	switch d.station.Format {
-	case sensors.FormatSenMLJSON:
+	case sensors.FormatSenMLJSON, sensors.FormatSenMLCBOR:
 		dst, exercise = d.senML(dst, m, variationDeg)
 	case sensors.FormatNMEA0183:
 		dst, exercise = d.nmea(dst, m, variationDeg)
 	case sensors.FormatJSON:
-		dst, exercise = d.mapped(dst, m, variationDeg)
+		if d.station.Topics != nil {
+			dst = d.part(dst, m, variationDeg)
+		} else {
+			dst, exercise = d.mapped(dst, m, variationDeg)
+		}
 	}
 	if exercise {
 		for i := first; i < len(dst); i++ {

@@ -227,8 +227,8 @@ func TestRejections(t *testing.T) {
 		}
 		seen[reason] = true
 	}
-	if len(seen) != 12 {
-		t.Errorf("%d reasons, want 12", len(seen))
+	if len(seen) != 14 {
+		t.Errorf("%d reasons, want 14", len(seen))
 	}
 }
 
@@ -237,10 +237,12 @@ func TestAllocations(t *testing.T) {
 		name    string
 		station sensors.Station
 		payload string
+		most    float64
 	}{
-		{"senml", sensors.Station{Format: sensors.FormatSenMLJSON}, benchSenML},
-		{"nmea", sensors.Station{Format: sensors.FormatNMEA0183}, benchNMEA},
-		{"json", sensors.Station{Format: sensors.FormatJSON, Fields: benchFields()}, benchJSON},
+		{"senml", sensors.Station{Format: sensors.FormatSenMLJSON}, benchSenML, 0},
+		{"senml in cbor", sensors.Station{Format: sensors.FormatSenMLCBOR}, string(inCBOR(t, []byte(benchSenML), true)), 1}, // in the check for well-formedness
+		{"nmea", sensors.Station{Format: sensors.FormatNMEA0183}, benchNMEA, 0},
+		{"json", sensors.Station{Format: sensors.FormatJSON, Fields: benchFields()}, benchJSON, 0},
 	} {
 		d, m := newDecoder(t, row.station), message(row.payload)
 		dst := make([]sensors.Reading, 0, 4)
@@ -250,8 +252,8 @@ func TestAllocations(t *testing.T) {
 				t.Fatalf("%s: %v, %v", row.name, got, err)
 			}
 		})
-		if n > 0 { // two a reading would be allowed; none are needed
-			t.Errorf("%s: %v allocations a reading, want 0", row.name, n)
+		if n > row.most { // two a reading would be allowed; hardly any are needed
+			t.Errorf("%s: %v allocations a reading, want %v", row.name, n, row.most)
 		}
 	}
 }

@@ -65,7 +65,7 @@ func floatOf(v any) (float64, bool) {
 
 func FuzzJSON(f *testing.F) {
 	for _, seed := range []string{
-		benchJSON, `{"speed":1,"direction":2}`, `{"speed":"1.5","direction":"2"}`, `{"w":[{"s":3,"d":4}]}`,
+		benchJSON, `{"speed":1,"direction":2}`, `{"speed":"1.5","direction":"2"}`, `{"w":[{"s":3,"d":4}]}`, `{"w":[{"s":3,"d":4},{"s":-1,"d":4},{"s":5,"d":6,"exercise":true}]}`,
 		`{"speed":1e400,"direction":2}`, `{"sp\u0065ed":1,"direction":360,"speed":7}`, `[[],{},"\ud83d\ude00",null,true]`,
 		`{"w":[{"s":3},5],"w":[{"d":4}]}`, strings.Repeat("[", 40), `{"speed":-0.0,"direction":-0}`,
 	} {
@@ -73,8 +73,12 @@ func FuzzJSON(f *testing.F) {
 	}
 	flat := newDecoder(f, sensors.Station{Format: sensors.FormatJSON, Fields: &sensors.FieldMap{Speed: "speed", Direction: "direction"}})
 	deep := newDecoder(f, sensors.Station{Format: sensors.FormatJSON, Fields: &sensors.FieldMap{Speed: "/w/0/s", Direction: "/w/0/d"}})
+	samples := newDecoder(f, sensors.Station{Format: sensors.FormatJSON, Fields: &sensors.FieldMap{Samples: "w", Speed: "s", Direction: "d", Time: "t"}})
 	f.Fuzz(func(t *testing.T, payload []byte) {
 		document, valid := strictJSON(payload)
+		if readings, list := decodeSound(t, samples, payload); !valid && (len(readings) > 0 || len(list) == 0) {
+			t.Fatalf("not JSON, but %v, %v", readings, list)
+		}
 		top, _ := document.(map[string]any)
 		inner := map[string]any{}
 		if list, _ := top["w"].([]any); len(list) > 0 {
@@ -239,6 +243,9 @@ func oracleNMEA(payload string) (winds []string) {
 		if len(part[0]) != 5 || part[0][0] == 'P' {
 			continue
 		}
+		if part[0][2:] == "MDA" && len(part) == 21 { // its last eight fields are those of MWD
+			part = append([]string{"WIMWD"}, part[13:]...)
+		}
 		switch {
 		case part[0][2:] == "MWV" && len(part) == 6 && part[5] == "A" && (part[2] == "R" || part[2] == "T"):
 			if factor, ok := units[part[4]]; ok {
@@ -277,14 +284,22 @@ func oracleNMEA(payload string) (winds []string) {
 func FuzzNMEA(f *testing.F) {
 	for _, seed := range []string{
 		benchNMEA, "$WIMWD,328.2,T,326.8,M,11.2,N,5.8,M*61", "$WIMWV,,T,,N,V*32\r$WIMWV,350.0,R,6.4,M,A*24\n",
-		"$PSKLX,1*41\r\n$WIMWV,045.0,T,12.5,N,A*12", "$GPGLL,5057.970,N,00146.110,E,142451,A*27", "!AIVDM,1*00", "$*00",
+		"$PSKLX,1*41\r\n$WIMWV,045.0,T,12.5,N,A*12", "$GPGLL,5057.970,N,00146.110,E,142451,A*27",
+		"$WIMDA,30.2,I,1.01,B,23.4,C,,,40.2,,12.1,C,19.3,T,20.1,M,13.1,N,6.7,M", "!AIVDM,1*00", "$*00",
 	} {
 		f.Add([]byte(seed))
 	}
 	d := newDecoder(f, sensors.Station{Format: sensors.FormatNMEA0183})
 	f.Fuzz(func(t *testing.T, payload []byte) {
 		check := func(payload []byte) {
+			if bytes.Contains(payload, []byte("XDR")) {
+				decodeSound(t, d, payload) // has an oracle of its own, FuzzXDR
+				return
+			}
 			readings, list := decodeSound(t, d, payload)
+			if len(readings) == MaxReadings {
+				return
+			}
 			var got []string
 			for _, r := range readings {
 				got = append(got, fmt.Sprint(r.Speed, " ", r.From))

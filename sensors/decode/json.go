@@ -11,6 +11,7 @@ const (
 	boolean
 	numeric
 	text
+	octets // a byte string, in CBOR only
 	container
 )
 
@@ -25,18 +26,21 @@ func (k kind) String() string {
 		return "a number"
 	case text:
 		return "a string"
+	case octets:
+		return "a byte string"
 	case container:
 		return "an object or array"
 	}
 	return "absent"
 }
 
-// token is one JSON value. Of a container only the kind is kept.
+// token is one value of JSON or CBOR. Of a container only the kind and the
+// place are kept.
 type token struct {
 	kind       kind
 	truth      bool  // of a boolean
 	escaped    bool  // the text holds backslash escapes
-	start, end int32 // of the text, without its quotes; MaxPayload fits
+	start, end int32 // of the text, without its quotes; start of a container; MaxPayload fits
 	number     float64
 }
 

@@ -17,12 +17,14 @@ const (
 	slotGust
 	slotTime
 	slotExercise
+	slotSamples
 	slotCount
 )
 
 // mapping is a field map made ready: a tree of the keys that lead to values.
 type mapping struct {
-	root      branch
+	root      branch            // of a document, or of each of its samples
+	outer     branch            // of a document that holds samples: the way to them
 	names     [slotCount]string // as configured, for messages
 	speed     float64           // unit of speed, m/s
 	angle     float64           // unit of direction, degrees
@@ -38,31 +40,22 @@ type branch struct {
 	children []branch
 }
 
-// compile checks a field map and makes its tree.
-func compile(fields *sensors.FieldMap) (mapping, error) {
-	m := mapping{root: branch{index: -1}, speed: 1, angle: 1}
+// compile checks a field map and makes its trees. With a topic for each
+// quantity there need not be one.
+func compile(fields *sensors.FieldMap, topics *sensors.FieldTopics) (mapping, error) {
+	m := mapping{root: branch{index: -1}, outer: branch{index: -1}, speed: 1, angle: 1}
+	if fields == nil && topics != nil {
+		fields = &sensors.FieldMap{}
+	}
 	if fields == nil {
 		return m, errors.New(`format "json" needs them: at least speed and direction`)
 	}
-	m.names = [slotCount]string{fields.Speed, fields.Direction, fields.Gust, fields.Time, fields.Exercise}
+	m.names = [slotCount]string{fields.Speed, fields.Direction, fields.Gust, fields.Time, fields.Exercise, fields.Samples}
 	if m.names[slotExercise] == "" {
 		m.names[slotExercise] = "exercise"
 	}
-	for slot, name := range m.names {
-		if name == "" {
-			if slot == slotSpeed || slot == slotDirection {
-				return m, fmt.Errorf("%s is missing; give its key or its JSON Pointer", slotName(slot))
-			}
-			continue
-		}
-		path, err := pointer(name)
-		if err != nil {
-			return m, fmt.Errorf("%s: %w", slotName(slot), err)
-		}
-		if len(path) >= MaxDepth {
-			return m, fmt.Errorf("%s: %q is deeper than %d levels", slotName(slot), name, MaxDepth)
-		}
-		m.root.place(path, slot)
+	if err := m.plant(topics != nil); err != nil {
+		return m, err
 	}
 	var ok bool
 	if fields.SpeedUnit != "" {
@@ -90,9 +83,40 @@ func compile(fields *sensors.FieldMap) (mapping, error) {
 	return m, nil
 }
 
+// plant makes the trees of the names. Each quantity on a topic of its own need
+// not have a name.
+func (m *mapping) plant(apart bool) error {
+	if m.names[slotSamples] != "" && (apart || m.names[slotTime] == "") {
+		return errors.New("samples need a time each, and one topic for all")
+	}
+	for slot, name := range m.names {
+		if name == "" {
+			if (slot == slotSpeed || slot == slotDirection) && !apart {
+				return fmt.Errorf("%s is missing; give its key or its JSON Pointer", slotName(slot))
+			}
+			continue
+		}
+		path, err := pointer(name)
+		if err != nil {
+			return fmt.Errorf("%s: %w", slotName(slot), err)
+		}
+		if len(path) >= MaxDepth {
+			return fmt.Errorf("%s: %q is deeper than %d levels", slotName(slot), name, MaxDepth)
+		}
+		if slot != slotSamples {
+			m.root.place(path, slot)
+		}
+		// The mark of an exercise may stand beside the samples as well as in them.
+		if slot == slotSamples || slot == slotExercise {
+			m.outer.place(path, slot)
+		}
+	}
+	return nil
+}
+
 // slotName is the word for a slot in messages.
 func slotName(slot int) string {
-	return [slotCount]string{"speed", "direction", "gust", "time", "exercise"}[slot]
+	return [slotCount]string{"speed", "direction", "gust", "time", "exercise", "samples"}[slot]
 }
 
 // pointer splits a name into the keys that lead to it: a JSON Pointer (RFC
@@ -164,7 +188,10 @@ func (f *found) take(s *scanner, b *branch, depth int) bool {
 		t.kind = container
 		ok = f.descend(s, b, depth+1)
 	} else {
-		t, ok = s.value(depth)
+		start := int32(s.pos)
+		if t, ok = s.value(depth); t.kind == container {
+			t.start = start
+		}
 	}
 	if !ok {
 		return false
@@ -254,21 +281,68 @@ func (d *Decoder) mapped(dst []sensors.Reading, m sensors.Message, variationDeg 
 		d.refuse(Malformed, "a JSON object is expected; the payload begins with %s", excerpt(s.data[s.pos:]))
 		return dst, false
 	}
+	tree := &d.mapping.root
+	if d.mapping.names[slotSamples] != "" {
+		tree = &d.mapping.outer
+	}
 	var f found
-	if !f.take(&s, &d.mapping.root, 0) || !s.end() {
+	if !f.take(&s, tree, 0) || !s.end() {
 		d.notJSON(&s)
 		return dst, false
 	}
-	w, ok := d.placed(&s, &f, m.Received)
-	if !ok {
-		return dst, false
+	if tree == &d.mapping.outer {
+		return d.samples(dst, &f, m, variationDeg)
 	}
-	if r, ok := d.reading(w, m, variationDeg); ok {
-		dst = append(dst, r)
+	if w, ok := d.placed(&s, &f, m.Received); ok {
+		if r, ok := d.reading(w, m, variationDeg); ok {
+			dst = append(dst, r)
+		}
 	}
-	// Whatever is not plainly false marks, as in SenML.
-	mark := f[slotExercise]
-	return dst, mark.kind > null && !(mark.kind == boolean && !mark.truth)
+	return dst, marks(f[slotExercise])
+}
+
+// marks reports whether the value at the place of the exercise mark marks.
+// Whatever is not plainly false does, as in SenML.
+func marks(t token) bool { return t.kind > null && !(t.kind == boolean && !t.truth) }
+
+// samples decodes the array of samples that was found in a document. The whole
+// document is known to be JSON: a second walk through the array cannot fail.
+func (d *Decoder) samples(dst []sensors.Reading, f *found, m sensors.Message, variationDeg float64) (readings []sensors.Reading, exercise bool) {
+	exercise = marks(f[slotExercise])
+	list := f[slotSamples]
+	switch {
+	case list.kind <= null:
+		d.refuse(NoValue, "it has no samples (%q)", d.mapping.names[slotSamples])
+		return dst, exercise
+	case list.kind != container || m.Payload[list.start] != '[':
+		d.refuse(Malformed, "samples (%q) is no array", d.mapping.names[slotSamples])
+		return dst, exercise
+	}
+	s := scanner{data: m.Payload, pos: int(list.start) + 1}
+	if s.accept(']') {
+		d.refuse(NoValue, "samples (%q) is empty", d.mapping.names[slotSamples])
+		return dst, exercise
+	}
+	for n := 0; ; n++ {
+		var one found
+		if n == MaxReadings {
+			d.refuse(TooLarge, "there are more than %d samples; the first are taken", MaxReadings)
+			return dst, exercise
+		}
+		if !one.take(&s, &d.mapping.root, 0) {
+			d.notJSON(&s)
+			return dst, exercise
+		}
+		exercise = exercise || marks(one[slotExercise])
+		if w, ok := d.placed(&s, &one, m.Received); ok {
+			if r, ok := d.reading(w, m, variationDeg); ok {
+				dst = append(dst, r)
+			}
+		}
+		if !s.accept(',') {
+			return dst, exercise
+		}
+	}
 }
 
 // placed makes a wind of what a document holds.

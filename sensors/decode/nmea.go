@@ -20,10 +20,22 @@ const (
 	speedsDifferShare = 0.1
 )
 
+// maxFields is the address and the twenty fields of MDA.
+const maxFields = 21
+
 // nmea decodes the sentences of a message.
 func (d *Decoder) nmea(dst []sensors.Reading, m sensors.Message, variationDeg float64) (readings []sensors.Reading, exercise bool) {
 	rest := m.Payload
 	lines := 0
+	d.xdr = transducers{}
+	add := func(w wind) {
+		w.at = m.Received // no sentence has a time of its own
+		if len(dst) == MaxReadings {
+			d.refuse(TooLarge, "more than %d winds in one message; the first are taken", MaxReadings)
+		} else if r, ok := d.reading(w, m, variationDeg); ok {
+			dst = append(dst, r)
+		}
+	}
 	for len(rest) > 0 {
 		end := 0
 		for end < len(rest) && rest[end] != '\r' && rest[end] != '\n' {
@@ -39,13 +51,12 @@ func (d *Decoder) nmea(dst []sensors.Reading, m sensors.Message, variationDeg fl
 		if marked {
 			exercise = true
 		}
-		if !found {
-			continue
+		if found {
+			add(w)
 		}
-		w.at = m.Received // neither sentence has a time of its own
-		if r, ok := d.reading(w, m, variationDeg); ok {
-			dst = append(dst, r)
-		}
+	}
+	if w, found := d.gathered(); found {
+		add(w)
 	}
 	if lines == 0 {
 		d.refuse(Malformed, "the payload is empty; NMEA 0183 sentences are expected")
@@ -67,7 +78,11 @@ func (d *Decoder) sentence(line []byte) (w wind, found, exercise bool) {
 	if !ok {
 		return w, false, marker
 	}
-	var fields [9][]byte // the address and the eight fields of MWD
+	if len(body) >= 5 && string(body[2:5]) == "XDR" && body[0] != 'P' {
+		w, found = d.transducers(line, body[5:])
+		return w, found, false
+	}
+	var fields [maxFields][]byte
 	n := split(body, &fields)
 	address := fields[0]
 	switch {
@@ -83,6 +98,8 @@ func (d *Decoder) sentence(line []byte) (w wind, found, exercise bool) {
 		w, found = d.mwv(line, fields[1:], n-1)
 	case string(address[2:]) == "MWD":
 		w, found = d.mwd(line, fields[1:], n-1)
+	case string(address[2:]) == "MDA":
+		w, found = d.mda(line, fields[1:], n-1)
 	}
 	return w, found, false
 }
@@ -112,7 +129,7 @@ func (d *Decoder) checked(line []byte) (body []byte, ok bool) {
 
 // split cuts body at its commas. It returns the number of fields, of which
 // those beyond the array are only counted.
-func split(body []byte, fields *[9][]byte) int {
+func split(body []byte, fields *[maxFields][]byte) int {
 	n, start := 0, 0
 	for i := 0; i <= len(body); i++ {
 		if i == len(body) || body[i] == ',' {
@@ -189,6 +206,22 @@ func (d *Decoder) mwd(line []byte, f [][]byte, n int) (w wind, ok bool) {
 		d.refuse(Malformed, "%s has %d fields; MWD has 8", excerpt(line), n)
 		return w, false
 	}
+	return d.vane(line, f)
+}
+
+// mda decodes the wind of a meteorological composite: its last eight fields
+// are those of MWD. The pressures, temperatures and humidity before them are
+// passed over.
+func (d *Decoder) mda(line []byte, f [][]byte, n int) (w wind, ok bool) {
+	if n != 20 {
+		d.refuse(Malformed, "%s has %d fields; MDA has 20", excerpt(line), n)
+		return w, false
+	}
+	return d.vane(line, f[12:])
+}
+
+// vane decodes the eight fields that MWD and MDA share.
+func (d *Decoder) vane(line []byte, f [][]byte) (w wind, ok bool) {
 	var value [4]float64
 	var has [4]bool
 	for i, letter := range [4]byte{'T', 'M', 'N', 'M'} {

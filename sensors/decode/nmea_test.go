@@ -53,7 +53,8 @@ func readTable(t *testing.T, path string) []map[string]string {
 func TestNMEAVectors(t *testing.T) {
 	// Published sentences and what they mean by the definition; see the header
 	// of the file. Where knots and m/s contradict each other this decoder
-	// refuses; sentences of other types are passed over.
+	// refuses; sentences of other types are passed over, and so is an XDR
+	// without transducers of a wind.
 	d := newDecoder(t, sensors.Station{Format: sensors.FormatNMEA0183})
 	rows := readTable(t, "../../testdata/outside/nmea_vectors.csv")
 	if len(rows) < 24 {
@@ -75,7 +76,18 @@ func TestNMEAVectors(t *testing.T) {
 			got, err := d.Decode(nil, message(line), variation)
 			kind := line[3:6]
 			switch {
-			case kind != "MWV" && kind != "MWD":
+			case kind == "XDR" && strings.Contains(line, "S,4.2,M,1"):
+				// Transducers 0, 1, 2 are minimum, mean, maximum (origin of the row).
+				if show(got) != "+0.000s 4.2@254 gust 5" || err != nil {
+					t.Errorf("%s gave %s, %v", kind, show(got), err)
+				}
+				return
+			case kind == "XDR" && strings.HasPrefix(outcome, "reject"):
+				if len(got) != 0 || reasons(err) != "malformed" && reasons(err) != "checksum" {
+					t.Errorf("%s gave %v, %v; want malformed", kind, got, err)
+				}
+				return
+			case kind != "MWV" && kind != "MWD" && kind != "MDA":
 				if len(got) != 0 || err != nil {
 					t.Errorf("%s gave %v, %v; want nothing", kind, got, err)
 				}

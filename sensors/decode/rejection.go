@@ -10,7 +10,7 @@ type Reason string
 
 // The reasons.
 const (
-	TooLarge      Reason = "too-large"      // over MaxPayload bytes, or JSON nested deeper than MaxDepth
+	TooLarge      Reason = "too-large"      // over MaxPayload bytes or MaxReadings, or nested deeper than MaxDepth
 	Malformed     Reason = "malformed"      // not what the format says
 	Checksum      Reason = "checksum"       // an NMEA checksum that is missing or wrong
 	NotUnderstood Reason = "not-understood" // the payload demands more than is known here
@@ -22,12 +22,15 @@ const (
 	BadTime       Reason = "bad-time"       // a time that cannot be read
 	NotValid      Reason = "not-valid"      // the instrument itself says that its value is not valid
 	NoValue       Reason = "no-value"       // the place of the value is empty
+
+	ForeignStation Reason = "foreign-station" // the payload names another station than its topic
+	Flood          Reason = "flood"           // more messages or readings than a station may send
 )
 
 // Reasons lists every Reason, so that counters can exist before the first use.
 func Reasons() []Reason {
 	return []Reason{TooLarge, Malformed, Checksum, NotUnderstood, Units, Incomplete,
-		Contradiction, NotFinite, Impossible, BadTime, NotValid, NoValue}
+		Contradiction, NotFinite, Impossible, BadTime, NotValid, NoValue, ForeignStation, Flood}
 }
 
 // Refused tells a payload that was refused from one that was in order but held

@@ -9,7 +9,7 @@ import (
 	"sockline/sensors/quantity"
 )
 
-// SenML JSON, RFC 8428 (C. Jennings, Z. Shelby, J. Arkko, A. Keranen, C.
+// SenML, RFC 8428 (C. Jennings, Z. Shelby, J. Arkko, A. Keranen, C.
 // Bormann, "Sensor Measurement Lists (SenML)", 2018), section numbers from
 // memory.
 const (
@@ -106,14 +106,23 @@ type record struct {
 	update token
 }
 
-// senML decodes a pack.
+// senML decodes a pack in JSON or CBOR. The two differ in how the fields of a
+// record are written; what the fields mean is the same.
 func (d *Decoder) senML(dst []sensors.Reading, m sensors.Message, variationDeg float64) (readings []sensors.Reading, exercise bool) {
 	d.groups = d.groups[:0]
-	if !d.records(m.Payload, func(p *pack, r *record) {
+	each := func(p *pack, r *record) {
 		if d.collect(p, r, m.Received) {
 			exercise = true
 		}
-	}) {
+	}
+	// Two plain calls: through a function value each would be allocated.
+	var ok bool
+	if d.station.Format == sensors.FormatSenMLCBOR {
+		ok = d.recordsCBOR(m.Payload, each)
+	} else {
+		ok = d.records(m.Payload, each)
+	}
+	if !ok {
 		return dst, false
 	}
 	for i := range d.groups {
@@ -136,13 +145,16 @@ func (d *Decoder) records(payload []byte, each func(*pack, *record)) bool {
 	if !p.scan.accept('[') {
 		if p.scan.end() {
 			d.refuse(Malformed, "the payload is empty; an array of SenML records is expected")
+		} else if looksLikeCBOR(payload) {
+			d.refuse(Malformed, "a SenML pack in JSON is expected and this looks like CBOR; the format would be \"senml+cbor\"")
 		} else {
 			d.refuse(Malformed, "a SenML pack is an array of records; it begins with %s", excerpt(payload[p.scan.pos:]))
 		}
 		return false
 	}
 	for more := !p.scan.accept(']'); more; {
-		if !d.record(p) {
+		p.count++
+		if !d.fields(p) || !d.record(p) {
 			return false
 		}
 		each(p, &p.record)
@@ -170,11 +182,11 @@ func (p *pack) begin(data []byte) {
 	p.time, p.value, p.sum, p.version = 0, 0, 0, senMLVersion
 }
 
-// record reads the next record and resolves it into p.record. It returns false
-// if the whole pack must be refused, which is then on record.
+// record resolves the record at hand into p.record. It returns false if the
+// whole pack must be refused, which is then on record.
 func (d *Decoder) record(p *pack) bool {
-	p.count++
-	if !d.fields(p) {
+	if values := bits.OnesCount32(p.present & valueFields); values > 1 {
+		d.refuse(Contradiction, "record %d has %d values; a record has one", p.count, values)
 		return false
 	}
 	if p.has(fieldVersion) {
@@ -223,17 +235,11 @@ func (d *Decoder) fields(p *pack) bool {
 			if !d.field(p, label, field, want, value) {
 				return false
 			}
-		} else if len(label) > 0 && label[len(label)-1] == '_' {
-			// Section 4.4: such a field changes the meaning of the rest.
-			d.refuse(NotUnderstood, "record %d: field %s must be understood and is not known", p.count, excerpt(label))
+		} else if !d.mayPass(p, label) {
 			return false
 		}
 		switch {
 		case p.scan.accept('}'):
-			if values := bits.OnesCount32(p.present & valueFields); values > 1 {
-				d.refuse(Contradiction, "record %d has %d values; a record has one", p.count, values)
-				return false
-			}
 			return true
 		case !p.scan.accept(','):
 			d.notJSON(&p.scan)
@@ -242,12 +248,26 @@ func (d *Decoder) fields(p *pack) bool {
 	}
 }
 
+// mayPass reports whether a field that is not known may be passed over; if not,
+// that is on record.
+func (d *Decoder) mayPass(p *pack, label []byte) bool {
+	if len(label) == 0 || label[len(label)-1] != '_' {
+		return true
+	}
+	// Section 4.4: such a field changes the meaning of the rest.
+	d.refuse(NotUnderstood, "record %d: field %s must be understood and is not known", p.count, excerpt(label))
+	return false
+}
+
 // field checks the kind of a field and keeps it. Where a key is repeated the
 // last one counts.
 func (d *Decoder) field(p *pack, label []byte, field int, want kind, value token) bool {
 	switch {
 	case value.kind != want:
 		d.refuse(Malformed, "record %d: %s is %s; %s is expected", p.count, excerpt(label), value.kind, want)
+		return false
+	case math.IsNaN(value.number): // CBOR can say so
+		d.refuse(NotFinite, "record %d: %s is NaN", p.count, excerpt(label))
 		return false
 	case want == numeric && math.IsInf(value.number, 0):
 		d.refuse(NotFinite, "record %d: %s is too large a number", p.count, excerpt(label))
@@ -391,6 +411,11 @@ func (d *Decoder) collect(p *pack, r *record, received sensors.Instant) (exercis
 		// meant to be real than the reverse.
 		return exercise && !(r.value.kind == boolean && !r.value.truth)
 	}
+	if id, ok := d.foreign(prefix); ok {
+		d.refuse(ForeignStation, "record %d: %s names the station %s, but came on the topic of %s", p.count, excerpt(r.name), id, d.station.ID)
+		d.names = d.names[:start]
+		return false
+	}
 	at, ok := instantOf(r.time, received)
 	if !ok {
 		d.names = d.names[:start]
@@ -398,6 +423,11 @@ func (d *Decoder) collect(p *pack, r *record, received sensors.Instant) (exercis
 		return false
 	}
 	g := d.group(at, prefix, start, p.count)
+	if g == nil {
+		d.refuse(TooLarge, "record %d: one pack speaks of more than %d places or times", p.count, MaxReadings)
+		d.names = d.names[:start]
+		return false
+	}
 	value, ok := d.quantity(p, r, role)
 	switch {
 	case !ok:
@@ -411,14 +441,35 @@ func (d *Decoder) collect(p *pack, r *record, received sensors.Instant) (exercis
 	return false
 }
 
-// group finds or adds a group. Packs are written in order, so that the search
-// from the back ends at once.
+// foreign tells whether the last element of a name's beginning ("far07" of
+// "urn:dev:mast:far07:") is the id of another station. Elements before it are
+// the maker's or the site's business.
+func (d *Decoder) foreign(prefix []byte) (id string, ok bool) {
+	end := len(prefix)
+	for end > 0 && !isAlphanumeric(prefix[end-1]) {
+		end--
+	}
+	start := end
+	for start > 0 && (isAlphanumeric(prefix[start-1]) || prefix[start-1] == '-') {
+		start--
+	}
+	if element := prefix[start:end]; string(element) != d.station.ID {
+		id, ok = d.others[string(element)]
+	}
+	return id, ok
+}
+
+// group finds or adds a group; nil when there are too many. Packs are written
+// in order, so that the search from the back ends at once.
 func (d *Decoder) group(at sensors.Instant, prefix []byte, start, place int) *group {
 	for i := len(d.groups) - 1; i >= 0; i-- {
 		if g := &d.groups[i]; g.at == at && bytes.Equal(g.prefix, prefix) {
 			d.names = d.names[:start] // the name is not needed a second time
 			return g
 		}
+	}
+	if len(d.groups) == MaxReadings {
+		return nil
 	}
 	d.groups = append(d.groups, group{at: at, prefix: prefix, place: place})
 	return &d.groups[len(d.groups)-1]

@@ -48,10 +48,14 @@ func (r resolved) show() string {
 	return s
 }
 
-// resolveAll walks a pack and shows its resolved records.
+// resolveAll walks a pack in JSON and shows its resolved records.
 func resolveAll(d *Decoder, payload []byte, now sensors.Instant) (shown []string, ok bool) {
+	return resolvedBy(d, d.records, payload, now)
+}
+
+func resolvedBy(d *Decoder, records func([]byte, func(*pack, *record)) bool, payload []byte, now sensors.Instant) (shown []string, ok bool) {
 	d.faults = nil
-	ok = d.records(payload, func(p *pack, r *record) {
+	ok = records(payload, func(p *pack, r *record) {
 		if r.name == nil {
 			return
 		}
@@ -65,7 +69,7 @@ func resolveAll(d *Decoder, payload []byte, now sensors.Instant) (shown []string
 		switch r.value.kind {
 		case numeric:
 			out.Value = &r.value.number
-		case text:
+		case text, octets:
 			out.String = &content
 		case boolean:
 			out.Boolean = &r.value.truth
