@@ -46,7 +46,7 @@ type alertLine struct {
 	Revision                                                int
 	Updated                                                 time.Time
 	ClosedBecause                                           string `json:"closed_because"`
-	Exercise, Recorded                                      bool
+	Exercise, Recorded, Observed                            bool
 }
 
 func alertLines(tb testing.TB, text string) []alertLine {
