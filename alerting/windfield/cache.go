@@ -63,9 +63,10 @@ func (e *Estimator) entryFor(s *averages.Snapshot) *entry {
 		if m.State != averages.Live {
 			continue
 		}
-		t := m.Turbulence
+		speed := e.recentSpeed(m)
+		t := m.Turbulence.In(speed)
 		if t.Seconds == 0 {
-			t = averages.Expected(math.Hypot(m.Blocks[0].East, m.Blocks[0].North))
+			t = averages.Expected(speed)
 		}
 		e.live = append(e.live, i)
 		e.bases = append(e.bases, t.MeanVariance(float64(e.layout.Seconds[0])))
@@ -103,6 +104,19 @@ func (e *Estimator) entryFor(s *averages.Snapshot) *entry {
 	}
 	e.cache.put(string(e.steps), en)
 	return en
+}
+
+// recentSpeed is the wind of a mast over all its blocks, m/s.
+func (e *Estimator) recentSpeed(m *averages.Mast) float64 {
+	sum, seconds := 0.0, 0.0
+	for b := range blocks {
+		if m.Blocks[b].Present {
+			w := float64(e.layout.Seconds[b])
+			sum += w * math.Hypot(m.Blocks[b].East, m.Blocks[b].North)
+			seconds += w
+		}
+	}
+	return sum / seconds // a live mast has its first block
 }
 
 // blockNoise is the error covariance of the block means of every live mast,

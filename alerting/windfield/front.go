@@ -24,14 +24,15 @@ type front struct {
 	east, north float64 // unit vector of its motion
 	at          float64 // where the line stands now, m along its motion
 	speed       float64 // m/s
+	width       float64 // half width of the change, m
 }
 
 // behind is how much of the change has come at a place, age seconds ago: a
-// smooth step of half width.
-func (f front) behind(x, y, age, width float64) float64 {
+// smooth step.
+func (f front) behind(x, y, age float64) float64 {
 	line := f.at - f.speed*age
 	d := line - (float64(x*f.east) + float64(y*f.north))
-	return (1 + math.Tanh(d/width)) / 2
+	return (1 + math.Tanh(d/f.width)) / 2
 }
 
 func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior) *frontBank {
@@ -47,7 +48,9 @@ func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior)
 			// Up to where the last block before the line has left the last mast.
 			end := hi + speed*ages[blocks-1]
 			for at := math.Ceil(lo/p.FrontSpacing) * p.FrontSpacing; at <= end; at += p.FrontSpacing {
-				b.fronts = append(b.fronts, front{east: sin, north: cos, at: at, speed: speed})
+				for _, width := range p.FrontWidths {
+					b.fronts = append(b.fronts, front{east: sin, north: cos, at: at, speed: speed, width: width})
+				}
 			}
 		}
 	}
@@ -63,7 +66,7 @@ func (b *frontBank) atLive(live []int) []float64 {
 		along, left := out[2*j*n:(2*j+1)*n], out[(2*j+1)*n:(2*j+2)*n]
 		for k := range blocks {
 			for i, m := range live {
-				share := f.behind(b.masts[m].X, b.masts[m].Y, b.ages[k], b.p.FrontWidth)
+				share := f.behind(b.masts[m].X, b.masts[m].Y, b.ages[k])
 				o := (k*len(live) + i) * 2
 				along[o], along[o+1] = share*f.east, share*f.north
 				left[o], left[o+1] = -share*f.north, share*f.east
@@ -114,7 +117,7 @@ func (b *frontBank) column(en *entry, j, d int, dst []float64) {
 func (b *frontBank) now(j, d int, dst []float64) {
 	f := b.fronts[j]
 	for t, g := range b.targets {
-		share := f.behind(g.X, g.Y, 0, b.p.FrontWidth)
+		share := f.behind(g.X, g.Y, 0)
 		switch d {
 		case 0:
 			dst[t] = g.headwind(share*f.east, share*f.north)

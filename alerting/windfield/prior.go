@@ -37,7 +37,7 @@ type Prior struct {
 	FrontHeadings int       // number of headings tried
 	FrontSpeeds   []float64 // m/s
 	FrontSpacing  float64   // between the places tried, m
-	FrontWidth    float64   // half width of the change, m
+	FrontWidths   []float64 // half widths of the change, m: a sharp front and a slow rise
 
 	FaultShare     float64 // prior probability that one of the masts is wrong
 	FaultDeviation float64 // standard deviation of its error, one component, m/s
@@ -67,13 +67,13 @@ func DefaultPrior() Prior {
 		OutflowRadii:    []float64{500, 850, 1400},
 		OutflowSpacing:  500,
 		OutflowMargin:   1600,
-		FrontShare:      0.02,
+		FrontShare:      0.1,
 		FrontStrength:   7,
 		FrontAcross:     4,
 		FrontHeadings:   12,
 		FrontSpeeds:     []float64{6, 13},
 		FrontSpacing:    400,
-		FrontWidth:      300,
+		FrontWidths:     []float64{300, 1000},
 		FaultShare:      0.005,
 		FaultDeviation:  8,
 		LeastStateShare: 0.01,

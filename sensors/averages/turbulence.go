@@ -13,7 +13,20 @@ import (
 type Turbulence struct {
 	Variance float64 // m2/s2, mean of the two components
 	Time     float64 // s
+	Speed    float64 // mean wind it was measured in, m/s
 	Seconds  int     // seconds of data it rests on; 0: not measured yet
+}
+
+// In is the turbulence to expect when the wind has risen to speed (m/s) since
+// it was measured: the deviation grows as 0.75 V + 5.6 (IEC 61400-1 ed. 3,
+// normal turbulence model; from memory). It never shrinks: air that has just
+// calmed may still be restless.
+func (t Turbulence) In(speed float64) Turbulence {
+	if speed > t.Speed {
+		growth := (0.75*speed + 5.6) / (0.75*t.Speed + 5.6)
+		t.Variance *= growth * growth
+	}
+	return t
 }
 
 // MeanVariance is the variance in m2/s2 of a mean over w seconds:
@@ -73,6 +86,7 @@ func (m *mast) estimateTurbulence(t sensors.Instant, layout Layout) Turbulence {
 	var east, north [n]float64 // oldest first
 	var have [n]bool
 	count := 0
+	speed := 0.0
 	for k := range n {
 		b := m.at(end - sensors.Instant(n-1-k)*sensors.Second)
 		if b == nil {
@@ -81,6 +95,7 @@ func (m *mast) estimateTurbulence(t sensors.Instant, layout Layout) Turbulence {
 		east[k] = b.east / float64(b.n)
 		north[k] = b.north / float64(b.n)
 		have[k] = true
+		speed += b.speed / float64(b.n)
 		count++
 	}
 	if count < turbulenceLeast {
@@ -90,17 +105,19 @@ func (m *mast) estimateTurbulence(t sensors.Instant, layout Layout) Turbulence {
 	cn := detrendedCovariances(&north, &have)
 	short := (ce[0] + cn[0]) / 2
 	long := (ce[1] + cn[1]) / 2
-	if short <= 1e-4 {
-		return Turbulence{Variance: 1e-4, Time: 5, Seconds: count}
+	t0 := Turbulence{Variance: 1e-4, Time: 5}
+	if short > 1e-4 {
+		t0 = solveTurbulence(short, long)
 	}
-	return solveTurbulence(short, long, count)
+	t0.Speed, t0.Seconds = speed/float64(count), count
+	return t0
 }
 
 // solveTurbulence finds variance and time from the autocovariances at the two
 // lags: C(k) = sigma2 exp(-k/T) - V, where V is the variance of the removed
 // one-minute mean, itself a function of sigma2 and T. Three rounds settle it.
-func solveTurbulence(short, long float64, count int) Turbulence {
-	turb := Turbulence{Variance: short, Time: 5, Seconds: count}
+func solveTurbulence(short, long float64) Turbulence {
+	turb := Turbulence{Variance: short, Time: 5}
 	lost := 0.0
 	for range 4 {
 		s, l := short+lost, math.Max(long+lost, 1e-6)
@@ -185,6 +202,7 @@ func (m *mast) coarseTurbulence(t sensors.Instant, layout Layout) Turbulence {
 	return Turbulence{
 		Variance: math.Max(sum/float64(2*pairs), 1e-4),
 		Time:     ExpectedTime(speed / float64(n)),
+		Speed:    speed / float64(n),
 		Seconds:  n * m.interval,
 	}
 }
@@ -201,5 +219,5 @@ func ExpectedTime(speed float64) float64 {
 // ed. 3, class A, the 90 % point; from memory).
 func Expected(speed float64) Turbulence {
 	sigma := 0.16 * (0.75*speed + 5.6)
-	return Turbulence{Variance: sigma * sigma, Time: ExpectedTime(speed)}
+	return Turbulence{Variance: sigma * sigma, Time: ExpectedTime(speed), Speed: speed}
 }
