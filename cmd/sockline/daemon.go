@@ -27,7 +27,7 @@ import (
 const (
 	// tickEvery is the spacing of the clock ticks: a step closes at most so
 	// long after its lateness has passed when no message comes.
-	tickEvery = 100 * time.Millisecond
+	tickEvery = 20 * time.Millisecond
 	// stopWithin bounds an orderly stop.
 	stopWithin = 5 * time.Second
 	// pruneEvery is how often old days of readings are looked for.
@@ -78,6 +78,7 @@ type daemon struct {
 	input    atomic.Pointer[feed.Subscriber]
 	teardown teardown
 
+	pruning    chan struct{} // holds one while old readings are being deleted
 	subscribed atomic.Bool   // it was, once
 	offsetTold bool          // the clock's offset is in the log
 	listening  chan struct{} // closed at the first subscription
@@ -86,7 +87,7 @@ type daemon struct {
 // newDaemon makes a daemon and takes the addresses it listens on. It must be
 // run, or closed.
 func newDaemon(cfg *config.Config, o daemonOptions) (*daemon, error) {
-	d := &daemon{cfg: cfg, opts: o, log: o.log, instance: o.instance, board: newBoard(), listening: make(chan struct{})}
+	d := &daemon{cfg: cfg, opts: o, log: o.log, instance: o.instance, board: newBoard(), listening: make(chan struct{}), pruning: make(chan struct{}, 1)}
 	if d.opts.notify == nil {
 		d.opts.notify = &notifier{}
 	}
@@ -178,14 +179,14 @@ func (d *daemon) openCapture() error {
 	if d.opts.capture == "" {
 		return nil
 	}
-	w, err := feed.CreateCapture(d.opts.capture, d.cfg.Airfield.ID)
+	c, err := startCapture(d.opts.capture, d.cfg.Airfield.ID, d.log)
 	if err != nil {
 		return err
 	}
-	d.loop.capture = w
+	d.loop.capture = c
 	// The end mark says that everything up to the last stamp is in it; the loop
 	// has ended by then.
-	d.teardown.add("the capture", func(context.Context) error { return w.Close(d.loop.last) })
+	d.teardown.add("the capture", func(ctx context.Context) error { return c.close(ctx, d.loop.last) })
 	return nil
 }
 
@@ -219,6 +220,14 @@ func (d *daemon) start(ctx context.Context) error {
 		return err
 	}
 	d.openHistory(ctx)
+	d.teardown.add("deleting old readings", func(ctx context.Context) error {
+		select {
+		case d.pruning <- struct{}{}:
+			return nil
+		case <-ctx.Done():
+			return context.Cause(ctx)
+		}
+	})
 	return d.startLoop(ctx)
 }
 
@@ -384,14 +393,14 @@ func (d *daemon) keepHouse(ctx context.Context) {
 			second = now
 			d.lookAtClock()
 			if d.loop.capture != nil {
-				_ = d.loop.capture.Flush() // an error stays, and the loop tells it
+				d.loop.capture.sync()
 			}
 			if dog.due(now, d.loop.steps.Load(), d.archive.progress()) {
 				d.opts.notify.say("WATCHDOG=1")
 			}
 			if now.Sub(prune) >= pruneEvery {
 				prune = now
-				d.prune()
+				d.pruneAside()
 			}
 		}
 	}
@@ -409,6 +418,19 @@ func (d *daemon) lookAtClock() {
 		d.log.Info().Dur("offset_ms", off).Msg("the host clock agrees with the arrival clock again")
 	}
 	d.offsetTold = far
+}
+
+// pruneAside deletes old readings beside everything else: the ticks must not
+// wait for a disk.
+func (d *daemon) pruneAside() {
+	select {
+	case d.pruning <- struct{}{}:
+		go func() {
+			d.prune()
+			<-d.pruning
+		}()
+	default: // the last round still goes on
+	}
 }
 
 // prune deletes readings that are older than the configuration keeps them.

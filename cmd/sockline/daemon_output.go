@@ -156,8 +156,8 @@ func (d *daemon) status(rep *report) *wording.Status {
 	if off.Abs() > feed.OffsetLimit {
 		remark("The host clock is off from the clock of the readings by " + off.Round(100*time.Millisecond).String() + ".")
 	}
-	if why := d.loop.captureProblem(); why != "" {
-		remark("The capture is broken off: " + why + ".")
+	if c := d.loop.capture; c != nil && c.problem() != "" {
+		remark("The capture is broken off: " + c.problem() + ".")
 	}
 	if len(h.Damage) > 0 {
 		remark("Parts of the history were found damaged; the log says which.")

@@ -15,7 +15,6 @@ import (
 	"sockline/config"
 	"sockline/sensors"
 	"sockline/sensors/decode"
-	"sockline/sensors/feed"
 )
 
 // loop owns the engine. It takes messages and clock ticks in the order of
@@ -36,8 +35,7 @@ type loop struct {
 	messages <-chan sensors.Message
 	archive  *archive
 	metrics  *metrics
-	capture  *feed.CaptureWriter // nil for none
-	captured atomic.Pointer[error]
+	capture  *capturer // nil for none
 	show     func(*report)
 
 	held  []lifecycle.Transition // of the start, to go out with the first step
@@ -93,9 +91,7 @@ func (l *loop) take(m sensors.Message) {
 		return
 	}
 	if l.capture != nil {
-		if err := l.capture.Write(m); err != nil && l.captured.Swap(&err) == nil {
-			l.log.Error().Err(err).Msg("the capture is broken off; everything else goes on")
-		}
+		l.capture.take(m)
 	}
 	station, _, err := l.engine.Receive(m)
 	if err != nil && worthLogging(err) {
@@ -161,14 +157,6 @@ func (l *loop) logTransition(tr lifecycle.Transition) {
 	line.Str("path", a.Operation+" "+a.Runway).Str("kind", string(a.Kind)).
 		Stringer("from", tr.From).Stringer("to", toLevel(a)).Str("why", tr.Why).
 		Str("alert", a.ID).Int("revision", a.Revision).Bool("exercise", l.exercise || a.Exercise).Msg("alert")
-}
-
-// captureProblem is why the capture is broken off, empty if it is not.
-func (l *loop) captureProblem() string {
-	if err := l.captured.Load(); err != nil {
-		return (*err).Error()
-	}
-	return ""
 }
 
 // throttle lets one line a key through in a while.
