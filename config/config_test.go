@@ -129,7 +129,7 @@ func TestSkerryMoor(t *testing.T) {
 	if !cfg.Alerts.MarginDerived || cfg.Alerts.MarginRaisedUp || cfg.Alerts.Hold != time.Minute {
 		t.Errorf("%+v", cfg.Alerts)
 	}
-	if cfg.Analysis.Window != 30*time.Second || cfg.Analysis.Lateness != time.Second {
+	if cfg.Analysis.Window != 18*time.Second || cfg.Analysis.Lateness != time.Second {
 		t.Errorf("%+v", cfg.Analysis)
 	}
 	if want := (Broker{URL: "embedded://127.0.0.1:1883", Embedded: true, Address: "127.0.0.1:1883"}); cfg.Broker != want {

@@ -55,7 +55,7 @@ var offKey = regexp.MustCompile(`(?m)^(\s*)#([a-z_]+\s*=)`)
 func TestDeployedExample(t *testing.T) {
 	text := string(mustRead(t, "../deploy/sockline.example.toml"))
 	plain := mustLoad(t, deployed(t, text))
-	if !plain.Broker.TLS || plain.Broker.Password.Reveal() != "invented" || len(plain.Stations) != 4 {
+	if !plain.Broker.TLS || plain.Broker.Password.Reveal() != "invented" || len(plain.Stations) != 5 {
 		t.Errorf("%+v", plain.Broker)
 	}
 	if n := len(offKey.FindAllString(text, -1)); n < 25 {

@@ -40,7 +40,7 @@ func (t *table) stations(analysis Analysis, out MQTT) []sensors.Station {
 	for i, st := range all {
 		s := st.station(analysis, out)
 		st.unique("id", s.ID, ids, i)
-		st.unique("topic", s.Topic, topics, i)
+		st.uniqueTopics(s, topics, i)
 		stations = append(stations, s)
 	}
 	return stations
@@ -65,8 +65,8 @@ func (t *table) station(analysis Analysis, out MQTT) sensors.Station {
 	s.ID, _ = t.id("id", `"mast-1"`)
 	s.Latitude, s.Longitude, _ = t.position("position")
 	s.Height, _ = t.quantity("height", length(), bounds{"1 m", "150 m"}, "")
-	s.Topic = t.topic(out)
 	s.Format = t.format()
+	s.Topic, s.Topics = t.where(s.Format, out)
 	var ok bool
 	if s.Interval, ok = t.duration("interval", bounds{"50 ms", "60 s"}, ""); ok && analysis.Window > 0 && s.Interval*windowReadings > analysis.Window {
 		t.blame(t.key("interval"), s.Interval.String(), "let the station report more often, or lengthen window in [analysis]",
@@ -81,14 +81,18 @@ func (t *table) station(analysis Analysis, out MQTT) sensors.Station {
 	north, _ := t.oneOf("north", string(sensors.NorthTrue), string(sensors.NorthTrue), string(sensors.NorthMagnetic))
 	s.North = sensors.North(north)
 	s.NorthOffset, _ = t.quantity("north_offset", angle(), bounds{"-180 deg", "180 deg"}, "0 deg")
-	s.Fields = t.fields(s.Format)
+	s.Fields = t.fields(s.Format, s.Topics != nil)
+	t.siting(&s)
+	s.CorrectClock = t.clock()
+	s.Book = t.book()
+	s.Maintenance = t.maintenance()
 	t.done()
 	return s
 }
 
-// topic is the exact topic of a station's readings.
-func (t *table) topic(out MQTT) string {
-	topic, ok := t.text("topic", "", `"airfield/skerrymoor/station/mast-1/wind"`)
+// topic is an exact topic of a station's readings.
+func (t *table) topic(name string, out MQTT) string {
+	topic, ok := t.text(name, "", `"airfield/skerrymoor/station/mast-1/wind"`)
 	if !ok {
 		return ""
 	}
@@ -107,26 +111,23 @@ func (t *table) topic(out MQTT) string {
 	default:
 		return topic
 	}
-	t.blame(t.key("topic"), topic, mend, "%s", message)
+	t.blame(t.key(name), topic, mend, "%s", message)
 	return ""
 }
 
 // format is how the payloads are written.
 func (t *table) format() sensors.Format {
-	if v, ok := t.values["format"].(string); ok && v == "senml+cbor" {
-		t.take("format")
-		t.blame(t.key("format"), v, `let the station send "senml+json"`, "this format is not in this version of the program")
-		return ""
-	}
-	f, _ := t.oneOf("format", "", string(sensors.FormatSenMLJSON), string(sensors.FormatNMEA0183), string(sensors.FormatJSON))
+	f, _ := t.oneOf("format", "", string(sensors.FormatSenMLJSON), string(sensors.FormatSenMLCBOR),
+		string(sensors.FormatNMEA0183), string(sensors.FormatJSON))
 	return sensors.Format(f)
 }
 
-// fields says where a JSON payload keeps its values.
-func (t *table) fields(format sensors.Format) *sensors.FieldMap {
+// fields says where a JSON payload keeps its values. Where each quantity has a
+// topic of its own, a payload may be a plain number.
+func (t *table) fields(format sensors.Format, apart bool) *sensors.FieldMap {
 	if _, given := t.values["fields"]; !given {
 		t.asked = append(t.asked, "fields")
-		if format == sensors.FormatJSON {
+		if format == sensors.FormatJSON && !apart {
 			t.missing("fields", `{ speed = "/wind/speed", direction = "/wind/direction" }`)
 		}
 		return nil
@@ -139,8 +140,12 @@ func (t *table) fields(format sensors.Format) *sensors.FieldMap {
 		t.add(t.src.key(f.path), f.path, "", "take fields out, or set format to json", "fields are for the format json only")
 		return nil
 	}
+	speed, direction := `"/wind/speed"`, `"/wind/direction"`
+	if apart {
+		speed, direction = "", ""
+	}
 	m := &sensors.FieldMap{
-		Speed: f.pointer("speed", `"/wind/speed"`), Direction: f.pointer("direction", `"/wind/direction"`),
+		Samples: f.pointer("samples", ""), Speed: f.pointer("speed", speed), Direction: f.pointer("direction", direction),
 		Gust: f.pointer("gust", ""), Time: f.pointer("time", ""), Exercise: f.pointer("exercise", ""),
 		Toward: f.truth("toward"),
 	}
@@ -162,6 +167,7 @@ func (t *table) fields(format sensors.Format) *sensors.FieldMap {
 	if _, given := f.values["time_format"]; given && m.Time == "" {
 		f.blame(f.key("time_format"), m.TimeFormat, "add time, the field that holds it, or take time_format out", "there is no time field that this could format")
 	}
+	f.samples(m, apart)
 	f.done()
 	return m
 }

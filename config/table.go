@@ -66,7 +66,7 @@ func (t *table) mistyped(name, want string, v any) {
 // laterKeys are keys that a reader of the documentation may expect, but that
 // this version does nothing with. To accept one would be to promise it.
 func laterKeys() []string {
-	return []string{"alerts.crosswind_limit", "alerts.tailwind_limit", "alerts.wind_shift", "station.roughness"}
+	return []string{"alerts.crosswind_limit", "alerts.tailwind_limit", "alerts.wind_shift"}
 }
 
 // done reports every key that nobody asked for.

@@ -31,10 +31,12 @@ type State uint8
 
 // The states of a mast. Only a live mast serves any ground.
 const (
-	Lost     State = iota // nothing for over a minute, or never
-	Stale                 // nothing for longer than its stale_after
-	Starting              // reporting, but its window is less than two thirds full
-	Live
+	Lost        State = iota // nothing for over a minute
+	Stale                    // nothing for longer than its stale_after
+	Starting                 // reporting, but its window is less than two thirds full
+	Live                     // also when its newest reading is late: see Mast.Late
+	Never                    // nothing since the recorder was made
+	Maintenance              // somebody works on it
 )
 
 // String is the state's word.
@@ -48,6 +50,10 @@ func (s State) String() string {
 		return "starting"
 	case Live:
 		return "live"
+	case Never:
+		return "never-seen"
+	case Maintenance:
+		return "under-maintenance"
 	}
 	return "unknown"
 }
@@ -67,6 +73,7 @@ type Mast struct {
 	Blocks   [Blocks]Block
 	Last     sensors.Instant // event time of the newest reading, 0 if none is remembered
 	Exercise bool            // a reading of the newest window marks itself as synthetic
+	Late     bool            // it is live, and its newest reading is overdue
 
 	Turbulence Turbulence // from the ten minutes before the blocks
 }
@@ -130,6 +137,7 @@ type bin struct {
 }
 
 type mast struct {
+	station    *sensors.Station
 	interval   int // seconds between reports, at least 1
 	corrector  *correction.Corrector
 	staleAfter time.Duration
@@ -151,6 +159,7 @@ func NewRecorder(stations []sensors.Station, layout Layout) *Recorder {
 	r := &Recorder{layout: layout, masts: make([]mast, len(stations))}
 	for i, s := range stations {
 		r.masts[i].interval = max(int((s.Interval+time.Second-1)/time.Second), 1)
+		r.masts[i].station = &stations[i]
 		r.masts[i].staleAfter = s.StaleAfter
 		r.masts[i].corrector = correction.New(s)
 	}
@@ -166,6 +175,10 @@ func (r *Recorder) Add(c quality.Checked) {
 	}
 	rd := c.Reading()
 	m := &r.masts[rd.Station]
+	m.last = max(m.last, rd.Time)
+	if _, under := m.station.UnderMaintenance(rd.Time); under {
+		return // a vane that is turned by hand tells no wind
+	}
 	second := rd.Time.CeilSecond()
 	b := &m.bins[slot(second)]
 	if b.second != second {
@@ -186,7 +199,6 @@ func (r *Recorder) Add(c quality.Checked) {
 	}
 	b.n++
 	b.exercise = b.exercise || rd.Exercise
-	m.last = max(m.last, rd.Time)
 }
 
 // slot is the place of a second in the ring.
@@ -221,8 +233,15 @@ func (r *Recorder) Snapshot(t sensors.Instant) *Snapshot {
 func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 	*out = Mast{Last: m.last, Turbulence: m.turbulence}
 	age := t.Sub(m.last)
+	_, under := m.station.UnderMaintenance(t)
 	switch {
-	case m.last == 0 || age > lostAfter:
+	case under:
+		out.State = Maintenance
+		return
+	case m.last == 0:
+		out.State = Never
+		return
+	case age > lostAfter:
 		out.State = Lost
 		return
 	case age > m.staleAfter:
@@ -261,5 +280,8 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 	// are missing says nothing of now.
 	if 3*filled >= 2*want && out.Blocks[0].Present {
 		out.State = Live
+		// A reading of the second that has just ended counts as in time, so a
+		// second is added to the interval.
+		out.Late = age > m.station.Interval+time.Second
 	}
 }

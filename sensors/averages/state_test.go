@@ -15,7 +15,7 @@ func TestStates(t *testing.T) {
 	const window = 30 * time.Second
 	r, add := feed(t, station(time.Second), window)
 	stateAt := func(k int) State { return r.Snapshot(epoch + sensors.Instant(k)*sensors.Second).Mast(0).State }
-	if got := stateAt(0); got != Lost {
+	if got := stateAt(0); got != Never {
 		t.Fatalf("a mast that never reported is %s", got)
 	}
 	report := func(k int) { add(epoch+sensors.Instant(k)*sensors.Second, 5+0.1*float64(k%7), 200+float64(k%5)) }
@@ -49,6 +49,59 @@ func TestStates(t *testing.T) {
 		if got := stateAt(k); got != want {
 			t.Errorf("%d s after it came back it is %s, want %s", k-5000+1, got, want)
 		}
+	}
+}
+
+// Late is a word for a live mast whose newest reading is overdue, on its own
+// scale, within a second.
+func TestLate(t *testing.T) {
+	for _, interval := range []time.Duration{200 * time.Millisecond, time.Second, 5 * time.Second} {
+		st := station(interval)
+		r, add := feed(t, st, 30*time.Second)
+		last := epoch
+		for k := 1; last < epoch+100*sensors.Second; k++ {
+			last = epoch.Add(time.Duration(k) * interval)
+			add(last, 5+0.1*float64(k%7), 200+float64(k%5))
+		}
+		for silent := sensors.Instant(0); silent <= 20*sensors.Second; silent += sensors.Second {
+			m := r.Snapshot(last.CeilSecond() + silent).Mast(0)
+			overdue := silent.Sub(0) > interval+time.Second
+			if m.Late != (overdue && m.State == Live) || (silent == 0 && m.State != Live) {
+				t.Errorf("interval %v, silent for %d s: %s, late %v", interval, silent/sensors.Second, m.State, m.Late)
+			}
+		}
+	}
+}
+
+// While somebody works on a mast it says so and serves no ground, whatever it
+// sends; afterwards it begins anew.
+func TestMaintenance(t *testing.T) {
+	st := station(time.Second)
+	at := func(k int) sensors.Instant { return epoch + sensors.Instant(k)*sensors.Second }
+	st.Maintenance = []sensors.Maintenance{{From: at(100), To: at(160), Reason: "new bearings"}}
+	r, add := feed(t, st, 30*time.Second)
+	for k := 1; k <= 300; k++ {
+		speed := 5 + 0.1*float64(k%7)
+		if k >= 100 && k < 160 {
+			speed += 20 // somebody spins it
+		}
+		add(at(k), speed, 200+float64(k%5))
+		m := r.Snapshot(at(k)).Mast(0)
+		want := Live
+		switch {
+		case k < 20:
+			want = Starting
+		case k >= 100 && k < 160:
+			want = Maintenance
+		case k >= 160 && k < 179:
+			want = Starting
+		}
+		if m.State != want || m.Last != at(k) {
+			t.Fatalf("after %d s it is %s, want %s; last heard of at %v", k, m.State, want, m.Last)
+		}
+	}
+	if w, ok := r.Wind(0, at(300)); !ok || w.Ten.Max > 6 {
+		t.Errorf("what was turned by hand is in the wind: %+v", w.Ten)
 	}
 }
 
