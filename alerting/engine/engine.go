@@ -56,6 +56,7 @@ type Engine struct {
 	ground   *ground
 	machine  *lifecycle.Machine
 	counts   Counts
+	learner
 
 	allowances []allowance // of messages and readings, by station
 
@@ -87,6 +88,7 @@ type Result struct {
 	Snapshot     *averages.Snapshot
 	Assessments  []hazard.Assessment // one for each path, in order
 	Transitions  []lifecycle.Transition
+	Tables       []Table // learnt since the step before, for the journal
 	OutflowShare float64 // posterior probability that an outflow is under way; 0 when blind
 }
 
@@ -113,6 +115,7 @@ func New(s Settings) (*Engine, error) {
 		d.Beware(ids)
 	}
 	e.allowances = newAllowances(s.Stations)
+	e.learner = newLearner(s.Stations, ids)
 	layout := averages.NewLayout(s.Window)
 	e.recorder = averages.NewRecorder(s.Stations, layout)
 	e.ground = newGround(s.Airfield, s.Reach)
@@ -204,7 +207,10 @@ func (e *Engine) Receive(m sensors.Message) (station, kept int, err error) {
 }
 
 // Offer keeps a decoded reading for its step, or refuses it; it tells which.
+// What is known to be wrong with the station's clock is taken out of its time;
+// the journal holds what that was.
 func (e *Engine) Offer(r sensors.Reading) bool {
+	r = e.clocks.Take(r)
 	if reason, ok := quality.Arrival(r, e.settings.Lateness, e.settings.Exercise); !ok {
 		e.counts.refused(r.Station, reason)
 		e.late = append(e.late, Refused{Reading: r, Reason: reason})
@@ -239,6 +245,7 @@ func (e *Engine) Step(t sensors.Instant) *Result {
 	e.release(t)
 	e.take(t)
 	e.evaluateReadings()
+	e.learn(t, e.recorder)
 	snapshot := e.recorder.Snapshot(t)
 	e.assess(snapshot)
 	e.transitions = e.machine.Step(t, e.assessments, e.transitions[:0])
@@ -249,6 +256,8 @@ func (e *Engine) Step(t sensors.Instant) *Result {
 	e.result.Snapshot = snapshot
 	e.result.Assessments = e.assessments
 	e.result.Transitions = e.transitions
+	e.tables, e.tablesOut = e.tablesOut[:0], e.tables
+	e.result.Tables = e.tablesOut
 	return &e.result
 }
 
@@ -260,6 +269,7 @@ func (e *Engine) Warm(t sensors.Instant) {
 	e.release(t)
 	e.take(t)
 	e.evaluateReadings()
+	e.learn(t, e.recorder)
 	s := e.recorder.Snapshot(t)
 	e.ground.update(s)
 	e.field.Step(s)
