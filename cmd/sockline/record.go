@@ -72,9 +72,9 @@ func (l *listener) close() {
 
 // topicsOf is the topics of the stations, in their order.
 func topicsOf(stations []sensors.Station) []string {
-	topics := make([]string, len(stations))
-	for i, s := range stations {
-		topics[i] = s.Topic
+	topics := make([]string, 0, len(stations))
+	for _, s := range stations {
+		topics = append(topics, s.AllTopics()...)
 	}
 	return topics
 }

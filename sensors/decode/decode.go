@@ -164,7 +164,8 @@ type wind struct {
 }
 
 // reading turns w to true north. ok is false if the direction that comes out
-// is no number, which only a variation or offset that is none can cause.
+// is no number, which only a variation or offset that is none can cause: NaN
+// stands for a variation that is not known.
 func (d *Decoder) reading(w wind, m sensors.Message, variationDeg float64) (r sensors.Reading, ok bool) {
 	from := w.direction + d.station.NorthOffset
 	north := w.north
@@ -175,6 +176,10 @@ func (d *Decoder) reading(w wind, m sensors.Message, variationDeg float64) (r se
 		from += variationDeg
 	}
 	from = quantity.NormalizeDegrees(from)
+	if math.IsNaN(variationDeg) && math.IsNaN(from) {
+		d.refuse(NotFinite, "the direction is counted from magnetic north, and the variation is not known here")
+		return r, false
+	}
 	if math.IsNaN(from) {
 		d.refuse(NotFinite, "the direction is no number once turned to true north (variation %v, offset %v)",
 			variationDeg, d.station.NorthOffset)

@@ -18,6 +18,9 @@ type encoder interface {
 
 // newEncoder is the encoder for the station's format.
 func newEncoder(spec *StationSpec) (encoder, error) {
+	if spec.Station.Topics != nil {
+		return nil, fmt.Errorf("station %s: there is no writer for a topic for each quantity", spec.Station.ID)
+	}
 	switch spec.Station.Format {
 	case sensors.FormatSenMLJSON:
 		return senmlEncoder{name: spec.Station.ID + "/", north: spec.north()}, nil
