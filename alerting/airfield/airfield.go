@@ -138,6 +138,10 @@ func (a *Airfield) Locate(lat, lon float64) Point {
 	return Point{X: x, Y: y}
 }
 
+// LatLon is where a point of the airfield's plane lies, in WGS-84 degrees: the
+// inverse of Locate.
+func (a *Airfield) LatLon(p Point) (lat, lon float64) { return a.plane.LatLon(p.X, p.Y, a.Elevation) }
+
 // Variation is the magnetic variation on the UTC date of t, degrees, east
 // positive: the configured one, else that of the magnetic model rounded to
 // 0.1 degree. It fails where the model does and none is configured.

@@ -54,6 +54,33 @@ func (p Plane) EastNorthUp(lat, lon, height float64) (east, north, up float64) {
 	return east, north, up
 }
 
+// planeRounds is how often LatLon corrects its guess. The error shrinks by the
+// share that the plane differs from the ellipsoid, a thousandth at 10 km, so
+// four rounds reach the last digit.
+const planeRounds = 4
+
+// LatLon is the inverse of EastNorthUp: the latitude and longitude (WGS-84
+// degrees) that lie east and north (metres) in the plane at the given height
+// above the ellipsoid. It is for ground near the origin, up to some 100 km, and
+// away from the poles.
+//
+// Each round moves the guess by what EastNorthUp is off, through the radii of
+// curvature M = a(1-e2)/(1-e2 sin2 la)^(3/2) and N = a/(1-e2 sin2 la)^(1/2) of
+// the origin (textbook geodesy).
+func (p Plane) LatLon(east, north, height float64) (lat, lon float64) {
+	w := 1 - float64(float64(wgs84E2*p.sinLat)*p.sinLat)
+	meridian := wgs84A * (1 - wgs84E2) / (w * math.Sqrt(w))
+	parallel := wgs84A / math.Sqrt(w) * p.cosLat
+	lat = math.Atan2(p.sinLat, p.cosLat) / degree
+	lon = math.Atan2(p.sinLon, p.cosLon) / degree
+	for range planeRounds {
+		e, n, _ := p.EastNorthUp(lat, lon, height)
+		lat += (north - n) / (meridian + height) / degree
+		lon += (east - e) / (parallel + float64(height*p.cosLat)) / degree
+	}
+	return lat, math.Remainder(lon, 360)
+}
+
 // earthCentred is the earth-centred, earth-fixed position in metres.
 //
 //	N = a / sqrt(1 - e2 sin2 la)

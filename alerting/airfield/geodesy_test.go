@@ -107,3 +107,23 @@ func TestAzimuthAgainstOutsideTable(t *testing.T) {
 		}
 	}
 }
+
+// The table read backwards: from GeographicLib's east and north to its
+// latitude and longitude. 1e-7 degree is 1 cm.
+func TestPlaneInverseAgainstOutsideTable(t *testing.T) {
+	worst := 0.0
+	for i, r := range outsideTable(t, "geodesy_enu.csv") {
+		p := NewPlane(num(t, r, "lat0_deg"), num(t, r, "lon0_deg"), num(t, r, "h0_m"))
+		lat, lon := p.LatLon(num(t, r, "e_m"), num(t, r, "n_m"), num(t, r, "h_m"))
+		for _, d := range []float64{lat - num(t, r, "lat_deg"), math.Remainder(lon-num(t, r, "lon_deg"), 360)} {
+			if worst = max(worst, math.Abs(d)); !(math.Abs(d) < 1e-7) {
+				t.Errorf("row %d %s/%s: off by %.1e degree", i, r["airfield"], r["sensor"], d)
+			}
+		}
+	}
+	t.Logf("largest difference %.1e degree", worst)
+	lat, lon := NewPlane(-10, 179.99, 0).LatLon(5000, 0, 0) // beyond the date line
+	if e, n, _ := NewPlane(-10, 179.99, 0).EastNorthUp(lat, lon, 0); lon > -179 || math.Abs(e-5000) > 1e-3 || math.Abs(n) > 1e-3 {
+		t.Errorf("over the date line: %v %v is at %v %v", lat, lon, e, n)
+	}
+}
