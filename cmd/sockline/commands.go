@@ -51,6 +51,7 @@ func commands() []command {
 		recordCommand(),
 		replayCommand(),
 		tryCommand(),
+		mastCommand(),
 		eventsListCommand(),
 		eventsShowCommand(),
 		versionCommand(),

@@ -6,7 +6,6 @@ import (
 	"errors"
 	"flag"
 	"fmt"
-	"io"
 	"math"
 	"slices"
 	"strings"
@@ -26,7 +25,9 @@ func tryCommand() command {
 		setup: func(fs *flag.FlagSet) action {
 			cfg := configFlag(fs)
 			id := fs.String("station", "", "`ID` of the station whose message it is")
-			payload := fs.String("payload", "", "`TEXT` of the message, or - to read it from standard input; listens to the broker unless given")
+			var payloads payloadList
+			fs.Var(&payloads, "payload", "`TEXT` of a message, @FILE, hex:DIGITS, or - for standard input; several make several messages. For a\n"+
+				"      station with a topic for each quantity it begins with speed:, direction: or gust:. Listens to the broker unless given")
 			length := fs.Duration("for", 15*time.Second, "how `LONG` to listen to the broker")
 			out := outputFlag(fs)
 			return func(ctx context.Context, p *program, _ []string) error {
@@ -38,10 +39,10 @@ func tryCommand() command {
 				if err != nil {
 					return err
 				}
-				if *payload == "" && !given(fs, "payload") {
+				if len(payloads) == 0 {
 					return t.live(ctx, *length)
 				}
-				return t.pasted(*payload)
+				return t.pasted(payloads)
 			}
 		},
 	}
@@ -106,6 +107,11 @@ func newTrial(p *program, cfg *config.Config, id string, asJSON bool) (*trial, e
 	if err != nil {
 		return nil, fmt.Errorf("station %s: %w", id, err)
 	}
+	ids := make([]string, len(cfg.Stations))
+	for k, s := range cfg.Stations {
+		ids[k] = s.ID
+	}
+	decoder.Beware(ids)
 	t := &trial{p: p, cfg: cfg, station: cfg.Stations[i], decoder: decoder, json: asJSON}
 	if t.variation, err = cfg.Airfield.Variation(p.now()); err != nil && t.station.North == sensors.NorthMagnetic {
 		return nil, fmt.Errorf("station %s counts from magnetic north: %w", id, err)
@@ -113,27 +119,14 @@ func newTrial(p *program, cfg *config.Config, id string, asJSON bool) (*trial, e
 	return t, nil
 }
 
-// pasted tries the text of one message.
-func (t *trial) pasted(text string) error {
-	payload := []byte(text)
-	if text == "-" {
-		var err error
-		// One byte more than can be a message shows that it is too long.
-		if payload, err = io.ReadAll(io.LimitReader(t.p.stdin, decode.MaxPayload+1)); err != nil {
-			return fmt.Errorf("read the message from standard input: %w", err)
-		}
-	}
-	return t.show(sensors.Message{Topic: t.station.Topic, Payload: payload, Received: sensors.At(t.p.now())}, false)
-}
-
 // live tries the messages that the broker delivers.
 func (t *trial) live(ctx context.Context, length time.Duration) error {
-	l, err := listen(context.WithoutCancel(ctx), t.cfg, "sockline-try", []string{t.station.Topic})
+	l, err := listen(context.WithoutCancel(ctx), t.cfg, "sockline-try", t.station.AllTopics())
 	if err != nil {
 		return err
 	}
 	defer l.close()
-	fmt.Fprintf(t.p.stderr, "waiting %v for messages on %s\n", length, t.station.Topic)
+	fmt.Fprintf(t.p.stderr, "waiting %v for messages on %s\n", length, strings.Join(t.station.AllTopics(), ", "))
 	timer := time.NewTimer(length)
 	defer timer.Stop()
 	for messages := 0; ; {
@@ -155,7 +148,8 @@ func (t *trial) live(ctx context.Context, length time.Duration) error {
 			if !s.Subscribed {
 				return noContact(t.cfg, s)
 			}
-			return fmt.Errorf("nothing came on the topic %s within %v: is the station on, and is this the topic it publishes on?", t.station.Topic, length)
+			return fmt.Errorf("nothing came on the topic %s within %v: is the station on, and is this the topic it publishes on?",
+				strings.Join(t.station.AllTopics(), ", "), length)
 		}
 	}
 }
@@ -164,9 +158,14 @@ func (t *trial) live(ctx context.Context, length time.Duration) error {
 // by its stamps, as the daemon would.
 func (t *trial) show(m sensors.Message, live bool) error {
 	readings, err := t.decoder.Decode(nil, m, t.variation)
+	return t.tell(readings, err, m.Received, live)
+}
+
+// tell prints what came of a message, or of several that belong together.
+func (t *trial) tell(readings []sensors.Reading, err error, received sensors.Instant, live bool) error {
 	r := trialResult{
 		Station: t.station.ID, Outcome: outcomeReading, Readings: make([]trialReading, 0, len(readings)),
-		Received: m.Received.String(), Notice: alerting.Notice,
+		Received: received.String(), Notice: alerting.Notice,
 	}
 	var all decode.Rejections
 	switch {
@@ -179,6 +178,10 @@ func (t *trial) show(m sensors.Message, live bool) error {
 		r.Outcome, r.Why = outcomeRejected, all.Error()
 	case err != nil:
 		r.Outcome, r.Why = outcomeNothing, all.Error()
+	case len(t.decoder.Waiting()) > 0:
+		r.Outcome = outcomeNothing
+		r.Why = fmt.Sprintf("in order: the %s is kept; a reading comes of it when the rest arrives within %v",
+			strings.Join(t.decoder.Waiting(), " and the "), decode.JoinWithin)
 	default:
 		r.Outcome, r.Why = outcomeNothing, "the message is in order, but speaks of no wind"
 	}
