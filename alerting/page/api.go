@@ -21,6 +21,7 @@ func (p *Page) routes() *http.ServeMux {
 	mux := http.NewServeMux()
 	mux.HandleFunc("GET /{$}", p.front)
 	mux.HandleFunc("GET /api/v1/now", p.now)
+	mux.HandleFunc("GET /api/v1/stations", p.stations)
 	mux.HandleFunc("GET /api/v1/events", p.events)
 	mux.HandleFunc("GET /api/v1/events/{id}", p.event)
 	mux.Handle("GET /metrics", promhttp.HandlerFor(p.opts.Registry, promhttp.HandlerOpts{}))
@@ -28,7 +29,7 @@ func (p *Page) routes() *http.ServeMux {
 	mux.HandleFunc("GET /readyz", p.ready)
 	mux.HandleFunc("/", func(w http.ResponseWriter, r *http.Request) {
 		p.problem(w, http.StatusNotFound, "not-found", "There is nothing at this address.",
-			"The addresses are /, /api/v1/now, /api/v1/events, /api/v1/events/{id}, /metrics, /healthz and /readyz.")
+			"The addresses are /, /api/v1/now, /api/v1/stations, /api/v1/events, /api/v1/events/{id}, /metrics, /healthz and /readyz.")
 	})
 	return mux
 }
@@ -78,14 +79,45 @@ func (p *Page) current() (v *View, why string) {
 	return v, ""
 }
 
-const utcSeconds = "2006-01-02 15:04:05 UTC"
-
-// now answers with the whole view.
-func (p *Page) now(w http.ResponseWriter, _ *http.Request) {
+// currentOrProblem is current; where there is no view it has answered why.
+func (p *Page) currentOrProblem(w http.ResponseWriter) *View {
 	v, why := p.current()
 	if v == nil {
 		p.problem(w, http.StatusServiceUnavailable, "no-information", "There is no information now.",
 			why+" Read every path as not observed.")
+	}
+	return v
+}
+
+// stations answers with the health and the book of every mast.
+func (p *Page) stations(w http.ResponseWriter, _ *http.Request) {
+	v := p.currentOrProblem(w)
+	if v == nil {
+		return
+	}
+	type body struct {
+		At         string            `json:"at"`
+		ValidUntil string            `json:"valid_until"`
+		Stations   []json.RawMessage `json:"stations"`
+		Exercise   bool              `json:"exercise"`
+		Notice     string            `json:"notice"`
+	}
+	b := body{
+		At: v.At.Time().Format(time.RFC3339), ValidUntil: v.ValidUntil.Time().Format(time.RFC3339),
+		Stations: make([]json.RawMessage, 0, len(v.Stations)), Exercise: p.exercise(v), Notice: alerting.Notice,
+	}
+	for _, x := range v.Stations {
+		b.Stations = append(b.Stations, x.JSON)
+	}
+	p.json(w, http.StatusOK, "application/json", b)
+}
+
+const utcSeconds = "2006-01-02 15:04:05 UTC"
+
+// now answers with the whole view.
+func (p *Page) now(w http.ResponseWriter, _ *http.Request) {
+	v := p.currentOrProblem(w)
+	if v == nil {
 		return
 	}
 	type body struct {

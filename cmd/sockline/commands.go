@@ -52,6 +52,7 @@ func commands() []command {
 		replayCommand(),
 		tryCommand(),
 		mastCommand(),
+		stationsCommand(),
 		eventsListCommand(),
 		eventsShowCommand(),
 		versionCommand(),

@@ -3,6 +3,7 @@ package main
 import (
 	"context"
 	"errors"
+	"strings"
 	"sync/atomic"
 	"time"
 
@@ -158,6 +159,14 @@ func (d *daemon) status(rep *report) *wording.Status {
 	}
 	if c := d.loop.capture; c != nil && c.problem() != "" {
 		remark("The capture is broken off: " + c.problem() + ".")
+	}
+	for i := range rep.Stations {
+		if m := rep.Stations[i].Maintenance; m != nil {
+			remark("The mast " + rep.Stations[i].ID + " is under maintenance until " + m.To + ": " + strings.TrimSuffix(m.Reason, ".") + ".")
+		}
+	}
+	if shared := rep.SharedClock; shared != 0 {
+		remark("The clocks of the stations agree, and differ from that of this host by " + shared.Abs().String() + "; that is taken out.")
 	}
 	if len(h.Damage) > 0 {
 		remark("Parts of the history were found damaged; the log says which.")

@@ -154,12 +154,12 @@ var flow = [...][]string{
 	{"sensors/quality", "sensors/correction", "sensors/mast"},
 	{"sensors/averages"},
 	{"alerting/airfield"},
-	{"alerting/windfield"},
+	{"alerting/windfield", "alerting/drift"},
 	{"alerting/shear"},
 	{"alerting/hazard"},
 	{"alerting/lifecycle"},
 	{"alerting/wording", "alerting/engine"},
-	{"alerting/history", "alerting/publish", "alerting/page"},
+	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page"},
 }
 
 func TestFlowDoesNotTurnBack(t *testing.T) {
@@ -200,7 +200,7 @@ func TestFlowDoesNotTurnBack(t *testing.T) {
 // evaluation: they wait for nothing and share nothing.
 var inline = [...]string{
 	"sensors", "sensors/quantity", "sensors/decode", "sensors/quality", "sensors/correction", "sensors/averages",
-	"alerting", "alerting/airfield", "alerting/windfield", "alerting/shear", "alerting/hazard",
+	"alerting", "alerting/airfield", "alerting/windfield", "alerting/drift", "alerting/shear", "alerting/hazard",
 	"alerting/lifecycle", "alerting/wording", "alerting/engine",
 }
 

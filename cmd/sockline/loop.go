@@ -133,6 +133,9 @@ func (l *loop) step(t sensors.Instant) {
 	for _, r := range res.Refused {
 		batch.Late = append(batch.Late, history.LateReading{Reading: r.Reading, Reason: string(r.Reason)})
 	}
+	for _, table := range res.Tables {
+		batch.Entries = append(batch.Entries, history.Entry{Kind: history.KindTable, At: table.At, Payload: table.Payload})
+	}
 	rep := l.reporter.of(l.engine, res)
 	for _, tr := range transitions {
 		n := wording.Of(tr, l.words)

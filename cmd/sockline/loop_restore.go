@@ -1,6 +1,7 @@
 package main
 
 import (
+	"bytes"
 	"errors"
 	"fmt"
 	"time"
@@ -41,6 +42,7 @@ func (l *loop) restore(store *history.Store, now sensors.Instant) error {
 		last = stored
 	}
 	open, faults := store.OpenAlerts(max(last, stored))
+	faults = errors.Join(faults, l.loadTables(store, last))
 	open, foreign := l.divide(open, last)
 	// After a gap the alerts are taken up at its end; without one a few steps
 	// before, so that the steps since their last issue bring them up to date:
@@ -88,6 +90,22 @@ func (l *loop) restore(store *history.Store, now sensors.Instant) error {
 	}
 	l.held = append(foreign, closed...)
 	return errors.Join(faults, err)
+}
+
+// loadTables takes up what earlier runs learnt of the stations up to a step.
+// All of the journal is looked through: a clock that is corrected may have been
+// so for months.
+func (l *loop) loadTables(store *history.Store, last sensors.Instant) error {
+	var faults []error
+	err := store.Journal(1, func(rec history.Record) error {
+		if rec.Kind == history.KindTable && rec.At <= last {
+			if err := l.engine.LoadTable(engine.Table{At: rec.At, Payload: bytes.Clone(rec.Payload)}); err != nil {
+				faults = append(faults, err)
+			}
+		}
+		return nil
+	})
+	return errors.Join(append(faults, err)...)
 }
 
 // divide keeps the alerts of this sort of work, exercise or not, and closes

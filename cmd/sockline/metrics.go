@@ -12,7 +12,6 @@ import (
 	"sockline/alerting/lifecycle"
 	"sockline/alerting/publish"
 	"sockline/config"
-	"sockline/sensors/averages"
 	"sockline/sensors/decode"
 	"sockline/sensors/feed"
 	"sockline/sensors/quality"
@@ -31,6 +30,8 @@ type metrics struct {
 	lastStep                                        prometheus.Gauge
 	live, observed, condition                       *prometheus.GaugeVec
 	opened                                          *prometheus.CounterVec
+
+	stations []stationMetrics
 
 	ids   []string
 	paths [][2]string // runway, operation
@@ -101,6 +102,7 @@ func newMetrics(cfg *config.Config, from sources) *metrics {
 	m.suspect = m.counters("suspect_readings_total", "Evaluated readings that look odd.", station)
 	m.repeated = m.counters("repeated_readings_total", "Readings that were there already.", station)
 	m.rejected = m.counters("rejected_readings_total", "Readings, or parts of payloads, that were kept out.", []string{"station", "reason"})
+	gauges := newStationGauges(m)
 	m.live = m.gauges("station_live", "Whether the station serves ground now (1) or not (0).", station)
 	m.observed = m.gauges("path_observed_meters", "Length of the observed ground of a path.", path)
 	m.opened = m.counters("alerts_opened_total", "Alerts that opened at, or rose to, a level.", []string{"runway", "operation", "kind", "level"})
@@ -120,6 +122,7 @@ func newMetrics(cfg *config.Config, from sources) *metrics {
 			v.WithLabelValues(s.ID)
 		}
 		m.live.WithLabelValues(s.ID)
+		m.stations = append(m.stations, gauges.of(s.ID))
 		for _, g := range []string{unreadable, inconsistent, noValue} {
 			m.rejected.WithLabelValues(s.ID, g)
 		}
@@ -231,7 +234,8 @@ func (m *metrics) step(rep *report, c *engine.Counts, transitions []lifecycle.Tr
 		grow(m.suspect.WithLabelValues(id), &s.suspect, c.Suspect[i])
 		grow(m.repeated.WithLabelValues(id), &s.repeated, c.Copies[i])
 		m.rejections(id, s, c, i)
-		m.live.WithLabelValues(id).Set(truth(rep.Stations[i].State == averages.Live.String()))
+		m.live.WithLabelValues(id).Set(truth(rep.Stations[i].Live))
+		m.stations[i].set(&rep.Stations[i])
 	}
 	for i, p := range m.paths {
 		length := 0.0

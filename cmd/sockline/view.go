@@ -2,7 +2,6 @@ package main
 
 import (
 	"cmp"
-	"encoding/json"
 	"fmt"
 	"math"
 	"slices"
@@ -34,7 +33,9 @@ type report struct {
 	Paths     []wording.PathView
 	Stations  []stationHealth
 	Notices   []wording.Notice // issued in this step
-	Why       []string         // of each notice, for the log
+	// SharedClock is how far all stations are ahead of this host's clock.
+	SharedClock time.Duration
+	Why         []string // of each notice, for the log
 }
 
 // reporter makes reports. Owned by the loop's goroutine.
@@ -44,6 +45,7 @@ type reporter struct {
 	ends      []endMast
 	alerts    []lifecycle.Alert // reused
 	rejected  []uint64          // by station
+	winds     []*windObject     // by station, nil where there is none
 	variation func(sensors.Instant) (float64, error)
 }
 
@@ -81,7 +83,7 @@ func nearest(cfg *config.Config, threshold airfield.Point) int {
 // of puts a step into a report. The assessments and the snapshot belong to the
 // engine and are copied where the report outlives the step.
 func (r *reporter) of(e *engine.Engine, res *engine.Result) *report {
-	out := &report{At: res.At}
+	out := &report{At: res.At, SharedClock: e.SharedClock()}
 	r.alerts = e.Alerts(r.alerts[:0])
 	observed := 0
 	for i := range res.Assessments {
@@ -93,7 +95,7 @@ func (r *reporter) of(e *engine.Engine, res *engine.Result) *report {
 	}
 	for i := range r.cfg.Stations {
 		h := r.station(i, e, res)
-		if h.State == averages.Live.String() {
+		if h.Live {
 			out.Live++
 		}
 		out.Stations = append(out.Stations, h)
@@ -139,7 +141,7 @@ func (r *reporter) end(m endMast, e *engine.Engine, res *engine.Result) wording.
 	w.Exercise = w.Exercise || mast.Exercise
 	id := r.cfg.Stations[m.mast].ID
 	if mast.State != averages.Live {
-		w.Reason = "the mast " + id + " is " + mast.State.String()
+		w.Reason = "the mast " + id + " is " + stateWords(mast.State.String())
 		return w
 	}
 	wind, ok := e.Wind(m.mast)
@@ -161,63 +163,6 @@ func (r *reporter) end(m endMast, e *engine.Engine, res *engine.Result) wording.
 	return w
 }
 
-// stationHealth is what is told of a mast, under the topic of its health.
-type stationHealth struct {
-	ID         string   `json:"id"`
-	State      string   `json:"state"`
-	Last       *string  `json:"last"`  // event time of its newest reading; null if none
-	AgeS       *float64 `json:"age_s"` // of that reading
-	Messages   uint64   `json:"messages"`
-	Readings   uint64   `json:"readings"`
-	Suspect    uint64   `json:"suspect"`
-	Rejected   uint64   `json:"rejected"`
-	Problem    string   `json:"problem"` // what was last wrong with a payload
-	At         string   `json:"at"`
-	ValidUntil string   `json:"valid_until"`
-	Exercise   bool     `json:"exercise"`
-	Notice     string   `json:"notice"`
-}
-
-func (r *reporter) station(i int, e *engine.Engine, res *engine.Result) stationHealth {
-	m, c := res.Snapshot.Mast(i), e.Counts()
-	h := stationHealth{
-		ID: r.cfg.Stations[i].ID, State: m.State.String(),
-		Messages: c.Messages[i], Readings: c.Accepted[i], Suspect: c.Suspect[i], Rejected: rejections(c, i), Problem: c.LastWhy[i],
-		At: seconds(res.At), ValidUntil: seconds(res.At.Add(validFor)),
-		Exercise: r.exercise || m.Exercise, Notice: alerting.Notice,
-	}
-	if m.Last != 0 {
-		last, age := m.Last.String(), res.At.Sub(m.Last).Seconds()
-		h.Last, h.AgeS = &last, &age
-	}
-	return h
-}
-
-func seconds(t sensors.Instant) string { return t.Time().Format("2006-01-02T15:04:05Z") }
-
-// sentence is the health in words.
-func (h *stationHealth) sentence() string {
-	s := strings.ToUpper(h.State[:1]) + h.State[1:]
-	if h.AgeS == nil {
-		s += "; nothing heard of it yet."
-	} else {
-		s += fmt.Sprintf("; its last reading is %.0f s old.", math.Max(0, *h.AgeS))
-	}
-	if h.Problem != "" {
-		s += " Last problem: " + strings.TrimSuffix(h.Problem, ".") + "."
-	}
-	return s
-}
-
-// object is the health as JSON.
-func (h *stationHealth) object() []byte {
-	b, err := json.Marshal(h)
-	if err != nil { // texts, whole numbers and an age always have a JSON form
-		return []byte("null")
-	}
-	return b
-}
-
 // viewOf is the page's view of a step, without alerts.
 func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 	v := &page.View{
@@ -236,7 +181,7 @@ func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 	for i := range rep.Stations {
 		h := &rep.Stations[i]
 		v.Stations = append(v.Stations, page.Station{
-			ID: h.ID, State: h.State, Live: h.State == averages.Live.String(), Sentence: h.sentence(), JSON: h.object(),
+			ID: h.ID, State: h.State, Live: h.Live, Sentence: h.sentence(), JSON: h.object(),
 		})
 	}
 	return v

@@ -31,12 +31,12 @@ type State uint8
 
 // The states of a mast. Only a live mast serves any ground.
 const (
-	Lost        State = iota // nothing for over a minute
-	Stale                    // nothing for longer than its stale_after
-	Starting                 // reporting, but its window is less than two thirds full
-	Live                     // also when its newest reading is late: see Mast.Late
-	Never                    // nothing since the recorder was made
-	Maintenance              // somebody works on it
+	Lost     State = iota // nothing for over a minute
+	Stale                 // nothing for longer than its stale_after
+	Starting              // reporting, but its window is less than two thirds full
+	Live
+	Never       // nothing since the recorder was made
+	Maintenance // somebody works on it
 )
 
 // String is the state's word.
@@ -73,7 +73,7 @@ type Mast struct {
 	Blocks   [Blocks]Block
 	Last     sensors.Instant // event time of the newest reading, 0 if none is remembered
 	Exercise bool            // a reading of the newest window marks itself as synthetic
-	Late     bool            // it is live, and its newest reading is overdue
+	Late     bool            // it is live or starting, and its newest reading is overdue
 
 	Turbulence Turbulence // from the ten minutes before the blocks
 }
@@ -248,6 +248,9 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 		out.State = Stale
 		return
 	}
+	// A reading of the second that has just ended counts as in time, so a second
+	// is added to the interval.
+	out.Late = age > m.station.Interval+time.Second
 	end := t
 	filled, want := 0, 0
 	for b, seconds := range r.layout.Seconds {
@@ -280,8 +283,5 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 	// are missing says nothing of now.
 	if 3*filled >= 2*want && out.Blocks[0].Present {
 		out.State = Live
-		// A reading of the second that has just ended counts as in time, so a
-		// second is added to the interval.
-		out.Late = age > m.station.Interval+time.Second
 	}
 }

@@ -52,8 +52,8 @@ func TestStates(t *testing.T) {
 	}
 }
 
-// Late is a word for a live mast whose newest reading is overdue, on its own
-// scale, within a second.
+// Late is a mast that is not stale yet and whose newest reading is overdue, on
+// its own scale, within a second.
 func TestLate(t *testing.T) {
 	for _, interval := range []time.Duration{200 * time.Millisecond, time.Second, 5 * time.Second} {
 		st := station(interval)
@@ -66,7 +66,7 @@ func TestLate(t *testing.T) {
 		for silent := sensors.Instant(0); silent <= 20*sensors.Second; silent += sensors.Second {
 			m := r.Snapshot(last.CeilSecond() + silent).Mast(0)
 			overdue := silent.Sub(0) > interval+time.Second
-			if m.Late != (overdue && m.State == Live) || (silent == 0 && m.State != Live) {
+			if m.Late != (overdue && silent.Sub(0) <= st.StaleAfter) || (silent == 0 && m.State != Live) {
 				t.Errorf("interval %v, silent for %d s: %s, late %v", interval, silent/sensors.Second, m.State, m.Late)
 			}
 		}
