@@ -10,7 +10,9 @@ import (
 // frontBank is every gust front that is tried: straight lines of a few
 // headings and speeds, now at places one spacing apart between the masts. The
 // strengths A are the change of wind behind the line, along its motion (which
-// must be positive: a front is convergent) and to the left of it.
+// must be positive: a front is convergent) and to the left of it, and, to first
+// order, the change along its motion times how far ahead of the place tried
+// the line really is: a line between two places is not forced onto either.
 type frontBank struct {
 	fronts  []front
 	targets []Target
@@ -33,6 +35,27 @@ func (f front) behind(x, y, age float64) float64 {
 	line := f.at - f.speed*age
 	d := line - (float64(x*f.east) + float64(y*f.north))
 	return (1 + math.Tanh(d/f.width)) / 2
+}
+
+// ahead is the derivative of behind by the place of the line, 1/m: with
+// s = behind, 2 s (1 - s) / width.
+func (f front) ahead(x, y, age float64) float64 {
+	s := f.behind(x, y, age)
+	return 2 * float64(s*(1-s)) / f.width
+}
+
+// wind of the strength d at a place, age seconds ago.
+func (f front) wind(d int, x, y, age float64) (east, north float64) {
+	switch d {
+	case 0:
+		s := f.behind(x, y, age)
+		return s * f.east, s * f.north
+	case 1:
+		s := f.behind(x, y, age)
+		return -s * f.north, s * f.east
+	}
+	s := f.ahead(x, y, age)
+	return s * f.east, s * f.north
 }
 
 func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior) *frontBank {
@@ -58,18 +81,18 @@ func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior)
 }
 
 // atLive is the wind of every front at the live masts' blocks, one row for
-// each of the two strengths: [front][2][n].
+// each of the strengths: [front][dims][n].
 func (b *frontBank) atLive(live []int) []float64 {
 	n := blocks * 2 * len(live)
-	out := make([]float64, len(b.fronts)*2*n)
+	out := make([]float64, len(b.fronts)*dims*n)
 	for j, f := range b.fronts {
-		along, left := out[2*j*n:(2*j+1)*n], out[(2*j+1)*n:(2*j+2)*n]
-		for k := range blocks {
-			for i, m := range live {
-				share := f.behind(b.masts[m].X, b.masts[m].Y, b.ages[k])
-				o := (k*len(live) + i) * 2
-				along[o], along[o+1] = share*f.east, share*f.north
-				left[o], left[o+1] = -share*f.north, share*f.east
+		for d := range dims {
+			row := out[(j*dims+d)*n : (j*dims+d+1)*n]
+			for k := range blocks {
+				for i, m := range live {
+					o := (k*len(live) + i) * 2
+					row[o], row[o+1] = f.wind(d, b.masts[m].X, b.masts[m].Y, b.ages[k])
+				}
 			}
 		}
 	}
@@ -79,53 +102,46 @@ func (b *frontBank) atLive(live []int) []float64 {
 func (b *frontBank) count() int { return len(b.fronts) }
 
 func (b *frontBank) prior(int) (c [6]float64, q [dims]float64, rest float64) {
+	// A line lies at most half a spacing from a place tried: a third of the
+	// spacing is the deviation of an even spread, rounded up.
+	shift := b.p.FrontStrength * b.p.FrontSpacing / 3
 	return [6]float64{
 		float64(b.p.FrontStrength * b.p.FrontStrength), 0, 0,
-		float64(b.p.FrontAcross * b.p.FrontAcross), 0, 1,
+		float64(b.p.FrontAcross * b.p.FrontAcross), 0, float64(shift * shift),
 	}, [dims]float64{1, 0, 0}, 0
 }
 
 func (b *frontBank) project(en *entry, w, out []float64) {
 	n := len(b.fronts)
-	for d := range 2 {
-		blas64.Gemv(blas.NoTrans, 1, blas64.General{Rows: n, Cols: en.n, Stride: 2 * en.n, Data: en.fronts[d*en.n:]},
-			vec(w), 0, vec(out[d*n:(d+1)*n]))
+	for d := range dims {
+		rows := blas64.General{Rows: n, Cols: en.n, Stride: dims * en.n, Data: en.fronts[d*en.n:]}
+		blas64.Gemv(blas.NoTrans, 1, rows, vec(w), 0, vec(out[d*n:(d+1)*n]))
 	}
-	clear(out[2*n : 3*n])
 }
 
 func (b *frontBank) gram(en *entry, s *state, m []float64) {
-	rows := 2 * len(b.fronts)
+	rows := dims * len(b.fronts)
 	tmp := make([]float64, rows*en.n)
 	blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(rows, en.n, en.fronts), mat(en.n, en.n, s.inverse), 0, mat(rows, en.n, tmp))
 	row := func(data []float64, i int) blas64.Vector { return vec(data[i*en.n : (i+1)*en.n]) }
 	for j := range b.fronts {
-		m[j*6] = blas64.Dot(row(tmp, 2*j), row(en.fronts, 2*j))
-		m[j*6+1] = blas64.Dot(row(tmp, 2*j), row(en.fronts, 2*j+1))
-		m[j*6+3] = blas64.Dot(row(tmp, 2*j+1), row(en.fronts, 2*j+1))
+		k := 0
+		for r := range dims {
+			for c := r; c < dims; c++ {
+				m[j*6+k] = blas64.Dot(row(tmp, dims*j+r), row(en.fronts, dims*j+c))
+				k++
+			}
+		}
 	}
 }
 
 func (b *frontBank) column(en *entry, j, d int, dst []float64) {
-	if d == 2 {
-		clear(dst)
-		return
-	}
-	copy(dst, en.fronts[(2*j+d)*en.n:(2*j+d+1)*en.n])
+	copy(dst, en.fronts[(dims*j+d)*en.n:(dims*j+d+1)*en.n])
 }
 
 func (b *frontBank) now(j, d int, dst []float64) {
-	f := b.fronts[j]
 	for t, g := range b.targets {
-		share := f.behind(g.X, g.Y, 0)
-		switch d {
-		case 0:
-			dst[t] = g.headwind(share*f.east, share*f.north)
-		case 1:
-			dst[t] = g.headwind(-share*f.north, share*f.east)
-		default:
-			dst[t] = 0
-		}
+		dst[t] = g.headwind(b.fronts[j].wind(d, g.X, g.Y, 0))
 	}
 }
 

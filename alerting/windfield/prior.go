@@ -68,7 +68,7 @@ func DefaultPrior() Prior {
 		OutflowSpacing:  500,
 		OutflowMargin:   1600,
 		FrontShare:      0.1,
-		FrontStrength:   7,
+		FrontStrength:   10,
 		FrontAcross:     4,
 		FrontHeadings:   12,
 		FrontSpeeds:     []float64{6, 13},
