@@ -146,6 +146,8 @@ func (s *session) supervise(ctx context.Context) {
 		announced uint64   // generation for which onConnect was called
 		served    uint64   // generation that holds the subscriptions...
 		granted   []string // ...to these topics
+		tried     uint64   // generation on which subscriptions were asked for...
+		asked     []string // ...for these topics
 	)
 	for {
 		var again <-chan time.Time
@@ -157,7 +159,11 @@ func (s *session) supervise(ctx context.Context) {
 			if generation != announced {
 				s.note(LinkState{Connected: true})
 			}
-			err := s.subscribe(topics)
+			if generation != tried {
+				tried, granted, asked = generation, nil, nil // a new connection holds none
+			}
+			var err error
+			asked, err = s.change(granted, asked, topics)
 			if err == nil {
 				served, granted = generation, topics
 			} else {
@@ -181,6 +187,37 @@ func (s *session) supervise(ctx context.Context) {
 		case <-again:
 		}
 	}
+}
+
+// change brings the subscriptions to the topics that are wanted: what is
+// granted is not asked for again, because the broker would repeat its retained
+// message; what was asked for and is wanted no more is given up. It returns
+// what is still asked for.
+func (s *session) change(granted, asked, wanted []string) (rest []string, err error) {
+	var fresh, gone []string
+	for _, t := range wanted {
+		if !slices.Contains(granted, t) {
+			fresh = append(fresh, t)
+		}
+	}
+	for _, t := range asked {
+		if !slices.Contains(wanted, t) {
+			gone = append(gone, t)
+		}
+	}
+	err = s.subscribe(fresh)
+	if len(gone) == 0 {
+		return wanted, err
+	}
+	token := s.client.Unsubscribe(gone...)
+	ended := errors.New("no answer within " + subscribeTimeout.String())
+	if token.WaitTimeout(subscribeTimeout) {
+		ended = token.Error()
+	}
+	if ended != nil {
+		return slices.Concat(wanted, gone), errors.Join(err, fmt.Errorf("end the subscription to %s: %w", strings.Join(gone, ", "), ended))
+	}
+	return wanted, err
 }
 
 // subscribe asks for all topics and reads the broker's answer for each.
@@ -223,6 +260,14 @@ func (s *session) watch(topic string) {
 		// A new slice: supervise compares the old one with it.
 		s.topics = append(slices.Clone(s.topics), topic)
 	}
+	s.mu.Unlock()
+	s.rouse()
+}
+
+// follow puts other topics in the place of those subscribed to.
+func (s *session) follow(topics []string) {
+	s.mu.Lock()
+	s.topics = slices.Clone(topics)
 	s.mu.Unlock()
 	s.rouse()
 }

@@ -113,6 +113,17 @@ func (s *Subscriber) put(m sensors.Message) bool {
 	}
 }
 
+// SetTopics puts other topic filters in the place of those subscribed to. It
+// returns at once; State tells when all are granted. The queue and its order
+// stay; messages of a topic that was given up may still come for a moment.
+func (s *Subscriber) SetTopics(topics []string) error {
+	if len(topics) == 0 {
+		return errors.New("change the subscription: there are no topics: name at least one")
+	}
+	s.session.follow(topics)
+	return nil
+}
+
 // Tick queues an empty message (no topic, no payload) with the stamp of this
 // moment: whoever takes it from the queue has seen everything that arrived
 // before. It never waits; with a full queue there is no need of it, because
