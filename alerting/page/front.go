@@ -104,6 +104,9 @@ func (p *Page) fill() front {
 		Why:      why,
 		Notice:   alerting.Notice,
 	}
+	if last != nil && last.Airfield != "" {
+		f.Airfield = last.Airfield
+	}
 	if v == nil {
 		f.Condition, f.Mark = "No information", "none"
 		f.Meaning = "Nothing here says what the wind does. Read every path as not observed."

@@ -36,6 +36,7 @@ type View struct {
 	Condition  alerting.Condition
 	Remarks    []string // what else to know of the daemon itself, as sentences
 	Exercise   bool
+	Airfield   string // its name, where it is no longer that of Options
 
 	Ends     []End
 	Paths    []Path

@@ -181,6 +181,25 @@ func (s *Sink) SetPath(runway, operation string, state alerting.PathState, paylo
 	s.retain(PathTopic(runway, operation), string(state), ValueEvery, payload)
 }
 
+// WithdrawPath takes a path from the broker that is no longer configured: what
+// is retained of it becomes payload, which says that it is not observed, and is
+// then cleared.
+func (s *Sink) WithdrawPath(runway, operation string, payload []byte) {
+	s.withdraw(PathTopic(runway, operation), payload)
+}
+
+// WithdrawStation clears what the broker retains of a station that is no
+// longer configured.
+func (s *Sink) WithdrawStation(id string) { s.withdraw(StationTopic(id), nil) }
+
+func (s *Sink) withdraw(topic string, payload []byte) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	if s.shelf.withdraw(topic, payload) {
+		s.nudge()
+	}
+}
+
 // SetStation keeps payload as the health of a station to send next. A changed
 // state goes out at once, else every ValueEvery.
 func (s *Sink) SetStation(id, state string, payload []byte) {

@@ -258,7 +258,7 @@ func (s *Sink) drain(stop func() bool) {
 				return
 			}
 		case due:
-			if !s.send(topic, v.payload, qosValue, true) {
+			if !s.send(topic, v.payload, v.qos(), true) {
 				return
 			}
 			s.told.Values++
