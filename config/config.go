@@ -160,6 +160,15 @@ func unreadable(path string, err error) Problems {
 
 // parse is Parse with a password that takes the place of the password file.
 func parse(name string, data []byte, password Secret, override bool) (*Config, Problems) {
+	cfg, problems := read(name, data, password, override)
+	if len(problems) > 0 {
+		return nil, problems
+	}
+	return cfg, nil
+}
+
+// read is parse with what could be read in spite of the problems.
+func read(name string, data []byte, password Secret, override bool) (*Config, Problems) {
 	text, problem := plainText(name, data)
 	if problem != nil {
 		return nil, Problems{*problem}
@@ -186,11 +195,8 @@ func parse(name string, data []byte, password Secret, override bool) (*Config, P
 	cfg.Page = root.page()
 	root.done()
 	cfg.Airfield = r.geometry(spec, runways, cfg.Stations)
-	if len(r.problems) > 0 {
-		r.problems.sort()
-		return nil, r.problems
-	}
-	return cfg, nil
+	r.problems.sort()
+	return cfg, r.problems
 }
 
 // plainText is the text of data without a byte order mark and with LF line

@@ -41,6 +41,11 @@ func (p Problem) Error() string {
 	return b.String()
 }
 
+// under reports whether the problem is one of a section.
+func (p Problem) under(section string) bool {
+	return p.Key == section || strings.HasPrefix(p.Key, section+".")
+}
+
 // Problems is everything that is wrong with a configuration, in the order of
 // the file.
 type Problems []Problem
