@@ -10,14 +10,17 @@ import (
 // Counts is what came in since the start, by station and reason. Owned by the
 // engine's goroutine.
 type Counts struct {
-	Unknown  uint64   // messages on topics of no station
-	Messages []uint64 // by station
-	Accepted []uint64 // readings that entered a step, by station
-	Suspect  []uint64
-	Copies   []uint64                    // readings that were there already
-	Decode   []map[decode.Reason]uint64  // payloads or parts refused, by station and reason
-	Quality  []map[quality.Reason]uint64 // readings refused or flagged, by station and reason
-	LastWhy  []string                    // what was last wrong with a station's payloads
+	Unknown uint64 // messages on topics of no station
+	// Withdrawn counts readings that no step used because their station was
+	// taken away or changed by a reload.
+	Withdrawn uint64
+	Messages  []uint64 // by station
+	Accepted  []uint64 // readings that entered a step, by station
+	Suspect   []uint64
+	Copies    []uint64                    // readings that were there already
+	Decode    []map[decode.Reason]uint64  // payloads or parts refused, by station and reason
+	Quality   []map[quality.Reason]uint64 // readings refused or flagged, by station and reason
+	LastWhy   []string                    // what was last wrong with a station's payloads
 }
 
 func newCounts(stations int) Counts {

@@ -40,6 +40,7 @@ type Options struct {
 type Store struct {
 	dir      string
 	opts     Options
+	keep     atomic.Int64 // Options.Keep, until Retain
 	readOnly bool
 	shelf    shelf
 	journal  *file // held open; nil when read-only
@@ -93,6 +94,7 @@ func newStore(dir string, opts Options, readOnly bool) *Store {
 		opts.LockWait = time.Second
 	}
 	s := &Store{dir: dir, opts: opts, readOnly: readOnly}
+	s.keep.Store(int64(opts.Keep))
 	s.health.Store(&Health{})
 	s.shelf = shelf{dir: dir, readOnly: readOnly, lockWait: opts.LockWait, report: s.reportDamage, open: map[string]*file{}}
 	return s
@@ -234,17 +236,21 @@ func (s *Store) days() ([]string, error) {
 	return days, nil
 }
 
+// Retain sets how long readings are kept from now on, as Options.Keep does.
+func (s *Store) Retain(keep time.Duration) { s.keep.Store(int64(keep)) }
+
 // Prune deletes the readings of days that ended before now - Keep, and what
 // was set aside of such days. It returns the names of the deleted files.
 func (s *Store) Prune(now sensors.Instant) ([]string, error) {
-	if s.opts.Keep <= 0 || s.readOnly {
+	keep := time.Duration(s.keep.Load())
+	if keep <= 0 || s.readOnly {
 		return nil, nil
 	}
 	entries, err := os.ReadDir(s.dir)
 	if err != nil {
 		return nil, fmt.Errorf("list the history: %w", err)
 	}
-	limit := now.Add(-s.opts.Keep)
+	limit := now.Add(-keep)
 	var gone []string
 	for _, e := range entries {
 		rest, ok := strings.CutPrefix(e.Name(), dayPrefix)

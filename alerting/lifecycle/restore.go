@@ -96,3 +96,10 @@ func (m *Machine) Rebase(settings Settings, T sensors.Instant, dst []Transition)
 	*m = *next
 	return dst
 }
+
+// Settings is a copy of the settings in force.
+func (m *Machine) Settings() Settings {
+	s := m.settings
+	s.Paths, s.StationIDs = slices.Clone(s.Paths), slices.Clone(s.StationIDs)
+	return s
+}
