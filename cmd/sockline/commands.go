@@ -55,6 +55,8 @@ func commands() []command {
 		stationsCommand(),
 		eventsListCommand(),
 		eventsShowCommand(),
+		completionCommand(),
+		manCommand(),
 		versionCommand(),
 	}
 }
