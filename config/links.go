@@ -172,7 +172,10 @@ func (t *table) file(name string) (path string, content []byte, ok bool) {
 	if !ok {
 		return "", nil, false
 	}
-	full := t.resolve(path)
+	full, ok := t.secretPath(name, path)
+	if !ok {
+		return "", nil, false
+	}
 	info, err := os.Stat(full)
 	switch {
 	case err == nil && !info.Mode().IsRegular():
