@@ -124,6 +124,24 @@ func object(t *testing.T, r *http.Response) map[string]any {
 	return m
 }
 
+func TestStations(t *testing.T) {
+	p, _ := serve(t, sample(time.Second), nil)
+	m := object(t, get(p, "/api/v1/stations"))
+	for key, value := range map[string]string{
+		"at": "2026-07-01T14:15:40Z", "valid_until": "2026-07-01T14:15:45Z",
+		"stations": "[map[id:touch07] map[id:far07] map[id:final07]]", "exercise": "false",
+	} {
+		if got := fmt.Sprint(m[key]); got != value {
+			t.Errorf("%s is %s, want %s", key, got, value)
+		}
+	}
+	// What is too old is no information.
+	p, _ = serve(t, sample(6*time.Second), nil)
+	if r := get(p, "/api/v1/stations"); r.StatusCode != http.StatusServiceUnavailable {
+		t.Errorf("an old view: answer %d", r.StatusCode)
+	}
+}
+
 func TestNow(t *testing.T) {
 	p, _ := serve(t, sample(time.Second), nil)
 	r := get(p, "/api/v1/now")
@@ -392,7 +410,7 @@ func TestProblems(t *testing.T) {
 
 func TestEveryAnswerIsGuarded(t *testing.T) {
 	p, _ := serve(t, sample(0), nil)
-	for _, address := range []string{"/", "/api/v1/now", "/api/v1/events", "/api/v1/events/x", "/metrics", "/healthz", "/readyz", "/no"} {
+	for _, address := range []string{"/", "/api/v1/now", "/api/v1/stations", "/api/v1/events", "/api/v1/events/x", "/metrics", "/healthz", "/readyz", "/no"} {
 		h := get(p, address).Header
 		csp := h.Get("Content-Security-Policy")
 		if !strings.HasPrefix(csp, "default-src 'none'; style-src 'sha256-") || strings.Contains(csp, "unsafe") ||

@@ -66,6 +66,9 @@ type Checker struct {
 	previous    sensors.Instant // of the last usable reading
 	speed       float64         // of it, m/s
 
+	recent recent // usable readings, for spikes
+	calm   calmRun
+
 	wind run // both bits of speed and direction stand still
 	vane run // the direction stands still, above light air
 }
@@ -86,8 +89,10 @@ func NewChecker(station sensors.Station) *Checker { return &Checker{station: sta
 func (c *Checker) Station() sensors.Station { return c.station }
 
 // Check judges the next reading. A reading outside the range or from an
-// instrument that is stuck is rejected; a jump of the speed or a gust below
-// the speed makes it suspect, which is only said.
+// instrument that is stuck is rejected; a jump of the speed, a gust below
+// the speed or a vane that goes about in a calm makes it suspect, which is only
+// said. That the reading before was a spike is noted with the one after it, when
+// it has long been used: what is sudden is never taken away.
 func (c *Checker) Check(r sensors.Reading) Checked {
 	var flags Flags
 	if !inRange(r) {
@@ -100,15 +105,21 @@ func (c *Checker) Check(r sensors.Reading) Checked {
 		if r.HasGust && r.Gust < r.Speed {
 			flags |= FlagGustBelowSpeed
 		}
+		if c.calm.turning(r) {
+			flags |= FlagCalmTurning
+		}
 	}
 	checked := Checked{reading: r, verdict: Accepted, flags: flags}
 	switch {
 	case flags&rejecting != 0:
 		checked.verdict = Rejected
-	case flags != 0:
+	case flags&^noted != 0:
 		checked.verdict = Suspect
 	}
 	if checked.Usable() {
+		if c.recent.spike(r) {
+			checked.flags |= FlagSpike
+		}
 		c.hasPrevious, c.previous, c.speed = true, r.Time, r.Speed
 	}
 	return checked

@@ -16,11 +16,13 @@ const (
 	Stuck          Reason = "stuck"            // speed and direction stand still
 	StuckVane      Reason = "stuck-vane"       // the direction stands still while the speed varies
 	GustBelowSpeed Reason = "gust-below-speed" // the gust is smaller than the speed
+	Spike          Reason = "spike"            // the reading before this one stood out on one side of both its neighbours
+	CalmTurning    Reason = "calm-but-turning" // the speed is nothing while the direction goes about
 )
 
 // Reasons lists every Reason, so that counters can exist before the first use.
 func Reasons() []Reason {
-	return []Reason{Retained, Exercise, Future, Late, Range, Step, Stuck, StuckVane, GustBelowSpeed}
+	return []Reason{Retained, Exercise, Future, Late, Range, Step, Stuck, StuckVane, GustBelowSpeed, Spike, CalmTurning}
 }
 
 // Flags is the set of what a Checker found.
@@ -33,15 +35,19 @@ const (
 	FlagStuck
 	FlagStuckVane
 	FlagGustBelowSpeed
+	FlagSpike
+	FlagCalmTurning
 
 	// rejecting is those that make a reading unfit.
 	rejecting = FlagRange | FlagStuck | FlagStuckVane
+	// noted is those that say something of another reading than their own.
+	noted = FlagSpike
 )
 
 // Reasons lists the flags that are set.
 func (f Flags) Reasons() []Reason {
 	var list []Reason
-	for i, reason := range [...]Reason{Range, Step, Stuck, StuckVane, GustBelowSpeed} {
+	for i, reason := range [...]Reason{Range, Step, Stuck, StuckVane, GustBelowSpeed, Spike, CalmTurning} {
 		if f&(1<<i) != 0 {
 			list = append(list, reason)
 		}
