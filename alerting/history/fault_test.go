@@ -59,15 +59,7 @@ func journalled(t *testing.T, s *Store) map[sensors.Instant]int {
 }
 
 func TestDiskFull(t *testing.T) {
-	dir := t.TempDir()
-	if err := syscall.Mount("tmpfs", dir, "tmpfs", 0, "size=4m"); err != nil {
-		t.Skipf("no right to mount a tmpfs: %v", err)
-	}
-	t.Cleanup(func() {
-		if err := syscall.Unmount(dir, 0); err != nil {
-			t.Errorf("unmount: %v", err)
-		}
-	})
+	dir := tmpfs(t)
 	s := mustOpen(t, dir, Options{})
 	var out tally
 	w := mustWriter(t, s, WriterOptions{Release: out.take, After: tenfold})
@@ -288,7 +280,7 @@ func breakDescriptor(t *testing.T, path string) {
 			continue
 		}
 		if target, err := os.Readlink("/proc/self/fd/" + e.Name()); err == nil && target == path {
-			if err := syscall.Dup3(int(broken.Fd()), fd, syscall.O_CLOEXEC); err != nil {
+			if err := duplicate(broken, fd); err != nil {
 				t.Fatal(err)
 			}
 			return

@@ -8,7 +8,6 @@ import (
 	"runtime/debug"
 	"strings"
 	"sync"
-	"syscall"
 	"time"
 
 	bolt "go.etcd.io/bbolt"
@@ -150,18 +149,14 @@ func (f *file) openLocked(path string, flag int, perm os.FileMode) (*os.File, er
 }
 
 func (f *file) lockAndInspect(osFile *os.File) error {
-	how := syscall.LOCK_EX
-	if f.readOnly {
-		how = syscall.LOCK_SH
-	}
 	const pause = 50 * time.Millisecond
 	for waited := time.Duration(0); ; waited += pause {
-		err := syscall.Flock(int(osFile.Fd()), how|syscall.LOCK_NB)
-		if err == nil {
-			break
-		}
-		if !errors.Is(err, syscall.EWOULDBLOCK) {
+		taken, err := lockFile(osFile, f.readOnly)
+		if err != nil {
 			return fmt.Errorf("lock: %w", err)
+		}
+		if taken {
+			break
 		}
 		if waited >= f.lockWait {
 			return ErrInUse
@@ -283,20 +278,6 @@ func createFile(path string, l layout) error {
 		return fmt.Errorf("create %s: %w", path, err)
 	}
 	return syncDir(filepath.Dir(path))
-}
-
-func syncDir(dir string) error { return syncPath(dir) }
-
-func syncPath(path string) error {
-	f, err := os.Open(path)
-	if err != nil {
-		return fmt.Errorf("sync %s: %w", path, err)
-	}
-	err = f.Sync()
-	if err = errors.Join(err, f.Close()); err != nil {
-		return fmt.Errorf("sync %s: %w", path, err)
-	}
-	return nil
 }
 
 // removeLeftovers deletes temporary files of a start that was cut off.

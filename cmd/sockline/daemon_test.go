@@ -8,7 +8,6 @@ import (
 	"path/filepath"
 	"slices"
 	"strings"
-	"syscall"
 	"testing"
 	"time"
 
@@ -168,15 +167,7 @@ func TestDaemonBrokerRestarts(t *testing.T) {
 // TestDaemonFullDisk fills the disk of the history: alerts still come, marked
 // as not recorded, the status says so, and all is well once there is room.
 func TestDaemonFullDisk(t *testing.T) {
-	dir := t.TempDir()
-	if err := syscall.Mount("tmpfs", dir, "tmpfs", 0, "size=4m"); err != nil {
-		t.Skipf("SKIPPED, NOT TESTED: no right to mount a tmpfs: %v", err)
-	}
-	t.Cleanup(func() {
-		if err := syscall.Unmount(dir, 0); err != nil {
-			t.Errorf("unmount: %v", err)
-		}
-	})
+	dir := tmpfs(t)
 	broker := brokertest.Start(t)
 	cfg := mustLoad(t, site(t, broker.URL(), dir))
 	heard := listenTo(t, broker.URL())

@@ -49,7 +49,11 @@ func TestRunCommand(t *testing.T) {
 	code := make(chan int, 1)
 	go func() { code <- p.run(ctx, []string{"run", "--config", cfg, "--capture", capture}) }()
 	until(t, "the daemon to be connected", func() bool { return strings.Contains(stderr.String(), `"topics":8`) })
-	if err := syscall.Kill(os.Getpid(), syscall.SIGHUP); err != nil {
+	self, err := os.FindProcess(os.Getpid())
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := self.Signal(syscall.SIGHUP); err != nil {
 		t.Fatal(err)
 	}
 	until(t, "an answer to SIGHUP", func() bool { return strings.Contains(stderr.String(), "restart it to put a changed file in force") })

@@ -13,7 +13,6 @@ import (
 	"slices"
 	"strconv"
 	"strings"
-	"syscall"
 
 	"sockline/sensors"
 )
@@ -95,7 +94,7 @@ func OpenQueue(dir string, bound int64) (*Queue, error) {
 	if q.lock, err = os.OpenFile(filepath.Join(dir, "lock"), os.O_CREATE|os.O_RDWR, 0o600); err != nil {
 		return nil, fmt.Errorf("open the queue: %w", err)
 	}
-	if err = syscall.Flock(int(q.lock.Fd()), syscall.LOCK_EX|syscall.LOCK_NB); err != nil {
+	if err = lockFile(q.lock); err != nil {
 		err = fmt.Errorf("queue %s: another agent is using it (%w): give each its own directory", dir, err)
 	} else if q.position, err = os.OpenFile(filepath.Join(dir, "position"), os.O_CREATE|os.O_RDWR, 0o600); err == nil {
 		err = q.recover()

@@ -138,13 +138,6 @@ func (b *Broker) end(s syscall.Signal) {
 	}
 }
 
-// Freeze stops the process from running while its sockets stay open: the
-// other side sees a connection on which nothing comes any more.
-func (b *Broker) Freeze() { b.signal(syscall.SIGSTOP) }
-
-// Thaw lets a frozen process run on.
-func (b *Broker) Thaw() { b.signal(syscall.SIGCONT) }
-
 func (b *Broker) signal(s syscall.Signal) {
 	select {
 	case <-b.ended:
