@@ -115,7 +115,7 @@ var importRules = [...]importRule{
 	{"go.etcd.io/bbolt", []string{"alerting/history"}, false, "the files of the history have one owner"},
 	{"github.com/BurntSushi/toml", []string{"config"}, true, "configuration has one reader"},
 	{"go.bug.st/serial", []string{"sensors/mast"}, false, "one package opens serial lines"},
-	{"net/http", []string{"alerting/page", "cmd"}, true, "one package speaks HTTP"},
+	{"net/http", []string{"alerting/page", "alerting/publish/webhook", "cmd"}, true, "one package speaks HTTP to those who ask, one to those who are told"},
 	{"github.com/prometheus/client_golang", []string{"alerting/page", "cmd"}, true, "metrics are made and served at the edge"},
 	{"github.com/rs/zerolog/log", nil, false, "there is no global logger"},
 	{"math/rand", []string{"none"}, false, "random numbers come from a seeded math/rand/v2"},
