@@ -19,6 +19,8 @@ type frontBank struct {
 	p       Prior
 	ages    [blocks]float64
 	masts   []Mast
+
+	along, left []float64 // scratch of project: blocks x masts
 }
 
 // front is a line x sin(heading) + y cos(heading) = at, moving with speed.
@@ -59,7 +61,10 @@ func (f front) wind(d int, x, y, age float64) (east, north float64) {
 }
 
 func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior) *frontBank {
-	b := &frontBank{targets: targets, p: p, ages: ages, masts: masts}
+	b := &frontBank{
+		targets: targets, p: p, ages: ages, masts: masts,
+		along: make([]float64, blocks*len(masts)), left: make([]float64, blocks*len(masts)),
+	}
 	for h := range p.FrontHeadings {
 		sin, cos := math.Sincos(2 * math.Pi * float64(h) / float64(p.FrontHeadings))
 		lo, hi := math.Inf(1), math.Inf(-1)
@@ -80,19 +85,18 @@ func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior)
 	return b
 }
 
-// atLive is the wind of every front at the live masts' blocks, one row for
-// each of the strengths: [front][dims][n].
+// atLive is how much of the change has come, and how fast it comes, at every
+// live mast's block: [front][2][blocks x live]. The wind of the strengths is
+// that times the front's direction, so nothing more need be kept.
 func (b *frontBank) atLive(live []int) []float64 {
-	n := blocks * 2 * len(live)
-	out := make([]float64, len(b.fronts)*dims*n)
+	n := blocks * len(live)
+	out := make([]float64, len(b.fronts)*2*n)
 	for j, f := range b.fronts {
-		for d := range dims {
-			row := out[(j*dims+d)*n : (j*dims+d+1)*n]
-			for k := range blocks {
-				for i, m := range live {
-					o := (k*len(live) + i) * 2
-					row[o], row[o+1] = f.wind(d, b.masts[m].X, b.masts[m].Y, b.ages[k])
-				}
+		share, rate := out[2*j*n:(2*j+1)*n], out[(2*j+1)*n:(2*j+2)*n]
+		for k := range blocks {
+			for i, m := range live {
+				share[k*len(live)+i] = f.behind(b.masts[m].X, b.masts[m].Y, b.ages[k])
+				rate[k*len(live)+i] = f.ahead(b.masts[m].X, b.masts[m].Y, b.ages[k])
 			}
 		}
 	}
@@ -111,24 +115,47 @@ func (b *frontBank) prior(int) (c [6]float64, q [dims]float64, rest float64) {
 	}, [dims]float64{1, 0, 0}, 0
 }
 
+// project: all fronts of one heading share the components of w along and to
+// the left of it.
 func (b *frontBank) project(en *entry, w, out []float64) {
-	n := len(b.fronts)
-	for d := range dims {
-		rows := blas64.General{Rows: n, Cols: en.n, Stride: dims * en.n, Data: en.fronts[d*en.n:]}
-		blas64.Gemv(blas.NoTrans, 1, rows, vec(w), 0, vec(out[d*n:(d+1)*n]))
+	n, nb := len(b.fronts), blocks*len(en.live)
+	along, left := b.along[:nb], b.left[:nb]
+	for first := 0; first < n; {
+		f := b.fronts[first]
+		last := first + 1
+		for last < n && b.fronts[last].east == f.east && b.fronts[last].north == f.north {
+			last++
+		}
+		for i := range nb {
+			along[i] = float64(w[2*i]*f.east) + float64(w[2*i+1]*f.north)
+			left[i] = float64(w[2*i+1]*f.east) - float64(w[2*i]*f.north)
+		}
+		rows := func(d int) blas64.General {
+			return blas64.General{Rows: last - first, Cols: nb, Stride: 2 * nb, Data: en.fronts[(2*first+d)*nb:]}
+		}
+		blas64.Gemv(blas.NoTrans, 1, rows(0), vec(along), 0, vec(out[first:last]))
+		blas64.Gemv(blas.NoTrans, 1, rows(0), vec(left), 0, vec(out[n+first:n+last]))
+		blas64.Gemv(blas.NoTrans, 1, rows(1), vec(along), 0, vec(out[2*n+first:2*n+last]))
+		first = last
 	}
 }
 
 func (b *frontBank) gram(en *entry, s *state, m []float64) {
-	rows := dims * len(b.fronts)
-	tmp := make([]float64, rows*en.n)
-	blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(rows, en.n, en.fronts), mat(en.n, en.n, s.inverse), 0, mat(rows, en.n, tmp))
-	row := func(data []float64, i int) blas64.Vector { return vec(data[i*en.n : (i+1)*en.n]) }
+	n := len(b.fronts)
+	all := make([]float64, dims*n*en.n)
+	solved := make([]float64, dims*n*en.n)
+	row := func(data []float64, j, d int) []float64 { return data[(dims*j+d)*en.n : (dims*j+d+1)*en.n] }
+	for j := range b.fronts {
+		for d := range dims {
+			b.column(en, j, d, row(all, j, d))
+		}
+	}
+	blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(dims*n, en.n, all), mat(en.n, en.n, s.inverse), 0, mat(dims*n, en.n, solved))
 	for j := range b.fronts {
 		k := 0
 		for r := range dims {
 			for c := r; c < dims; c++ {
-				m[j*6+k] = blas64.Dot(row(tmp, dims*j+r), row(en.fronts, dims*j+c))
+				m[j*6+k] = blas64.Dot(vec(row(solved, j, r)), vec(row(all, j, c)))
 				k++
 			}
 		}
@@ -136,7 +163,18 @@ func (b *frontBank) gram(en *entry, s *state, m []float64) {
 }
 
 func (b *frontBank) column(en *entry, j, d int, dst []float64) {
-	copy(dst, en.fronts[(dims*j+d)*en.n:(dims*j+d+1)*en.n])
+	f, nb := b.fronts[j], blocks*len(en.live)
+	which := 0
+	if d == 2 {
+		which = 1
+	}
+	for i, s := range en.fronts[(2*j+which)*nb : (2*j+which+1)*nb] {
+		if d == 1 {
+			dst[2*i], dst[2*i+1] = -s*f.north, s*f.east
+		} else {
+			dst[2*i], dst[2*i+1] = s*f.east, s*f.north
+		}
+	}
 }
 
 func (b *frontBank) now(j, d int, dst []float64) {
