@@ -67,7 +67,7 @@ func ids(n int) []string { return strings.Split("abcdefghijkl", "")[:n] }
 // A mast that is turned by 15 degrees or reads 10 % low is named within a day
 // of ordinary wind, with an interval that holds the error; the others are not.
 func TestNamedWithinADay(t *testing.T) {
-	const days = 200
+	const days = 100
 	for _, test := range []struct {
 		name  string
 		fault fault
@@ -124,7 +124,7 @@ func power(rng *rand.Rand, days int, speed, eddies float64, f fault) float64 {
 // a sound mast is named in a year.
 func TestPower(t *testing.T) {
 	rng := rand.New(rand.NewPCG(17, 19))
-	const days = 100
+	const days = 60
 	smallest := func(eddies float64, f func(float64) fault, steps []float64) float64 {
 		for _, s := range steps {
 			if power(rng, days, 5, eddies, f(s)) >= 0.95 {
@@ -144,7 +144,7 @@ func TestPower(t *testing.T) {
 		}
 	}
 	named, hours := 0, 0
-	for range 60 {
+	for range 40 {
 		w := New(ids(8))
 		day(w, rng, 24*6, 5, 0.5, fault{}, func() {
 			for i := range 8 {
