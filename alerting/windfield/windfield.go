@@ -62,6 +62,7 @@ type Estimator struct {
 	normals  []float64      // [Draws][target] fixed standard normal draws
 	order    [Draws]int     // which stored draw each draw uses
 	levels   [Draws]float64 // probability level of each draw's strength
+	scores   [Draws]float64 // the normal score of that level
 	cache    cache
 	memory   ambientMemory
 
@@ -110,6 +111,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	for d := range Draws {
 		e.order[d] = reverseBits(d)
 		e.levels[d] = (float64(reverseBits((37*d+11)%Draws)) + 0.5) / Draws
+		e.scores[d] = math.Sqrt2 * math.Erfinv(2*e.levels[d]-1)
 	}
 	n, most, total := blocks*2*len(masts), 0, 0
 	for _, c := range e.classes {
@@ -343,7 +345,11 @@ func (e *Estimator) draw(en *entry) {
 		row := p.Draws[d*nt : (d+1)*nt]
 		z := e.draws(s)[e.order[d]*nt : (e.order[d]+1)*nt]
 		excess := 0.0
-		if pt.class >= 0 {
+		switch {
+		case pt.class < 0 || pt.class == faultClass: // nothing depends on the strength
+		case st.now > certain*st.spread: // positive without being held so
+			excess = st.spread * e.scores[d]
+		default:
 			excess = positiveNormal(st.now, st.spread, e.levels[d]) - st.now
 		}
 		for t := range row {
@@ -356,6 +362,10 @@ func (e *Estimator) draw(en *entry) {
 		p.Mean[t] /= Draws
 	}
 }
+
+// certain: a strength so many deviations above zero is positive in all but one
+// of 30,000 cases.
+const certain = 4
 
 // shape fills base (posterior mean headwind) and slope (what one more m/s of
 // the pattern's strength adds) for a part, and gives that strength. w and plain
