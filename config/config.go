@@ -47,6 +47,8 @@ type Config struct {
 	MQTT     MQTT
 	History  History
 	Page     Page
+	Webhooks []Webhook
+	CAP      CAP
 }
 
 // Alerts says when an alert opens and closes.
@@ -193,6 +195,8 @@ func read(name string, data []byte, password Secret, override bool) (*Config, Pr
 	cfg.Stations = root.stations(cfg.Analysis, cfg.MQTT)
 	cfg.History = root.history()
 	cfg.Page = root.page()
+	cfg.CAP = root.cap()
+	cfg.Webhooks = root.webhooks(cfg.CAP)
 	root.done()
 	cfg.Airfield = r.geometry(spec, runways, cfg.Stations)
 	r.problems.sort()

@@ -39,7 +39,7 @@ func deployed(t *testing.T, text string) string {
 	}
 	certPEM := pem.EncodeToMemory(&pem.Block{Type: "CERTIFICATE", Bytes: cert})
 	for name, content := range map[string][]byte{
-		"sockline.toml": []byte(text), "broker-password": []byte("invented\n"), "broker-authority.pem": certPEM, "sockline.pem": certPEM,
+		"sockline.toml": []byte(text), "broker-password": []byte("invented\n"), "webhook-secret": []byte("invented-and-long-enough\n"), "broker-authority.pem": certPEM, "sockline.pem": certPEM,
 		"sockline-key.pem": pem.EncodeToMemory(&pem.Block{Type: "PRIVATE KEY", Bytes: private}),
 	} {
 		if err := os.WriteFile(filepath.Join(dir, name), content, 0o600); err != nil {
@@ -49,8 +49,8 @@ func deployed(t *testing.T, text string) string {
 	return filepath.Join(dir, "sockline.toml")
 }
 
-// A commented-out key: #, the key without a blank, =.
-var offKey = regexp.MustCompile(`(?m)^(\s*)#([a-z_]+\s*=)`)
+// A commented-out key: #, the key without a blank, =; or a commented-out table.
+var offKey = regexp.MustCompile(`(?m)^(\s*)#([a-z_]+\s*=|\[\[?[a-z]+\])`)
 
 func TestDeployedExample(t *testing.T) {
 	text := string(mustRead(t, "../deploy/sockline.example.toml"))
@@ -66,6 +66,9 @@ func TestDeployedExample(t *testing.T) {
 	full := mustLoad(t, deployed(t, offKey.ReplaceAllString(text, "$1$2")))
 	if full.Broker.CertFile == "" || full.Broker.KeyFile == "" || full.Broker.CAFile == "" || full.Broker.ClientID == "" {
 		t.Errorf("%+v", full.Broker)
+	}
+	if len(full.Webhooks) != 1 || full.Webhooks[0].Secret.Reveal() != "invented-and-long-enough" || full.CAP.Spool == "" || len(plain.Webhooks) != 0 {
+		t.Errorf("%+v, %+v", full.Webhooks, full.CAP)
 	}
 	if full.Analysis != plain.Analysis || full.MQTT != plain.MQTT || full.Page != plain.Page || full.History.Keep != plain.History.Keep {
 		t.Errorf("%+v\n%+v", full, plain)
@@ -84,7 +87,7 @@ func TestExampleExplainsEveryKey(t *testing.T) {
 	text := offKey.ReplaceAllString(string(mustRead(t, "../deploy/sockline.example.toml")), "$1$2")
 	for _, c := range []struct{ inside, table string }{
 		{"[airfield]", "airfield"}, {"[broker]", "broker"}, {"[mqtt]", "mqtt"}, {"[alerts]", "alerts"}, {"[analysis]", "analysis"},
-		{"[history]", "history"}, {"[page]", "page"}, {"[[runway]]", "runway.0"}, {"[[runway.end]]", "runway.0.end.0"},
+		{"[history]", "history"}, {"[page]", "page"}, {"[cap]", "cap"}, {"[[webhook]]", "webhook.0"}, {"[[runway]]", "runway.0"}, {"[[runway.end]]", "runway.0.end.0"},
 		{"[[station]]", "station.0"}, {"[station.fields]", "station.1.fields"},
 	} {
 		path := deployed(t, strings.Replace(text, c.inside+"\n", c.inside+"\nzzzzzzzzzzzzzzzz = 1\n", 1))

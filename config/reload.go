@@ -32,18 +32,23 @@ func (c *Config) Reloadable(next *Config) Problems {
 	fixed("mqtt.prefix", c.MQTT == next.MQTT || c.Airfield.ID != next.Airfield.ID, next.MQTT.Prefix, "receivers listen under the prefix that the program began with")
 	fixed("history.directory", c.History.Directory == next.History.Directory, next.History.Directory, "the files of the history are open while the program runs")
 	fixed("page.listen", c.Page == next.Page, next.Page.Listen, "the page is served on one address while the program runs")
+	tell := func(key string, same bool) {
+		fixed(key, same, "", "those who are told are known from the start of the program")
+	}
+	tell("cap", c.CAP == next.CAP)
+	tell("webhook", slices.EqualFunc(c.Webhooks, next.Webhooks, Webhook.same))
 	problems.sort()
 	return problems
 }
 
 // ParseRecorded reads a configuration that was in force once, for going
-// through what was recorded under it. What is wrong with its broker, history
-// and page, such as a password file that this machine does not have, is passed
+// through what was recorded under it. What is wrong with its broker, history,
+// page and receivers, such as a password file that this machine does not have, is passed
 // over: nothing is reached by it.
 func ParseRecorded(name string, data []byte) (*Config, Problems) {
 	cfg, problems := read(name, data, "", false)
 	problems = slices.DeleteFunc(problems, func(p Problem) bool {
-		return p.under("broker") || p.under("history") || p.under("page")
+		return p.under("broker") || p.under("history") || p.under("page") || p.under("webhook") || p.under("cap")
 	})
 	if len(problems) > 0 {
 		return nil, problems

@@ -33,6 +33,7 @@ func TestReloadable(t *testing.T) {
 		{"a mast", "54.003174, -19.993126", "54.003184, -19.993126", ""},
 		{"how long readings are kept", `"400 days"`, `"300 days"`, ""},
 		{"the broker", "embedded://127.0.0.1:1883", "mqtt://127.0.0.1:1884", `:30:7: broker.url: the connection to the broker stands while the program runs (got "mqtt://127.0.0.1:1884"); restart the program`},
+		{"who is told", "[page]", "[[webhook]]\nurl = \"https://tower.example/\"\n[page]", `:111:1: webhook: those who are told`},
 		{"the page", "127.0.0.1:7625", "127.0.0.1:7626", `:112:10: page.listen: `},
 		{"the history", "./sockline-data", "./elsewhere", `:108:13: history.directory: `},
 		{"the id", `id        = "skerrymoor"`, `id        = "skerryvale"`, `:5:13: airfield.id: `},
