@@ -215,10 +215,6 @@ func TestLifeOfAStation(t *testing.T) {
 // and a later start goes on with it.
 func TestLearntTablesSurviveARestart(t *testing.T) {
 	cfg := mustLoad(t, booked(t, "./sockline-data", t.TempDir()))
-	var ids []string
-	for _, s := range cfg.Stations {
-		ids = append(ids, s.ID)
-	}
 	dir := t.TempDir()
 	store, err := history.Open(dir, history.Options{Log: zerolog.Nop()})
 	if err != nil {
