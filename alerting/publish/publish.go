@@ -47,6 +47,9 @@ const (
 	// ValueEvery is the spacing of paths and stations; at least every two
 	// seconds is promised.
 	ValueEvery = time.Second
+	// HeartbeatEvery is the spacing of the heartbeat: its absence over two of
+	// them is worth an alarm.
+	HeartbeatEvery = time.Minute
 	// Tick is the spacing of Options.Tick that these figures are made for.
 	Tick = 250 * time.Millisecond
 
@@ -82,8 +85,11 @@ const (
 
 // Issue is one issue of an alert on its way out.
 type Issue struct {
-	AlertID  string
-	Phase    Phase
+	AlertID string
+	Phase   Phase
+	// Topic is the level below the prefix that it goes to; empty for that of
+	// the alert objects. Each topic has its own order and its own newest update.
+	Topic    string
 	Exercise bool
 	// JSON is the alert object; with delayed it says so. It is called on the
 	// sink's goroutine when the issue is sent, perhaps more than once.
@@ -142,8 +148,9 @@ func PathTopic(runway, operation string) string { return "path/" + runway + "/" 
 func StationTopic(id string) string { return "station/" + id }
 
 const (
-	statusTopic = "status"
-	alertTopic  = "alert"
+	statusTopic    = "status"
+	alertTopic     = "alert"
+	heartbeatTopic = "heartbeat"
 )
 
 // errExercise keeps exercise output away from live receivers whatever went
@@ -198,6 +205,13 @@ func (s *Sink) withdraw(topic string, payload []byte) {
 	if s.shelf.withdraw(topic, payload) {
 		s.nudge()
 	}
+}
+
+// SetHeartbeat keeps payload as the heartbeat to send next, every
+// HeartbeatEvery. It is not retained: what counts is that it comes, and an old
+// one must not look like a new one to who has just subscribed.
+func (s *Sink) SetHeartbeat(payload []byte) {
+	s.retain(heartbeatTopic, "", HeartbeatEvery, payload)
 }
 
 // SetStation keeps payload as the health of a station to send next. A changed

@@ -20,6 +20,14 @@ type pending struct {
 	waits  [phases]*queued
 }
 
+// key keeps the issues of an alert apart by their topic.
+func (i *Issue) key() string {
+	if i.Topic == "" {
+		return i.AlertID
+	}
+	return i.Topic + "/" + i.AlertID // no id has a slash
+}
+
 // queued is an issue with the time it was handed over.
 type queued struct {
 	issue  Issue
@@ -33,13 +41,13 @@ func newQueue(maxAlerts int) *queue {
 
 // put adds an issue; it takes the place of one of the same phase.
 func (q *queue) put(i Issue, now time.Time) {
-	p := q.alerts[i.AlertID]
+	p := q.alerts[i.key()]
 	if p == nil {
 		if len(q.order) >= q.max {
 			q.evict()
 		}
-		p = &pending{id: i.AlertID}
-		q.alerts[i.AlertID] = p
+		p = &pending{id: i.key()}
+		q.alerts[i.key()] = p
 		q.order = append(q.order, p)
 	}
 	q.seq++
@@ -103,7 +111,7 @@ func (q *queue) next() *queued {
 
 // sent takes an issue out, unless a newer one has taken its place meanwhile.
 func (q *queue) sent(w *queued) {
-	p := q.alerts[w.issue.AlertID]
+	p := q.alerts[w.issue.key()]
 	if p == nil {
 		return // given up while it was on its way
 	}

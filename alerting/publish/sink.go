@@ -258,7 +258,7 @@ func (s *Sink) drain(stop func() bool) {
 				return
 			}
 		case due:
-			if !s.send(topic, v.payload, v.qos(), true) {
+			if !s.send(topic, v.payload, v.qos(), topic != heartbeatTopic) {
 				return
 			}
 			s.told.Values++
@@ -276,7 +276,11 @@ func (s *Sink) drain(stop func() bool) {
 
 func (s *Sink) sendIssue(w *queued, now time.Time) bool {
 	delayed := now.Sub(w.handed) > LateAfter
-	if !s.send(alertTopic, w.issue.JSON(delayed), qosAlert, false) {
+	topic := w.issue.Topic
+	if topic == "" {
+		topic = alertTopic
+	}
+	if !s.send(topic, w.issue.JSON(delayed), qosAlert, false) {
 		return false
 	}
 	s.told.Issues++
