@@ -62,7 +62,7 @@ type daemonOptions struct {
 
 // daemon is everything that runs. Two of them fit into one process.
 type daemon struct {
-	cfg      *config.Config
+	cfg      atomic.Pointer[config.Config] // in force; changed by the loop alone
 	opts     daemonOptions
 	log      zerolog.Logger
 	instance string
@@ -78,16 +78,18 @@ type daemon struct {
 	input    atomic.Pointer[feed.Subscriber]
 	teardown teardown
 
-	pruning    chan struct{} // holds one while old readings are being deleted
-	subscribed atomic.Bool   // it was, once
-	offsetTold bool          // the clock's offset is in the log
-	listening  chan struct{} // closed at the first subscription
+	pruning    chan struct{}          // holds one while old readings are being deleted
+	subscribed atomic.Bool            // it was, once
+	offsetTold bool                   // the clock's offset is in the log
+	refused    atomic.Pointer[string] // why the last changed configuration is not in force; nil if it is
+	listening  chan struct{}          // closed at the first subscription
 }
 
 // newDaemon makes a daemon and takes the addresses it listens on. It must be
 // run, or closed.
 func newDaemon(cfg *config.Config, o daemonOptions) (*daemon, error) {
-	d := &daemon{cfg: cfg, opts: o, log: o.log, instance: o.instance, board: newBoard(), listening: make(chan struct{}), pruning: make(chan struct{}, 1)}
+	d := &daemon{opts: o, log: o.log, instance: o.instance, board: newBoard(), listening: make(chan struct{}), pruning: make(chan struct{}, 1)}
+	d.cfg.Store(cfg)
 	if d.opts.notify == nil {
 		d.opts.notify = &notifier{}
 	}
@@ -104,7 +106,8 @@ func (d *daemon) prepare() (err error) {
 			return err
 		}
 	}
-	if d.loop, err = newLoop(d.cfg, d.opts.exercise, d.log); err != nil {
+	cfg := d.current()
+	if d.loop, err = newLoop(cfg, d.opts.exercise, d.log); err != nil {
 		return err
 	}
 	if err = d.listen(); err != nil {
@@ -113,17 +116,21 @@ func (d *daemon) prepare() (err error) {
 	if err = d.reachBroker(); err != nil {
 		return err
 	}
-	d.archive = newArchive(d.cfg.History.Directory, history.Options{Keep: d.cfg.History.Keep, Log: d.log}, d.release)
+	d.archive = newArchive(cfg.History.Directory, history.Options{Keep: cfg.History.Keep, Log: d.log}, d.release)
 	if d.output, err = newOutward(d); err != nil {
 		return err
 	}
-	d.metrics = newMetrics(d.cfg, sources{
+	d.metrics = newMetrics(cfg, sources{
 		history: d.archive.health, input: d.inputState, dropped: d.droppedMessages,
 		output: d.output.sink.State, open: d.board.openCount, offset: d.opts.clock.Offset,
 	})
 	d.loop.archive, d.loop.metrics, d.loop.show, d.loop.control = d.archive, d.metrics, d.show, d.opts.control
+	d.loop.changed = d.follow
 	return d.openCapture()
 }
+
+// current is the configuration in force.
+func (d *daemon) current() *config.Config { return d.cfg.Load() }
 
 // newInstance is a name that no other run has: host and chance.
 func newInstance() (string, error) {
@@ -141,7 +148,7 @@ func newInstance() (string, error) {
 
 // listen takes the page's address.
 func (d *daemon) listen() error {
-	address := d.cfg.Page.Listen
+	address := d.current().Page.Listen
 	l, err := net.Listen("tcp", address)
 	if errors.Is(err, syscall.EADDRINUSE) && d.opts.anyPort {
 		l, err = net.Listen("tcp", "127.0.0.1:0")
@@ -157,11 +164,11 @@ func (d *daemon) listen() error {
 
 // reachBroker says where the broker is, and starts the built-in one.
 func (d *daemon) reachBroker() error {
-	d.broker = brokerOf(d.cfg)
-	if !d.cfg.Broker.Embedded {
+	d.broker = brokerOf(d.current())
+	if !d.current().Broker.Embedded {
 		return nil
 	}
-	b, err := feed.StartBroker(d.cfg.Broker.Address, feed.BrokerOptions{Log: d.log})
+	b, err := feed.StartBroker(d.current().Broker.Address, feed.BrokerOptions{Log: d.log})
 	if err != nil {
 		return err
 	}
@@ -179,7 +186,7 @@ func (d *daemon) openCapture() error {
 	if d.opts.capture == "" {
 		return nil
 	}
-	c, err := startCapture(d.opts.capture, d.cfg.Airfield.ID, d.log)
+	c, err := startCapture(d.opts.capture, d.current().Airfield.ID, d.log)
 	if err != nil {
 		return err
 	}
@@ -235,7 +242,7 @@ func (d *daemon) start(ctx context.Context) error {
 // says so, and alerts go on.
 func (d *daemon) servePage(ctx context.Context) error {
 	p, err := page.New(page.Options{
-		Airfield: d.cfg.Airfield.Name, Listen: d.listener.Addr().String(), Exercise: d.opts.exercise,
+		Airfield: d.current().Airfield.Name, Listen: d.listener.Addr().String(), Exercise: d.opts.exercise,
 		View: d.board.view.Load, History: d.archive, Registry: d.metrics.registry,
 		Ready: d.notReady, Now: time.Now, Log: d.log,
 	})
@@ -274,8 +281,12 @@ func (d *daemon) openHistory(ctx context.Context) {
 		}
 	}
 	d.archive.record(history.Entry{Kind: history.KindSoftware, At: now, Payload: []byte(softwareText())})
-	d.archive.record(history.Entry{Kind: history.KindConfiguration, At: now, Payload: d.cfg.Source})
+	// With the first step that it judges: what an earlier run judged later than
+	// this start would count from is done.
+	first := max(d.loop.engine.LastStep(), takenUp(now, d.loop.engine.Lateness())) + sensors.Second
+	d.archive.record(history.Entry{Kind: history.KindConfiguration, At: first, Payload: d.current().Source})
 	d.archive.record(history.Entry{Kind: history.KindStart, At: now, Payload: []byte(d.instance)})
+	d.archive.opened = d.recordLate
 	ctx, cancel := context.WithCancel(ctx)
 	done := make(chan struct{})
 	go func() {
@@ -292,16 +303,12 @@ func (d *daemon) openHistory(ctx context.Context) {
 
 // startLoop subscribes and begins to evaluate.
 func (d *daemon) startLoop(ctx context.Context) error {
-	topics := topicsOf(d.cfg.Stations)
-	if d.opts.control != "" {
-		topics = append(topics, d.opts.control)
-	}
 	s, err := feed.Subscribe(ctx, feed.SubscribeOptions{
-		Broker: d.broker, ClientID: d.clientID("in"), Topics: topics, Clock: d.opts.clock, Log: d.log,
+		Broker: d.broker, ClientID: d.clientID("in"), Topics: d.topics(), Clock: d.opts.clock, Log: d.log,
 		OnState: func(_, subscribed bool) {
 			if subscribed && !d.subscribed.Swap(true) {
 				close(d.listening)
-				d.opts.notify.say("READY=1", "STATUS=observing "+d.cfg.Airfield.Name)
+				d.opts.notify.say("READY=1", "STATUS=observing "+d.current().Airfield.Name)
 			}
 		},
 	})
@@ -326,7 +333,7 @@ func (d *daemon) startLoop(ctx context.Context) error {
 
 // clientID is the name of one of the two connections.
 func (d *daemon) clientID(direction string) string {
-	name := d.cfg.Broker.ClientID
+	name := d.current().Broker.ClientID
 	if name == "" {
 		name = "sockline"
 	}

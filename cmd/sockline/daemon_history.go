@@ -25,6 +25,7 @@ type archive struct {
 	opts    history.Options
 	log     zerolog.Logger
 	release func(wording.Notice) // marked as recorded or not; from one goroutine at a time
+	opened  func()               // called when it could be opened at last
 
 	mu      sync.Mutex
 	store   *history.Store // nil while not open
@@ -43,12 +44,15 @@ type issueKey struct {
 }
 
 func newArchive(dir string, opts history.Options, release func(wording.Notice)) *archive {
-	return &archive{dir: dir, opts: opts, log: opts.Log, release: release, waiting: make(map[issueKey]wording.Notice)}
+	return &archive{dir: dir, opts: opts, log: opts.Log, release: release, opened: func() {}, waiting: make(map[issueKey]wording.Notice)}
 }
 
 // open tries to open the history; its error is also kept for health.
 func (a *archive) open() error {
-	store, err := history.Open(a.dir, a.opts)
+	a.mu.Lock()
+	opts := a.opts
+	a.mu.Unlock()
+	store, err := history.Open(a.dir, opts)
 	var writer *history.Writer
 	if err == nil {
 		if writer, err = store.Writer(history.WriterOptions{Release: a.released}); err != nil {
@@ -83,8 +87,8 @@ func (a *archive) keepTrying(ctx context.Context) {
 			return
 		case <-tick.C:
 		}
-		if !a.isOpen() {
-			_ = a.open() // kept for health
+		if !a.isOpen() && a.open() == nil { // why not is kept for health
+			a.opened()
 		}
 	}
 }

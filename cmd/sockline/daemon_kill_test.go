@@ -27,7 +27,16 @@ import (
 // daemon: "<configuration> <begun, ns> <base, ns> <factor>".
 const childDaemon = "SOCKLINE_TEST_DAEMON"
 
+// childCommand is the one that makes it the program: its words.
+const childCommand = "SOCKLINE_TEST_COMMAND"
+
 func TestMain(m *testing.M) {
+	if words := os.Getenv(childCommand); words != "" {
+		ctx, stop := signal.NotifyContext(context.Background(), syscall.SIGTERM)
+		code := run(ctx, strings.Fields(words), os.Stdin, os.Stdout, os.Stderr)
+		stop()
+		os.Exit(code)
+	}
 	if spec := os.Getenv(childDaemon); spec != "" {
 		if err := serveAsChild(spec); err != nil {
 			fmt.Fprintln(os.Stderr, err)

@@ -43,7 +43,7 @@ func (o *outward) Connected() bool {
 }
 
 func (d *daemon) prefix() string {
-	return publish.Prefix(d.cfg.MQTT.Prefix, d.cfg.Airfield.ID, d.opts.exercise)
+	return publish.Prefix(d.current().MQTT.Prefix, d.current().Airfield.ID, d.opts.exercise)
 }
 
 func newOutward(d *daemon) (*outward, error) {
@@ -91,7 +91,7 @@ func (o *outward) start(ctx context.Context, d *daemon) error {
 func (d *daemon) nothingObserved() []publish.Retained {
 	now := eventNow()
 	var all []publish.Retained
-	for i, p := range d.cfg.Airfield.Paths {
+	for i, p := range d.current().Airfield.Paths {
 		v := wording.PathView{
 			Path: p, State: alerting.NotObserved, Exercise: d.opts.exercise,
 			Assessment: hazard.Assessment{Path: i, Reason: "the program has just started or has ended"},
@@ -106,8 +106,8 @@ func (d *daemon) nothingObserved() []publish.Retained {
 func (d *daemon) noContact(why string) []byte {
 	now := eventNow()
 	s := wording.Status{
-		Airfield: d.cfg.Airfield.ID, Instance: d.instance, Version: version, Condition: alerting.NoContact,
-		At: now, ValidUntil: now.Add(validFor), Total: len(d.cfg.Stations), Remarks: []string{why}, Exercise: d.opts.exercise,
+		Airfield: d.current().Airfield.ID, Instance: d.instance, Version: version, Condition: alerting.NoContact,
+		At: now, ValidUntil: now.Add(validFor), Total: len(d.current().Stations), Remarks: []string{why}, Exercise: d.opts.exercise,
 	}
 	return s.JSON()
 }
@@ -117,6 +117,7 @@ func (d *daemon) noContact(why string) []byte {
 func (d *daemon) show(rep *report) {
 	status := d.status(rep)
 	v := viewOf(rep, status, time.Now())
+	v.Airfield = d.current().Airfield.Name
 	d.board.show(v)
 	sink := d.output.sink
 	for i := range rep.Paths {
@@ -136,7 +137,7 @@ func (d *daemon) show(rep *report) {
 func (d *daemon) status(rep *report) *wording.Status {
 	in, h, off := d.inputState(), d.archive.health(), d.opts.clock.Offset()
 	s := &wording.Status{
-		Airfield: d.cfg.Airfield.ID, Instance: d.instance, Version: version, Condition: rep.Condition,
+		Airfield: d.current().Airfield.ID, Instance: d.instance, Version: version, Condition: rep.Condition,
 		At: rep.At, ValidUntil: rep.At.Add(validFor), Live: rep.Live, Total: len(rep.Stations),
 		Connected: in.Connected, Subscribed: in.Subscribed, ClockOffset: off.Seconds(),
 		Exercise: d.opts.exercise,
@@ -167,6 +168,9 @@ func (d *daemon) status(rep *report) *wording.Status {
 	}
 	if shared := rep.SharedClock; shared != 0 {
 		remark("The clocks of the stations agree, and differ from that of this host by " + shared.Abs().String() + "; that is taken out.")
+	}
+	if r := d.refused.Load(); r != nil {
+		remark(strings.ToUpper((*r)[:1]) + (*r)[1:] + ".")
 	}
 	if len(h.Damage) > 0 {
 		remark("Parts of the history were found damaged; the log says which.")

@@ -265,8 +265,13 @@ func until(tb testing.TB, what string, ok func() bool) {
 // get asks the page of a daemon.
 func (s started) get(tb testing.TB, path string) (code int, body string) {
 	tb.Helper()
+	return fetch(tb, s.pageURL()+path)
+}
+
+func fetch(tb testing.TB, url string) (code int, body string) {
+	tb.Helper()
 	client := http.Client{Timeout: 5 * time.Second, Transport: &http.Transport{DisableKeepAlives: true}}
-	answer, err := client.Get(s.pageURL() + path)
+	answer, err := client.Get(url)
 	if err != nil {
 		tb.Fatal(err)
 	}

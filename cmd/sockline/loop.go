@@ -37,10 +37,13 @@ type loop struct {
 	metrics  *metrics
 	capture  *capturer // nil for none
 	show     func(*report)
+	changes  chan change
+	changed  func(before, now *config.Config)
 
-	held  []lifecycle.Transition // of the start, to go out with the first step
-	last  sensors.Instant        // stamp of the last message or tick
-	steps atomic.Uint64
+	held    []lifecycle.Transition // of the start or a change, to go out with the next step
+	entries []history.Entry        // for the journal, with the next step
+	last    sensors.Instant        // stamp of the last message or tick
+	steps   atomic.Uint64
 }
 
 func newLoop(cfg *config.Config, exercise bool, log zerolog.Logger) (*loop, error) {
@@ -51,6 +54,7 @@ func newLoop(cfg *config.Config, exercise bool, log zerolog.Logger) (*loop, erro
 	l := &loop{
 		cfg: cfg, engine: e, words: wordingContext(cfg, exercise), reporter: newReporter(cfg, exercise),
 		exercise: exercise, log: log, patience: newThrottle(time.Minute),
+		changes: make(chan change),
 	}
 	for _, s := range cfg.Stations {
 		l.ids = append(l.ids, s.ID)
@@ -64,6 +68,8 @@ func (l *loop) run(stop <-chan struct{}) {
 		select {
 		case m := <-l.messages:
 			l.take(m)
+		case c := <-l.open():
+			l.put(c)
 		case <-stop:
 			for {
 				select {
@@ -129,7 +135,8 @@ func (l *loop) step(t sensors.Instant) {
 		transitions = append(l.held, transitions...)
 		l.held = nil
 	}
-	batch := history.Batch{Step: t, Stations: l.ids, Readings: res.Readings}
+	batch := history.Batch{Step: t, Stations: l.ids, Readings: res.Readings, Entries: l.entries}
+	l.entries = nil
 	for _, r := range res.Refused {
 		batch.Late = append(batch.Late, history.LateReading{Reading: r.Reading, Reason: string(r.Reason)})
 	}

@@ -2,6 +2,7 @@ package main
 
 import (
 	"runtime"
+	"slices"
 	"time"
 
 	"github.com/prometheus/client_golang/prometheus"
@@ -12,6 +13,7 @@ import (
 	"sockline/alerting/lifecycle"
 	"sockline/alerting/publish"
 	"sockline/config"
+	"sockline/sensors"
 	"sockline/sensors/decode"
 	"sockline/sensors/feed"
 	"sockline/sensors/quality"
@@ -31,6 +33,7 @@ type metrics struct {
 	live, observed, condition                       *prometheus.GaugeVec
 	opened                                          *prometheus.CounterVec
 
+	health   stationGauges
 	stations []stationMetrics
 
 	ids   []string
@@ -94,7 +97,7 @@ func rejections(c *engine.Counts, station int) (n uint64) {
 }
 
 func newMetrics(cfg *config.Config, from sources) *metrics {
-	m := &metrics{registry: prometheus.NewRegistry(), seen: make([]seenCounts, len(cfg.Stations))}
+	m := &metrics{registry: prometheus.NewRegistry()}
 	station := []string{"station"}
 	path := []string{"runway", "operation"}
 	m.messages = m.counters("messages_total", "Messages received on the topic of a station.", station)
@@ -102,7 +105,7 @@ func newMetrics(cfg *config.Config, from sources) *metrics {
 	m.suspect = m.counters("suspect_readings_total", "Evaluated readings that look odd.", station)
 	m.repeated = m.counters("repeated_readings_total", "Readings that were there already.", station)
 	m.rejected = m.counters("rejected_readings_total", "Readings, or parts of payloads, that were kept out.", []string{"station", "reason"})
-	gauges := newStationGauges(m)
+	m.health = newStationGauges(m)
 	m.live = m.gauges("station_live", "Whether the station serves ground now (1) or not (0).", station)
 	m.observed = m.gauges("path_observed_meters", "Length of the observed ground of a path.", path)
 	m.opened = m.counters("alerts_opened_total", "Alerts that opened at, or rose to, a level.", []string{"runway", "operation", "kind", "level"})
@@ -115,14 +118,34 @@ func newMetrics(cfg *config.Config, from sources) *metrics {
 		Buckets: []float64{0.0005, 0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1},
 	})
 	m.registry.MustRegister(m.lastStep, m.duration)
-	for i, s := range cfg.Stations {
-		m.ids = append(m.ids, s.ID)
-		m.seen[i].rejected = make(map[string]uint64)
+	m.follow(cfg)
+	for _, c := range conditions() {
+		m.condition.WithLabelValues(string(c))
+	}
+	m.sample(from)
+	return m
+}
+
+// follow makes the series those of a configuration. What is not in it any more
+// goes; what still is counts on.
+func (m *metrics) follow(cfg *config.Config) {
+	m.forget(cfg)
+	seen := make(map[string]seenCounts, len(m.ids))
+	for i, id := range m.ids {
+		seen[id] = m.seen[i]
+	}
+	m.ids, m.seen, m.stations, m.paths = nil, nil, nil, nil
+	for _, s := range cfg.Stations {
+		before, ok := seen[s.ID]
+		if !ok {
+			before.rejected = make(map[string]uint64)
+		}
+		m.ids, m.seen = append(m.ids, s.ID), append(m.seen, before)
 		for _, v := range []*prometheus.CounterVec{m.messages, m.readings, m.suspect, m.repeated} {
 			v.WithLabelValues(s.ID)
 		}
 		m.live.WithLabelValues(s.ID)
-		m.stations = append(m.stations, gauges.of(s.ID))
+		m.stations = append(m.stations, m.health.of(s.ID))
 		for _, g := range []string{unreadable, inconsistent, noValue} {
 			m.rejected.WithLabelValues(s.ID, g)
 		}
@@ -141,11 +164,28 @@ func newMetrics(cfg *config.Config, from sources) *metrics {
 			}
 		}
 	}
-	for _, c := range conditions() {
-		m.condition.WithLabelValues(string(c))
+}
+
+// forget deletes the series of stations and paths that a configuration does
+// not have.
+func (m *metrics) forget(cfg *config.Config) {
+	for _, id := range m.ids {
+		if !slices.ContainsFunc(cfg.Stations, func(s sensors.Station) bool { return s.ID == id }) {
+			labels := prometheus.Labels{"station": id}
+			for _, v := range []*prometheus.CounterVec{m.messages, m.readings, m.suspect, m.repeated, m.rejected} {
+				v.DeletePartialMatch(labels)
+			}
+			m.live.DeletePartialMatch(labels)
+			m.health.forget(labels)
+		}
 	}
-	m.sample(from)
-	return m
+	for _, path := range m.paths {
+		if _, ok := cfg.Airfield.Path(path[0], path[1]); !ok {
+			labels := prometheus.Labels{"runway": path[0], "operation": path[1]}
+			m.observed.DeletePartialMatch(labels)
+			m.opened.DeletePartialMatch(labels)
+		}
+	}
 }
 
 // conditions are those that a living daemon can be in.

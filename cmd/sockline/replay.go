@@ -31,7 +31,7 @@ func replayCommand() command {
 				if err := spanError(*from, *to); err != nil {
 					return err
 				}
-				c, err := loadConfig(*cfg)
+				c, err := replayedConfig(*cfg, *directory)
 				if err != nil {
 					return err
 				}
@@ -48,6 +48,15 @@ func replayCommand() command {
 			}
 		},
 	}
+}
+
+// replayedConfig is the configuration at path; a history has its own, if none
+// is given.
+func replayedConfig(path, directory string) (*config.Config, error) {
+	if path == "" && directory != "" {
+		return lastRecorded(directory)
+	}
+	return loadConfig(path)
 }
 
 // silentRun is how much silence is stepped through before the rest of it is
@@ -69,8 +78,9 @@ type replayer struct {
 	bar      *progress
 	share    func() float64 // how far the source has been read
 
-	heard    sensors.Instant // the last step with readings, or the first one
-	muted    bool            // the daemon was down: nothing was issued
+	heard    sensors.Instant        // the last step with readings, or the first one
+	muted    bool                   // the daemon was down: nothing was issued
+	held     []lifecycle.Transition // of a change, to go out with the next step
 	began    time.Time
 	steps    int
 	readings uint64
@@ -144,7 +154,9 @@ func (r *replayer) step(t sensors.Instant) error {
 	if len(result.Readings) > 0 {
 		r.heard = t
 	}
-	return r.print(t, result.Transitions)
+	all := append(r.held, result.Transitions...)
+	r.held = nil
+	return r.print(t, all)
 }
 
 // print prints the issues of a step.

@@ -20,17 +20,12 @@ const restoreLead = 5 * time.Second
 // the alerts that were open two hours before it, and runs from there silently;
 // the stages before the alerts have had two hours more by then.
 func (r *replayer) history(dir string) error {
-	store, err := history.ReadOnly(dir)
+	store, err := openForReplay(dir)
 	if err != nil {
-		if errors.Is(err, history.ErrInUse) {
-			return fmt.Errorf("%w; to replay while the daemon runs, give a copy of the directory", err)
-		}
 		return err
 	}
-	h := &historyReplay{replayer: r, ids: make([]string, len(r.cfg.Stations))}
-	for i, s := range r.cfg.Stations {
-		h.ids[i] = s.ID
-	}
+	h := &historyReplay{replayer: r}
+	h.use(r.cfg)
 	begin, end := sensors.Instant(0), r.to
 	if end == 0 {
 		last, ok, err := store.LastStep()
@@ -53,6 +48,11 @@ func (r *replayer) history(dir string) error {
 	if h.starts, err = startsOf(store); err != nil {
 		return fmt.Errorf("replay the history: %w", err)
 	}
+	all, err := configurationsOf(store)
+	if err != nil {
+		return fmt.Errorf("replay the history: %w", err)
+	}
+	h.follow(all)
 	r.share = func() float64 {
 		return float64(r.engine.LastStep()-h.first) / float64(max(end-h.first, 1))
 	}
@@ -64,6 +64,14 @@ func (r *replayer) history(dir string) error {
 		r.note("%d steps are not in the history though the daemon ran: they count as without readings", h.gaps)
 	}
 	return errors.Join(err, store.Close())
+}
+
+func openForReplay(dir string) (*history.Store, error) {
+	store, err := history.ReadOnly(dir)
+	if errors.Is(err, history.ErrInUse) {
+		return nil, fmt.Errorf("%w; to replay while the daemon runs, give a copy of the directory", err)
+	}
+	return store, err
 }
 
 // startsOf lists when the daemon was started, ascending.
@@ -84,6 +92,7 @@ type historyReplay struct {
 	ids    []string          // of the configured stations
 	first  sensors.Instant   // the first step
 	starts []sensors.Instant // of the daemon
+	plan   []inForce         // configurations to come, in their order
 	open   []lifecycle.Alert // to be restored
 	asOf   sensors.Instant   // as they were then; 0 once done, or for nothing to restore
 	gaps   int               // steps that are not stored though no start explains it
@@ -99,6 +108,9 @@ func (h *historyReplay) stored(st history.Step) error {
 			last = min(last, h.asOf.Add(-restoreLead)-sensors.Second)
 		}
 		h.first = last
+		if _, err := h.turn(last + sensors.Second); err != nil {
+			return err
+		}
 		if err := h.engine.SkipTo(last); err != nil {
 			return err
 		}
@@ -111,6 +123,9 @@ func (h *historyReplay) stored(st history.Step) error {
 		h.gaps += int((st.At-last)/sensors.Second) - 1
 	}
 	if err := h.silence(st.At); err != nil {
+		return err
+	}
+	if err := h.change(st.At); err != nil {
 		return err
 	}
 	for _, reading := range st.For(h.ids) {
@@ -135,8 +150,19 @@ func (h *historyReplay) silence(at sensors.Instant) error {
 	return nil
 }
 
+// change puts in force what is due at the step t; what it closes is told with
+// that step.
+func (h *historyReplay) change(t sensors.Instant) error {
+	closed, err := h.turn(t)
+	h.held = append(h.held, closed...)
+	return err
+}
+
 // next closes one step, and restores the alerts of the journal when it is time.
 func (h *historyReplay) next(t sensors.Instant) error {
+	if err := h.change(t); err != nil {
+		return err
+	}
 	if h.asOf != 0 && t >= h.asOf.Add(-restoreLead) {
 		h.engine.Restore(h.open, h.asOf)
 		h.asOf, h.open = 0, nil
@@ -172,6 +198,11 @@ func (h *historyReplay) restart(asOf, at sensors.Instant) error {
 	err := h.silence(min(asOf+sensors.Second, at))
 	h.muted = false
 	if err != nil {
+		return err
+	}
+	// The daemon took the alerts up by the configuration it was started with.
+	// What that withdraws is among the closings of Restore.
+	if _, err := h.turn(asOf + sensors.Second); err != nil {
 		return err
 	}
 	return h.print(asOf, h.engine.Restore(open, asOf))

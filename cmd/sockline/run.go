@@ -4,8 +4,6 @@ import (
 	"context"
 	"flag"
 	"os"
-	"os/signal"
-	"syscall"
 
 	"github.com/rs/zerolog"
 
@@ -38,8 +36,8 @@ func runDaemon(ctx context.Context, p *program, path, capture string, exercise b
 	}
 	defer notify.close()
 	log := zerolog.New(p.stderr).Level(zerolog.InfoLevel).With().Timestamp().Logger()
-	stop := refuseReload(log)
-	defer stop()
+	hups, deaf := hangups()
+	defer deaf()
 	d, err := newDaemon(cfg, daemonOptions{
 		exercise: exercise, capture: capture, clock: feed.NewClock(), log: log, notify: notify,
 	})
@@ -48,28 +46,9 @@ func runDaemon(ctx context.Context, p *program, path, capture string, exercise b
 	}
 	log.Info().Str("version", version).Str("instance", d.instance).Str("airfield", cfg.Airfield.ID).
 		Str("configuration", cfg.File).Bool("exercise", exercise).Msg("sockline starts")
+	stop := d.reloadOnHangup(path, hups)
 	err = d.Run(ctx)
+	stop()
 	log.Info().Msg("sockline has stopped")
 	return err
-}
-
-// refuseReload answers SIGHUP, which by default would end the program, with a
-// line in the log: a changed configuration needs a restart.
-func refuseReload(log zerolog.Logger) (stop func()) {
-	hups, done := make(chan os.Signal, 1), make(chan struct{})
-	signal.Notify(hups, syscall.SIGHUP)
-	go func() {
-		for {
-			select {
-			case <-hups:
-				log.Warn().Msg("SIGHUP: the configuration is not read again while the program runs; restart it to put a changed file in force. Open alerts go on over a restart")
-			case <-done:
-				return
-			}
-		}
-	}()
-	return func() {
-		signal.Stop(hups)
-		close(done)
-	}
 }

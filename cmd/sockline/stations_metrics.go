@@ -40,6 +40,13 @@ func (g stationGauges) of(id string) stationMetrics {
 	return s
 }
 
+// forget deletes the series with these labels.
+func (g stationGauges) forget(labels prometheus.Labels) {
+	for _, v := range []*prometheus.GaugeVec{g.age, g.ahead, g.turned, g.ratio, g.named, g.maintained} {
+		v.DeletePartialMatch(labels)
+	}
+}
+
 func (s *stationMetrics) set(h *stationHealth) {
 	s.age.Set(known(h.AgeS))
 	s.ahead.Set(known(h.Clock.AheadS))
