@@ -7,6 +7,7 @@ import (
 	"time"
 
 	"sockline/sensors"
+	"sockline/sensors/quality"
 	"sockline/sensors/quantity"
 )
 
@@ -350,8 +351,14 @@ func TestAskingChangesNothing(t *testing.T) {
 func BenchmarkWind(b *testing.B) {
 	st := station(time.Second)
 	r := NewRecorder([]sensors.Station{st}, NewLayout(30*time.Second))
+	c := quality.NewChecker(st)
+	at := epoch
+	for k := range memory {
+		at = epoch + sensors.Instant(k)*sensors.Second
+		r.Add(c.Check(sensors.Reading{Time: at, Arrival: at, Speed: 6 + 0.1*float64(k%9), From: 200 + float64(k%37)}))
+	}
 	for b.Loop() {
-		r.Wind(0, epoch)
+		r.Wind(0, at)
 	}
 }
 
