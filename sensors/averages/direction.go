@@ -47,11 +47,14 @@ func arc(directions []float64) (from, to, width float64) {
 }
 
 // turn is the angle from one direction to another, the shorter way: positive
-// clockwise (the wind veers), in (-180, 180].
+// clockwise (the wind veers), in (-180, 180]. Both are within [0, 360).
 func turn(from, to float64) float64 {
-	d := quantity.NormalizeDegrees(to - from)
-	if d > 180 {
+	d := to - from
+	for d > 180 {
 		d -= 360
+	}
+	for d <= -180 {
+		d += 360
 	}
 	return d
 }

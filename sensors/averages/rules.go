@@ -141,46 +141,56 @@ func (s *series) compare(before, beforeLength, after, afterLength int) (c compar
 	return c, true
 }
 
+// shiftMeans is how many two-minute means a wind shift is looked for in.
+const shiftMeans = shiftWithin / shiftGrain
+
 // shift is the greatest wind shift after FMH-1: the direction of the two-minute
 // mean changes by 45 degrees or more in less than 15 minutes, with 10 kt or
 // more throughout. Nil if there is none.
 func (s *series) shift() *Change {
-	var best Change
-	for end := 0; end < shiftWithin; end += shiftGrain {
-		if !s.sustained(end) {
-			continue
+	var from [shiftMeans]float64
+	var strong [shiftMeans]bool
+	for i := range shiftMeans {
+		v, speed, ok := s.mean(i*shiftGrain, localSpan)
+		strong[i] = ok && speed >= shiftSpeed
+		if strong[i] {
+			from[i] = v.From()
 		}
-		for begin := end + shiftGrain; begin < shiftWithin && s.sustained(begin); begin += shiftGrain {
-			c, ok := s.compare(begin, localSpan, end, localSpan)
-			if ok && math.Abs(c.Turn) >= shiftTurn && math.Abs(c.Turn) > math.Abs(best.Turn) {
-				best = c.Change
+	}
+	best, begin, end := 0.0, 0, 0
+	for e := range shiftMeans {
+		for b := e + 1; strong[e] && b < shiftMeans && strong[b]; b++ {
+			if d := math.Abs(turn(from[b], from[e])); d >= shiftTurn && d > best {
+				best, begin, end = d, b, e
 			}
 		}
 	}
-	return best.orNil()
-}
-
-// sustained says whether the two-minute mean at an age is strong enough for a
-// wind shift.
-func (s *series) sustained(age int) bool {
-	_, speed, ok := s.mean(age, localSpan)
-	return ok && speed >= shiftSpeed
+	if best == 0 {
+		return nil
+	}
+	c, _ := s.compare(begin*shiftGrain, localSpan, end*shiftGrain, localSpan)
+	return c.Change.orNil()
 }
 
 // squall is the greatest one of the last ten minutes after FMH-1: within half a
 // minute the one-minute mean rises by 16 kt or more, to 22 kt or more. Nil if
 // there is none.
 func (s *series) squall() *Change {
-	var best Change
+	best, before, after := 0.0, 0, 0
 	for age := squallSpan; age+squallSpan <= reportSpan; age++ {
-		for gap := 0; gap <= min(squallWithin, age-squallSpan); gap += shiftGrain {
-			c, ok := s.compare(age, squallSpan, age-squallSpan-gap, squallSpan)
-			if ok && c.Rise >= squallRise && c.speedAfter >= squallSpeed && c.Rise > best.Rise {
-				best = c.Change
+		_, low, ok := s.mean(age, squallSpan)
+		for gap := 0; ok && gap <= min(squallWithin, age-squallSpan); gap += shiftGrain {
+			_, high, there := s.mean(age-squallSpan-gap, squallSpan)
+			if rise := high - low; there && rise >= squallRise && high >= squallSpeed && rise > best {
+				best, before, after = rise, age, age-squallSpan-gap
 			}
 		}
 	}
-	return best.orNil()
+	if best == 0 {
+		return nil
+	}
+	c, _ := s.compare(before, squallSpan, after, squallSpan)
+	return c.Change.orNil()
 }
 
 // orNil is a copy of the change, nil if there is none.
