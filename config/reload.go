@@ -29,7 +29,8 @@ func (c *Config) Reloadable(next *Config) Problems {
 	fixed("broker.key_file", a.KeyFile == b.KeyFile, b.KeyFile, broker)
 	fixed("broker.client_id", a.ClientID == b.ClientID, b.ClientID, broker)
 	fixed("airfield.id", c.Airfield.ID == next.Airfield.ID, next.Airfield.ID, "alerts and topics are named after it while the program runs")
-	fixed("mqtt.prefix", c.MQTT == next.MQTT || c.Airfield.ID != next.Airfield.ID, next.MQTT.Prefix, "receivers listen under the prefix that the program began with")
+	prefix := c.MQTT.Prefix == next.MQTT.Prefix || c.Airfield.ID != next.Airfield.ID
+	fixed("mqtt.prefix", prefix, next.MQTT.Prefix, "receivers listen under the prefix that the program began with")
 	fixed("history.directory", c.History.Directory == next.History.Directory, next.History.Directory, "the files of the history are open while the program runs")
 	fixed("page.listen", c.Page == next.Page, next.Page.Listen, "the page is served on one address while the program runs")
 	tell := func(key string, same bool) {

@@ -97,9 +97,11 @@ func TestReload(t *testing.T) {
 		t.Error("the metrics do not follow the masts")
 	}
 
-	// Other names for the runway take every path away and bring as many.
+	// Other names for the runway take every path away and bring as many; a mast
+	// is moved, and the one that was taken away comes back.
 	before = heard.count()
-	amend(t, path, `designator = "07"`, `designator = "06"`, `designator = "25"`, `designator = "24"`, `"Skerry Moor"`, `"Skerry Moor North"`)
+	amend(t, path, `designator = "07"`, `designator = "06"`, `designator = "25"`, `designator = "24"`, `"Skerry Moor"`, `"Skerry Moor North"`,
+		"54.003174, -19.993126", "54.003184, -19.993126", "[alerts]\n", farMast+"[alerts]\n")
 	if _, err := d.reload(t.Context(), path); err != nil {
 		t.Fatal(err)
 	}
@@ -111,6 +113,7 @@ func TestReload(t *testing.T) {
 	until(t, "the topics to follow", func() bool {
 		return heard.topic("path/07/landing") == "" && strings.Contains(heard.topic("path/06/landing"), `"state":"raised"`)
 	})
+	until(t, "the mast that came back to be live", func() bool { return strings.Contains(heard.topic("station/far25"), `"state":"live"`) })
 	if _, body := d.get(t, ""); !strings.Contains(body, "Skerry Moor North") {
 		t.Error("the page does not bear the new name")
 	}
