@@ -39,8 +39,9 @@ type Prior struct {
 	FrontSpacing  float64   // between the places tried, m
 	FrontWidths   []float64 // half widths of the change, m: a sharp front and a slow rise
 
-	FaultShare     float64 // prior probability that one of the masts is wrong
-	FaultDeviation float64 // standard deviation of its error, one component, m/s
+	FaultShare      float64 // prior probability that one of the masts is wrong ...
+	FaultShareLater float64 // ... and once it has stood alone for a quarter of an hour
+	FaultDeviation  float64 // standard deviation of its error, one component, m/s
 
 	LeastStateShare float64 // no ambient state is ever believed less than this before a step
 }
@@ -74,7 +75,8 @@ func DefaultPrior() Prior {
 		FrontSpeeds:     []float64{6, 13},
 		FrontSpacing:    400,
 		FrontWidths:     []float64{300, 1000},
-		FaultShare:      0.005,
+		FaultShare:      0.00003,
+		FaultShareLater: 0.03,
 		FaultDeviation:  8,
 		LeastStateShare: 0.01,
 	}

@@ -50,21 +50,23 @@ type Posterior struct {
 // Estimator holds the gains and the little state that persists: the evidence
 // for the ambient states over the last minutes. Not safe for concurrent use.
 type Estimator struct {
-	prior    Prior
-	masts    []Mast
-	targets  []Target
-	layout   averages.Layout
-	fields   []Field // the ambient states of the prior, then its disturbed ones
-	ages     [blocks]float64
-	outflows *outflowBank
-	fronts   *frontBank
-	classes  []class        // outflows, fronts, faults
-	normals  []float64      // [Draws][target] fixed standard normal draws
-	order    [Draws]int     // which stored draw each draw uses
-	levels   [Draws]float64 // probability level of each draw's strength
-	scores   [Draws]float64 // the normal score of that level
-	cache    cache
-	memory   ambientMemory
+	prior     Prior
+	masts     []Mast
+	targets   []Target
+	layout    averages.Layout
+	fields    []Field // the ambient states of the prior, then its disturbed ones
+	ages      [blocks]float64
+	outflows  *outflowBank
+	fronts    *frontBank
+	classes   []class        // outflows, fronts, faults
+	normals   []float64      // [Draws][target] fixed standard normal draws
+	order     [Draws]int     // which stored draw each draw uses
+	levels    [Draws]float64 // probability level of each draw's strength
+	scores    [Draws]float64 // the normal score of that level
+	cache     cache
+	memory    ambientMemory
+	doubts    doubtMemory
+	faultGain []float64 // log of each mast's prior of being wrong over the even-handed one
 
 	// Scratch and result, sized once.
 	live      []int
@@ -120,6 +122,8 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	}
 	e.cache = newCache()
 	e.memory = newAmbientMemory(len(prior.Fields))
+	e.doubts = newDoubtMemory(len(masts))
+	e.faultGain = make([]float64, len(masts))
 	e.noise = make([]float64, 0, blocks*blocks*len(masts))
 	e.live = make([]int, 0, len(masts))
 	e.steps = make([]uint8, 0, 2*len(masts)+1)
@@ -207,6 +211,7 @@ func (e *Estimator) observe(s *averages.Snapshot, en *entry) {
 func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	ambient := len(e.prior.Fields)
 	e.memory.shares(t, e.prior.LeastStateShare, e.weights)
+	e.faultGains(t)
 	top := math.Inf(-1)
 	for k, s := range en.states {
 		e.solve(en, s)
@@ -223,7 +228,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 		e.parts = append(e.parts, part{state: k, class: -1, weight: w})
 		total += w
 	}
-	shares := [...]float64{e.prior.OutflowShare, e.prior.FrontShare, e.prior.FaultShare}
+	shares := [...]float64{e.prior.OutflowShare, e.prior.FrontShare, evenHanded}
 	var found [len(shares)]float64
 	for k := ambient; k < len(en.states); k++ {
 		e.solve(en, en.states[k])
@@ -246,6 +251,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	e.posterior.OutflowShare = found[0] / total
 	e.posterior.FrontShare = found[1] / total
 	e.doubt()
+	e.doubts.remember(t, e.posterior.Doubt, e.faultGain)
 }
 
 // doubt fills the probability that each mast is wrong.
@@ -294,6 +300,9 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 		v := float64(q[0]*float64(b0*b0)) + float64(q[3]*float64(b1*b1)) + float64(q[5]*float64(b2*b2)) +
 			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
 		evidence[j] = v/2 + p.logOdds[j]
+		if c == faultClass {
+			evidence[j] += e.faultGain[j]
+		}
 		best = max(best, evidence[j])
 	}
 	scale := math.Log(share/float64(n)) + (e.stateLog[k] - top)

@@ -1,0 +1,78 @@
+package windfield
+
+import (
+	"math"
+
+	"sockline/sensors"
+)
+
+// doubtMemory holds for how much of the last twenty minutes each mast's
+// neighbours spoke against it: a finite ring on the UTC grid of ambientMemory.
+// An outflow is seldom over one mast for so long (a single microburst lives
+// about 13 minutes: M.R. Hjelmfelt, "Structure and life cycle of microburst
+// outflows observed in Colorado", J. Appl. Meteor. 27, 1988; from memory), a
+// fault stays. So a mast alone against its neighbours is believed at first, and less
+// the longer it stands alone: that is what keeps a lone true outflow from being
+// thrown away.
+type doubtMemory struct {
+	masts int
+	at    [ambientSlots]sensors.Instant
+	stood []bool // [slot][mast]
+}
+
+// From doubtFrom to doubtTo slots of standing alone (8 and 16 minutes) the
+// prior of a fault rises from FaultShare to FaultShareLater.
+const (
+	doubtFrom = 16
+	doubtTo   = 32
+)
+
+func newDoubtMemory(masts int) doubtMemory {
+	return doubtMemory{masts: masts, stood: make([]bool, ambientSlots*masts)}
+}
+
+// remember keeps which masts stand alone at t, if t lies on the grid. doubt is
+// the posterior that each is wrong, gain the logarithm by which its prior had
+// been raised or lowered from an even-handed one.
+func (d *doubtMemory) remember(t sensors.Instant, doubt, gain []float64) {
+	if t%ambientEvery != 0 {
+		return
+	}
+	slot := int(t/ambientEvery) % ambientSlots
+	d.at[slot] = t
+	for i, p := range doubt {
+		odds := p / math.Max(1-p, 1e-12) * math.Exp(-gain[i])
+		d.stood[slot*d.masts+i] = odds > 1
+	}
+}
+
+// slots is in how many slots before t a mast stood alone.
+func (d *doubtMemory) slots(t sensors.Instant, mast int) int {
+	newest, n := (t-1)/ambientEvery, 0
+	for i := range sensors.Instant(ambientSlots) {
+		at := newest - i
+		if at < 0 {
+			break
+		}
+		slot := int(at) % ambientSlots
+		if d.at[slot] == at*ambientEvery && d.stood[slot*d.masts+mast] {
+			n++
+		}
+	}
+	return n
+}
+
+// evenHanded is the prior share of faults under which a mast counts as standing
+// alone against its neighbours.
+const evenHanded = 0.005
+
+// faultGains fills, for step t, the logarithm of each mast's prior of being
+// wrong over the even-handed one.
+func (e *Estimator) faultGains(t sensors.Instant) {
+	low := math.Log(e.prior.FaultShare / evenHanded)
+	high := math.Log(e.prior.FaultShareLater / evenHanded)
+	for i := range e.faultGain {
+		share := float64(e.doubts.slots(t, i)-doubtFrom) / (doubtTo - doubtFrom)
+		e.faultGain[i] = low + float64((high-low)*min(max(share, 0), 1))
+	}
+}
