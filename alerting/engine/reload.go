@@ -68,15 +68,15 @@ func (e *Engine) correspondence(next *Engine) (now []int, kept []bool) {
 			now[j] = -1
 			continue
 		}
-		kept[j] = sameMast(e.settings.Stations[j], next.settings.Stations[i])
+		kept[j] = SameMast(e.settings.Stations[j], next.settings.Stations[i])
 	}
 	return now, kept
 }
 
-// sameMast reports whether what one station has sent can go on as what the
+// SameMast reports whether what one station has sent can go on as what the
 // other sends. Its book, its maintenance, the time after which it is stale and
 // whether its clock is corrected change nothing of what it has measured.
-func sameMast(a, b sensors.Station) bool {
+func SameMast(a, b sensors.Station) bool {
 	for _, s := range []*sensors.Station{&a, &b} {
 		s.Book, s.Maintenance, s.StaleAfter, s.CorrectClock = sensors.Book{}, nil, 0, false
 	}

@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"errors"
 	"fmt"
+	"slices"
 	"time"
 
 	"sockline/alerting"
@@ -43,6 +44,8 @@ func (l *loop) restore(store *history.Store, now sensors.Instant) error {
 	}
 	open, faults := store.OpenAlerts(max(last, stored))
 	faults = errors.Join(faults, l.loadTables(store, last))
+	since, fault := l.standing(store, last)
+	faults = errors.Join(faults, fault)
 	open, foreign := l.divide(open, last)
 	// After a gap the alerts are taken up at its end; without one a few steps
 	// before, so that the steps since their last issue bring them up to date:
@@ -72,7 +75,7 @@ func (l *loop) restore(store *history.Store, now sensors.Instant) error {
 		for _, r := range st.For(l.ids) {
 			// Synthetic wind of an exercise must not carry over into real work,
 			// nor the reverse.
-			if r.Exercise == l.exercise {
+			if r.Exercise == l.exercise && st.At >= since[r.Station] {
 				l.engine.Stored(r)
 			}
 		}
@@ -90,6 +93,37 @@ func (l *loop) restore(store *history.Store, now sensors.Instant) error {
 	}
 	l.held = append(foreign, closed...)
 	return errors.Join(faults, err)
+}
+
+// standing is, for each station, the step from which on it has been the mast
+// that it is now: what it sent before, from another place or by other rules,
+// is not read back. last is the last step that was judged.
+func (l *loop) standing(store *history.Store, last sensors.Instant) ([]sensors.Instant, error) {
+	since := make([]sensors.Instant, len(l.ids))
+	all, err := configurationsOf(store)
+	if err != nil {
+		return since, fmt.Errorf("look for earlier configurations: %w", err)
+	}
+	changed := make([]bool, len(l.ids))
+	after := last + sensors.Second
+	for _, c := range slices.Backward(all) {
+		if c.hash != l.cfg.Hash {
+			before, err := c.parse()
+			if err != nil { // of another version: whatever stands there is taken for the same
+				return since, fmt.Errorf("compare the masts with those of %s: %w", c.from, err)
+			}
+			for i, id := range l.ids {
+				at := slices.IndexFunc(before.Stations, func(s sensors.Station) bool { return s.ID == id })
+				if !changed[i] && (at < 0 || !engine.SameMast(before.Stations[at], l.cfg.Stations[i])) {
+					changed[i], since[i] = true, after
+				}
+			}
+		}
+		if after = c.from; after <= last.Add(-engine.Memory) {
+			break
+		}
+	}
+	return since, nil
 }
 
 // loadTables takes up what earlier runs learnt of the stations up to a step.

@@ -10,6 +10,7 @@ import (
 	"testing"
 
 	"sockline/alerting/history"
+	"sockline/sensors"
 	"sockline/sensors/feed/brokertest"
 )
 
@@ -264,5 +265,72 @@ func TestReplayOverAChangedStart(t *testing.T) {
 	}
 	if !strings.Contains(o.stderr, "with a start of the daemon") {
 		t.Errorf("the change is not noted:\n%s", o.stderr)
+	}
+}
+
+// TestStartAfterAMastWasMoved holds that what a mast sent from another place is
+// not read back, and that of all others is; nor what it sent before a move that
+// an earlier run has seen already.
+func TestStartAfterAMastWasMoved(t *testing.T) {
+	path := writeFile(t, "site.toml", string(loadSkerryMoor(t).Source))
+	before := mustLoad(t, path)
+	capture := filepath.Join(t.TempDir(), "capture.jsonl")
+	succeed(t, "simulate", "--config", path, "--scene", writeFile(t, "test.scene", strings.Replace(steady, "6 h", "90 s", 1)), "--out", capture)
+	messages, end := readCapture(t, capture)
+	dir := t.TempDir()
+	r := newRecorder(t, before, dir)
+	r.writer.Record(history.Entry{Kind: history.KindConfiguration, At: messages[0].Received.FloorSecond(), Payload: before.Source})
+	for _, m := range messages {
+		r.receive(m)
+	}
+	r.closeDue(end)
+	r.close()
+	amend(t, path, "54.003174, -19.993126", "54.003184, -19.993126")
+	after := mustLoad(t, path)
+
+	for _, row := range []struct {
+		name     string
+		recorded sensors.Instant // a change that an earlier run has journalled
+		want     string          // state of the moved mast in the first step
+	}{
+		{"moved by this start", 0, "never-seen"},
+		{"moved 3 s ago", end.FloorSecond() - 3*sensors.Second, "starting"},
+		{"moved long ago", messages[0].Received.FloorSecond() + 5*sensors.Second, "live"},
+	} {
+		t.Run(row.name, func(t *testing.T) {
+			own := filepath.Join(t.TempDir(), "history")
+			if err := os.CopyFS(own, os.DirFS(dir)); err != nil {
+				t.Fatal(err)
+			}
+			store, err := history.Open(own, history.Options{})
+			if err != nil {
+				t.Fatal(err)
+			}
+			defer store.Close()
+			if row.recorded != 0 {
+				w, err := store.Writer(history.WriterOptions{})
+				if err != nil {
+					t.Fatal(err)
+				}
+				w.Record(history.Entry{Kind: history.KindConfiguration, At: row.recorded, Payload: after.Source})
+				if err := w.Close(t.Context()); err != nil {
+					t.Fatal(err)
+				}
+			}
+			l := mustLoop(t, after, true)
+			if err := l.restore(store, end); err != nil {
+				t.Fatal(err)
+			}
+			res := l.engine.Step(l.engine.LastStep() + sensors.Second)
+			for i, s := range after.Stations {
+				want := "live"
+				if s.ID == "touch25" {
+					want = row.want
+				}
+				if got := res.Snapshot.Mast(i).State.String(); got != want {
+					t.Errorf("%s is %s, want %s", s.ID, got, want)
+				}
+			}
+		})
 	}
 }
