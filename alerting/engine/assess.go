@@ -9,11 +9,11 @@ import (
 func (e *Engine) assess(s *averages.Snapshot) {
 	e.ground.update(s)
 	posterior := e.field.Step(s)
-	e.result.OutflowShare = 0
+	e.result.OutflowShare, e.result.Doubt = 0, nil
 	exercise := e.settings.Exercise
 	var live []int
 	if posterior != nil {
-		e.result.OutflowShare = posterior.OutflowShare
+		e.result.OutflowShare, e.result.Doubt = posterior.OutflowShare, posterior.Doubt
 		live = posterior.Live
 		for _, i := range live {
 			exercise = exercise || s.Mast(i).Exercise

@@ -90,6 +90,9 @@ type Result struct {
 	Transitions  []lifecycle.Transition
 	Tables       []Table // learnt since the step before, for the journal
 	OutflowShare float64 // posterior probability that an outflow is under way; 0 when blind
+	// Doubt is the posterior probability, by station, that a mast is wrong: its
+	// neighbours contradict it. nil when blind.
+	Doubt []float64
 }
 
 // New prepares an engine.

@@ -54,6 +54,7 @@ type neighbourObject struct {
 	TurnedDeg  *[3]float64 `json:"turned_deg"`  // low, middle, high; clockwise
 	SpeedRatio *[3]float64 `json:"speed_ratio"` // low, middle, high
 	Named      []string    `json:"named"`       // turned, reads-low, reads-high, blocked
+	Doubt      float64     `json:"doubt"`       // probability that it is wrong at this step, by what they read
 }
 
 // maintenanceObject is one maintenance.
@@ -116,6 +117,9 @@ func (r *reporter) station(i int, e *engine.Engine, res *engine.Result) stationH
 	if work, under := st.UnderMaintenance(res.At); under {
 		h.Maintenance = &maintenanceObject{seconds(work.From), seconds(work.To), work.Reason}
 	}
+	if res.Doubt != nil {
+		h.Neighbours.Doubt = decimals(res.Doubt[i], 2)
+	}
 	h.Findings = findings(&h)
 	return h
 }
@@ -159,6 +163,9 @@ func neighboursOf(f drift.Finding) neighbourObject {
 	return o
 }
 
+// doubted is the probability of being wrong from which on it is told.
+const doubted = 0.5
+
 // findings are the sentences for a technician.
 func findings(h *stationHealth) []string {
 	out := []string{}
@@ -176,6 +183,10 @@ func findings(h *stationHealth) []string {
 			done = "its times are corrected"
 		}
 		say("Its clock is %.1f s %s; %s.", ahead, side, done)
+	}
+	if h.Neighbours.Doubt >= doubted {
+		say("Its neighbours contradict it at the moment: the wind between the masts is worked out as if it were wrong with a probability of %.0f %%.",
+			100*h.Neighbours.Doubt)
 	}
 	for _, word := range h.Neighbours.Named {
 		switch t, s := h.Neighbours.TurnedDeg, h.Neighbours.SpeedRatio; word {
