@@ -75,6 +75,7 @@ type daemon struct {
 	metrics  *metrics
 	loop     *loop
 	output   *outward
+	tell     *teller
 	input    atomic.Pointer[feed.Subscriber]
 	teardown teardown
 
@@ -120,10 +121,14 @@ func (d *daemon) prepare() (err error) {
 	if d.output, err = newOutward(d); err != nil {
 		return err
 	}
+	if d.tell, err = newTeller(d); err != nil {
+		return err
+	}
 	d.metrics = newMetrics(cfg, sources{
 		history: d.archive.health, input: d.inputState, dropped: d.droppedMessages,
 		output: d.output.sink.State, open: d.board.openCount, offset: d.opts.clock.Offset,
 	})
+	d.tell.measure(d.metrics.registry)
 	d.loop.archive, d.loop.metrics, d.loop.show, d.loop.control = d.archive, d.metrics, d.show, d.opts.control
 	d.loop.changed = d.follow
 	return d.openCapture()
@@ -223,6 +228,7 @@ func (d *daemon) start(ctx context.Context) error {
 	if err := d.output.start(ctx, d); err != nil {
 		return err
 	}
+	d.tell.start(ctx, d)
 	if err := d.servePage(ctx); err != nil {
 		return err
 	}
@@ -271,7 +277,7 @@ func (d *daemon) openHistory(ctx context.Context) {
 	now := d.opts.clock.Stamp("", nil)
 	if d.archive.open() == nil {
 		if store, err := d.archive.reading(); err == nil {
-			if err := d.loop.restore(store, now); err != nil {
+			if err := errors.Join(d.loop.restore(store, now), d.tell.takeUp(store)); err != nil {
 				d.log.Error().Err(err).Msg("part of the history cannot be read back; the rest is taken up")
 			}
 		}
@@ -360,6 +366,7 @@ func (d *daemon) release(n wording.Notice) {
 	if err := d.output.sink.Issue(publish.Of(n)); err != nil {
 		d.log.Error().Err(err).Msg("an alert is not published")
 	}
+	d.tell.release(n)
 	d.board.release(n)
 }
 

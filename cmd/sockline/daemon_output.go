@@ -116,6 +116,7 @@ func (d *daemon) noContact(why string) []byte {
 // the loop.
 func (d *daemon) show(rep *report) {
 	status := d.status(rep)
+	d.tell.step(status)
 	v := viewOf(rep, status, time.Now())
 	v.Airfield = d.current().Airfield.Name
 	d.board.show(v)
@@ -172,6 +173,7 @@ func (d *daemon) status(rep *report) *wording.Status {
 	if r := d.refused.Load(); r != nil {
 		remark(strings.ToUpper((*r)[:1]) + (*r)[1:] + ".")
 	}
+	s.Remarks = append(s.Remarks, d.tell.remarks()...)
 	if len(h.Damage) > 0 {
 		remark("Parts of the history were found damaged; the log says which.")
 	}

@@ -83,6 +83,7 @@ func (d *daemon) reload(ctx context.Context, path string) (sensors.Instant, erro
 func (d *daemon) follow(before, now *config.Config) {
 	d.cfg.Store(now)
 	d.archive.retain(now.History.Keep)
+	d.tell.follow(now)
 	stays := make(map[string]bool)
 	for _, p := range now.Airfield.Paths {
 		stays[p.Runway()+" "+p.Operation()] = true
