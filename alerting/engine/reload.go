@@ -3,6 +3,7 @@ package engine
 import (
 	"bytes"
 	"reflect"
+	"slices"
 
 	"sockline/alerting/lifecycle"
 	"sockline/sensors"
@@ -24,12 +25,14 @@ func (e *Engine) Reload(next *Engine) []lifecycle.Transition {
 	now, kept := e.correspondence(next)
 	applied := e.clocks.Table()
 	next.counts.Unknown, next.counts.Withdrawn = e.counts.Unknown, e.counts.Withdrawn
+	as := slices.Repeat([]int{-1}, len(next.settings.Stations)) // which mast of e each is still
 	for j, i := range now {
 		if i < 0 {
 			continue
 		}
 		next.counts.takeOver(i, &e.counts, j)
 		if kept[j] {
+			as[i] = j
 			next.takeOver(i, e, j)
 		}
 	}
@@ -38,7 +41,7 @@ func (e *Engine) Reload(next *Engine) []lifecycle.Transition {
 	if !bytes.Equal(next.clocks.Table(), applied) {
 		next.keep(e.last, clockTable, next.clocks.Table())
 	}
-	next.field = next.field.Follow(e.field)
+	next.field = next.field.Follow(e.field, as)
 	next.late = next.follow(e.late, now)
 	for _, r := range e.pending {
 		if i := now[r.Station]; i >= 0 && kept[r.Station] {

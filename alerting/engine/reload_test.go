@@ -310,7 +310,7 @@ func TestReloadIsDeterministic(t *testing.T) {
 	if bytes.Count(want, []byte("\n")) < 20 {
 		t.Fatalf("too little is told to prove anything:\n%s", want)
 	}
-	for run := range 4 {
+	for run := range 2 {
 		before := runtime.GOMAXPROCS(1 + run%2)
 		got := runReloading(t, a, messages, start, end, changes, quietly).told.Bytes()
 		runtime.GOMAXPROCS(before)
