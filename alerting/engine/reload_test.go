@@ -208,6 +208,7 @@ func TestReloadOfMasts(t *testing.T) {
 		stillRun bool // the cold ones report and are live in the end
 	}{
 		{"nothing but the order and a book", a, skerry(t, far25, "", "# A mast: where it stands", far25+"book = { serial = \"A 7\" }\n# A mast: where it stands"), nil, 8, false, true},
+		{"another window and reach", a, skerry(t, "[history]", "[analysis]\nwindow = \"24 s\"\nreach = \"900 m\"\n[history]"), nil, 8, false, true},
 		{"one removed", a, skerry(t, far25, ""), nil, 7, true, true},
 		{"one added", skerry(t, touch25, ""), a, []string{"touch25"}, 8, false, true},
 		{"one moved", a, skerry(t, "54.003174, -19.993126", "54.003184, -19.993126"), []string{"touch25"}, 8, true, true},
@@ -317,5 +318,44 @@ func TestReloadIsDeterministic(t *testing.T) {
 		if !bytes.Equal(got, want) {
 			t.Fatalf("run %d: %s", run, firstDifference(got, want))
 		}
+	}
+}
+
+// TestReloadAmidAMeasurement: a speed that waits for its direction on another
+// topic makes a reading although a reload falls between the two and gives its
+// station another index.
+func TestReloadAmidAMeasurement(t *testing.T) {
+	start := sensors.At(time.Date(2026, 7, 1, 12, 0, 0, 0, time.UTC))
+	a, b := skerry(t), skerry(t)
+	st := a.cfg.Stations[1]
+	st.Format, st.Topics = sensors.FormatJSON, &sensors.FieldTopics{Speed: "m/speed", Direction: "m/from"}
+	st.Topic = "m/speed"
+	a.cfg.Stations[1] = st
+	b.cfg.Stations[1], b.cfg.Stations[3] = b.cfg.Stations[3], st
+	b.cfg.Airfield.Masts[1], b.cfg.Airfield.Masts[3] = b.cfg.Airfield.Masts[3], b.cfg.Airfield.Masts[1]
+	e := a.engine(t)
+	e.Due(start)
+	receive := func(topic, payload string, at sensors.Instant) (station, kept int) {
+		t.Helper()
+		station, kept, err := e.Receive(sensors.Message{Topic: topic, Payload: []byte(payload), Received: at})
+		if err != nil {
+			t.Fatal(err)
+		}
+		return station, kept
+	}
+	if station, kept := receive("m/speed", "5.5", start+300); station != 1 || kept != 0 {
+		t.Fatalf("a speed alone: station %d, %d readings", station, kept)
+	}
+	next := b.engine(t)
+	if closed := e.Reload(next); len(closed) != 0 {
+		t.Fatalf("closed %v", closed)
+	}
+	if station, kept := receive("m/from", "246", start+320); station != 3 || kept != 1 {
+		t.Fatalf("its direction: station %d, %d readings", station, kept)
+	}
+	e.Step(start)
+	res := e.Step(start + sensors.Second)
+	if len(res.Readings) != 1 || res.Readings[0].Station != 3 || res.Readings[0].Speed != 5.5 || res.Readings[0].From != 246 {
+		t.Errorf("readings %+v", res.Readings)
 	}
 }
