@@ -46,6 +46,9 @@ func LossOfFBar(fbar, groundSpeed float64) float64 {
 const (
 	fbarLength  = 1000.0 // m
 	leastGround = 20.0   // m/s: no approach is flown slower over the ground
+	// holdFBar is the hysteresis of the F-factor: an alert that opened for it
+	// holds down to nine tenths, as the loss holds down to 2 of 15 kt less.
+	holdFBar = 0.9
 )
 
 // View is how one path looks at a stretch: the distance of each of its points
@@ -65,7 +68,7 @@ func Judge(a *Assessment, s *shear.Stretch, v View, l Levels) {
 	kilometre := LossOfFBar(l.MarginFBar, ground)
 	a.Loss.FBar = s.KilometreLoss() * ground / (quantity.StandardGravity * fbarLength)
 	a.Loss.Probability[alerting.BeyondMargin] = s.EitherAtLeast(l.margin(), kilometre)
-	a.Loss.CloseProbability[alerting.BeyondMargin] = s.EitherAtLeast(l.margin()-l.Hysteresis, kilometre*0.9)
+	a.Loss.CloseProbability[alerting.BeyondMargin] = s.EitherAtLeast(l.margin()-l.Hysteresis, kilometre*holdFBar)
 	a.Loss.Level = highest(a.Loss.Probability, l, alerting.BeyondMargin)
 	a.Loss.HoldLevel = highest(a.Loss.CloseProbability, l, alerting.BeyondMargin)
 	a.Gain.Level = highest(a.Gain.Probability, l, alerting.Large)
