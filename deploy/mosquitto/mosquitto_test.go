@@ -3,9 +3,7 @@
 package mosquitto_test
 
 import (
-	"context"
 	"fmt"
-	"net"
 	"os"
 	"os/exec"
 	"path/filepath"
@@ -241,61 +239,19 @@ func absolute(t *testing.T, name string) string {
 	return path
 }
 
-// TestConfigurationLoads starts a broker from sockline.conf itself, with only
-// its port and the places of its files changed, and is refused without a name.
+// TestConfigurationLoads: everybody gets in by the door that is theirs, and
+// nobody without a name or a certificate.
 func TestConfigurationLoads(t *testing.T) {
-	passwd := passwords(t)
-	binary, err := exec.LookPath("mosquitto")
-	if err != nil {
-		binary = "/usr/sbin/mosquitto"
-	}
-	text, err := os.ReadFile("sockline.conf")
+	b := shipped(t, newAuthority(t, "authority"), nil)
+	publisher(t, "mqtt://"+b.plain, "sockline")
+	mast, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{Broker: b.certified("far07"), ClientID: "far07", Log: zerolog.Nop()})
 	if err != nil {
 		t.Fatal(err)
 	}
-	l, err := net.Listen("tcp", "127.0.0.1:0")
-	if err != nil {
-		t.Fatal(err)
-	}
-	address := l.Addr().String()
-	_, port, _ := net.SplitHostPort(address)
-	l.Close()
-	changed := strings.NewReplacer("listener 1883 ", "listener "+port+" ", "/etc/mosquitto/sockline.passwd", passwd,
-		"/etc/mosquitto/sockline.acl", absolute(t, "acl")).Replace(string(text))
-	if os.Geteuid() == 0 {
-		changed = "user root\n" + changed // it could not read the test's files as another user
-	}
-	file := filepath.Join(t.TempDir(), "sockline.conf")
-	if err := os.WriteFile(file, []byte(changed), 0o600); err != nil {
-		t.Fatal(err)
-	}
-	ctx, cancel := context.WithCancel(t.Context())
-	broker := exec.CommandContext(ctx, binary, "-c", file)
-	var said strings.Builder
-	broker.Stdout, broker.Stderr = &said, &said
-	if err := broker.Start(); err != nil {
-		t.Fatal(err)
-	}
-	defer func() {
-		cancel()
-		_ = broker.Wait() // it was killed
-		if t.Failed() {
-			t.Logf("the broker said:\n%s", said.String())
-		}
-		if strings.Contains(said.String(), "Error") || strings.Contains(said.String(), "deprecated") {
-			t.Errorf("the broker complains:\n%s", said.String())
-		}
-	}()
-	until(t, "the broker listens", func() bool {
-		c, err := net.Dial("tcp", address)
-		if err == nil {
-			c.Close()
-		}
-		return err == nil
-	})
-	publisher(t, "mqtt://"+address, "sockline")
+	t.Cleanup(mast.Close)
+	until(t, "a mast is let in by its certificate", mast.Connected)
 	nobody, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{
-		Broker: feed.Broker{URL: "mqtt://" + address}, ClientID: "nobody", Log: zerolog.Nop(),
+		Broker: feed.Broker{URL: "mqtt://" + b.plain}, ClientID: "nobody", Log: zerolog.Nop(),
 	})
 	if err != nil {
 		t.Fatal(err)
