@@ -123,6 +123,9 @@ func power(rng *rand.Rand, days int, speed, eddies float64, f fault) float64 {
 // The smallest errors that are named in 19 of 20 days at 5 m/s, and how often
 // a sound mast is named in a year.
 func TestPower(t *testing.T) {
+	if racing {
+		t.Skip("one goroutine, and the check runs it without the race detector")
+	}
 	rng := rand.New(rand.NewPCG(17, 19))
 	const days = 60
 	smallest := func(eddies float64, f func(float64) fault, steps []float64) float64 {

@@ -15,6 +15,9 @@ import (
 // intervals near the truth, and the six others are not. Drawing the readings
 // instead of their means is what package drift does not do in its own test.
 func TestDriftOverHalfADay(t *testing.T) {
+	if racing {
+		t.Skip("one goroutine, and the check runs it without the race detector")
+	}
 	if testing.Short() || racing {
 		t.Skip("400,000 readings")
 	}

@@ -1,0 +1,6 @@
+//go:build race
+
+package drift
+
+// racing: the race detector makes everything some ten times slower.
+const racing = true
