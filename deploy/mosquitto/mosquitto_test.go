@@ -61,13 +61,20 @@ func until(t *testing.T, what string, ok func() bool) {
 	}
 }
 
-func publisher(t *testing.T, url, user string) *feed.Publisher {
+// publisherAs is somebody who publishes, or tries to.
+func publisherAs(t *testing.T, broker feed.Broker, name string) *feed.Publisher {
 	t.Helper()
-	p, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{Broker: as(url, user), ClientID: user, Log: zerolog.Nop()})
+	p, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{Broker: broker, ClientID: name, Log: zerolog.Nop()})
 	if err != nil {
 		t.Fatal(err)
 	}
 	t.Cleanup(p.Close)
+	return p
+}
+
+func publisher(t *testing.T, url, user string) *feed.Publisher {
+	t.Helper()
+	p := publisherAs(t, as(url, user), user)
 	until(t, user+" is connected", p.Connected)
 	return p
 }
@@ -244,19 +251,9 @@ func absolute(t *testing.T, name string) string {
 func TestConfigurationLoads(t *testing.T) {
 	b := shipped(t, newAuthority(t, "authority"), nil)
 	publisher(t, "mqtt://"+b.plain, "sockline")
-	mast, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{Broker: b.certified("far07"), ClientID: "far07", Log: zerolog.Nop()})
-	if err != nil {
-		t.Fatal(err)
-	}
-	t.Cleanup(mast.Close)
+	mast := publisherAs(t, b.certified("far07"), "far07")
 	until(t, "a mast is let in by its certificate", mast.Connected)
-	nobody, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{
-		Broker: feed.Broker{URL: "mqtt://" + b.plain}, ClientID: "nobody", Log: zerolog.Nop(),
-	})
-	if err != nil {
-		t.Fatal(err)
-	}
-	t.Cleanup(nobody.Close)
+	nobody := publisherAs(t, feed.Broker{URL: "mqtt://" + b.plain}, "nobody")
 	until(t, "a client without a name is refused", func() bool { return nobody.State().Problem != nil })
 	if nobody.Connected() {
 		t.Error("a client without a name is let in")

@@ -13,9 +13,6 @@ import (
 	"time"
 
 	mqtt "github.com/eclipse/paho.mqtt.golang"
-	"github.com/rs/zerolog"
-
-	"sockline/sensors/feed"
 )
 
 // intruder is a client that does as it likes. nil TLS: in clear.
@@ -166,11 +163,7 @@ func TestBrokersThatAreNotOurs(t *testing.T) {
 			if name == "stranger" {
 				as.CAFile = newAuthority(t, "authority").file("ca.crt")
 			}
-			p, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{Broker: as, ClientID: "sockline", Log: zerolog.Nop()})
-			if err != nil {
-				t.Fatal(err)
-			}
-			t.Cleanup(p.Close)
+			p := publisherAs(t, as, "sockline")
 			until(t, "the certificate is complained of", func() bool { return p.State().Problem != nil })
 			if p.Connected() || !strings.Contains(p.State().Problem.Error(), "certificate") {
 				t.Errorf("connected %v: %v", p.Connected(), p.State().Problem)

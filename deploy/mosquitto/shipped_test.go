@@ -183,8 +183,6 @@ func freePort(tb testing.TB) string {
 // password. spoil may change the broker's own certificate.
 func shipped(t *testing.T, ca *authority, spoil func(c *x509.Certificate)) *shippedBroker {
 	t.Helper()
-	passwd := passwords(t)
-	acl := amended(t, passwd, "witness", "user witness\ntopic read #\n")
 	for _, user := range users {
 		ca.issue(user, user, nil)
 	}
@@ -195,6 +193,15 @@ func shipped(t *testing.T, ca *authority, spoil func(c *x509.Certificate)) *ship
 			spoil(c)
 		}
 	})
+	return shippedFrom(t, ca, ca.dir)
+}
+
+// shippedFrom is shipped with the certificates that lie in a directory.
+func shippedFrom(t *testing.T, ca *authority, dir string) *shippedBroker {
+	t.Helper()
+	passwd := passwords(t)
+	acl := amended(t, passwd, "witness", "user witness\ntopic read #\n")
+	ca.dir = dir
 	text, err := os.ReadFile("sockline.conf")
 	if err != nil {
 		t.Fatal(err)
