@@ -5,9 +5,10 @@
 // The prior is a mixture. Around an unknown common mean the air is in one of a
 // few ambient states (Gaussian processes of different strength, kernel.go), and
 // an outflow of unknown place, size and strength (outflow.go) or a gust front
-// (front.go) may lie over it, or one mast may be wrong (fault.go). Each step weighs the mixture by how well it explains the block
-// means of all live masts; so calm air does not fill gaps with imagined shear,
-// an onset is not smoothed away, and peaks between masts are restored.
+// (front.go) may lie over it, or one mast may be wrong (fault.go). Each step
+// weighs the mixture by how well it explains the block means of all live masts;
+// so calm air does not fill gaps with imagined shear, an onset is not smoothed
+// away, and peaks between masts are restored.
 package windfield
 
 import (
