@@ -15,6 +15,7 @@ import (
 	"sockline/alerting/history"
 	"sockline/config"
 	"sockline/sensors"
+	"sockline/sensors/quantity"
 )
 
 func stationsCommand() command {
@@ -185,9 +186,9 @@ func (h *stationHealth) print(b *strings.Builder) {
 		if w.Two.FromDeg != nil {
 			from = fmt.Sprintf("from %.0f degrees true", *w.Two.FromDeg)
 		}
-		fmt.Fprintf(b, "  wind of two minutes %.1f m/s %s", w.Two.VectorMS, from)
+		fmt.Fprintf(b, "  wind of two minutes %.0f kt %s", quantity.Knots(w.Two.VectorMS), from)
 		if w.Two.GustMS != nil {
-			fmt.Fprintf(b, ", 3 s means %.1f to %.1f m/s", *w.Two.LullMS, *w.Two.GustMS)
+			fmt.Fprintf(b, ", 3 s means %.0f to %.0f kt", quantity.Knots(*w.Two.LullMS), quantity.Knots(*w.Two.GustMS))
 		}
 		b.WriteString("\n")
 	}
