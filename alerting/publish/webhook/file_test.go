@@ -29,6 +29,7 @@ func child() int {
 		fmt.Println(err)
 		return 1
 	}
+	r.openFile(start())
 	r.pause = start().Add(time.Hour) // nothing is sent
 	for i := 0; ; i++ {
 		r.Offer(event(fmt.Sprint("a", i), 1, Opening, start()))

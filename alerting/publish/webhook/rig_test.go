@@ -169,6 +169,8 @@ func (r *rig) open() {
 		r.tb.Fatal(err)
 	}
 	r.Receiver = w
+	w.openFile(r.now())
+	w.report()
 }
 
 // end closes what a kill would close.

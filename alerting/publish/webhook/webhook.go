@@ -105,6 +105,12 @@ func Of(n wording.Notice) Event {
 	return e
 }
 
+// Recorded is the event of an alert object that was kept: the same as Of made
+// of its notice.
+func Recorded(alert string, revision int, p Phase, exercise bool, at sensors.Instant, object []byte) Event {
+	return Event{ID: eventID(alert, revision), Alert: alert, Phase: p, Exercise: exercise, Time: at, Data: object}
+}
+
 // Options says who is told, and how. URL, Name, Airfield, Now, Random and
 // Tick are required.
 type Options struct {
@@ -175,8 +181,7 @@ type handed struct {
 	at    time.Time
 }
 
-// New makes a receiver and reads what its file still holds. A file that cannot
-// be used is no error: State says so.
+// New makes a receiver. It touches no file and no network before Run.
 func New(o Options) (*Receiver, error) {
 	u, err := url.Parse(o.URL)
 	switch {
@@ -199,7 +204,6 @@ func New(o Options) (*Receiver, error) {
 		wake: make(chan struct{}, 1), results: make(chan result, slots+1), lanes: newLanes(o.MaxAlerts),
 	}
 	r.told.Name = o.Name
-	r.openFile(o.Now())
 	r.report()
 	return r, nil
 }
@@ -259,9 +263,12 @@ func (r *Receiver) nudge() {
 	}
 }
 
-// Run delivers until ctx is done. What is then new is tried once more, and the
-// rest stays in the file. Run is to be called once.
+// Run reads what the file still holds and delivers until ctx is done. What is
+// then new is tried once more, and the rest stays in the file. A file that
+// cannot be used stops nothing: State says so. Run is to be called once.
 func (r *Receiver) Run(ctx context.Context) {
+	r.openFile(r.opts.Now())
+	r.report()
 	sending, cancel := context.WithCancel(context.WithoutCancel(ctx))
 	defer cancel()
 	for {

@@ -423,6 +423,7 @@ func TestRun(t *testing.T) {
 	ticks := time.NewTicker(5 * time.Millisecond)
 	defer ticks.Stop()
 	r2 := newRig(t, to(s, func(o *Options) { o.Now, o.Tick, o.Random = time.Now, ticks.C, func() float64 { return 0 } }))
+	r2.end() // Run opens it again
 	ctx, cancel := context.WithCancel(t.Context())
 	done := make(chan struct{})
 	go func() { defer close(done); r2.Run(ctx) }()
