@@ -48,6 +48,7 @@ type checkReport struct {
 	Paths          []checkPath    `json:"paths"`
 	Levels         checkLevels    `json:"levels"`
 	EmbeddedBroker bool           `json:"embedded_broker"`
+	Told           []checkTold    `json:"told,omitempty"`
 	Warnings       []string       `json:"warnings"`
 	Notice         string         `json:"notice"`
 }
@@ -126,6 +127,7 @@ func checkReportOf(cfg *config.Config, now time.Time) checkReport {
 		r.Paths = append(r.Paths, r.path(cfg, p))
 	}
 	r.levels(cfg)
+	r.told(cfg)
 	if cfg.Broker.Embedded {
 		r.warn("%s", wording.EmbeddedBroker)
 	}

@@ -194,3 +194,46 @@ func TestDaemonCannotTell(t *testing.T) {
 		t.Error(err)
 	}
 }
+
+// TestCheckTellsWhoIsTold, and what of it will not work.
+func TestCheckTellsWhoIsTold(t *testing.T) {
+	inTheWay := writeFile(t, "in-the-way", "")
+	text, err := os.ReadFile(skerrymoor)
+	if err != nil {
+		t.Fatal(err)
+	}
+	secret := writeFile(t, "secret", sharedSecret)
+	file := writeFile(t, "told.toml", strings.Replace(string(text), "./sockline-data", filepath.Join(inTheWay, "data"), 1)+`
+[cap]
+sender = "sockline@skerrymoor.example"
+spool  = "`+filepath.Join(inTheWay, "spool")+`"
+topic  = "cap"
+
+[[webhook]]
+url         = "https://tower.example/alerts?token=canary"
+secret_file = "`+secret+`"
+heartbeat   = true
+
+[[webhook]]
+name     = "drills"
+url      = "http://127.0.0.1:8080/"
+format   = "cap"
+exercise = true
+`)
+	got := succeed(t, "check", "--config", file).stdout
+	for _, words := range []string{
+		"  topic        sockline/skerrymoor/cap, cap\n",
+		"  tower-example tower.example, cloudevents, sealed, with a heartbeat\n",
+		"  drills       127.0.0.1:8080, cap, exercises, too\n",
+		"The directory of the spool of standard alert messages cannot be written",
+		"The directory of the history, which keeps what waits for receivers, cannot be written",
+		"What is sent to the webhook drills is not sealed",
+	} {
+		if !strings.Contains(got, words) {
+			t.Errorf("check does not say %q:\n%s", words, got)
+		}
+	}
+	if got += succeed(t, "check", "--config", file, "--output", "json").stdout; strings.Contains(got, "canary") || strings.Contains(got, sharedSecret) {
+		t.Error("check gives a secret away")
+	}
+}
