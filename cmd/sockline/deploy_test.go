@@ -31,7 +31,9 @@ func deployed(t *testing.T, name string) string {
 // exposed is what /metrics of a running daemon shows: the labels of each name.
 func exposed(t *testing.T) (labels map[string]map[string]bool, families []string) {
 	t.Helper()
-	cfg := mustLoad(t, site(t, "embedded://127.0.0.1:0", t.TempDir()))
+	// With somebody to tell, whose series exist only then.
+	cfg := mustLoad(t, siteWith(t, "embedded://127.0.0.1:0", t.TempDir(), "\n[cap]\nsender = \"a@b\"\nspool = \""+t.TempDir()+
+		"\"\n\n[[webhook]]\nurl = \"http://127.0.0.1:1/\"\n"))
 	d := startDaemon(t, cfg, newHurry(1).clock(t), "")
 	var body string
 	until(t, "the metrics", func() bool {

@@ -237,15 +237,6 @@ func amended(t *testing.T, passwd, user, rules string) string {
 	return file
 }
 
-func absolute(t *testing.T, name string) string {
-	t.Helper()
-	path, err := filepath.Abs(name)
-	if err != nil {
-		t.Fatal(err)
-	}
-	return path
-}
-
 // TestConfigurationLoads: everybody gets in by the door that is theirs, and
 // nobody without a name or a certificate.
 func TestConfigurationLoads(t *testing.T) {
