@@ -1,38 +1,12 @@
 package airfield
 
 import (
-	"encoding/csv"
 	"math"
-	"os"
-	"path/filepath"
 	"strconv"
 	"testing"
-)
 
-// outsideTable reads a table of testdata/outside: rows by column name.
-func outsideTable(t *testing.T, name string) []map[string]string {
-	t.Helper()
-	f, err := os.Open(filepath.Join("..", "..", "testdata", "outside", name))
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer f.Close()
-	r := csv.NewReader(f)
-	r.Comment = '#'
-	all, err := r.ReadAll()
-	if err != nil {
-		t.Fatal(err)
-	}
-	var rows []map[string]string
-	for _, rec := range all[1:] {
-		row := make(map[string]string)
-		for i, key := range all[0] {
-			row[key] = rec[i]
-		}
-		rows = append(rows, row)
-	}
-	return rows
-}
+	"sockline/testdata/outside"
+)
 
 // num is the number in a row's column.
 func num(t *testing.T, row map[string]string, key string) float64 {
@@ -47,7 +21,7 @@ func num(t *testing.T, row map[string]string, key string) float64 {
 // The table holds GeographicLib's local Cartesian coordinates. A spherical or
 // equirectangular short cut misses them by metres, so 1 cm tells them apart.
 func TestPlaneAgainstOutsideTable(t *testing.T) {
-	rows := outsideTable(t, "geodesy_enu.csv")
+	rows := outside.Rows(t, "geodesy_enu.csv")
 	if len(rows) != 70 {
 		t.Fatalf("%d rows, want 70", len(rows))
 	}
@@ -89,7 +63,7 @@ func TestPlaneWorkedValues(t *testing.T) {
 // chord in the tangent plane is shorter than the geodesic by d^3/6R^2, 0.2 mm
 // at 3.7 km.
 func TestAzimuthAgainstOutsideTable(t *testing.T) {
-	rows := outsideTable(t, "geodesy_runways.csv")
+	rows := outside.Rows(t, "geodesy_runways.csv")
 	if len(rows) != 20 {
 		t.Fatalf("%d rows, want 20", len(rows))
 	}
@@ -112,7 +86,7 @@ func TestAzimuthAgainstOutsideTable(t *testing.T) {
 // latitude and longitude. 1e-7 degree is 1 cm.
 func TestPlaneInverseAgainstOutsideTable(t *testing.T) {
 	worst := 0.0
-	for i, r := range outsideTable(t, "geodesy_enu.csv") {
+	for i, r := range outside.Rows(t, "geodesy_enu.csv") {
 		p := NewPlane(num(t, r, "lat0_deg"), num(t, r, "lon0_deg"), num(t, r, "h0_m"))
 		lat, lon := p.LatLon(num(t, r, "e_m"), num(t, r, "n_m"), num(t, r, "h_m"))
 		for _, d := range []float64{lat - num(t, r, "lat_deg"), math.Remainder(lon-num(t, r, "lon_deg"), 360)} {

@@ -5,6 +5,8 @@ import (
 	"strings"
 	"testing"
 	"time"
+
+	"sockline/testdata/outside"
 )
 
 // yearTime is the moment of a decimal year.
@@ -18,7 +20,7 @@ func yearTime(year float64) time.Time {
 // The test values that come with the model; gl_decl_deg was evaluated by
 // GeographicLib from the same coefficients, decl_deg is printed to 0.01.
 func TestDeclinationAgainstTestValues(t *testing.T) {
-	rows := outsideTable(t, "wmm2025_test_values.csv")
+	rows := outside.Rows(t, "wmm2025_test_values.csv")
 	if len(rows) != 100 {
 		t.Fatalf("%d rows, want 100", len(rows))
 	}
@@ -40,7 +42,7 @@ func TestDeclinationAgainstTestValues(t *testing.T) {
 }
 
 func TestDeclinationAtAirfields(t *testing.T) {
-	for _, r := range outsideTable(t, "wmm2025_airfields.csv") {
+	for _, r := range outside.Rows(t, "wmm2025_airfields.csv") {
 		got, err := Declination(num(t, r, "lat_deg"), num(t, r, "lon_deg"), num(t, r, "h_m"), yearTime(num(t, r, "year")))
 		if err != nil {
 			t.Fatalf("%s: %v", r["airfield"], err)

@@ -1,50 +1,14 @@
 package drift
 
 import (
-	"encoding/csv"
 	"math"
-	"os"
-	"path/filepath"
 	"slices"
-	"strconv"
 	"strings"
 	"testing"
 
 	"sockline/sensors/quantity"
+	"sockline/testdata/outside"
 )
-
-func table(t *testing.T, name string) []map[string]string {
-	t.Helper()
-	f, err := os.Open(filepath.Join("..", "..", "testdata", "outside", name))
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer f.Close()
-	r := csv.NewReader(f)
-	r.Comment = '#'
-	rows, err := r.ReadAll()
-	if err != nil {
-		t.Fatal(err)
-	}
-	var out []map[string]string
-	for _, row := range rows[1:] {
-		m := make(map[string]string, len(row))
-		for i, v := range row {
-			m[rows[0][i]] = v
-		}
-		out = append(out, m)
-	}
-	return out
-}
-
-func number(t *testing.T, text string) float64 {
-	t.Helper()
-	v, err := strconv.ParseFloat(text, 64)
-	if err != nil {
-		t.Fatal(err)
-	}
-	return v
-}
 
 // regional is the kernel of the outside table.
 func regional() Kernel { return Kernel{Length: 150e3, Variance: 16, Noise: 2.25} }
@@ -52,10 +16,10 @@ func regional() Kernel { return Kernel{Length: 150e3, Variance: 16, Noise: 2.25}
 // Real winds of 122 stations: what each gets from the others is what
 // scikit-learn makes of the same kernel, and better than the plain mean.
 func TestLeaveOneOutAgainstTable(t *testing.T) {
-	rows := table(t, "sao_loo_1800z.csv")
+	rows := outside.Rows(t, "sao_loo_1800z.csv")
 	var all []Observation
 	for _, r := range rows {
-		all = append(all, Observation{number(t, r["x_m"]), number(t, r["y_m"]), quantity.Vector{East: number(t, r["u_ms"]), North: number(t, r["v_ms"])}})
+		all = append(all, Observation{outside.Number(t, r["x_m"]), outside.Number(t, r["y_m"]), quantity.Vector{East: outside.Number(t, r["u_ms"]), North: outside.Number(t, r["v_ms"])}})
 	}
 	got, err := regional().LeaveOneOut(all)
 	if err != nil {
@@ -76,7 +40,7 @@ func TestLeaveOneOutAgainstTable(t *testing.T) {
 			{"loo_u", got[i].Wind.East, 2e-5}, {"loo_v", got[i].Wind.North, 2e-5}, {"loo_sd", got[i].Deviation, 2e-5},
 			{"z", regional().Score(all[i], got[i]), 1e-4},
 		} {
-			if want := number(t, r[c.name]); math.Abs(c.got-want) > c.within {
+			if want := outside.Number(t, r[c.name]); math.Abs(c.got-want) > c.within {
 				t.Errorf("%s: %s %.6f, the table has %.6f", r["id"], c.name, c.got, want)
 			}
 		}
@@ -108,18 +72,18 @@ type report struct {
 func hourly(t *testing.T) map[string][]report {
 	t.Helper()
 	newest := map[string]map[string]report{}
-	for _, r := range table(t, "sao_1995-03-18.csv") {
+	for _, r := range outside.Rows(t, "sao_1995-03-18.csv") {
 		if r["spd_kt"] == "" || r["dir"] == "" {
 			continue
 		}
-		lat, lon := number(t, r["lat"]), number(t, r["lon"])
+		lat, lon := outside.Number(t, r["lat"]), outside.Number(t, r["lon"])
 		const metres = math.Pi / 180 * 6371e3
 		if newest[r["file_h"]] == nil {
 			newest[r["file_h"]] = map[string]report{}
 		}
 		newest[r["file_h"]][r["id"]] = report{r["id"], r["time"], Observation{
 			X: (lon + 79) * math.Cos(lat*math.Pi/180) * metres, Y: (lat - 41) * metres,
-			Wind: quantity.FromDirection(number(t, r["spd_kt"])*quantity.Knot, number(t, r["dir"])),
+			Wind: quantity.FromDirection(outside.Number(t, r["spd_kt"])*quantity.Knot, outside.Number(t, r["dir"])),
 		}}
 	}
 	out := map[string][]report{}

@@ -1,41 +1,29 @@
 package windfield
 
 import (
-	"encoding/csv"
 	"fmt"
 	"math"
-	"os"
-	"path/filepath"
 	"strconv"
 	"testing"
 
 	gonum "gonum.org/v1/gonum/mat"
+
+	"sockline/testdata/outside"
 )
 
 // table reads an outside table: comment lines, the names of the columns, rows.
 // Values that are no number stay out of the map of numbers.
 func table(t *testing.T, name string) (text []map[string]string, numbers []map[string]float64) {
 	t.Helper()
-	f, err := os.Open(filepath.Join("..", "..", "testdata", "outside", name))
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer f.Close()
-	r := csv.NewReader(f)
-	r.Comment = '#'
-	rows, err := r.ReadAll()
-	if err != nil {
-		t.Fatal(err)
-	}
-	for _, row := range rows[1:] {
-		words, values := map[string]string{}, map[string]float64{}
-		for i, v := range row {
-			words[rows[0][i]] = v
-			if x, err := strconv.ParseFloat(v, 64); err == nil {
-				values[rows[0][i]] = x
+	text = outside.Rows(t, name)
+	for _, row := range text {
+		values := map[string]float64{}
+		for column, cell := range row {
+			if x, err := strconv.ParseFloat(cell, 64); err == nil {
+				values[column] = x
 			}
 		}
-		text, numbers = append(text, words), append(numbers, values)
+		numbers = append(numbers, values)
 	}
 	return text, numbers
 }

@@ -1,11 +1,7 @@
 package averages
 
 import (
-	"encoding/csv"
 	"math"
-	"os"
-	"path/filepath"
-	"strconv"
 	"strings"
 	"testing"
 	"time"
@@ -13,41 +9,8 @@ import (
 	"sockline/sensors"
 	"sockline/sensors/quality"
 	"sockline/sensors/quantity"
+	"sockline/testdata/outside"
 )
-
-// table reads an outside table: comment lines, the names of the columns, rows.
-func table(t *testing.T, name string) []map[string]string {
-	t.Helper()
-	f, err := os.Open(filepath.Join("..", "..", "testdata", "outside", name))
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer f.Close()
-	r := csv.NewReader(f)
-	r.Comment = '#'
-	rows, err := r.ReadAll()
-	if err != nil {
-		t.Fatal(err)
-	}
-	var out []map[string]string
-	for _, row := range rows[1:] {
-		m := make(map[string]string, len(row))
-		for i, v := range row {
-			m[rows[0][i]] = v
-		}
-		out = append(out, m)
-	}
-	return out
-}
-
-func number(t *testing.T, text string) float64 {
-	t.Helper()
-	v, err := strconv.ParseFloat(text, 64)
-	if err != nil {
-		t.Fatal(err)
-	}
-	return v
-}
 
 // epoch is a whole minute; second k of a table is measured k s after it.
 const epoch = sensors.Instant(1_782_907_200_000)
@@ -73,17 +36,17 @@ func feed(t *testing.T, st sensors.Station, window time.Duration) (*Recorder, fu
 // Every window of a series with a change of the wind and two gaps, worked out
 // in R: means, deviations, gust with its time, lull, count.
 func TestMeansAgainstTable(t *testing.T) {
-	series := table(t, "gust_series.csv")
-	windows := table(t, "gust_windows.csv")
+	series := outside.Rows(t, "gust_series.csv")
+	windows := outside.Rows(t, "gust_windows.csv")
 	r, add := feed(t, station(time.Second), 30*time.Second)
 	next, two, ten := 0, 0, 0
 	for _, w := range windows {
-		end := int(number(t, w["t_end_s"]))
+		end := int(outside.Number(t, w["t_end_s"]))
 		// The window holds the samples up to, not at, its end; a sample at k
 		// belongs to the step k.
-		for ; next < len(series) && int(number(t, series[next]["t_s"])) < end; next++ {
-			k := sensors.Instant(number(t, series[next]["t_s"]))
-			if !add(epoch+k*sensors.Second, number(t, series[next]["speed_ms"]), number(t, series[next]["dir_deg"])).Usable() {
+		for ; next < len(series) && int(outside.Number(t, series[next]["t_s"])) < end; next++ {
+			k := sensors.Instant(outside.Number(t, series[next]["t_s"]))
+			if !add(epoch+k*sensors.Second, outside.Number(t, series[next]["speed_ms"]), outside.Number(t, series[next]["dir_deg"])).Usable() {
 				t.Fatalf("the sample at %d s is refused", k)
 			}
 		}
@@ -97,26 +60,26 @@ func TestMeansAgainstTable(t *testing.T) {
 			m = got.Ten
 			ten++
 		}
-		if !m.Present || !m.Gusts || !m.Directed || m.Seconds != int(number(t, w["n"])) {
+		if !m.Present || !m.Gusts || !m.Directed || m.Seconds != int(outside.Number(t, w["n"])) {
 			t.Errorf("at %d s: %+v, the table has %s samples", end, m, w["n"])
 		}
 		// Both sides add up to 600 numbers of one digit after the point; the
 		// table has eight.
-		near(t, end, "vector speed", m.Vector.Speed(), number(t, w["vec_speed_ms"]), 1e-7)
-		near(t, end, "direction", m.Vector.From(), number(t, w["vec_dir_deg"]), 1e-7)
-		near(t, end, "scalar speed", m.Speed, number(t, w["scalar_speed_ms"]), 1e-7)
-		near(t, end, "measured speed", m.Raw, number(t, w["scalar_speed_ms"]), 1e-7)
-		near(t, end, "speed deviation", m.SpeedDeviation, number(t, w["sd_speed_n1"]), 1e-7)
-		near(t, end, "gust", m.Gust, number(t, w["gust3_ms"]), 1e-7)
-		near(t, end, "lull", m.Lull, number(t, w["lull3_ms"]), 1e-7)
-		near(t, end, "greatest", m.Max, number(t, w["max1_ms"]), 1e-9)
+		near(t, end, "vector speed", m.Vector.Speed(), outside.Number(t, w["vec_speed_ms"]), 1e-7)
+		near(t, end, "direction", m.Vector.From(), outside.Number(t, w["vec_dir_deg"]), 1e-7)
+		near(t, end, "scalar speed", m.Speed, outside.Number(t, w["scalar_speed_ms"]), 1e-7)
+		near(t, end, "measured speed", m.Raw, outside.Number(t, w["scalar_speed_ms"]), 1e-7)
+		near(t, end, "speed deviation", m.SpeedDeviation, outside.Number(t, w["sd_speed_n1"]), 1e-7)
+		near(t, end, "gust", m.Gust, outside.Number(t, w["gust3_ms"]), 1e-7)
+		near(t, end, "lull", m.Lull, outside.Number(t, w["lull3_ms"]), 1e-7)
+		near(t, end, "greatest", m.Max, outside.Number(t, w["max1_ms"]), 1e-9)
 		// Of equal gusts the first one counts.
-		if at := int((m.GustAt - epoch) / sensors.Second); at != int(number(t, w["gust3_t_s"])) {
+		if at := int((m.GustAt - epoch) / sensors.Second); at != int(outside.Number(t, w["gust3_t_s"])) {
 			t.Errorf("at %d s: the gust was at %d s, the table has %s", end, at, w["gust3_t_s"])
 		}
 		// For one-humped samples the two definitions of the deviation agree
 		// within 0.2 degrees (standard deviations up to 20 degrees).
-		if sd := number(t, w["sd_circ_deg"]); sd < 20 {
+		if sd := outside.Number(t, w["sd_circ_deg"]); sd < 20 {
 			near(t, end, "direction deviation", m.DirectionDeviation, sd, 0.2)
 		}
 	}
@@ -128,13 +91,13 @@ func TestMeansAgainstTable(t *testing.T) {
 // Mean direction and Yamartino's deviation against the table of R and NumPy,
 // with wraps at north, bimodal samples and such that have no mean.
 func TestCircularAgainstTable(t *testing.T) {
-	rows := table(t, "circular_stats.csv")
+	rows := outside.Rows(t, "circular_stats.csv")
 	undefined := 0
 	for _, row := range rows {
 		var sin, cos float64
 		dirs := strings.Split(row["dirs_deg"], ";")
 		for _, d := range dirs {
-			s, c := math.Sincos(number(t, d) * (math.Pi / 180))
+			s, c := math.Sincos(outside.Number(t, d) * (math.Pi / 180))
 			sin += s
 			cos += c
 		}
@@ -145,10 +108,10 @@ func TestCircularAgainstTable(t *testing.T) {
 		}
 		if !ok {
 			undefined++
-		} else if d := math.Abs(turn(mean, number(t, row["mean_deg"]))); d > 2e-6 {
+		} else if d := math.Abs(turn(mean, outside.Number(t, row["mean_deg"]))); d > 2e-6 {
 			t.Errorf("%s: mean %.7f, the table has %s", row["name"], mean, row["mean_deg"])
 		}
-		if want := number(t, row["sd_yamartino_deg"]); math.Abs(deviation-want) > 2e-6 {
+		if want := outside.Number(t, row["sd_yamartino_deg"]); math.Abs(deviation-want) > 2e-6 {
 			t.Errorf("%s: deviation %.7f, the table has %.7f", row["name"], deviation, want)
 		}
 	}
@@ -167,7 +130,7 @@ func near(t *testing.T, at int, what string, got, want, within float64) {
 // A block is the vector mean of its seconds: against means of samples from
 // every side, worked out with numpy.
 func TestBlockMeanAgainstTable(t *testing.T) {
-	for _, row := range table(t, "vector_mean_wind.csv") {
+	for _, row := range outside.Rows(t, "vector_mean_wind.csv") {
 		dirs, speeds := strings.Split(row["dirs_deg"], ";"), strings.Split(row["speeds_ms"], ";")
 		n := len(dirs)
 		// The newest block is as long as the sample, and there is no other.
@@ -178,7 +141,7 @@ func TestBlockMeanAgainstTable(t *testing.T) {
 		last := epoch
 		for i := range n {
 			last = epoch + sensors.Instant(i)*sensors.Second
-			r.Add(checker.Check(sensors.Reading{Time: last, Arrival: last, Speed: number(t, speeds[i]), From: number(t, dirs[i])}))
+			r.Add(checker.Check(sensors.Reading{Time: last, Arrival: last, Speed: outside.Number(t, speeds[i]), From: outside.Number(t, dirs[i])}))
 		}
 		b := r.Snapshot(last).Mast(0).Blocks[0]
 		if !b.Present {
@@ -189,8 +152,8 @@ func TestBlockMeanAgainstTable(t *testing.T) {
 			name      string
 			got, want float64
 		}{
-			{"east", v.East, number(t, row["u_ms"])}, {"north", v.North, number(t, row["v_ms"])},
-			{"speed", v.Speed(), number(t, row["vec_speed_ms"])}, {"direction", v.From(), number(t, row["vec_dir_deg"])},
+			{"east", v.East, outside.Number(t, row["u_ms"])}, {"north", v.North, outside.Number(t, row["v_ms"])},
+			{"speed", v.Speed(), outside.Number(t, row["vec_speed_ms"])}, {"direction", v.From(), outside.Number(t, row["vec_dir_deg"])},
 		} {
 			if math.Abs(c.got-c.want) > 1e-6 { // the table has six digits
 				t.Errorf("case %s: %s %.7f, the table has %.7f", row["case"], c.name, c.got, c.want)

@@ -1,17 +1,16 @@
 package decode
 
 import (
-	"encoding/csv"
 	"encoding/json"
 	"fmt"
 	"math"
-	"os"
 	"strconv"
 	"strings"
 	"testing"
 
 	"sockline/sensors"
 	"sockline/sensors/quantity"
+	"sockline/testdata/outside"
 )
 
 // sentence frames a body with "$" and its checksum.
@@ -23,40 +22,13 @@ func sentence(body string) string {
 	return fmt.Sprintf("$%s*%02X", body, sum)
 }
 
-// readTable reads a CSV file whose first lines are comments; rows are maps by
-// column.
-func readTable(t *testing.T, path string) []map[string]string {
-	t.Helper()
-	file, err := os.Open(path)
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer func() { _ = file.Close() }() // only read from
-	reader := csv.NewReader(file)
-	reader.Comment = '#'
-	reader.TrimLeadingSpace = true
-	lines, err := reader.ReadAll()
-	if err != nil {
-		t.Fatal(err)
-	}
-	var rows []map[string]string
-	for _, line := range lines[1:] {
-		row := map[string]string{}
-		for i, column := range lines[0] {
-			row[column] = line[i]
-		}
-		rows = append(rows, row)
-	}
-	return rows
-}
-
 func TestNMEAVectors(t *testing.T) {
 	// Published sentences and what they mean by the definition; see the header
 	// of the file. Where knots and m/s contradict each other this decoder
 	// refuses; sentences of other types are passed over, and so is an XDR
 	// without transducers of a wind.
 	d := newDecoder(t, sensors.Station{Format: sensors.FormatNMEA0183})
-	rows := readTable(t, "../../testdata/outside/nmea_vectors.csv")
+	rows := outside.Rows(t, "nmea_vectors.csv")
 	if len(rows) < 24 {
 		t.Fatalf("%d rows, want at least 24", len(rows))
 	}
@@ -221,7 +193,7 @@ func TestRealRecord(t *testing.T) {
 		}
 		return v
 	}
-	rows := readTable(t, "../../testdata/outside/wind_1hz_boat.csv")
+	rows := outside.Rows(t, "wind_1hz_boat.csv")
 	var all []sensors.Reading
 	for _, row := range rows {
 		payload := sentence(fmt.Sprintf("WIMWD,%s,T,%s,M,%s,N,%s,M", row["dir_true_deg"], row["dir_mag_deg"], row["speed_kt"], row["speed_ms"])) + "\r\n" +
@@ -238,7 +210,7 @@ func TestRealRecord(t *testing.T) {
 		}
 		all = append(all, got[0])
 	}
-	for _, window := range readTable(t, "../../testdata/outside/wind_1hz_boat_stats.csv") {
+	for _, window := range outside.Rows(t, "wind_1hz_boat_stats.csv") {
 		// Vector means by R: the file gives nine digits.
 		first, last := int(value(window, "first_i")), int(value(window, "last_i"))
 		var east, north float64
