@@ -209,7 +209,7 @@ func (t *teller) follow(cfg *config.Config) {
 
 // lastWords is how long before the end of the last run what was recorded may
 // not have reached the queues of the webhooks.
-const lastWords = 10 * time.Second
+const lastWords = time.Minute
 
 // takeUp hands over once more what opened and closed in the last moments of
 // the last run: a kill may have come between the history and the queues. A

@@ -237,3 +237,38 @@ exercise = true
 		t.Error("check gives a secret away")
 	}
 }
+
+// TestTakeUpAfterAKill: what the history has and the queue of a webhook has
+// not, because a kill came between them, is told by the next run.
+func TestTakeUpAfterAKill(t *testing.T) {
+	broker := brokertest.Start(t)
+	tower := newTold(t)
+	dir := t.TempDir()
+	more := hookText(tower, "name = \"tower\"\nexercise = true")
+	h := newHurry(8)
+	ears := listenTo(t, broker.URL())
+	away := strings.Replace(more, tower.URL, "https://127.0.0.1:1", 1)
+	d := startDaemon(t, mustLoad(t, siteWith(t, broker.URL(), dir, away)), h.clock(t), "")
+	until(t, "the daemon to listen", func() bool { return d.subscribed.Load() })
+	stop := newBlower(t, d.current(), steady, broker.URL(), h)
+	opened := ears.awaitAlert(t, "an alert", 0, landingLoss)
+	stop()
+	if err := d.stop(); err != nil {
+		t.Error(err)
+	}
+	if err := os.RemoveAll(filepath.Join(dir, "webhooks")); err != nil {
+		t.Fatal(err)
+	}
+	d = startDaemon(t, mustLoad(t, siteWith(t, broker.URL(), dir, more)), h.clock(t), "")
+	until(t, "the opening", func() bool {
+		for _, e := range tower.ofType("sockline.alert.opened") {
+			if e["subject"] == opened.ID && e["id"] == opened.ID+"/1" {
+				return true
+			}
+		}
+		return false
+	})
+	if err := d.stop(); err != nil {
+		t.Error(err)
+	}
+}

@@ -202,9 +202,91 @@ func TestFlippedBits(t *testing.T) {
 func TestOneProgramAFile(t *testing.T) {
 	first := newRig(t, nil)
 	second := newRig(t, func(o *Options) { o.File = first.opts.File })
+	first.Offer(event("first", 1, Opening, start()))
+	first.settle()
+	second.Offer(event("second", 1, Opening, start()))
+	second.pass(3*mendEvery, time.Second)
 	if st := second.State(); !strings.Contains(st.Disk, "another sockline") {
 		t.Errorf("%+v", st)
 	}
+	// It takes the file over when the first ends, with what the first left.
+	first.end()
+	second.pass(2*mendEvery, time.Second)
+	if st := second.State(); st.Disk != "" || st.Waiting != 2 {
+		t.Errorf("%+v", st)
+	}
+	second.end()
+	second.open()
+	if st := second.State(); st.Waiting != 2 {
+		t.Errorf("after a restart: %+v", st)
+	}
+}
+
+// TestFileOfAnotherVersion is told of and left alone.
+func TestFileOfAnotherVersion(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "queue")
+	const other = "sockline webhook queue 2\nwhatever"
+	if err := os.WriteFile(path, []byte(other), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	r := newRig(t, func(o *Options) { o.File = path })
+	r.Offer(event("a", 1, Opening, start()))
+	r.pass(3*mendEvery, time.Second)
+	text, err := os.ReadFile(path)
+	if st := r.State(); err != nil || string(text) != other || !strings.Contains(st.Disk, "move it away") || st.Waiting != 1 {
+		t.Errorf("%q, %v, %+v", text, err, st)
+	}
+}
+
+// TestNobodyTakes: what is handed over while Run hangs is bounded, updates
+// first.
+func TestNobodyTakes(t *testing.T) {
+	r := newRig(t, nil)
+	for i := range 3 * maxIncoming {
+		r.Offer(event("a", i, Update, start()))
+	}
+	if n := len(r.incoming); n != 1 || r.incoming[0].event.ID != fmt.Sprintf("a/%d", 3*maxIncoming-1) {
+		t.Errorf("%d updates of one alert wait", n)
+	}
+	for i := range maxIncoming + 5 {
+		r.Offer(event(fmt.Sprint("b", i), 1, Opening, start()))
+	}
+	r.report()
+	if st := r.State(); len(r.incoming) != maxIncoming || st.Lost != 6 {
+		t.Errorf("%d wait, %+v", len(r.incoming), st)
+	}
+}
+
+// FuzzQueueFile: whatever a file holds, what is read of it is what a file of
+// its good part holds, and can be written again.
+func FuzzQueueFile(f *testing.F) {
+	q := newLanes(10)
+	b, _, err := frames(q.put(event("a", 1, Opening, start()), start()))
+	if err != nil {
+		f.Fatal(err)
+	}
+	f.Add(append([]byte(magic), b...))
+	f.Add([]byte(magic))
+	f.Add([]byte("sockline webhook"))
+	f.Add(append([]byte(magic), 0xff, 0xff, 0xff, 0xff, 0, 0, 0, 0))
+	f.Fuzz(func(t *testing.T, text []byte) {
+		records, good := scan(text)
+		if good > int64(len(text)) {
+			t.Fatalf("%d of %d bytes are good", good, len(text))
+		}
+		again, same := scan(text[:good])
+		if same != good || len(again) != len(records) {
+			t.Fatalf("%d records of %d bytes, then %d of %d", len(records), good, len(again), same)
+		}
+		for _, r := range records {
+			if !r.sound() {
+				t.Errorf("%+v", r)
+			}
+			if _, _, err := frames([]record{r.record}); err != nil {
+				t.Error(err)
+			}
+		}
+	})
 }
 
 // TestFileIsTidied: it does not grow with what is done.

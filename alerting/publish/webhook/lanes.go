@@ -54,12 +54,18 @@ func (q *lanes) put(e Event, at time.Time) (changed []record) {
 	return append(changed, recordOf(l.waits[e.Phase]))
 }
 
-// restore puts back what a file holds.
-func (q *lanes) restore(r record) {
+// restore puts back what a file holds, unless there is something newer. With
+// keep it goes by its number in the file, so that its end can be written there;
+// without, the file is about to be written anew.
+func (q *lanes) restore(r record, keep bool) {
+	if l := q.alerts[r.Event.Alert]; l != nil && l.waits[r.Event.Phase] != nil {
+		return
+	}
 	q.put(*r.Event, time.UnixMilli(r.Handed))
-	// Its number in the file stays, so that its end can be written down.
-	q.alerts[r.Event.Alert].waits[r.Event.Phase].seq = r.Put
-	q.seq = max(q.seq, r.Put)
+	if keep {
+		q.alerts[r.Event.Alert].waits[r.Event.Phase].seq = r.Put
+		q.seq = max(q.seq, r.Put)
+	}
 }
 
 func (q *lanes) setBeat(e Event, at time.Time) {

@@ -158,38 +158,43 @@ func (r *Receiver) recovered() {
 func (r *Receiver) report() {
 	r.mu.Lock()
 	r.told.Withheld = r.withheld
-	waiting := len(r.incoming)
+	waiting, lost := len(r.incoming), r.lanes.lost+r.overrun
 	r.mu.Unlock()
 	n, oldest := r.lanes.waiting()
 	r.told.Waiting, r.told.Oldest = n+waiting, oldest
-	if r.lanes.lost > r.told.Lost {
-		r.log.Error().Uint64("lost", r.lanes.lost).Msg("too many alerts wait for the receiver of a webhook; the oldest closed ones were given up")
+	if lost > r.told.Lost {
+		r.log.Error().Uint64("lost", lost).Msg("too many alerts wait for the receiver of a webhook; some were given up")
 	}
-	r.told.Lost = r.lanes.lost
+	r.told.Lost = lost
 	now := r.told
 	r.state.Store(&now)
 }
 
-// openFile reads what an earlier run left.
+// openFile reads what an earlier run left, once it can.
 func (r *Receiver) openFile(now time.Time) {
 	f, records, damage, err := openFile(r.opts.File)
 	if err != nil {
 		r.diskTrouble(err, now)
 		return
 	}
-	r.file = f
 	if damage > 0 {
 		r.log.Error().Int64("bytes", damage).Str("file", r.opts.File).
 			Msg("the end of the queue of a webhook was damaged and is cut off; what was in it is in the history")
 	}
+	r.file = f
+	if r.loaded { // what it holds was read before and lives on in memory
+		return
+	}
+	r.loaded = true
+	keep := r.lanes.seq == 0 // else numbers of this run are taken already
 	for _, rec := range records {
 		if rec.Event == nil || r.withholds(*rec.Event) {
 			continue // a drill of an earlier run, for a receiver that now takes none
 		}
-		r.lanes.restore(rec)
+		r.lanes.restore(rec, keep)
 	}
-	if n, _ := r.lanes.waiting(); n > 0 {
-		r.log.Info().Int("waiting", n).Msg("events of an earlier run wait for the receiver of a webhook")
+	if len(records) > 0 {
+		r.log.Info().Int("waiting", len(records)).Msg("events of an earlier run wait for the receiver of a webhook")
 	}
 }
 
@@ -209,12 +214,14 @@ func (r *Receiver) syncFile(now time.Time) {
 		if now.Before(r.mend) {
 			return
 		}
-		f, err := rewrite(r.opts.File, r.lanes.records())
-		if err != nil {
-			r.diskTrouble(err, now)
+		// Opening comes first, since the file may be another program's, or of
+		// another version: such a one is never written over.
+		if r.openFile(now); r.file == nil {
 			return
 		}
-		r.file = f
+		if !r.renewFile(now) {
+			return
+		}
 		r.told.Disk = ""
 		r.log.Info().Str("file", r.opts.File).Msg("the queue of a webhook is on disk again")
 		return
@@ -223,16 +230,21 @@ func (r *Receiver) syncFile(now time.Time) {
 		r.abandonFile(err, now)
 		return
 	}
-	if !r.file.wasteful() {
-		return
+	if r.file.wasteful() {
+		r.renewFile(now)
 	}
+}
+
+// renewFile puts a new file of what waits in the place of the open one.
+func (r *Receiver) renewFile(now time.Time) bool {
 	f, err := rewrite(r.opts.File, r.lanes.records())
 	if err != nil {
 		r.abandonFile(err, now)
-		return
+		return false
 	}
 	_ = r.file.close() // replaced; what it held is in the new one
 	r.file = f
+	return true
 }
 
 func (r *Receiver) abandonFile(err error, now time.Time) {

@@ -45,6 +45,8 @@ const (
 	ExpireAfter = 72 * time.Hour
 
 	defaultMaxAlerts = 1024
+	// maxIncoming bounds what Run has not taken yet, for a disk that hangs.
+	maxIncoming = 4096
 	// slots is how many requests are under way at once, of which one is kept
 	// for what is sent for the first time.
 	slots = 4
@@ -161,11 +163,13 @@ type Receiver struct {
 	incoming []handed
 	beat     *handed
 	withheld uint64
+	overrun  uint64 // given up because Run took none
 
 	// The rest belongs to Run.
 	results chan result
 	lanes   *lanes
 	file    *file
+	loaded  bool      // what an earlier run left was read
 	mend    time.Time // not before
 	flying  int
 	down    bool
@@ -237,7 +241,18 @@ func (r *Receiver) Offer(e Event) {
 		r.withheld++
 		return
 	}
-	r.incoming = append(r.incoming, handed{e, r.opts.Now()})
+	h := handed{e, r.opts.Now()}
+	for i := len(r.incoming) - 1; i >= 0 && e.Phase == Update; i-- {
+		if old := &r.incoming[i]; old.event.Alert == e.Alert && old.event.Phase == Update {
+			*old = h // nobody took it yet, and it has grown old
+			return
+		}
+	}
+	if len(r.incoming) >= maxIncoming {
+		r.overrun++
+		return
+	}
+	r.incoming = append(r.incoming, h)
 	r.nudge()
 }
 
