@@ -115,49 +115,81 @@ func (b *frontBank) prior(int) (c [6]float64, q [dims]float64, rest float64) {
 	}, [dims]float64{1, 0, 0}, 0
 }
 
-// project: all fronts of one heading share the components of w along and to
-// the left of it.
-func (b *frontBank) project(en *entry, w, out []float64) {
-	n, nb := len(b.fronts), blocks*len(en.live)
-	along, left := b.along[:nb], b.left[:nb]
-	for first := 0; first < n; {
-		f := b.fronts[first]
-		last := first + 1
-		for last < n && b.fronts[last].east == f.east && b.fronts[last].north == f.north {
+// headings calls fn for each run of fronts of one heading.
+func (b *frontBank) headings(fn func(f front, first, last int)) {
+	for first := 0; first < len(b.fronts); {
+		f, last := b.fronts[first], first+1
+		for last < len(b.fronts) && b.fronts[last].east == f.east && b.fronts[last].north == f.north {
 			last++
 		}
-		for i := range nb {
-			along[i] = float64(w[2*i]*f.east) + float64(w[2*i+1]*f.north)
-			left[i] = float64(w[2*i+1]*f.east) - float64(w[2*i]*f.north)
-		}
-		rows := func(d int) blas64.General {
-			return blas64.General{Rows: last - first, Cols: nb, Stride: 2 * nb, Data: en.fronts[(2*first+d)*nb:]}
-		}
-		blas64.Gemv(blas.NoTrans, 1, rows(0), vec(along), 0, vec(out[first:last]))
-		blas64.Gemv(blas.NoTrans, 1, rows(0), vec(left), 0, vec(out[n+first:n+last]))
-		blas64.Gemv(blas.NoTrans, 1, rows(1), vec(along), 0, vec(out[2*n+first:2*n+last]))
+		fn(f, first, last)
 		first = last
 	}
 }
 
-func (b *frontBank) gram(en *entry, s *state, m []float64) {
-	n := len(b.fronts)
-	all := make([]float64, dims*n*en.n)
-	solved := make([]float64, dims*n*en.n)
-	row := func(data []float64, j, d int) []float64 { return data[(dims*j+d)*en.n : (dims*j+d+1)*en.n] }
-	for j := range b.fronts {
-		for d := range dims {
-			b.column(en, j, d, row(all, j, d))
+// frontRows is the shares (0) or the rates (1) of a run of fronts at the live masts'
+// blocks.
+func (en *entry) frontRows(which, first, last int) blas64.General {
+	nb := en.n / 2
+	return blas64.General{Rows: last - first, Cols: nb, Stride: 2 * nb, Data: en.fronts[(2*first+which)*nb:]}
+}
+
+// project: all fronts of one heading share the components of w along and to
+// the left of it.
+func (b *frontBank) project(en *entry, w, out []float64) {
+	n, nb := len(b.fronts), en.n/2
+	along, left := b.along[:nb], b.left[:nb]
+	b.headings(func(f front, first, last int) {
+		for i := range nb {
+			along[i] = float64(w[2*i]*f.east) + float64(w[2*i+1]*f.north)
+			left[i] = float64(w[2*i+1]*f.east) - float64(w[2*i]*f.north)
 		}
-	}
-	blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(dims*n, en.n, all), mat(en.n, en.n, s.inverse), 0, mat(dims*n, en.n, solved))
-	for j := range b.fronts {
-		k := 0
-		for r := range dims {
-			for c := r; c < dims; c++ {
-				m[j*6+k] = blas64.Dot(vec(row(solved, j, r)), vec(row(all, j, c)))
-				k++
+		shares, rates := en.frontRows(0, first, last), en.frontRows(1, first, last)
+		blas64.Gemv(blas.NoTrans, 1, shares, vec(along), 0, vec(out[first:last]))
+		blas64.Gemv(blas.NoTrans, 1, shares, vec(left), 0, vec(out[n+first:n+last]))
+		blas64.Gemv(blas.NoTrans, 1, rates, vec(along), 0, vec(out[2*n+first:2*n+last]))
+	})
+}
+
+// gram works on K^-1 turned into the axes of each heading, where a front is
+// one number a mast and block.
+func (b *frontBank) gram(en *entry, s *state, m []float64) {
+	nb := en.n / 2
+	along, across, left := make([]float64, nb*nb), make([]float64, nb*nb), make([]float64, nb*nb)
+	product := make([]float64, len(b.fronts)*nb)
+	b.headings(func(f front, first, last int) {
+		turn(en, s, f, along, across, left)
+		shares, rates := en.frontRows(0, first, last), en.frontRows(1, first, last)
+		// Row by row: left . axes . right', into place k of M.
+		fill := func(k int, rows blas64.General, axes []float64, with blas64.General) {
+			out := mat(last-first, nb, product[:(last-first)*nb])
+			blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, rows, mat(nb, nb, axes), 0, out)
+			for j := range last - first {
+				m[(first+j)*6+k] = blas64.Dot(vec(out.Data[j*nb:(j+1)*nb]), vec(with.Data[j*with.Stride:j*with.Stride+nb]))
 			}
+		}
+		fill(0, shares, along, shares)
+		fill(1, shares, across, shares)
+		fill(2, shares, along, rates)
+		fill(3, shares, left, shares)
+		fill(4, rates, across, shares)
+		fill(5, rates, along, rates)
+	})
+}
+
+// turn fills K^-1 between the components along (along), along and left
+// (across), and left (left) of a heading.
+func turn(en *entry, s *state, f front, along, across, left []float64) {
+	nb := en.n / 2
+	ee, eno, nn := float64(f.east*f.east), float64(f.east*f.north), float64(f.north*f.north)
+	for i := range nb {
+		for j := range nb {
+			k00, k01 := s.inverse[2*i*en.n+2*j], s.inverse[2*i*en.n+2*j+1]
+			k10, k11 := s.inverse[(2*i+1)*en.n+2*j], s.inverse[(2*i+1)*en.n+2*j+1]
+			o := i*nb + j
+			along[o] = float64(ee*k00) + float64(eno*(k01+k10)) + float64(nn*k11)
+			across[o] = float64(ee*k01) - float64(nn*k10) + float64(eno*(k11-k00))
+			left[o] = float64(nn*k00) - float64(eno*(k01+k10)) + float64(ee*k11)
 		}
 	}
 }
