@@ -155,41 +155,40 @@ func (b *frontBank) project(en *entry, w, out []float64) {
 // one number a mast and block.
 func (b *frontBank) gram(en *entry, s *state, m []float64) {
 	nb := en.n / 2
-	along, across, left := make([]float64, nb*nb), make([]float64, nb*nb), make([]float64, nb*nb)
-	product := make([]float64, len(b.fronts)*nb)
+	axes := make([]float64, nb*3*nb) // [i][along, across, left][j]
+	product := make([]float64, 2*len(b.fronts)*3*nb)
 	b.headings(func(f front, first, last int) {
-		turn(en, s, f, along, across, left)
-		shares, rates := en.frontRows(0, first, last), en.frontRows(1, first, last)
-		// Row by row: left . axes . right', into place k of M.
-		fill := func(k int, rows blas64.General, axes []float64, with blas64.General) {
-			out := mat(last-first, nb, product[:(last-first)*nb])
-			blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, rows, mat(nb, nb, axes), 0, out)
-			for j := range last - first {
-				m[(first+j)*6+k] = blas64.Dot(vec(out.Data[j*nb:(j+1)*nb]), vec(with.Data[j*with.Stride:j*with.Stride+nb]))
-			}
+		turn(en, s, f, axes)
+		// Shares and rates lie in turn in the same rows.
+		rows := mat(2*(last-first), nb, en.fronts[2*first*nb:2*last*nb])
+		out := mat(rows.Rows, 3*nb, product[:rows.Rows*3*nb])
+		blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, rows, mat(nb, 3*nb, axes), 0, out)
+		// dot is row . axes . row', the axis being 0 along, 1 across, 2 left.
+		dot := func(row, axis, with int) float64 {
+			return blas64.Dot(vec(out.Data[(row*3+axis)*nb:(row*3+axis+1)*nb]), vec(rows.Data[with*nb:(with+1)*nb]))
 		}
-		fill(0, shares, along, shares)
-		fill(1, shares, across, shares)
-		fill(2, shares, along, rates)
-		fill(3, shares, left, shares)
-		fill(4, rates, across, shares)
-		fill(5, rates, along, rates)
+		for j := range last - first {
+			share, rate := 2*j, 2*j+1
+			g := m[(first+j)*6 : (first+j)*6+6]
+			g[0], g[1], g[2] = dot(share, 0, share), dot(share, 1, share), dot(share, 0, rate)
+			g[3], g[4], g[5] = dot(share, 2, share), dot(rate, 1, share), dot(rate, 0, rate)
+		}
 	})
 }
 
-// turn fills K^-1 between the components along (along), along and left
-// (across), and left (left) of a heading.
-func turn(en *entry, s *state, f front, along, across, left []float64) {
+// turn fills axes with K^-1 between the components along and along a heading,
+// along and left of it, and left and left.
+func turn(en *entry, s *state, f front, axes []float64) {
 	nb := en.n / 2
 	ee, eno, nn := float64(f.east*f.east), float64(f.east*f.north), float64(f.north*f.north)
 	for i := range nb {
 		for j := range nb {
 			k00, k01 := s.inverse[2*i*en.n+2*j], s.inverse[2*i*en.n+2*j+1]
 			k10, k11 := s.inverse[(2*i+1)*en.n+2*j], s.inverse[(2*i+1)*en.n+2*j+1]
-			o := i*nb + j
-			along[o] = float64(ee*k00) + float64(eno*(k01+k10)) + float64(nn*k11)
-			across[o] = float64(ee*k01) - float64(nn*k10) + float64(eno*(k11-k00))
-			left[o] = float64(nn*k00) - float64(eno*(k01+k10)) + float64(ee*k11)
+			o := i*3*nb + j
+			axes[o] = float64(ee*k00) + float64(eno*(k01+k10)) + float64(nn*k11)
+			axes[o+nb] = float64(ee*k01) - float64(nn*k10) + float64(eno*(k11-k00))
+			axes[o+2*nb] = float64(nn*k00) - float64(eno*(k01+k10)) + float64(ee*k11)
 		}
 	}
 }
