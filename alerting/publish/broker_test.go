@@ -28,7 +28,7 @@ type daemon struct {
 	stop func()
 }
 
-func start(t *testing.T, broker *brokertest.Broker, instance string) *daemon {
+func start(t testing.TB, broker *brokertest.Broker, instance string) *daemon {
 	t.Helper()
 	const prefix = "sockline/skerrymoor"
 	status := func(condition alerting.Condition, at time.Time) []byte {
@@ -99,7 +99,7 @@ func start(t *testing.T, broker *brokertest.Broker, instance string) *daemon {
 }
 
 // until waits for a condition that the other side brings about.
-func until(t *testing.T, what string, limit time.Duration, ok func() bool) {
+func until(t testing.TB, what string, limit time.Duration, ok func() bool) {
 	t.Helper()
 	deadline := time.NewTimer(limit)
 	defer deadline.Stop()
@@ -115,7 +115,7 @@ func until(t *testing.T, what string, limit time.Duration, ok func() bool) {
 }
 
 // retained is what a client that comes new to the broker finds.
-func retained(t *testing.T, broker *brokertest.Broker) map[string]string {
+func retained(t testing.TB, broker *brokertest.Broker) map[string]string {
 	t.Helper()
 	s := subscribe(t, broker)
 	found := map[string]string{}
@@ -133,7 +133,7 @@ func retained(t *testing.T, broker *brokertest.Broker) map[string]string {
 	return found
 }
 
-func subscribe(t *testing.T, broker *brokertest.Broker) *feed.Subscriber {
+func subscribe(t testing.TB, broker *brokertest.Broker) *feed.Subscriber {
 	t.Helper()
 	s, err := feed.Subscribe(t.Context(), feed.SubscribeOptions{
 		Broker: feed.Broker{URL: broker.URL()}, ClientID: "reader", Topics: []string{"sockline/skerrymoor/#"},
@@ -154,7 +154,7 @@ func open(id string) publish.Issue {
 }
 
 // alertsFrom collects the ids of alerts until all of want have come.
-func alertsFrom(t *testing.T, s *feed.Subscriber, want ...string) {
+func alertsFrom(t testing.TB, s *feed.Subscriber, want ...string) {
 	t.Helper()
 	limit := time.After(15 * time.Second)
 	for len(want) > 0 {
@@ -194,13 +194,19 @@ func TestRealBroker(t *testing.T) {
 
 	broker.Kill() // and with it everything retained
 	until(t, "the first daemon notices", 10*time.Second, mode(first, publish.Unconnected))
-	if err := first.Issue(open("a2")); err != nil {
-		t.Fatal(err)
+	// Twins find the same alert. Whichever of them speaks first after the outage
+	// tells it; the other stays silent.
+	for _, d := range []*daemon{first, second} {
+		if err := d.Issue(open("a2")); err != nil {
+			t.Fatal(err)
+		}
 	}
 	broker.Run()
 	// The reader may come back after the daemon, and then never sees it: what
 	// counts is that the broker has acknowledged it.
-	until(t, "the broker takes the alert of the outage", 15*time.Second, func() bool { return first.State().Issues == 2 })
+	until(t, "the broker takes the alert of the outage", 15*time.Second, func() bool {
+		return first.State().Issues == 2 || second.State().Issues >= 1
+	})
 	until(t, "exactly one speaks again", 15*time.Second, func() bool {
 		modes := []publish.Mode{first.State().Mode, second.State().Mode}
 		return slices.Contains(modes, publish.Sending) && slices.Contains(modes, publish.Silent)
@@ -222,30 +228,26 @@ func TestRealBroker(t *testing.T) {
 	until(t, "the other daemon takes over", 15*time.Second, mode(other, publish.Sending))
 }
 
-// TestDelayToTheBroker measures the way of an alert from being handed over to
-// a reader behind a real broker, beside the load of retained values.
-func TestDelayToTheBroker(t *testing.T) {
-	broker := brokertest.Start(t)
-	reader := subscribe(t, broker)
-	d := start(t, broker, "first")
-	until(t, "the daemon publishes", 10*time.Second, func() bool { return d.State().Mode == publish.Sending })
-	delays := make([]time.Duration, 0, 200)
-	for i := range cap(delays) {
-		id := fmt.Sprint("d", i)
+// BenchmarkDelayToTheBroker measures the way of an alert from being handed over
+// to a reader behind a real broker, beside the load of retained values.
+func BenchmarkDelayToTheBroker(b *testing.B) {
+	broker := brokertest.Start(b)
+	reader := subscribe(b, broker)
+	d := start(b, broker, "first")
+	until(b, "the daemon publishes", 10*time.Second, func() bool { return d.State().Mode == publish.Sending })
+	var delays []time.Duration
+	for b.Loop() {
+		id := fmt.Sprint("d", len(delays))
 		begun := time.Now()
 		if err := d.Issue(open(id)); err != nil {
-			t.Fatal(err)
+			b.Fatal(err)
 		}
-		alertsFrom(t, reader, id)
+		alertsFrom(b, reader, id)
 		delays = append(delays, time.Since(begun))
 	}
 	slices.Sort(delays)
-	p99 := delays[len(delays)*99/100]
-	t.Logf("alert handed over to alert read: median %v, p99 %v", delays[len(delays)/2], p99)
-	// The aim is 50 ms; a machine shared with other tests gets ten times that.
-	if p99 > 500*time.Millisecond {
-		t.Errorf("p99 is %v", p99)
-	}
+	b.ReportMetric(float64(delays[len(delays)/2].Microseconds()), "p50-us")
+	b.ReportMetric(float64(delays[len(delays)*99/100].Microseconds()), "p99-us")
 }
 
 var _ publish.Broker = (*feed.Publisher)(nil)
