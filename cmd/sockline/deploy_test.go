@@ -276,7 +276,7 @@ func TestEverythingIsExplained(t *testing.T) {
 // Everything that is printed or shown to people ends with the notice.
 func TestDeployedTextsHoldTheNotice(t *testing.T) {
 	for _, name := range []string{
-		"install.md", "operations.md", "region.md", "commissioning.html", "daily.html", "monitoring/dashboard.json", "package/nfpm.yaml",
+		"install.md", "operations.md", "region.md", "telling.md", "commissioning.html", "daily.html", "monitoring/dashboard.json", "package/nfpm.yaml",
 	} {
 		words := strings.Join(strings.Fields(strings.ReplaceAll(deployed(t, name), "\n>", " ")), " ")
 		if !strings.Contains(words, alerting.Notice) {
@@ -290,7 +290,7 @@ func TestManualsNameRealCommands(t *testing.T) {
 	typed := regexp.MustCompile(`(?m)(?:^|[^/\w.-])sockline ([a-z]+(?: [a-z]+)?)((?:[^\n]*\\\n)*[^\n]*--[^\n]*)`)
 	flags := regexp.MustCompile(`--([a-z-]+)`)
 	seen := 0
-	for _, name := range []string{"install.md", "operations.md", "region.md", "sockline.service", "sockline.example.toml"} {
+	for _, name := range []string{"install.md", "operations.md", "region.md", "telling.md", "sockline.service", "sockline.example.toml"} {
 		for _, m := range typed.FindAllStringSubmatch(deployed(t, name), -1) {
 			c, _, ok := find(strings.Fields(m[1]))
 			if !ok {
