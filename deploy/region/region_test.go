@@ -1,6 +1,7 @@
-// Package region_test takes the issues of five airfields, through the sink and
-// the connection that a daemon publishes with, and gives them to one reader in
-// the region, by way of a cluster of three real brokers of which one is killed.
+// Package region_test takes the issues of five airfields, once through the sink
+// and the connection that a daemon publishes with, once from five daemons with
+// masts, and gives them to one reader in the region, by way of a cluster of
+// three real brokers of which one is killed.
 // It is a module of its own, so that no broker cluster is among the program's
 // dependencies. Next: nothing.
 package region_test
@@ -300,13 +301,20 @@ type regionReader struct {
 func readRegion(t *testing.T, broker string) *regionReader {
 	t.Helper()
 	r := &regionReader{first: map[string]bool{}, fields: map[string][]arrival{}}
+	subscribe(t, broker, map[string]byte{"sockline/+/alert": 1, "sockline/+/status": 0, "sockline/+/path/#": 0}, r.take)
+	return r
+}
+
+// subscribe gives what arrives, one message at a time, until the test ends.
+func subscribe(t *testing.T, broker string, topics map[string]byte, take func(mqtt.Message)) {
+	t.Helper()
 	granted := make(chan struct{}, 1)
 	o := mqtt.NewClientOptions().AddBroker(strings.Replace(broker, "mqtt://", "tcp://", 1)).SetClientID("region").
 		SetCleanSession(false).SetConnectRetry(true).SetConnectRetryInterval(500 * time.Millisecond).
 		SetMaxReconnectInterval(time.Second).SetKeepAlive(5 * time.Second).SetPingTimeout(3 * time.Second).SetOrderMatters(true)
 	o.SetOnConnectHandler(func(c mqtt.Client) {
 		go func() { // a handler must not wait for an answer
-			token := c.SubscribeMultiple(map[string]byte{"sockline/+/alert": 1, "sockline/+/status": 0, "sockline/+/path/#": 0}, nil)
+			token := c.SubscribeMultiple(topics, nil)
 			if token.WaitTimeout(10*time.Second) && token.Error() == nil {
 				select {
 				case granted <- struct{}{}:
@@ -315,7 +323,7 @@ func readRegion(t *testing.T, broker string) *regionReader {
 			}
 		}()
 	})
-	o.SetDefaultPublishHandler(func(_ mqtt.Client, m mqtt.Message) { r.take(m) })
+	o.SetDefaultPublishHandler(func(_ mqtt.Client, m mqtt.Message) { take(m) })
 	c := mqtt.NewClient(o)
 	c.Connect()
 	t.Cleanup(func() { c.Disconnect(250) })
@@ -324,7 +332,6 @@ func readRegion(t *testing.T, broker string) *regionReader {
 	case <-time.After(patience):
 		t.Fatalf("the reader got no subscription within %v", patience)
 	}
-	return r
 }
 
 func (r *regionReader) take(m mqtt.Message) {
