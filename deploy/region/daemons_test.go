@@ -87,6 +87,10 @@ func TestDaemonsLoseANode(t *testing.T) {
 			}
 		})
 	}
+	for i, id := range airfields { // the load beside them
+		f := newField(t, "load-"+id, c.front(t, i%len(c.nodes)))
+		running.Go(func() { f.keepOn(ctx, t) })
+	}
 	killed := false
 	for _, wait := range []<-chan struct{}{sites[lostNode].again, sites[0].told, sites[1].told, sites[2].told, sites[3].told, sites[4].told} {
 		select {
@@ -114,6 +118,21 @@ func TestDaemonsLoseANode(t *testing.T) {
 	compare(t, sites, reader)
 	stop()
 	running.Wait()
+}
+
+// keepOn publishes as the other test does, until ctx ends. What comes of it is
+// the business of that test.
+func (f *field) keepOn(ctx context.Context, t *testing.T) {
+	load := time.NewTicker(turn)
+	defer load.Stop()
+	for {
+		select {
+		case <-ctx.Done():
+			return
+		case now := <-load.C:
+			f.turn(t, now)
+		}
+	}
 }
 
 // compare holds what the reader got against what the histories hold.
