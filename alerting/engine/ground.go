@@ -22,7 +22,6 @@ type ground struct {
 	masts    []airfield.Point
 	targets  []windfield.Target
 	paths    []pathGround
-	measured []*shear.Stretch // each stretch once
 	live     []bool
 	known    bool // live has been set once
 }
@@ -78,7 +77,7 @@ func (g *ground) addRunway(r *airfield.Runway) {
 		l.before = append(l.before, s)
 		g.targets = append(g.targets, windfield.Target{X: x, Y: y, East: east, North: north})
 	}
-	var stretches []*shear.Stretch
+	var stretches []covered
 	for i, p := range paths {
 		stretches = g.addPath(p, lead, l, spans[i], stretches)
 	}
@@ -93,9 +92,16 @@ func inFrame(lead, p airfield.Path) airfield.Interval {
 	return airfield.Interval{From: math.Max(a, b), To: math.Min(a, b)}
 }
 
+// covered is the ground of a stretch. Paths share a stretch only if they cover
+// the same ground to the metre: what is observed of it is then the same too.
+type covered struct {
+	span    airfield.Interval
+	stretch *shear.Stretch
+}
+
 // addPath gives a path its stretch, shared where another path covers the same
 // points, and its view of it.
-func (g *ground) addPath(p, lead airfield.Path, l line, span airfield.Interval, stretches []*shear.Stretch) []*shear.Stretch {
+func (g *ground) addPath(p, lead airfield.Path, l line, span airfield.Interval, stretches []covered) []covered {
 	var points []int
 	pg := pathGround{path: p, beside: airfield.MastsBeside(p, g.masts, g.reach)}
 	pg.view.Reversed = p.Runway() != lead.Runway()
@@ -107,15 +113,14 @@ func (g *ground) addPath(p, lead airfield.Path, l line, span airfield.Interval, 
 		}
 	}
 	for _, s := range stretches {
-		if s.Points[0] == points[0] && len(s.Points) == len(points) {
-			pg.stretch = s
+		if math.Abs(s.span.From-span.From) < 1 && math.Abs(s.span.To-span.To) < 1 {
+			pg.stretch = s.stretch
 		}
 	}
 	if pg.stretch == nil {
 		pg.stretch = shear.NewStretch(points)
 		pg.owner = true
-		stretches = append(stretches, pg.stretch)
-		g.measured = append(g.measured, pg.stretch)
+		stretches = append(stretches, covered{span, pg.stretch})
 	}
 	g.paths = append(g.paths, pg)
 	return stretches

@@ -8,12 +8,12 @@ import (
 // of any direction that no target feels. It is the leave-one-out residual
 // (O. Dubrule, "Cross validation of kriging in a unique neighborhood",
 // Mathematical Geology 15, 1983; from memory) as a member of the mixture: what
-// speaks against it is only that faults are rare. A lone true outflow that the
-// neighbours do not contradict is explained far better by the outflows beside
-// the mast, so it is never thrown away.
+// speaks against it is only that faults are rare, the more so while a mast has
+// not stood alone for long (doubt.go): a lone true outflow must not be thrown
+// away.
 type faultBank struct {
-	masts, targets int
-	deviation      float64 // of the error, one component, m/s
+	masts     int
+	deviation float64 // of the error, one component, m/s
 }
 
 func (b *faultBank) count() int { return b.masts }

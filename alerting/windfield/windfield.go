@@ -109,7 +109,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	}
 	e.outflows = newOutflowBank(masts, targets, e.ages, prior)
 	e.fronts = newFrontBank(masts, targets, e.ages, prior)
-	e.classes = []class{e.outflows, e.fronts, &faultBank{masts: len(masts), targets: len(targets), deviation: prior.FaultDeviation}}
+	e.classes = []class{e.outflows, e.fronts, &faultBank{masts: len(masts), deviation: prior.FaultDeviation}}
 	e.normals = fixedNormals(len(targets))
 	for d := range Draws {
 		e.order[d] = reverseBits(d)
