@@ -23,7 +23,7 @@ const (
 // program is what a command may use of the process that it runs in.
 type program struct {
 	stdin          io.Reader
-	stdout, stderr io.Writer // data; messages
+	stdout, stderr io.Writer // data; messages, from several goroutines
 	now            func() time.Time
 }
 

@@ -1,7 +1,6 @@
 package main
 
 import (
-	"bytes"
 	"context"
 	"flag"
 	"io"
@@ -34,7 +33,7 @@ func call(tb testing.TB, args ...string) outcome {
 
 func callIn(tb testing.TB, ctx context.Context, stdin io.Reader, args ...string) outcome {
 	tb.Helper()
-	var stdout, stderr bytes.Buffer
+	var stdout, stderr console // as files are: safe for logs of several goroutines
 	day := func() time.Time { return time.Date(2026, 7, 1, 12, 0, 0, 0, time.UTC) }
 	p := program{stdin: stdin, stdout: &stdout, stderr: &stderr, now: day}
 	code := p.run(ctx, args)

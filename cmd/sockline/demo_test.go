@@ -1,7 +1,6 @@
 package main
 
 import (
-	"bytes"
 	"context"
 	"io"
 	"net"
@@ -23,7 +22,7 @@ const demoGolden = "testdata/demo.txt"
 // disk and the page, and yet is the same on every machine.
 func TestDemoStory(t *testing.T) {
 	kept := filepath.Join(t.TempDir(), "history")
-	var stdout, stderr bytes.Buffer
+	var stdout, stderr console
 	p := program{stdin: strings.NewReader(""), stdout: &stdout, stderr: &stderr, now: time.Now}
 	if code := p.run(t.Context(), []string{"demo", "--speed", "60", "--history", kept}); code != exitDone {
 		t.Fatalf("exit %d: %s", code, stderr.String())

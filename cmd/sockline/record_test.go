@@ -118,7 +118,7 @@ func TestRecordTryAndSimulateOverABroker(t *testing.T) {
 	trying := start(t, "try", "--config", configuration, "--station", "far07", "--for", "30s", "--output", "json")
 	recording.stderr.await(t, "listening", 1)
 	trying.stderr.await(t, "listening", 1)
-	var out, messages bytes.Buffer
+	var out, messages console
 	if code := run(t.Context(), []string{"simulate", "--config", configuration, "--scene", scene, "--to", "broker"}, nil, &out, &messages); code != exitDone {
 		t.Fatalf("simulate: exit %d: %s", code, &messages)
 	}
@@ -160,7 +160,7 @@ func TestNoContact(t *testing.T) {
 		"record": {"record", "--out", filepath.Join(t.TempDir(), "x.jsonl"), "--for", "100ms"},
 		"try":    {"try", "--station", "far07", "--for", "100ms"},
 	} {
-		var stdout, stderr bytes.Buffer
+		var stdout, stderr console
 		code := run(t.Context(), append(args, "--config", configuration), strings.NewReader(""), &stdout, &stderr)
 		if code != exitFailed || !strings.Contains(stderr.String(), "no contact") {
 			t.Errorf("%s: exit %d: %s", name, code, &stderr)
@@ -171,7 +171,7 @@ func TestNoContact(t *testing.T) {
 // TestSilentStation holds that try tells a silent topic from a lost broker.
 func TestSilentStation(t *testing.T) {
 	configuration := withLines(t, "embedded://127.0.0.1:1883", brokertest.Start(t).URL())
-	var stderr bytes.Buffer
+	var stderr console
 	code := run(t.Context(), []string{"try", "--config", configuration, "--station", "far07", "--for", "2s"}, nil, io.Discard, &stderr)
 	if code != exitFailed || !strings.Contains(stderr.String(), "is this the topic it publishes on?") {
 		t.Errorf("exit %d: %s", code, &stderr)

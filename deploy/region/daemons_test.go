@@ -100,7 +100,10 @@ func TestDaemonsLoseANode(t *testing.T) {
 			t.Fatalf("the story did not come to its end within %v", time.Since(begun).Round(time.Second))
 		}
 		if !killed {
-			time.Sleep(killAfter) // a place in the story, not a wait for something
+			select { // a place in the story, not a wait for something
+			case <-time.After(killAfter):
+			case <-ctx.Done():
+			}
 			open := 0
 			for _, s := range sites {
 				n, err := s.openAlerts(ctx)
@@ -143,10 +146,16 @@ func compare(t *testing.T, sites []*site, reader *alertReader) {
 	for _, s := range sites {
 		want := s.kept(t)
 		last := want[len(want)-1]
-		wait := time.Until(last.Updated.Add(within))
-		for end := time.Now().Add(wait); len(reader.missing(s.id, want)) > 0 && time.Now().Before(end); {
-			time.Sleep(turn) // until what must have come within its time has come
+		due := time.After(time.Until(last.Updated.Add(within)))
+		look := time.NewTicker(turn)
+		for late := false; !late && len(reader.missing(s.id, want)) > 0; {
+			select {
+			case <-due:
+				late = true
+			case <-look.C:
+			}
 		}
+		look.Stop()
 		if missing := reader.missing(s.id, want); len(missing) > 0 {
 			t.Errorf("%s: %d of %d openings and closings did not come: %s", s.id, len(missing), len(want), strings.Join(missing, ", "))
 		}
