@@ -21,6 +21,8 @@ func (p *Page) routes() *http.ServeMux {
 	mux := http.NewServeMux()
 	mux.HandleFunc("GET /{$}", p.front)
 	mux.HandleFunc("GET /api/v1/now", p.now)
+	mux.HandleFunc("GET /api/v1/stream", p.stream)
+	mux.HandleFunc("GET /api/v1/layout", p.layout)
 	mux.HandleFunc("GET /api/v1/stations", p.stations)
 	mux.HandleFunc("GET /api/v1/events", p.events)
 	mux.HandleFunc("GET /api/v1/events/{id}", p.event)
@@ -29,7 +31,7 @@ func (p *Page) routes() *http.ServeMux {
 	mux.HandleFunc("GET /readyz", p.ready)
 	mux.HandleFunc("/", func(w http.ResponseWriter, r *http.Request) {
 		p.problem(w, http.StatusNotFound, "not-found", "There is nothing at this address.",
-			"The addresses are /, /api/v1/now, /api/v1/stations, /api/v1/events, /api/v1/events/{id}, /metrics, /healthz and /readyz.")
+			"The addresses are /, /api/v1/now, /api/v1/stream, /api/v1/layout, /api/v1/stations, /api/v1/events, /api/v1/events/{id}, /metrics, /healthz and /readyz.")
 	})
 	return mux
 }
@@ -105,48 +107,6 @@ func (p *Page) stations(w http.ResponseWriter, _ *http.Request) {
 	b := body{
 		At: v.At.Time().Format(time.RFC3339), ValidUntil: v.ValidUntil.Time().Format(time.RFC3339),
 		Stations: make([]json.RawMessage, 0, len(v.Stations)), Exercise: p.exercise(v), Notice: alerting.Notice,
-	}
-	for _, x := range v.Stations {
-		b.Stations = append(b.Stations, x.JSON)
-	}
-	p.json(w, http.StatusOK, "application/json", b)
-}
-
-const utcSeconds = "2006-01-02 15:04:05 UTC"
-
-// now answers with the whole view.
-func (p *Page) now(w http.ResponseWriter, _ *http.Request) {
-	v := p.currentOrProblem(w)
-	if v == nil {
-		return
-	}
-	type body struct {
-		At         string            `json:"at"`
-		ValidUntil string            `json:"valid_until"`
-		Condition  string            `json:"condition"`
-		Status     json.RawMessage   `json:"status"`
-		Paths      []json.RawMessage `json:"paths"`
-		Alerts     []json.RawMessage `json:"alerts"`
-		Stations   []json.RawMessage `json:"stations"`
-		Exercise   bool              `json:"exercise"`
-		Notice     string            `json:"notice"`
-	}
-	b := body{
-		At:         v.At.Time().Format(time.RFC3339),
-		ValidUntil: v.ValidUntil.Time().Format(time.RFC3339),
-		Condition:  string(v.Condition),
-		Status:     v.StatusJSON,
-		Paths:      make([]json.RawMessage, 0, len(v.Paths)),
-		Alerts:     make([]json.RawMessage, 0, len(v.Alerts)),
-		Stations:   make([]json.RawMessage, 0, len(v.Stations)),
-		Exercise:   p.exercise(v),
-		Notice:     alerting.Notice,
-	}
-	for _, x := range v.Paths {
-		b.Paths = append(b.Paths, x.JSON)
-	}
-	for _, x := range v.Alerts {
-		b.Alerts = append(b.Alerts, x.JSON)
 	}
 	for _, x := range v.Stations {
 		b.Stations = append(b.Stations, x.JSON)
@@ -311,8 +271,15 @@ func (p *Page) json(w http.ResponseWriter, status int, contentType string, body 
 		status, data = http.StatusInternalServerError, []byte(`{"type":"/problems/internal","status":500}`)
 		contentType = "application/problem+json"
 	}
+	p.write(w, status, contentType, data)
+}
+
+// write sends an answer that is ready. The data is not changed: others may be
+// sent the same.
+func (p *Page) write(w http.ResponseWriter, status int, contentType string, data []byte) {
 	w.Header().Set("Content-Type", contentType)
 	w.WriteHeader(status)
 	// An error here is a client that has gone; there is nobody left to tell.
-	_, _ = w.Write(append(data, '\n'))
+	_, _ = w.Write(data)
+	_, _ = w.Write([]byte{'\n'})
 }

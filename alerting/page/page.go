@@ -20,66 +20,11 @@ import (
 	"github.com/prometheus/client_golang/prometheus"
 	"github.com/rs/zerolog"
 
-	"sockline/alerting"
 	"sockline/sensors"
 )
 
 // MaxAge is the age from which a view is no information.
 const MaxAge = 5 * time.Second
-
-// View is what the daemon knows after one step. It is never changed once it
-// is handed over; the next step makes a new one.
-type View struct {
-	Made       time.Time // wall time, by the same clock as Options.Now
-	At         sensors.Instant
-	ValidUntil sensors.Instant
-	Condition  alerting.Condition
-	Remarks    []string // what else to know of the daemon itself, as sentences
-	Exercise   bool
-	Airfield   string // its name, where it is no longer that of Options
-
-	Ends     []End
-	Paths    []Path
-	Alerts   []Alert // open ones, the worst first
-	Stations []Station
-
-	StatusJSON []byte // the status object
-}
-
-// End is the wind at one runway end.
-type End struct {
-	Runway   string
-	Observed bool
-	Sentence string
-}
-
-// Path is one path.
-type Path struct {
-	Name       string // "landing 07"
-	State      alerting.PathState
-	Sentence   string
-	Unobserved []string // the stretches that are not observed, in words
-	JSON       []byte   // the path object
-}
-
-// Alert is one open alert.
-type Alert struct {
-	ID       string
-	Kind     alerting.Kind
-	Level    alerting.Level
-	Observed bool // false: the sentence tells what was last measured
-	Sentence string
-	JSON     []byte // the alert object
-}
-
-// Station is one mast.
-type Station struct {
-	ID       string
-	State    string // one word: live, stale, starting ...
-	Live     bool
-	Sentence string
-	JSON     []byte // the health object
-}
 
 // EventQuery says which events are wanted. A zero From or To is an open end.
 type EventQuery struct {
@@ -107,6 +52,7 @@ type Options struct {
 	Listen   string // the address it is to be served on; loopback only
 	Exercise bool   // the whole program is an exercise
 	View     func() *View
+	Tape     *Tape
 	History  History
 	Registry *prometheus.Registry
 	Ready    func() []string  // why the program is not ready; none: it is
@@ -120,6 +66,10 @@ type Page struct {
 	mux      *http.ServeMux
 	csp      string
 	template *template.Template
+
+	streams chan struct{} // holds one for each open stream
+	ending  chan struct{} // closed when the server ends
+	body    bodyCache
 }
 
 // New makes a page. It refuses a Listen address that is not on this machine.
@@ -127,8 +77,8 @@ func New(o Options) (*Page, error) {
 	if err := CheckListen(o.Listen); err != nil {
 		return nil, err
 	}
-	if o.View == nil || o.History == nil || o.Registry == nil || o.Now == nil {
-		return nil, errors.New("the page needs View, History, Registry and Now")
+	if o.View == nil || o.Tape == nil || o.History == nil || o.Registry == nil || o.Now == nil {
+		return nil, errors.New("the page needs View, Tape, History, Registry and Now")
 	}
 	if o.Ready == nil {
 		o.Ready = func() []string { return nil }
@@ -137,7 +87,10 @@ func New(o Options) (*Page, error) {
 	if err != nil {
 		return nil, err
 	}
-	p := &Page{opts: o, csp: contentSecurityPolicy(), template: t}
+	p := &Page{
+		opts: o, csp: contentSecurityPolicy(), template: t,
+		streams: make(chan struct{}, maxStreams), ending: make(chan struct{}),
+	}
 	p.mux = p.routes()
 	return p, nil
 }
@@ -175,9 +128,23 @@ const (
 	idleWithin     = time.Minute
 	headerBytes    = 16 << 10
 	shutdownWithin = 2 * time.Second
+	// sendBuffer is what the system may hold for a client that does not read:
+	// a few views of a large field, so that it is noticed within seconds.
+	sendBuffer = 64 << 10
 )
 
-// Serve answers on a listener until ctx is done. It refuses a listener that
+// smallBuffer bounds what is held for one connection.
+func smallBuffer(ctx context.Context, c net.Conn) context.Context {
+	if inner, ok := c.(interface{ NetConn() net.Conn }); ok { // below TLS
+		c = inner.NetConn()
+	}
+	if tcp, ok := c.(*net.TCPConn); ok {
+		_ = tcp.SetWriteBuffer(sendBuffer) // the usual size serves, too
+	}
+	return ctx
+}
+
+// Serve answers on a listener until ctx is done; it is called once. It refuses a listener that
 // is not on this machine.
 func (p *Page) Serve(ctx context.Context, l net.Listener) error {
 	if err := CheckListen(l.Addr().String()); err != nil {
@@ -190,6 +157,7 @@ func (p *Page) Serve(ctx context.Context, l net.Listener) error {
 		WriteTimeout:      writeWithin,
 		IdleTimeout:       idleWithin,
 		MaxHeaderBytes:    headerBytes,
+		ConnContext:       smallBuffer,
 	}
 	ended := make(chan error, 1)
 	go func() { ended <- server.Serve(l) }()
@@ -198,6 +166,7 @@ func (p *Page) Serve(ctx context.Context, l net.Listener) error {
 		return fmt.Errorf("serve the page on %s: %w", l.Addr(), err)
 	case <-ctx.Done():
 	}
+	close(p.ending) // streams would never end by themselves
 	// The parent is done already, so the time to end is counted anew.
 	limit, cancel := context.WithTimeout(context.WithoutCancel(ctx), shutdownWithin)
 	defer cancel()

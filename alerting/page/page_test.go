@@ -50,8 +50,8 @@ func sample(age time.Duration) *View {
 		Condition: alerting.PartlyObserving,
 		Remarks:   []string{"The history is not being recorded: the disk is full."},
 		Ends: []End{
-			{"07", true, "From 240 degrees magnetic with 14 kt, gusting 21 kt; headwind 3 kt, crosswind 13 kt from the right."},
-			{"25", false, "Not observed."},
+			{Runway: "07", Observed: true, Sentence: "From 240 degrees magnetic with 14 kt, gusting 21 kt; headwind 3 kt, crosswind 13 kt from the right."},
+			{Runway: "25", Sentence: "Not observed."},
 		},
 		Paths: []Path{
 			{"landing 07", alerting.Raised, "One alert is open.", []string{"5.0 to 4.0 km before the threshold"}, []byte(`{"runway":"07","state":"raised"}`)},
@@ -77,7 +77,7 @@ func serve(t *testing.T, v *View, change func(*Options)) (*Page, *strings.Builde
 	t.Helper()
 	var log strings.Builder
 	o := Options{
-		Airfield: "Skerry Moor", Listen: "127.0.0.1:0", View: func() *View { return v }, History: &events{},
+		Airfield: "Skerry Moor", Listen: "127.0.0.1:0", View: func() *View { return v }, Tape: NewTape("run-1"), History: &events{},
 		Registry: prometheus.NewRegistry(), Now: func() time.Time { return noon }, Log: zerolog.New(&log),
 	}
 	if change != nil {

@@ -1,6 +1,9 @@
 package wording
 
 import (
+	"encoding/json"
+	"fmt"
+	"math/rand/v2"
 	"testing"
 
 	"sockline/alerting"
@@ -201,5 +204,61 @@ func TestEndTexts(t *testing.T) {
 			}
 			lexical(t, EndText(c.wind))
 		})
+	}
+}
+
+// TestEndObjectSaysWhatTheSentenceSays: the figures of the object are those of
+// the sentence, and what is not observed has none.
+func TestEndObjectSaysWhatTheSentenceSays(t *testing.T) {
+	random := rand.New(rand.NewPCG(3, 7))
+	for range 2000 {
+		e := EndWind{
+			Runway: "07", Observed: random.IntN(8) > 0, Mean: 20 * random.Float64(), From: 360 * random.Float64(),
+			Gust: 30 * random.Float64(), HasGust: random.IntN(2) == 0, Spread: 180 * random.Float64(), HasSpread: true,
+			Headwind: 20 * (random.Float64() - 0.5), Crosswind: 20 * (random.Float64() - 0.5), Variation: -3,
+		}
+		var o struct {
+			Observed  bool
+			Sentence  string
+			From      *float64 `json:"from_magnetic_deg"`
+			Speed     *float64 `json:"speed_kt"`
+			Gust      *float64 `json:"gust_kt"`
+			Headwind  *float64 `json:"headwind_kt"`
+			Crosswind *float64 `json:"crosswind_kt"`
+			Side      *string  `json:"crosswind_from"`
+			Notice    string
+		}
+		if err := json.Unmarshal(e.JSON(), &o); err != nil {
+			t.Fatalf("%v\n%s", err, e.JSON())
+		}
+		if o.Notice != alerting.Notice || o.Observed != e.Observed || o.Sentence != EndText(e) {
+			t.Fatalf("%s", e.JSON())
+		}
+		if !e.Observed {
+			if o.From != nil || o.Speed != nil || o.Gust != nil || o.Headwind != nil || o.Crosswind != nil || o.Side != nil {
+				t.Fatalf("not observed, and yet %s", e.JSON())
+			}
+			continue
+		}
+		var want []string
+		if o.From != nil {
+			want = append(want, fmt.Sprintf("from %03.0f degrees magnetic", *o.From))
+		} else {
+			want = append(want, "calm")
+		}
+		if o.Gust != nil && *o.Gust >= 1 {
+			want = append(want, fmt.Sprintf("gusts to %.0f kt", *o.Gust))
+		}
+		if o.From != nil && *o.Headwind <= -1 {
+			want = append(want, fmt.Sprintf("tailwind %.0f kt", -*o.Headwind))
+		}
+		if o.From != nil && o.Side != nil {
+			want = append(want, fmt.Sprintf("crosswind %.0f kt from the %s", *o.Crosswind, *o.Side))
+		}
+		for _, w := range want {
+			if !strings.Contains(o.Sentence, w) {
+				t.Fatalf("the sentence is without %q: %s", w, e.JSON())
+			}
+		}
 	}
 }

@@ -89,7 +89,7 @@ type daemon struct {
 // newDaemon makes a daemon and takes the addresses it listens on. It must be
 // run, or closed.
 func newDaemon(cfg *config.Config, o daemonOptions) (*daemon, error) {
-	d := &daemon{opts: o, log: o.log, instance: o.instance, board: newBoard(), listening: make(chan struct{}), pruning: make(chan struct{}, 1)}
+	d := &daemon{opts: o, log: o.log, instance: o.instance, listening: make(chan struct{}), pruning: make(chan struct{}, 1)}
 	d.cfg.Store(cfg)
 	if d.opts.notify == nil {
 		d.opts.notify = &notifier{}
@@ -107,6 +107,7 @@ func (d *daemon) prepare() (err error) {
 			return err
 		}
 	}
+	d.board = newBoard(d.instance)
 	cfg := d.current()
 	if d.loop, err = newLoop(cfg, d.opts.exercise, d.log); err != nil {
 		return err
@@ -249,7 +250,7 @@ func (d *daemon) start(ctx context.Context) error {
 func (d *daemon) servePage(ctx context.Context) error {
 	p, err := page.New(page.Options{
 		Airfield: d.current().Airfield.Name, Listen: d.listener.Addr().String(), Exercise: d.opts.exercise,
-		View: d.board.view.Load, History: d.archive, Registry: d.metrics.registry,
+		View: d.board.view.Load, Tape: d.board.tape, History: d.archive, Registry: d.metrics.registry,
 		Ready: d.notReady, Now: time.Now, Log: d.log,
 	})
 	if err != nil {

@@ -178,7 +178,7 @@ func TestMetricsOfTwentyMasts(t *testing.T) {
 // TestBoard: the page shows what was released, the worst first, and never
 // changes a view that is up.
 func TestBoard(t *testing.T) {
-	b := newBoard()
+	b := newBoard("run-1")
 	b.release(noticeOf("early", alerting.HeadwindLoss, alerting.Large, -9, 1))
 	if b.view.Load() != nil {
 		t.Error("there is a view before the first step")

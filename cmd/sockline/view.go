@@ -1,13 +1,10 @@
 package main
 
 import (
-	"cmp"
 	"fmt"
 	"math"
 	"slices"
 	"strings"
-	"sync"
-	"sync/atomic"
 	"time"
 
 	"sockline/alerting"
@@ -33,6 +30,7 @@ type report struct {
 	Paths     []wording.PathView
 	Stations  []stationHealth
 	Notices   []wording.Notice // issued in this step
+	Layout    layout
 	// SharedClock is how far all stations are ahead of this host's clock.
 	SharedClock time.Duration
 	Why         []string // of each notice, for the log
@@ -47,6 +45,7 @@ type reporter struct {
 	rejected  []uint64          // by station
 	winds     []*windObject     // by station, nil where there is none
 	variation func(sensors.Instant) (float64, error)
+	layout    layout // as of the day of its variation
 }
 
 // endMast is a runway end and the mast that tells its wind.
@@ -111,6 +110,7 @@ func (r *reporter) of(e *engine.Engine, res *engine.Result) *report {
 	for _, end := range r.ends {
 		out.Ends = append(out.Ends, r.end(end, e, res))
 	}
+	out.Layout = r.drawn(res.At)
 	return out
 }
 
@@ -158,6 +158,8 @@ func (r *reporter) end(m endMast, e *engine.Engine, res *engine.Result) wording.
 	mean := wind.Two.Vector
 	w.Mean, w.From = mean.Speed(), mean.From()
 	w.Gust, w.HasGust = wind.Period.Gust, wind.Gusting
+	w.Spread, w.HasSpread = wind.Variation.Spread, true
+	w.Variable = wind.Variation.Kind == averages.Variable
 	w.Headwind, w.Crosswind = mean.Headwind(m.bearing), mean.CrosswindFromRight(m.bearing)
 	w.Variation = variation
 	return w
@@ -168,9 +170,10 @@ func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 	v := &page.View{
 		Made: made, At: rep.At, ValidUntil: rep.At.Add(validFor), Condition: rep.Condition,
 		Remarks: remarks(status), Exercise: status.Exercise, StatusJSON: status.JSON(),
+		LayoutJSON: rep.Layout.json, LayoutID: rep.Layout.id,
 	}
 	for _, e := range rep.Ends {
-		v.Ends = append(v.Ends, page.End{Runway: e.Runway, Observed: e.Observed, Sentence: wording.EndText(e)})
+		v.Ends = append(v.Ends, page.End{Runway: e.Runway, Observed: e.Observed, Sentence: wording.EndText(e), JSON: e.JSON()})
 	}
 	for i := range rep.Paths {
 		p := &rep.Paths[i]
@@ -183,6 +186,12 @@ func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 		v.Stations = append(v.Stations, page.Station{
 			ID: h.ID, State: h.State, Live: h.Live, Sentence: h.sentence(), JSON: h.object(),
 		})
+		switch {
+		case !h.Live:
+			v.MastsOut = append(v.MastsOut, h.ID)
+		case h.AgeS != nil && (v.AgeS == nil || *h.AgeS > *v.AgeS):
+			v.AgeS = h.AgeS
+		}
 	}
 	return v
 }
@@ -194,82 +203,4 @@ func remarks(s *wording.Status) []string {
 		out = append(out, "The history may miss what is told now: "+strings.TrimSuffix(s.Degraded, ".")+".")
 	}
 	return out
-}
-
-// board holds what the page shows: the last step, and the alerts that have
-// been released. Two goroutines write to it, the loop and the release; readers
-// load a pointer.
-type board struct {
-	view atomic.Pointer[page.View]
-
-	mu   sync.Mutex
-	step *page.View
-	open map[string]wording.Notice
-}
-
-func newBoard() *board { return &board{open: make(map[string]wording.Notice)} }
-
-// show puts up a step.
-func (b *board) show(v *page.View) {
-	b.mu.Lock()
-	defer b.mu.Unlock()
-	b.step = v
-	b.compose()
-}
-
-// release puts up an alert, or takes it down when it has closed.
-func (b *board) release(n wording.Notice) {
-	b.mu.Lock()
-	defer b.mu.Unlock()
-	if n.Closing() {
-		delete(b.open, n.ID())
-	} else {
-		b.open[n.ID()] = n
-	}
-	b.compose()
-}
-
-// openCount is how many alerts are up.
-func (b *board) openCount() int {
-	b.mu.Lock()
-	defer b.mu.Unlock()
-	return len(b.open)
-}
-
-// compose makes a new view: one that is up is never changed.
-func (b *board) compose() {
-	if b.step == nil {
-		return
-	}
-	v := *b.step
-	notices := make([]wording.Notice, 0, len(b.open))
-	for _, n := range b.open {
-		notices = append(notices, n)
-	}
-	slices.SortFunc(notices, worstFirst)
-	for _, n := range notices {
-		a := n.Alert()
-		v.Alerts = append(v.Alerts, page.Alert{
-			ID: n.ID(), Kind: a.Kind, Level: a.Level, Observed: a.Observed, Sentence: n.Text(), JSON: n.JSON(),
-		})
-		v.Exercise = v.Exercise || n.Exercise()
-	}
-	b.view.Store(&v)
-}
-
-// worstFirst orders alerts by level, a loss before a gain, then by size.
-func worstFirst(x, y wording.Notice) int {
-	a, b := x.Alert(), y.Alert()
-	loss := func(k alerting.Kind) int {
-		if k == alerting.HeadwindLoss {
-			return 0
-		}
-		return 1
-	}
-	return cmp.Or(
-		cmp.Compare(b.Level, a.Level),
-		cmp.Compare(loss(a.Kind), loss(b.Kind)),
-		cmp.Compare(math.Abs(b.Change), math.Abs(a.Change)),
-		strings.Compare(a.ID, b.ID),
-	)
 }
