@@ -159,14 +159,29 @@ func TestFormatExamples(t *testing.T) {
 		t.Errorf("step read as %+v, %v", st, err)
 	}
 
-	record := unhex(`01 04 00 00 01 9f 1d 8c e2 00 7b 22 76 65 72 73 69 6f 6e 22 3a 22 31 22 7d
+	// Of the earlier version, which is still read, and as it is written now.
+	before := unhex(`01 04 00 00 01 9f 1d 8c e2 00 7b 22 76 65 72 73 69 6f 6e 22 3a 22 31 22 7d
 		46 be c9 d3 0e ac 59 54 0e 7b 3c 38 6f 21 37 93 4f da 9b ae 73 61 c4 db ed 6a 23 af 43 11 58 bd`)
-	if got, after := (head{}).next(KindStart, step, []byte(`{"version":"1"}`)); !bytes.Equal(got, record) || after.seq != 1 {
+	record := unhex(`02 04 00 00 01 9f 1d 8c e2 00 0f 7b 22 76 65 72 73 69 6f 6e 22 3a 22 31 22 7d
+		94 c1 a9 51 a7 3d 4e da c9 52 44 1a b7 dc 2e d3 a8 cf 86 88 43 b3 e7 60 5a e1 25 a5 b5 04 b2 0c`)
+	if got, after := (head{}).next(draft{kind: KindStart, at: step, payload: []byte(`{"version":"1"}`)}); !bytes.Equal(got, record) || after.seq != 1 {
 		t.Errorf("record written as % x", got)
 	}
-	r, err := parseRecord(seqKey(1), record)
-	if err != nil || r.Seq != 1 || r.Kind != KindStart || r.At != step || string(r.Payload) != `{"version":"1"}` {
-		t.Errorf("record read as %+v, %v", r, err)
+	for _, value := range [][]byte{before, record} {
+		r, err := parseRecord(seqKey(1), value)
+		if err != nil || r.Seq != 1 || r.Kind != KindStart || r.At != step || string(r.Payload) != `{"version":"1"}` || !r.follows(head{}.hash) {
+			t.Errorf("record read as %+v, %v", r, err)
+		}
+	}
+	note := unhex(`02 0a 00 00 01 9f 1d 8c e5 e8 6a 7b 22 6f 63 63 75 72 72 65 6e 63 65 22 3a 22 61 22 2c 22 77 68 6f 22 3a 7b 22 63 6f 6d
+		6d 69 74 6d 65 6e 74 22 3a 22 32 36 38 64 38 35 32 31 65 30 33 64 65 61 35 37 62 30 34 62 36 31 62 63 61 65 63 32 33 34
+		62 63 65 34 39 34 65 38 65 38 37 30 38 37 37 38 38 30 31 38 34 32 34 35 62 33 32 31 38 37 33 39 36 64 22 7d 7d 01 02 03
+		04 05 06 07 08 09 0a 0b 0c 0d 0e 0f 10 02 49 6f 12 b1 b6 7d 84 45 7d a1 72 d5 d2 c9 a0 3a 67 87 ab d5 0e 60 ef 23 39 eb
+		05 20 2f 72 2d ad c7 00`)
+	r, err := parseRecord(seqKey(2), note)
+	first, _ := parseRecord(seqKey(1), record)
+	if err != nil || r.Kind != KindAcknowledge || string(r.Payload) != `{"occurrence":"a","who":"Io"}` || !r.follows(first.Hash) {
+		t.Errorf("record of somebody read as %+v, %s, %v", r, r.Payload, err)
 	}
 }
 

@@ -105,11 +105,10 @@ func getRecord(tx *bolt.Tx, seq uint64) (Record, error) {
 		}
 		before.hash = prev.Hash
 	}
-	if link(before.hash, seq, value[:len(value)-len(r.Hash)]) != r.Hash {
+	if !r.follows(before.hash) {
 		return r, damaged("journal record %d does not match its hash", seq)
 	}
-	r.Payload = bytes.Clone(r.Payload)
-	return r, nil
+	return r.clone(), nil
 }
 
 func summarize(tx *bolt.Tx, row keyedRow) (EventSummary, error) {

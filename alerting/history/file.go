@@ -19,6 +19,7 @@ const (
 	bucketRecords  = "records"
 	bucketEvents   = "events"
 	bucketIDs      = "ids"
+	bucketPeople   = "people"
 	bucketSteps    = "steps"
 	bucketLate     = "late"
 	bucketStations = "stations"
@@ -35,14 +36,16 @@ var errClosed = errors.New("the file is being opened again after a failed write"
 type layout struct {
 	format  string // content of about/format
 	buckets []string
-	alloc   int // the file grows in steps of so many bytes
-	mapped  int // address space to begin with, so that growth rarely waits for a reader
+	older   map[string][]string // formats of earlier versions that are read, each with its buckets
+	alloc   int                 // the file grows in steps of so many bytes
+	mapped  int                 // address space to begin with, so that growth rarely waits for a reader
 }
 
 func journalLayout() layout {
 	return layout{
-		format:  "sockline journal 1",
-		buckets: []string{bucketRecords, bucketEvents, bucketIDs},
+		format:  "sockline journal 2",
+		buckets: []string{bucketRecords, bucketEvents, bucketIDs, bucketPeople},
+		older:   map[string][]string{"sockline journal 1": {bucketRecords, bucketEvents, bucketIDs}},
 		alloc:   64 << 10,
 		mapped:  16 << 20,
 	}
@@ -220,10 +223,14 @@ func (l layout) check(tx *bolt.Tx) error {
 	if err != nil {
 		return damaged("its format line %v", err)
 	}
-	if string(format) != l.format {
+	buckets, known := l.older[string(format)]
+	if string(format) == l.format {
+		buckets, known = l.buckets, true
+	}
+	if !known {
 		return fmt.Errorf("it holds %q, this version reads %q: use the version that wrote it", format, l.format)
 	}
-	for _, name := range l.buckets {
+	for _, name := range buckets {
 		if tx.Bucket([]byte(name)) == nil {
 			return damaged("the bucket %q is missing", name)
 		}

@@ -2,7 +2,6 @@ package history
 
 import (
 	"bytes"
-	"crypto/sha256"
 	"encoding/binary"
 	"encoding/json"
 	"fmt"
@@ -27,29 +26,30 @@ const (
 	KindGap           Kind = 6 // something was not kept: a Gap as JSON
 	KindDamage        Kind = 7 // a file was found damaged: text
 	KindTable         Kind = 8 // a learnt table that takes effect
+
+	// What people did and said; people.go has the payloads.
+	KindNote        Kind = 9
+	KindAcknowledge Kind = 10
+	KindShelve      Kind = 11
+	KindPilotReport Kind = 12
+	KindHold        Kind = 13
+	KindAccess      Kind = 14
+	KindRunwayInUse Kind = 15
+	KindSheet       Kind = 16 // a daily check or a hand-over, signed
 )
 
 // String is the kind's word.
 func (k Kind) String() string {
-	switch k {
-	case KindIssue:
-		return "issue"
-	case KindConfiguration:
-		return "configuration"
-	case KindSoftware:
-		return "software"
-	case KindStart:
-		return "start"
-	case KindStop:
-		return "stop"
-	case KindGap:
-		return "gap"
-	case KindDamage:
-		return "damage"
-	case KindTable:
-		return "table"
+	words := [...]string{
+		KindIssue: "issue", KindConfiguration: "configuration", KindSoftware: "software", KindStart: "start", KindStop: "stop",
+		KindGap: "gap", KindDamage: "damage", KindTable: "table", KindNote: "note", KindAcknowledge: "acknowledge",
+		KindShelve: "shelve", KindPilotReport: "pilot-report", KindHold: "hold", KindAccess: "access",
+		KindRunwayInUse: "runway-in-use", KindSheet: "sheet",
 	}
-	return fmt.Sprintf("kind %d", uint8(k))
+	if k == 0 || int(k) >= len(words) {
+		return fmt.Sprintf("kind %d", uint8(k))
+	}
+	return words[k]
 }
 
 // Entry is something for the journal that is not an issue of an alert.
@@ -68,86 +68,6 @@ type Gap struct {
 	Readings uint64          `json:"readings"`
 	Records  uint64          `json:"records"`
 	Why      string          `json:"why"`
-}
-
-// Record is one record of the journal.
-type Record struct {
-	Seq     uint64 // from 1, without holes
-	Kind    Kind
-	At      sensors.Instant
-	Payload []byte
-	Hash    [sha256.Size]byte // of the record before and this one
-}
-
-// Issue is what a record of KindIssue holds.
-func (r Record) Issue() (Issue, error) {
-	if r.Kind != KindIssue {
-		return Issue{}, fmt.Errorf("journal record %d is a %s, not an issue", r.Seq, r.Kind)
-	}
-	p, err := parseIssue(r.Payload)
-	if err != nil {
-		return Issue{}, fmt.Errorf("journal record %d: %w", r.Seq, err)
-	}
-	is := Issue{Object: bytes.Clone(p.object)}
-	if err := json.Unmarshal(p.alert, &is.Alert); err != nil {
-		return Issue{}, fmt.Errorf("journal record %d: its alert: %w", r.Seq, err)
-	}
-	return is, nil
-}
-
-// recordVersion is the first byte of each record.
-const (
-	recordVersion = 1
-	recordHeader  = 10 // version, kind, time
-)
-
-// head is the end of the chain: the last sequence and its hash.
-type head struct {
-	seq  uint64
-	hash [sha256.Size]byte
-}
-
-// next is the record that follows the head, as it is stored.
-func (h head) next(kind Kind, at sensors.Instant, payload []byte) (value []byte, after head) {
-	value = make([]byte, 0, recordHeader+len(payload)+sha256.Size)
-	value = append(value, recordVersion, byte(kind))
-	value = binary.BigEndian.AppendUint64(value, uint64(at))
-	value = append(value, payload...)
-	after = head{seq: h.seq + 1, hash: link(h.hash, h.seq+1, value)}
-	return append(value, after.hash[:]...), after
-}
-
-// link is SHA-256 of the hash before, the sequence (8 bytes, big endian) and
-// the content.
-func link(before [sha256.Size]byte, seq uint64, content []byte) (out [sha256.Size]byte) {
-	h := sha256.New()
-	h.Write(before[:])
-	h.Write(seqKey(seq))
-	h.Write(content)
-	h.Sum(out[:0])
-	return out
-}
-
-func seqKey(seq uint64) []byte { return binary.BigEndian.AppendUint64(nil, seq) }
-
-// parseRecord reads a stored record. The payload is not copied.
-func parseRecord(key, value []byte) (Record, error) {
-	if len(key) != 8 {
-		return Record{}, damaged("a journal record has a key of %d bytes", len(key))
-	}
-	r := Record{Seq: binary.BigEndian.Uint64(key)}
-	if len(value) < recordHeader+sha256.Size {
-		return r, damaged("journal record %d is too short", r.Seq)
-	}
-	if value[0] != recordVersion {
-		return r, damaged("journal record %d has the unknown version %d", r.Seq, value[0])
-	}
-	end := len(value) - sha256.Size
-	r.Kind = Kind(value[1])
-	r.At = sensors.Instant(binary.BigEndian.Uint64(value[2:]))
-	r.Payload = value[recordHeader:end]
-	copy(r.Hash[:], value[end:])
-	return r, nil
 }
 
 // issuePayload is the payload of an issue: what the index needs stands before
@@ -256,8 +176,13 @@ func putRecord(tx *bolt.Tx, seq uint64, value []byte) error {
 		return err
 	}
 	r, err := parseRecord(key, value)
-	if err != nil || r.Kind != KindIssue {
+	switch {
+	case err != nil:
 		return err
+	case r.Kind.byPeople():
+		return putPeople(tx.Bucket([]byte(bucketPeople)), r)
+	case r.Kind != KindIssue:
+		return nil
 	}
 	p, err := parseIssue(r.Payload)
 	if err != nil {
@@ -300,7 +225,17 @@ type chain struct {
 	head   head
 	first  uint64 // first broken sequence, 0 if none
 	broken uint64
-	index  map[string]eventRow // by event key
+	index  index
+}
+
+// index is what the journal's index must hold: made from the records.
+type index struct {
+	events map[string]eventRow // by event key
+	people map[string]Kind     // by people key
+}
+
+func newChain() *chain {
+	return &chain{index: index{events: map[string]eventRow{}, people: map[string]Kind{}}}
 }
 
 func (c *chain) fault(seq uint64) {
@@ -308,6 +243,24 @@ func (c *chain) fault(seq uint64) {
 		c.first = seq
 	}
 	c.broken++
+}
+
+// add takes in what a sound record adds to the index.
+func (x index) add(r Record) {
+	if r.Kind.byPeople() {
+		for _, key := range peopleKeys(r) {
+			x.people[string(key)] = r.Kind
+		}
+	}
+	if r.Kind != KindIssue {
+		return
+	}
+	if p, err := parseIssue(r.Payload); err == nil {
+		at := string(eventKey(p))
+		row := x.events[at]
+		row.add(r.Seq, r.At, p)
+		x.events[at] = row
+	}
 }
 
 // check takes in the next record as stored.
@@ -319,15 +272,10 @@ func (c *chain) check(key, value []byte) {
 		c.fault(want) // a record is missing
 	case err != nil:
 		c.fault(want)
-	case link(c.head.hash, r.Seq, value[:len(value)-sha256.Size]) != r.Hash:
+	case !r.follows(c.head.hash):
 		c.fault(r.Seq)
-	case r.Kind == KindIssue:
-		if p, err := parseIssue(r.Payload); err == nil {
-			at := string(eventKey(p))
-			row := c.index[at]
-			row.add(r.Seq, r.At, p)
-			c.index[at] = row
-		}
+	default:
+		c.index.add(r)
 	}
 	if len(key) == 8 {
 		// Go on from the stored hash, so that one broken record breaks no
@@ -368,7 +316,7 @@ func walk(f *file, from uint64, fn func(key, value []byte) error) error {
 
 // walkChain checks the whole chain.
 func walkChain(f *file) (*chain, error) {
-	c := &chain{index: map[string]eventRow{}}
+	c := newChain()
 	err := walk(f, 0, func(key, value []byte) error {
 		c.check(key, value)
 		return nil

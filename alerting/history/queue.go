@@ -27,13 +27,17 @@ type item struct {
 	lates    int    // readings in late
 	readings int    // in both
 	drafts   []draft
+	first    uint64        // sequence of the first draft; to be read once done is closed
 	done     chan struct{} // closed when all is on disk
 }
 
+// draft is a record that has no place in the chain yet. The openings are of
+// the commitments in the payload.
 type draft struct {
-	kind    Kind
-	at      sensors.Instant
-	payload []byte
+	kind     Kind
+	at       sensors.Instant
+	payload  []byte
+	openings []byte
 }
 
 func (it *item) size() int { return len(it.body) + len(it.late) }
@@ -178,9 +182,10 @@ type round struct {
 func (r *round) build(from head) {
 	r.start, r.end, r.values = from, from, [][]byte{}
 	for _, it := range r.items {
+		it.first = r.end.seq + 1
 		for _, d := range it.drafts {
 			var value []byte
-			value, r.end = r.end.next(d.kind, d.at, d.payload)
+			value, r.end = r.end.next(d)
 			r.values = append(r.values, value)
 		}
 	}

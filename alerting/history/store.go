@@ -1,7 +1,6 @@
 package history
 
 import (
-	"bytes"
 	"errors"
 	"fmt"
 	"os"
@@ -140,6 +139,9 @@ func (s *Store) checkJournal() error {
 			journalName, c.first, c.broken))
 	}
 	s.head = c.head
+	if err := s.upgradeJournal(); err != nil {
+		return err
+	}
 	same := false
 	err = s.journal.view(func(tx *bolt.Tx) error {
 		same = sameIndex(tx, c.index)
@@ -150,54 +152,6 @@ func (s *Store) checkJournal() error {
 	}
 	s.reportDamage(journalName + ": the index of events did not match the records and is rebuilt")
 	return s.journal.update(func(tx *bolt.Tx) error { return rebuildIndex(tx, c.index) })
-}
-
-func sameIndex(tx *bolt.Tx, want map[string]eventRow) bool {
-	events, ids := tx.Bucket([]byte(bucketEvents)), tx.Bucket([]byte(bucketIDs))
-	if count(events) != len(want) || count(ids) != len(want) {
-		return false
-	}
-	for at, row := range want {
-		key, id := []byte(at), []byte(at[8:])
-		if !bytes.Equal(events.Get(key), seal(key, row.encode())) || !bytes.Equal(ids.Get(id), seal(id, key[:8])) {
-			return false
-		}
-	}
-	return true
-}
-
-func count(b *bolt.Bucket) (n int) {
-	c := b.Cursor()
-	for k, _ := c.First(); k != nil; k, _ = c.Next() {
-		n++
-	}
-	return n
-}
-
-func rebuildIndex(tx *bolt.Tx, index map[string]eventRow) error {
-	for _, name := range []string{bucketEvents, bucketIDs} {
-		if err := tx.DeleteBucket([]byte(name)); err != nil {
-			return err
-		}
-		if _, err := tx.CreateBucket([]byte(name)); err != nil {
-			return err
-		}
-	}
-	keys := make([]string, 0, len(index))
-	for at := range index {
-		keys = append(keys, at)
-	}
-	slices.Sort(keys)
-	for _, at := range keys {
-		key, id := []byte(at), []byte(at[8:])
-		if err := tx.Bucket([]byte(bucketEvents)).Put(key, seal(key, index[at].encode())); err != nil {
-			return err
-		}
-		if err := tx.Bucket([]byte(bucketIDs)).Put(id, seal(id, key[:8])); err != nil {
-			return err
-		}
-	}
-	return nil
 }
 
 // acquireJournal gives the journal for reading; release it afterwards.

@@ -92,7 +92,7 @@ func (w *Writer) Submit(b Batch) {
 		it.late, it.lates = appendLate(nil, it.step, b.Late), len(b.Late)
 	}
 	for _, e := range b.Entries {
-		it.drafts = append(it.drafts, draft{kind: e.Kind, at: e.At, payload: e.Payload})
+		it.drafts = append(it.drafts, draftOf(e))
 	}
 	o := outgoing{item: it, issues: b.Issues}
 	for _, is := range b.Issues {
@@ -110,11 +110,13 @@ func (w *Writer) Submit(b Batch) {
 
 // Record hands over an entry that belongs to no step. It never waits.
 func (w *Writer) Record(e Entry) {
-	w.push(&item{drafts: []draft{{kind: e.Kind, at: e.At, payload: e.Payload}}}, outgoing{})
+	w.push(&item{drafts: []draft{draftOf(e)}}, outgoing{})
 }
 
 func (w *Writer) push(it *item, o outgoing) {
-	it.done = make(chan struct{})
+	if it.done == nil {
+		it.done = make(chan struct{})
+	}
 	if len(o.issues) > 0 {
 		o.deadline = w.opts.After(ReleaseWait)
 	}
