@@ -2,6 +2,7 @@ package engine
 
 import (
 	"sockline/alerting/hazard"
+	"sockline/alerting/shear"
 	"sockline/sensors/averages"
 )
 
@@ -43,4 +44,20 @@ func (e *Engine) assess(s *averages.Snapshot) {
 		a.Loss.Used, a.Gain.Used = live, live
 		hazard.Judge(a, pg.stretch, pg.view, e.settings.Levels)
 	}
+}
+
+// Stretch is the ground of a path as the last step measured it, and the first
+// path that looks at the same ground; nil where too little of it is observed.
+// It is valid until the next step.
+func (e *Engine) Stretch(path int) (s *shear.Stretch, owner int) {
+	pg := &e.ground.paths[path]
+	for owner = range e.ground.paths {
+		if e.ground.paths[owner].stretch == pg.stretch {
+			break
+		}
+	}
+	if e.assessments[path].Observed == nil {
+		return nil, owner
+	}
+	return pg.stretch, owner
 }

@@ -21,6 +21,7 @@ type Change struct {
 	MaxSlope          float64        // greatest change over 305 m (1000 ft) within the pair, 1/s
 	MeanSlope         float64        // change over its length, 1/s
 	FBar              float64        // horizontal F-factor averaged over 1 km at the fastest declared approach; 0 for a gain
+	Kilometre         float64        // loss over 1 km at which F-bar reaches its margin here, m/s; 0 for a gain
 	Level             alerting.Level // highest level with Probability >= confidence
 	HoldLevel         alerting.Level // highest level that still holds under the hysteresis
 	Used              []int          // stations (indices, ascending) that carry the estimate

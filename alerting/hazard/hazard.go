@@ -25,8 +25,8 @@ const mergeWithin = 3 * quantity.Knot
 // the higher.
 func (l Levels) Merged() bool { return l.Margin-l.Large < mergeWithin }
 
-// margin is the loss at which beyond-margin opens.
-func (l Levels) margin() float64 {
+// Beyond is the loss at which beyond-margin opens, m/s.
+func (l Levels) Beyond() float64 {
 	if l.Merged() {
 		return min(l.Margin, l.Large)
 	}
@@ -46,9 +46,9 @@ func LossOfFBar(fbar, groundSpeed float64) float64 {
 const (
 	fbarLength  = 1000.0 // m
 	leastGround = 20.0   // m/s: no approach is flown slower over the ground
-	// holdFBar is the hysteresis of the F-factor: an alert that opened for it
+	// HoldFBar is the hysteresis of the F-factor: an alert that opened for it
 	// holds down to nine tenths, as the loss holds down to 2 of 15 kt less.
-	holdFBar = 0.9
+	HoldFBar = 0.9
 )
 
 // View is how one path looks at a stretch: the distance of each of its points
@@ -67,8 +67,15 @@ func Judge(a *Assessment, s *shear.Stretch, v View, l Levels) {
 	// F-bar counts for a loss only.
 	kilometre := LossOfFBar(l.MarginFBar, ground)
 	a.Loss.FBar = s.KilometreLoss() * ground / (quantity.StandardGravity * fbarLength)
-	a.Loss.Probability[alerting.BeyondMargin] = s.EitherAtLeast(l.margin(), kilometre)
-	a.Loss.CloseProbability[alerting.BeyondMargin] = s.EitherAtLeast(l.margin()-l.Hysteresis, kilometre*holdFBar)
+	a.Loss.Probability[alerting.BeyondMargin] = s.EitherAtLeast(l.Beyond(), kilometre)
+	a.Loss.CloseProbability[alerting.BeyondMargin] = s.EitherAtLeast(l.Beyond()-l.Hysteresis, kilometre*HoldFBar)
+	a.Loss.Kilometre = kilometre
+	l.Settle(a)
+}
+
+// Settle gives loss and gain their levels from their probabilities. Gain has
+// no third level: it uses up no margin.
+func (l Levels) Settle(a *Assessment) {
 	a.Loss.Level = highest(a.Loss.Probability, l, alerting.BeyondMargin)
 	a.Loss.HoldLevel = highest(a.Loss.CloseProbability, l, alerting.BeyondMargin)
 	a.Gain.Level = highest(a.Gain.Probability, l, alerting.Large)

@@ -132,6 +132,7 @@ func (d *daemon) prepare() (err error) {
 	d.tell.measure(d.metrics.registry)
 	d.loop.archive, d.loop.metrics, d.loop.show, d.loop.control = d.archive, d.metrics, d.show, d.opts.control
 	d.loop.changed = d.follow
+	d.keepJudgements()
 	return d.openCapture()
 }
 
@@ -455,6 +456,7 @@ func (d *daemon) prune() {
 	if v == nil || err != nil {
 		return
 	}
+	d.pruneJudgements(v.At)
 	gone, err := store.Prune(v.At)
 	if err != nil {
 		d.log.Error().Err(err).Msg("old readings are not all deleted")

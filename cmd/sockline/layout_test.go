@@ -159,7 +159,7 @@ var flow = [...][]string{
 	{"alerting/hazard"},
 	{"alerting/lifecycle"},
 	{"alerting/wording", "alerting/engine"},
-	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page"},
+	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page", "alerting/judged"},
 }
 
 func TestFlowDoesNotTurnBack(t *testing.T) {

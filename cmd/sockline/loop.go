@@ -35,7 +35,8 @@ type loop struct {
 	messages <-chan sensors.Message
 	archive  *archive
 	metrics  *metrics
-	capture  *capturer // nil for none
+	judged   *judgements // nil for none
+	capture  *capturer   // nil for none
 	show     func(*report)
 	changes  chan change
 	changed  func(before, now *config.Config)
@@ -130,6 +131,7 @@ func (l *loop) step(t sensors.Instant) {
 	begun := time.Now()
 	res := l.engine.Step(t)
 	took := time.Since(begun)
+	l.judged.keep(t, l.engine, res)
 	transitions := res.Transitions
 	if len(l.held) > 0 {
 		transitions = append(l.held, transitions...)

@@ -33,6 +33,7 @@ func (l *loop) put(c change) {
 	first := l.engine.LastStep() + sensors.Second
 	l.entries = append(l.entries, history.Entry{Kind: history.KindConfiguration, At: first, Payload: l.cfg.Source})
 	l.metrics.follow(l.cfg)
+	l.judged.follow(l.cfg, l.engine)
 	l.changed(before, l.cfg)
 	c.taken <- first
 }
