@@ -159,6 +159,7 @@ var flow = [...][]string{
 	{"alerting/hazard"},
 	{"alerting/lifecycle"},
 	{"alerting/wording", "alerting/engine"},
+	{"alerting/attention", "alerting/page/access"},
 	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page", "alerting/judged"},
 }
 
