@@ -16,6 +16,7 @@ import (
 	"time"
 
 	"sockline/alerting/airfield"
+	"sockline/alerting/front"
 	"sockline/alerting/hazard"
 	"sockline/alerting/lifecycle"
 	"sockline/alerting/windfield"
@@ -54,6 +55,7 @@ type Engine struct {
 	recorder *averages.Recorder
 	field    *windfield.Estimator
 	ground   *ground
+	fronts   *front.Tracker
 	machine  *lifecycle.Machine
 	counts   Counts
 	learner
@@ -88,8 +90,9 @@ type Result struct {
 	Snapshot     *averages.Snapshot
 	Assessments  []hazard.Assessment // one for each path, in order
 	Transitions  []lifecycle.Transition
-	Tables       []Table // learnt since the step before, for the journal
-	OutflowShare float64 // posterior probability that an outflow is under way; 0 when blind
+	Fronts       []front.Front // that pass or have lately passed, the first first
+	Tables       []Table       // learnt since the step before, for the journal
+	OutflowShare float64       // posterior probability that an outflow is under way; 0 when blind
 	// Doubt is the posterior probability, by station, that a mast is wrong: its
 	// neighbours contradict it. nil when blind.
 	Doubt []float64
@@ -124,8 +127,9 @@ func New(s Settings) (*Engine, error) {
 	e.ground = newGround(s.Airfield, s.Reach)
 	masts := make([]windfield.Mast, len(s.Airfield.Masts))
 	for i, m := range s.Airfield.Masts {
-		masts[i] = windfield.Mast{X: m.X, Y: m.Y}
+		masts[i] = windfield.Mast{X: m.X, Y: m.Y, Aloft: e.ground.aloft[i]}
 	}
+	e.fronts = newFronts(s.Airfield, e.ground.aloft, layout)
 	e.field = windfield.New(masts, e.ground.targets, layout, s.Prior)
 	e.machine = lifecycle.New(lifecycle.Settings{
 		Airfield: s.Airfield.ID, Paths: pathNames(s.Airfield), StationIDs: ids, Hold: s.Hold,
@@ -250,6 +254,7 @@ func (e *Engine) Step(t sensors.Instant) *Result {
 	e.evaluateReadings()
 	e.learn(t, e.recorder)
 	snapshot := e.recorder.Snapshot(t)
+	e.result.Fronts = e.fronts.Step(snapshot)
 	e.assess(snapshot)
 	e.transitions = e.machine.Step(t, e.assessments, e.transitions[:0])
 	e.result.At = t
@@ -275,6 +280,7 @@ func (e *Engine) Warm(t sensors.Instant) {
 	e.learn(t, e.recorder)
 	s := e.recorder.Snapshot(t)
 	e.ground.update(s)
+	e.fronts.Step(s)
 	e.field.Step(s)
 }
 

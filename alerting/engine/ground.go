@@ -3,6 +3,7 @@ package engine
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strings"
 
 	"sockline/alerting/airfield"
@@ -20,6 +21,7 @@ type ground struct {
 	airfield *airfield.Airfield
 	reach    float64
 	masts    []airfield.Point
+	aloft    []bool // masts that take no part: see airfield.Aloft
 	targets  []windfield.Target
 	paths    []pathGround
 	live     []bool
@@ -48,7 +50,7 @@ type line struct {
 }
 
 func newGround(a *airfield.Airfield, reach float64) *ground {
-	g := &ground{airfield: a, reach: reach, masts: a.MastPoints(), live: make([]bool, len(a.Masts))}
+	g := &ground{airfield: a, reach: reach, masts: a.MastPoints(), aloft: a.Aloft(), live: make([]bool, len(a.Masts))}
 	for i := range a.Runways {
 		g.addRunway(&a.Runways[i])
 	}
@@ -104,6 +106,7 @@ type covered struct {
 func (g *ground) addPath(p, lead airfield.Path, l line, span airfield.Interval, stretches []covered) []covered {
 	var points []int
 	pg := pathGround{path: p, beside: airfield.MastsBeside(p, g.masts, g.reach)}
+	pg.beside = slices.DeleteFunc(pg.beside, func(m int) bool { return g.aloft[m] })
 	pg.view.Reversed = p.Runway() != lead.Runway()
 	for i, s := range l.before {
 		if s <= span.From+1e-6 && s >= span.To-1e-6 {
@@ -131,7 +134,7 @@ func (g *ground) addPath(p, lead airfield.Path, l line, span airfield.Interval, 
 func (g *ground) update(s *averages.Snapshot) {
 	same := g.known
 	for i := range g.live {
-		live := s.Mast(i).State == averages.Live
+		live := s.Mast(i).State == averages.Live && !g.aloft[i]
 		same = same && g.live[i] == live
 		g.live[i] = live
 	}

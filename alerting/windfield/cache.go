@@ -60,7 +60,7 @@ func (e *Estimator) entryFor(s *averages.Snapshot) *entry {
 	e.live, e.bases, e.times = e.live[:0], e.bases[:0], e.times[:0]
 	for i := range e.masts {
 		m := s.Mast(i)
-		if m.State != averages.Live {
+		if m.State != averages.Live || e.masts[i].Aloft {
 			continue
 		}
 		speed := e.recentSpeed(m)

@@ -13,7 +13,7 @@ import (
 // the doubt about each mast that stays, under its new index.
 func TestFollow(t *testing.T) {
 	layout := averages.NewLayout(20e9)
-	places := []Mast{{0, 0}, {1000, 0}, {2000, 100}}
+	places := []Mast{{X: 0, Y: 0}, {X: 1000, Y: 0}, {X: 2000, Y: 100}}
 	targets := []Target{{500, 0, 1, 0}, {1500, 50, 1, 0}}
 	before := func() *Estimator {
 		e := New(places, targets, layout, DefaultPrior())
@@ -39,8 +39,8 @@ func TestFollow(t *testing.T) {
 		{"another instrument at the same place", places, []int{-1, 1, 2}, true, []int{0, 0, 1}},
 		{"another order", []Mast{places[2], places[0], places[1]}, []int{2, 0, 1}, false, []int{1, 1, 0}},
 		{"one less", places[1:], []int{1, 2}, false, []int{0, 1}},
-		{"one more", slices.Concat([]Mast{{3000, 0}}, places), []int{-1, 0, 1, 2}, false, []int{0, 1, 0, 1}},
-		{"one moved", []Mast{places[0], places[1], {2000, 101}}, []int{0, 1, -1}, false, []int{1, 0, 0}},
+		{"one more", slices.Concat([]Mast{{X: 3000, Y: 0}}, places), []int{-1, 0, 1, 2}, false, []int{0, 1, 0, 1}},
+		{"one moved", []Mast{places[0], places[1], {X: 2000, Y: 101}}, []int{0, 1, -1}, false, []int{1, 0, 0}},
 	} {
 		t.Run(row.name, func(t *testing.T) {
 			old := before()

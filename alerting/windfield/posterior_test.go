@@ -145,7 +145,7 @@ func TestStepIsOptimalInterpolation(t *testing.T) {
 		t.Run(c.name, func(t *testing.T) {
 			var masts []Mast
 			for i := range c.x {
-				masts = append(masts, Mast{c.x[i], c.y[i]})
+				masts = append(masts, Mast{X: c.x[i], Y: c.y[i]})
 			}
 			// A flight toward the west meets the east component as headwind, one
 			// toward the south the north component.

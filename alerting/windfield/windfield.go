@@ -26,8 +26,12 @@ import (
 // Draws is the number of joint draws that stand for the posterior.
 const Draws = 128
 
-// Mast is the place of a mast in the local plane, m.
-type Mast struct{ X, Y float64 }
+// Mast is the place of a mast in the local plane, m. One that is Aloft stands
+// above another on the same tower and takes no part.
+type Mast struct {
+	X, Y  float64
+	Aloft bool
+}
 
 // Target is a point at which the headwind is wanted, in m, with the unit
 // vector of the flight.

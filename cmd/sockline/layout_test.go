@@ -153,8 +153,8 @@ var flow = [...][]string{
 	{"sensors/decode", "sensors/synthetic", "sensors/feed"},
 	{"sensors/quality", "sensors/correction", "sensors/mast"},
 	{"sensors/averages"},
-	{"alerting/airfield"},
-	{"alerting/windfield", "alerting/drift"},
+	{"alerting/airfield", "alerting/kinematics"},
+	{"alerting/windfield", "alerting/drift", "alerting/front"},
 	{"alerting/shear"},
 	{"alerting/hazard"},
 	{"alerting/lifecycle"},
@@ -201,7 +201,7 @@ func TestFlowDoesNotTurnBack(t *testing.T) {
 // evaluation: they wait for nothing and share nothing.
 var inline = [...]string{
 	"sensors", "sensors/quantity", "sensors/decode", "sensors/quality", "sensors/correction", "sensors/averages",
-	"alerting", "alerting/airfield", "alerting/windfield", "alerting/drift", "alerting/shear", "alerting/hazard",
+	"alerting", "alerting/airfield", "alerting/kinematics", "alerting/windfield", "alerting/drift", "alerting/front", "alerting/shear", "alerting/hazard",
 	"alerting/lifecycle", "alerting/wording", "alerting/engine",
 }
 

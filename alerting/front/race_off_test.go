@@ -1,0 +1,5 @@
+//go:build !race
+
+package front_test
+
+const racing = false
