@@ -161,6 +161,8 @@ var flow = [...][]string{
 	{"alerting/wording", "alerting/engine"},
 	{"alerting/attention", "alerting/page/access"},
 	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page", "alerting/judged"},
+	{"alerting/history/export"},
+	{"alerting/history/bundle"},
 }
 
 func TestFlowDoesNotTurnBack(t *testing.T) {
