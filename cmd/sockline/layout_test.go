@@ -163,6 +163,7 @@ var flow = [...][]string{
 	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page", "alerting/judged"},
 	{"alerting/history/export"},
 	{"alerting/history/bundle"},
+	{"alerting/review"},
 }
 
 func TestFlowDoesNotTurnBack(t *testing.T) {

@@ -44,7 +44,14 @@ func (g *progress) at(share func() float64) {
 	if g.out == nil {
 		return
 	}
-	if g.calls++; g.calls%64 != 0 {
+	if g.calls++; g.calls%64 == 0 {
+		g.draw(share)
+	}
+}
+
+// draw is at for those who call seldom.
+func (g *progress) draw(share func() float64) {
+	if g.out == nil {
 		return
 	}
 	now := g.now()

@@ -24,6 +24,7 @@ func replayCommand() command {
 			directory := fs.String("history", "", "history `DIRECTORY` to replay")
 			from := instantFlag(fs, "from", "first step to print, a `TIME`; what led up to it is run through silently")
 			to := instantFlag(fs, "to", "`TIME` before which the last step to print lies")
+			flags := defineCompareFlags(fs)
 			return func(ctx context.Context, p *program, _ []string) error {
 				if (*capture == "") == (*directory == "") {
 					return usagef("give either --capture FILE or --history DIRECTORY")
@@ -31,9 +32,18 @@ func replayCommand() command {
 				if err := spanError(*from, *to); err != nil {
 					return err
 				}
+				switch {
+				case *flags.on && *directory == "":
+					return usagef("--compare needs --history DIRECTORY: a capture holds no alerts to compare with")
+				case !*flags.on && (*flags.analyse || flags.output.json()):
+					return usagef("--analyse and --output json belong to --compare")
+				}
 				c, err := replayedConfig(*cfg, *directory)
 				if err != nil {
 					return err
+				}
+				if *flags.on {
+					return compare(ctx, p, c, *directory, *from, *to, flags)
 				}
 				r, err := newReplayer(ctx, p, c, *from, *to)
 				if err != nil {
@@ -78,6 +88,15 @@ type replayer struct {
 	bar      *progress
 	share    func() float64 // how far the source has been read
 
+	// exercise marks what comes out. Only a comparison with what was recorded
+	// does without, because it must give the same bytes.
+	exercise bool
+	past     *past                        // what the journal tells; read when it is needed unless it is given
+	cold     bool                         // no alert is taken over: they may have been others by these rules
+	issued   func(wording.Notice) error   // takes each issue
+	over     func(t sensors.Instant) bool // asked after each step whether that was all; nil: no
+	seen     func(*engine.Result)         // shown each step; nil: nobody looks
+
 	heard    sensors.Instant        // the last step with readings, or the first one
 	muted    bool                   // the daemon was down: nothing was issued
 	held     []lifecycle.Transition // of a change, to go out with the next step
@@ -93,13 +112,30 @@ type replayer struct {
 // newReplayer prepares a replay of the steps from <= T < to. Whatever comes
 // out of it is an exercise: it is not happening now.
 func newReplayer(ctx context.Context, p *program, cfg *config.Config, from, to sensors.Instant) (*replayer, error) {
-	e, err := engine.New(engineSettings(cfg, true))
+	r, err := newQuietReplayer(ctx, p, cfg, true, nil)
+	if err != nil {
+		return nil, err
+	}
+	r.from, r.to, r.bar, r.out = from.CeilSecond(), to, newProgress(p, "replay"), bufio.NewWriter(p.stdout)
+	r.issued = func(n wording.Notice) error {
+		if _, err := r.out.Write(append(n.JSON(), '\n')); err != nil {
+			return fmt.Errorf("print the alerts: %w", err)
+		}
+		return nil
+	}
+	return r, nil
+}
+
+// newQuietReplayer prepares a replay that hands its issues to issued and prints
+// nothing.
+func newQuietReplayer(ctx context.Context, p *program, cfg *config.Config, exercise bool, issued func(wording.Notice) error) (*replayer, error) {
+	e, err := engine.New(engineSettings(cfg, exercise))
 	if err != nil {
 		return nil, fmt.Errorf("prepare the engine: %w", err)
 	}
 	return &replayer{
-		ctx: ctx, p: p, cfg: cfg, engine: e, words: wordingContext(cfg, true), out: bufio.NewWriter(p.stdout),
-		from: from.CeilSecond(), to: to, bar: newProgress(p, "replay"), share: func() float64 { return 0 }, began: p.now(),
+		ctx: ctx, p: p, cfg: cfg, engine: e, words: wordingContext(cfg, exercise), exercise: exercise, issued: issued,
+		bar: &progress{}, share: func() float64 { return 0 }, began: p.now(),
 	}, nil
 }
 
@@ -154,9 +190,18 @@ func (r *replayer) step(t sensors.Instant) error {
 	if len(result.Readings) > 0 {
 		r.heard = t
 	}
+	if r.seen != nil {
+		r.seen(result)
+	}
 	all := append(r.held, result.Transitions...)
 	r.held = nil
-	return r.print(t, all)
+	if err := r.print(t, all); err != nil {
+		return err
+	}
+	if r.over != nil && r.over(t) {
+		return errReplayed
+	}
+	return nil
 }
 
 // print prints the issues of a step.
@@ -172,8 +217,8 @@ func (r *replayer) print(t sensors.Instant, transitions []lifecycle.Transition) 
 		if n.Opening() {
 			r.alerts++
 		}
-		if _, err := r.out.Write(append(n.JSON(), '\n')); err != nil {
-			return fmt.Errorf("print the alerts: %w", err)
+		if err := r.issued(n); err != nil {
+			return err
 		}
 	}
 	return nil

@@ -99,7 +99,7 @@ func (h *historyReplay) turn(t sensors.Instant) ([]lifecycle.Transition, error) 
 		h.note("a configuration that was in force from %s on is passed over, the one before it stays: %v", found.from, err)
 		return nil, nil
 	}
-	next, err := engine.New(engineSettings(cfg, true))
+	next, err := engine.New(engineSettings(cfg, h.exercise))
 	if err != nil {
 		return nil, fmt.Errorf("prepare the engine for the configuration of %s: %w", found.from, err)
 	}
@@ -119,7 +119,7 @@ func (h *historyReplay) turn(t sensors.Instant) ([]lifecycle.Transition, error) 
 
 // use makes a configuration the one that is replayed by.
 func (h *historyReplay) use(cfg *config.Config) {
-	h.cfg, h.words = cfg, wordingContext(cfg, true)
+	h.cfg, h.words = cfg, wordingContext(cfg, h.exercise)
 	h.ids = make([]string, len(cfg.Stations))
 	for i, s := range cfg.Stations {
 		h.ids[i] = s.ID

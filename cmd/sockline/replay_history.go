@@ -24,6 +24,11 @@ func (r *replayer) history(dir string) error {
 	if err != nil {
 		return err
 	}
+	return errors.Join(r.store(store), store.Close())
+}
+
+// store replays the readings of an open history.
+func (r *replayer) store(store *history.Store) error {
 	h := &historyReplay{replayer: r}
 	h.use(r.cfg)
 	begin, end := sensors.Instant(0), r.to
@@ -34,36 +39,41 @@ func (r *replayer) history(dir string) error {
 		}
 		if !ok {
 			r.note("the history holds no readings")
-			return store.Close()
+			return nil
 		}
 		end = last + sensors.Second
 	}
-	if r.from != 0 {
+	switch {
+	case r.from != 0 && r.cold:
+		begin = r.from.Add(-engine.Memory)
+	case r.from != 0:
 		begin = r.from.Add(-2 * engine.Memory)
 		h.asOf = r.from.Add(-engine.Memory)
+		var err error
 		if h.open, err = store.OpenAlerts(h.asOf); err != nil {
 			return fmt.Errorf("find the alerts that were open at %s: %w", h.asOf, err)
 		}
 	}
-	if h.starts, err = startsOf(store); err != nil {
-		return fmt.Errorf("replay the history: %w", err)
+	if r.past == nil {
+		past, err := pastOf(store)
+		if err != nil {
+			return err
+		}
+		r.past = &past
 	}
-	all, err := configurationsOf(store)
-	if err != nil {
-		return fmt.Errorf("replay the history: %w", err)
-	}
-	h.follow(all)
+	h.starts = r.past.starts
+	h.follow(r.past.configurations)
 	r.share = func() float64 {
 		return float64(r.engine.LastStep()-h.first) / float64(max(end-h.first, 1))
 	}
-	err = store.Readings(begin, end, h.stored)
+	err := store.Readings(begin, end, h.stored)
 	if err != nil && !errors.Is(err, errReplayed) {
 		err = fmt.Errorf("replay the history: %w", err)
 	}
 	if h.gaps > 0 {
 		r.note("%d steps are not in the history though the daemon ran: they count as without readings", h.gaps)
 	}
-	return errors.Join(err, store.Close())
+	return err
 }
 
 func openForReplay(dir string) (*history.Store, error) {
@@ -72,6 +82,22 @@ func openForReplay(dir string) (*history.Store, error) {
 		return nil, fmt.Errorf("%w; to replay while the daemon runs, give a copy of the directory", err)
 	}
 	return store, err
+}
+
+// past is what the journal tells a replay. It is only read.
+type past struct {
+	starts         []sensors.Instant
+	configurations []inForce
+}
+
+func pastOf(store *history.Store) (p past, err error) {
+	if p.starts, err = startsOf(store); err == nil {
+		p.configurations, err = configurationsOf(store)
+	}
+	if err != nil {
+		return p, fmt.Errorf("replay the history: %w", err)
+	}
+	return p, nil
 }
 
 // startsOf lists when the daemon was started, ascending.

@@ -100,20 +100,24 @@ func (r *recorder) receive(m sensors.Message) {
 
 func (r *recorder) closeDue(stamp sensors.Instant) {
 	for t, due := r.engine.Due(stamp); due; t, due = r.engine.Due(stamp) {
-		result := r.engine.Step(t)
-		b := history.Batch{Step: t, Stations: r.ids, Readings: result.Readings}
-		for _, late := range result.Refused {
-			b.Late = append(b.Late, history.LateReading{Reading: late.Reading, Reason: string(late.Reason)})
-		}
-		transitions := append(r.held, result.Transitions...)
-		r.held = nil
-		for _, tr := range transitions {
-			object := wording.Of(tr, wordingContext(r.cfg, true)).WithRecorded(true).JSON()
-			r.printed.Write(append(object, '\n'))
-			b.Issues = append(b.Issues, history.Issue{Alert: tr.Alert, Object: object})
-		}
-		r.writer.Submit(b)
+		r.submit(t, r.engine.Step(t))
 	}
+}
+
+// submit hands a step to the history.
+func (r *recorder) submit(t sensors.Instant, result *engine.Result) {
+	b := history.Batch{Step: t, Stations: r.ids, Readings: result.Readings}
+	for _, late := range result.Refused {
+		b.Late = append(b.Late, history.LateReading{Reading: late.Reading, Reason: string(late.Reason)})
+	}
+	transitions := append(r.held, result.Transitions...)
+	r.held = nil
+	for _, tr := range transitions {
+		object := wording.Of(tr, wordingContext(r.cfg, true)).WithRecorded(true).JSON()
+		r.printed.Write(append(object, '\n'))
+		b.Issues = append(b.Issues, history.Issue{Alert: tr.Alert, Object: object})
+	}
+	r.writer.Submit(b)
 }
 
 func (r *recorder) close() {

@@ -1,0 +1,148 @@
+package main
+
+import (
+	"encoding/json"
+	"os"
+	"path/filepath"
+	"strings"
+	"testing"
+
+	"sockline/alerting/history"
+	"sockline/alerting/judged"
+	"sockline/alerting/review"
+	"sockline/config"
+	"sockline/sensors"
+)
+
+// twice is an outflow of two strengths within half an hour.
+const twice = `
+airfield   skerrymoor
+start      2026-07-01T23:45:00Z
+length     24 min
+seed       5
+wind       240 deg 6 kt
+turbulence C
+eddies     0.4 m/s length 1000 m time 300 s
+outflow    at 1000 m before 07 strength 26 kt radius 900 m starts 4 min grows 1 min holds 2 min fades 1 min
+outflow    at 800 m before 07 strength 10 kt radius 900 m starts 14 min grows 1 min holds 3 min fades 1 min
+`
+
+// kept is a history with all that a daemon leaves of a scene: what is in force,
+// the readings, the issues, and what was judged.
+func kept(tb testing.TB, configuration, scene string, people ...history.Entry) (dir string) {
+	tb.Helper()
+	cfg, err := config.Load(configuration)
+	if err != nil {
+		tb.Fatal(err)
+	}
+	capture := filepath.Join(tb.TempDir(), "capture.jsonl")
+	succeed(tb, "simulate", "--config", configuration, "--scene", writeFile(tb, "test.scene", scene), "--out", capture)
+	messages, end := readCapture(tb, capture)
+	dir = tb.TempDir()
+	r := newRecorder(tb, cfg, dir)
+	first := messages[0].Received
+	r.writer.Record(history.Entry{Kind: history.KindSoftware, At: first, Payload: []byte(softwareText())})
+	r.writer.Record(history.Entry{Kind: history.KindConfiguration, At: first, Payload: cfg.Source})
+	r.writer.Record(history.Entry{Kind: history.KindStart, At: first})
+	w := judged.NewWriter(dir, judgedContext(cfg, r.engine), func(err error) { tb.Error(err) })
+	j := &judgements{writer: w}
+	for _, m := range messages {
+		r.closeJudged(m.Received, j)
+		if _, _, err := r.engine.Receive(m); err != nil {
+			tb.Fatal(err)
+		}
+	}
+	r.closeJudged(end, j)
+	if err := w.Close(tb.Context()); err != nil {
+		tb.Fatal(err)
+	}
+	for _, e := range people {
+		r.writer.Record(e)
+	}
+	r.close()
+	return dir
+}
+
+// closeJudged is closeDue with what was judged.
+func (r *recorder) closeJudged(stamp sensors.Instant, j *judgements) {
+	for {
+		t, due := r.engine.Due(stamp)
+		if !due {
+			return
+		}
+		result := r.engine.Step(t)
+		j.keep(t, r.engine, result)
+		r.submit(t, result)
+	}
+}
+
+func whatIf(t *testing.T, args ...string) (w review.WhatIf, text string) {
+	t.Helper()
+	o := succeed(t, append([]string{"replay", "--compare", "--output", "json"}, args...)...)
+	if err := json.Unmarshal([]byte(o.stdout), &w); err != nil {
+		t.Fatal(err)
+	}
+	return w, succeed(t, append([]string{"replay", "--compare"}, args...)...).stdout
+}
+
+// TestCompare holds that the configuration in force gives every issue again and
+// that this is said; that other levels are judged from what is kept of each
+// step, with the same outcome as the analysis, over midnight; and that other
+// masts are analysed.
+func TestCompare(t *testing.T) {
+	configuration := small(t)
+	dir := kept(t, configuration, twice)
+	same, text := whatIf(t, "--history", dir)
+	if same.Way != review.Repeated || same.Repeat == nil || !same.Repeat.Exact || same.Repeat.Issues < 20 {
+		t.Fatalf("the same configuration: %+v\n%s", same.Repeat, text)
+	}
+	if !strings.Contains(text, "byte for byte") || !strings.Contains(text, "this is the same program") || !strings.Contains(text, "No alert does not mean no windshear") {
+		t.Errorf("it is not said: %s", text)
+	}
+	source, err := os.ReadFile(configuration)
+	if err != nil {
+		t.Fatal(err)
+	}
+	change := func(old, new string) string {
+		if strings.Count(string(source), old) != 1 {
+			t.Fatalf("%q is not once in the configuration", old)
+		}
+		return writeFile(t, "other.toml", strings.Replace(string(source), old, new, 1))
+	}
+	higher := change(`noticeable_change = "10 kt"`, `noticeable_change = "14 kt"`)
+	kept, text := whatIf(t, "--history", dir, "--config", higher)
+	if kept.Way != review.Rejudged || kept.Comparison.Vanishes+kept.Comparison.Changes == 0 || kept.Comparison.Recorded[0] != same.Comparison.Recorded[0] {
+		t.Errorf("a higher level: %+v\n%s", kept, text)
+	}
+	analysed, _ := whatIf(t, "--history", dir, "--config", higher, "--analyse")
+	if analysed.Way != review.Analysed {
+		t.Errorf("it was asked to be analysed: %s", analysed.Way)
+	}
+	// Rounding of figures apart, both ways give the same alerts.
+	if a, b := verdicts(kept.Comparison), verdicts(analysed.Comparison); a != b {
+		t.Errorf("from what is kept:\n%s\nanalysed:\n%s", a, b)
+	}
+	wider := writeFile(t, "wider.toml", string(source)+"\n[analysis]\nreach = \"900 m\"\n")
+	other, _ := whatIf(t, "--history", dir, "--config", wider)
+	if other.Way != review.Analysed || !strings.Contains(strings.Join(other.Notes, " "), "[analysis]") {
+		t.Errorf("another reach: %s %v", other.Way, other.Notes)
+	}
+	for _, bad := range [][]string{
+		{"--capture", "x", "--compare"}, {"--history", dir, "--analyse"}, {"--history", dir, "--output", "json"},
+	} {
+		if o := call(t, append([]string{"replay"}, bad...)...); o.code != exitUsage {
+			t.Errorf("%v: exit code %d", bad, o.code)
+		}
+	}
+	if o := call(t, "replay", "--compare", "--history", filepath.Join(dir, "nowhere")); o.code != exitFailed {
+		t.Errorf("a history that is not there: %d %s", o.code, o.stderr)
+	}
+}
+
+func verdicts(c review.Comparison) string {
+	var b strings.Builder
+	for _, p := range c.Pairs {
+		b.WriteString(p.Verdict + " " + strings.Join(p.What, "; ") + "\n")
+	}
+	return b.String()
+}
