@@ -100,11 +100,6 @@ type History struct {
 	Keep      time.Duration // of readings, whole days
 }
 
-// Page says where the page is served.
-type Page struct {
-	Listen string // host:port on loopback
-}
-
 // Secret is text that no printing verb and no encoder gives away.
 type Secret string
 

@@ -39,8 +39,9 @@ func deployed(t *testing.T, text string) string {
 	}
 	certPEM := pem.EncodeToMemory(&pem.Block{Type: "CERTIFICATE", Bytes: cert})
 	for name, content := range map[string][]byte{
-		"sockline.toml": []byte(text), "broker-password": []byte("invented\n"), "webhook-secret": []byte("invented-and-long-enough\n"), "broker-authority.pem": certPEM, "sockline.pem": certPEM,
+		"sockline.toml": []byte(text), "broker-password": []byte("invented\n"), "webhook-secret": []byte("invented-and-long-enough\n"), "broker-authority.pem": certPEM, "sockline.pem": certPEM, "page.crt": certPEM,
 		"sockline-key.pem": pem.EncodeToMemory(&pem.Block{Type: "PRIVATE KEY", Bytes: private}),
+		"page.key":         pem.EncodeToMemory(&pem.Block{Type: "PRIVATE KEY", Bytes: private}),
 	} {
 		if err := os.WriteFile(filepath.Join(dir, name), content, 0o600); err != nil {
 			t.Fatal(err)
@@ -70,8 +71,11 @@ func TestDeployedExample(t *testing.T) {
 	if len(full.Webhooks) != 1 || full.Webhooks[0].Secret.Reveal() != "invented-and-long-enough" || full.CAP.Spool == "" || len(plain.Webhooks) != 0 {
 		t.Errorf("%+v, %+v", full.Webhooks, full.CAP)
 	}
-	if full.Analysis != plain.Analysis || full.MQTT != plain.MQTT || full.Page != plain.Page || full.History.Keep != plain.History.Keep {
+	if full.Analysis != plain.Analysis || full.MQTT != plain.MQTT || full.Page.Listen != plain.Page.Listen || full.History.Keep != plain.History.Keep {
 		t.Errorf("%+v\n%+v", full, plain)
+	}
+	if p := full.Page; p.CertFile == "" || p.KeyFile == "" || !filepath.IsAbs(p.UsersFile) || plain.Page.UsersFile != "" {
+		t.Errorf("%+v", p)
 	}
 	a, b := plain.Alerts, full.Alerts
 	if a.Noticeable != b.Noticeable || a.Large != b.Large || a.MarginFBar != b.MarginFBar || a.Confidence != b.Confidence ||

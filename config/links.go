@@ -253,25 +253,3 @@ func (t *table) history() History {
 	h.done()
 	return s
 }
-
-// page says where the page is served.
-func (t *table) page() Page {
-	p := t.table("page", false)
-	listen, ok := p.text("listen", "127.0.0.1:7625", `"127.0.0.1:7625"`)
-	p.done()
-	if !ok {
-		return Page{}
-	}
-	host, port, err := net.SplitHostPort(listen)
-	if err == nil {
-		_, err = strconv.ParseUint(port, 10, 16)
-	}
-	switch {
-	case err != nil:
-		p.blame(p.key("listen"), listen, `write "127.0.0.1:7625"`, "this is not an address and a port")
-	case !loopback(host):
-		p.blame(p.key("listen"), listen, `write "127.0.0.1:7625", and let a web server with TLS and a login pass requests on`,
-			"the page has neither TLS nor a login, so it is served on loopback only")
-	}
-	return Page{Listen: listen}
-}

@@ -33,6 +33,10 @@ func (c *Config) Reloadable(next *Config) Problems {
 	fixed("mqtt.prefix", prefix, next.MQTT.Prefix, "receivers listen under the prefix that the program began with")
 	fixed("history.directory", c.History.Directory == next.History.Directory, next.History.Directory, "the files of the history are open while the program runs")
 	fixed("page.listen", c.Page == next.Page, next.Page.Listen, "the page is served on one address while the program runs")
+	const page = "the page is served while the program runs; what stands in its files may change"
+	fixed("page.cert_file", c.Page.CertFile == next.Page.CertFile, next.Page.CertFile, page)
+	fixed("page.key_file", c.Page.KeyFile == next.Page.KeyFile, next.Page.KeyFile, page)
+	fixed("page.users_file", c.Page.UsersFile == next.Page.UsersFile, next.Page.UsersFile, page)
 	tell := func(key string, same bool) {
 		fixed(key, same, "", "those who are told are known from the start of the program")
 	}

@@ -29,10 +29,11 @@ func (p *Page) routes() *http.ServeMux {
 	mux.Handle("GET /metrics", promhttp.HandlerFor(p.opts.Registry, promhttp.HandlerOpts{}))
 	mux.HandleFunc("GET /healthz", p.health)
 	mux.HandleFunc("GET /readyz", p.ready)
-	mux.HandleFunc("/", func(w http.ResponseWriter, r *http.Request) {
-		p.problem(w, http.StatusNotFound, "not-found", "There is nothing at this address.",
-			"The addresses are /, /api/v1/now, /api/v1/stream, /api/v1/layout, /api/v1/stations, /api/v1/events, /api/v1/events/{id}, /metrics, /healthz and /readyz.")
-	})
+	mux.HandleFunc("GET /login", p.logInForm)
+	mux.HandleFunc("POST /login", p.logIn)
+	mux.HandleFunc("POST /logout", p.logOut)
+	p.actRoutes(mux)
+	mux.HandleFunc("/", p.otherwise)
 	return mux
 }
 
@@ -44,12 +45,6 @@ func (p *Page) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	h.Set("Referrer-Policy", "no-referrer")
 	h.Set("Cross-Origin-Resource-Policy", "same-origin")
 	h.Set("Cache-Control", "no-store")
-	if r.Method != http.MethodGet && r.Method != http.MethodHead {
-		h.Set("Allow", "GET, HEAD")
-		p.problem(w, http.StatusMethodNotAllowed, "read-only", "This can only be read.",
-			"Use GET or HEAD.")
-		return
-	}
 	// A foreign web site may have its own name resolve to this machine, and
 	// then read what a browser here is given. The name gives it away.
 	host := r.Host
@@ -59,12 +54,33 @@ func (p *Page) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	if n := len(host); n > 1 && host[0] == '[' && host[n-1] == ']' {
 		host = host[1 : n-1]
 	}
-	if !loopback(host) {
+	// Over TLS a certificate keeps others from using our name.
+	if p.opts.TLS == nil && !loopback(host) {
 		p.problem(w, http.StatusMisdirectedRequest, "foreign-host", "This program does not serve that name.",
 			"Ask for 127.0.0.1 or localhost; a reverse proxy must send one of these as Host.")
 		return
 	}
-	p.mux.ServeHTTP(w, r)
+	if r.Method != http.MethodGet && r.Method != http.MethodHead && p.foreign.Check(r) != nil {
+		p.problem(w, http.StatusForbidden, "foreign-page", "The request comes from a page of somebody else.",
+			"Use the page that this program serves.")
+		return
+	}
+	if p.mayRead(w, r) {
+		p.mux.ServeHTTP(w, r)
+	}
+}
+
+// otherwise answers what no address takes: what is not there, and methods that
+// an address does not know.
+func (p *Page) otherwise(w http.ResponseWriter, r *http.Request) {
+	if r.Method == http.MethodGet || r.Method == http.MethodHead {
+		p.problem(w, http.StatusNotFound, "not-found", "There is nothing at this address.",
+			"/api/v1/openapi.json describes every address there is.")
+		return
+	}
+	w.Header().Set("Allow", "GET, HEAD")
+	p.problem(w, http.StatusMethodNotAllowed, "no-such-deed", "Nothing can be done at this address in this way.",
+		"/api/v1/openapi.json describes what can be done, and where.")
 }
 
 // current is the view if it may still be shown, else nil and why not.

@@ -2,13 +2,15 @@
 // history, and serves both over HTTP: one page for people and JSON for
 // programs. It is the last stage on the way out; beside it stands publish.
 //
-// It only reads. It has no users, and therefore serves this machine alone:
-// see CheckListen. A view that is too old is never shown: every value of it
+// Without users it only reads, and serves this machine alone; see
+// Options.Gate. Whoever changes something has logged in, and is named in the
+// history. A view that is too old is never shown: every value of it
 // becomes "no information".
 package page
 
 import (
 	"context"
+	"crypto/tls"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -20,6 +22,7 @@ import (
 	"github.com/prometheus/client_golang/prometheus"
 	"github.com/rs/zerolog"
 
+	"sockline/alerting/page/access"
 	"sockline/sensors"
 )
 
@@ -46,16 +49,19 @@ type History interface {
 	Event(id string) ([]json.RawMessage, error)
 }
 
-// Options says what a Page serves. All fields are required but Ready.
+// Options says what a Page serves. All fields are required but where it says so.
 type Options struct {
 	Airfield string // its name, for people
 	Listen   string // the address it is to be served on; loopback only
 	Exercise bool   // the whole program is an exercise
 	View     func() *View
 	Tape     *Tape
+	People   People       // what can be done; required with Gate
+	Gate     *access.Gate // who may do it; nil: nobody, and others than this machine see nothing
+	TLS      *tls.Config  // nil: unencrypted, and on this machine only
 	History  History
 	Registry *prometheus.Registry
-	Ready    func() []string  // why the program is not ready; none: it is
+	Ready    func() []string  // why the program is not ready; nil: it is
 	Now      func() time.Time // wall time
 	Log      zerolog.Logger
 }
@@ -67,14 +73,17 @@ type Page struct {
 	csp      string
 	template *template.Template
 
+	foreign *http.CrossOriginProtection
+
 	streams chan struct{} // holds one for each open stream
 	ending  chan struct{} // closed when the server ends
 	body    bodyCache
 }
 
-// New makes a page. It refuses a Listen address that is not on this machine.
+// New makes a page. It refuses a Listen address that others could reach where
+// there are no users or no encryption.
 func New(o Options) (*Page, error) {
-	if err := CheckListen(o.Listen); err != nil {
+	if err := o.checkListen(o.Listen); err != nil {
 		return nil, err
 	}
 	if o.View == nil || o.Tape == nil || o.History == nil || o.Registry == nil || o.Now == nil {
@@ -89,22 +98,32 @@ func New(o Options) (*Page, error) {
 	}
 	p := &Page{
 		opts: o, csp: contentSecurityPolicy(), template: t,
+		foreign: http.NewCrossOriginProtection(),
 		streams: make(chan struct{}, maxStreams), ending: make(chan struct{}),
 	}
 	p.mux = p.routes()
 	return p, nil
 }
 
-// CheckListen refuses an address that others than this machine could reach:
-// there are no users yet, so nobody could be told apart.
-func CheckListen(address string) error {
+// checkListen refuses an address that others than this machine could reach
+// where they could not be told apart, or would be overheard.
+func (o *Options) checkListen(address string) error {
 	host, _, err := net.SplitHostPort(address)
-	if err != nil {
+	switch {
+	case err != nil:
 		return fmt.Errorf("page address %q: %w; use 127.0.0.1:7625", address, err)
+	case loopback(host):
+		return nil
+	case o.TLS == nil:
+		return fmt.Errorf("page address %q can be reached from other machines, and the page is not encrypted; "+
+			"name cert_file and key_file in [page], or use 127.0.0.1:<port>", address)
+	case o.Gate == nil:
+		return fmt.Errorf("page address %q can be reached from other machines, and the page has no users; "+
+			"name a users_file in [page] and add users with \"sockline users add\", or use 127.0.0.1:<port>", address)
 	}
-	if !loopback(host) {
-		return fmt.Errorf("page address %q can be reached from other machines, and the page has neither "+
-			"users nor encryption; use 127.0.0.1:<port>, and a reverse proxy with both in front of it", address)
+	if n, err := o.Gate.Users(o.Now()); n == 0 {
+		return errors.Join(fmt.Errorf("page address %q can be reached from other machines, and nobody could log in; "+
+			"add users with \"sockline users add\", or use 127.0.0.1:<port>", address), err)
 	}
 	return nil
 }
@@ -147,7 +166,7 @@ func smallBuffer(ctx context.Context, c net.Conn) context.Context {
 // Serve answers on a listener until ctx is done; it is called once. It refuses a listener that
 // is not on this machine.
 func (p *Page) Serve(ctx context.Context, l net.Listener) error {
-	if err := CheckListen(l.Addr().String()); err != nil {
+	if err := p.opts.checkListen(l.Addr().String()); err != nil {
 		return errors.Join(err, l.Close())
 	}
 	server := &http.Server{
@@ -158,9 +177,16 @@ func (p *Page) Serve(ctx context.Context, l net.Listener) error {
 		IdleTimeout:       idleWithin,
 		MaxHeaderBytes:    headerBytes,
 		ConnContext:       smallBuffer,
+		TLSConfig:         p.opts.TLS,
 	}
 	ended := make(chan error, 1)
-	go func() { ended <- server.Serve(l) }()
+	go func() {
+		if p.opts.TLS != nil {
+			ended <- server.ServeTLS(l, "", "")
+		} else {
+			ended <- server.Serve(l)
+		}
+	}()
 	select {
 	case err := <-ended:
 		return fmt.Errorf("serve the page on %s: %w", l.Addr(), err)

@@ -1,6 +1,7 @@
 package page
 
 import (
+	"crypto/tls"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -16,6 +17,7 @@ import (
 	"github.com/rs/zerolog"
 
 	"sockline/alerting"
+	"sockline/alerting/page/access"
 	"sockline/sensors"
 )
 
@@ -386,8 +388,10 @@ func TestProblems(t *testing.T) {
 		{"GET", "/nowhere", "127.0.0.1:7625", 404, "/problems/not-found"},
 		{"GET", "/api/v1/events/x", "localhost", 404, "/problems/no-event"},
 		{"GET", "/api/v1/events?x=1", "[::1]:7625", 400, "/problems/bad-query"},
-		{"POST", "/api/v1/events", "127.0.0.1", 405, "/problems/read-only"},
-		{"DELETE", "/", "127.0.0.1", 405, "/problems/read-only"},
+		{"POST", "/api/v1/events", "127.0.0.1", 405, "/problems/no-such-deed"},
+		{"DELETE", "/", "127.0.0.1", 405, "/problems/no-such-deed"},
+		{"POST", "/api/v1/sheets", "127.0.0.1", 403, "/problems/read-only"},
+		{"POST", "/login", "127.0.0.1", 403, "/problems/read-only"},
 		{"GET", "/", "elsewhere.example", 421, "/problems/foreign-host"},
 		{"GET", "/", "127.0.0.1.elsewhere.example:7625", 421, "/problems/foreign-host"},
 		{"GET", "/", "10.0.0.1", 421, "/problems/foreign-host"},
@@ -447,25 +451,30 @@ func TestMetrics(t *testing.T) {
 	}
 }
 
-func TestCheckListen(t *testing.T) {
-	tests := []struct {
+func TestWhereThePageMayBeServed(t *testing.T) {
+	users := gateOf(t, map[string]access.Role{"keeper": access.Tower})
+	nobody := gateOf(t, nil)
+	for _, tt := range []struct {
 		address string
-		ok      bool
+		tls     bool
+		gate    *access.Gate
+		mend    string // phrase of the refusal; empty if it may be
 	}{
-		{"127.0.0.1:7625", true}, {"127.9.9.9:0", true}, {"[::1]:7625", true}, {"localhost:7625", true},
-		{":7625", false}, {"0.0.0.0:7625", false}, {"[::]:7625", false}, {"10.1.2.3:7625", false},
-		{"tower.example:7625", false}, {"127.0.0.1.example:7625", false}, {"127.0.0.1", false}, {"", false},
-	}
-	for _, tt := range tests {
-		t.Run(tt.address, func(t *testing.T) {
-			err := CheckListen(tt.address)
-			if (err == nil) != tt.ok {
-				t.Errorf("CheckListen(%q) = %v", tt.address, err)
+		{"127.0.0.1:7625", false, nil, ""}, {"127.9.9.9:0", false, nil, ""}, {"[::1]:7625", false, nil, ""}, {"localhost:7625", false, users, ""},
+		{":7625", false, nil, "not encrypted"}, {"0.0.0.0:7625", false, users, "name cert_file"}, {"[::]:7625", true, nil, "name a users_file"},
+		{"10.1.2.3:7625", true, nobody, "add users"}, {"10.1.2.3:7625", true, users, ""}, {"tower.example:7625", false, users, "not encrypted"},
+		{"127.0.0.1.example:7625", false, nil, "not encrypted"}, {"127.0.0.1", false, nil, "use 127.0.0.1:7625"}, {"", true, users, "use 127.0.0.1:7625"},
+	} {
+		t.Run(fmt.Sprint(tt.address, tt.tls, tt.gate != nil), func(t *testing.T) {
+			o := Options{Gate: tt.gate, Now: func() time.Time { return noon }}
+			if tt.tls {
+				o.TLS = &tls.Config{}
 			}
-			if err != nil && !strings.Contains(err.Error(), "use 127.0.0.1") {
-				t.Errorf("%v does not say what to use instead", err)
+			err := o.checkListen(tt.address)
+			if (err == nil) != (tt.mend == "") || err != nil && !strings.Contains(err.Error(), tt.mend) {
+				t.Errorf("%v, want %q", err, tt.mend)
 			}
-			if _, err := New(Options{Listen: tt.address}); err == nil {
+			if _, err := New(Options{Listen: tt.address, Now: o.Now}); err == nil {
 				t.Error("New accepts options without anything to serve")
 			}
 		})

@@ -42,6 +42,9 @@ func (p *Page) stream(w http.ResponseWriter, r *http.Request) {
 	h := w.Header()
 	h.Set("Content-Type", "text/event-stream")
 	h.Set("X-Accel-Buffering", "no") // for a proxy in front
+	if r.Method == http.MethodHead {
+		return
+	}
 	fmt.Fprintf(&out.buf, "retry: %d\n\n", retryAfter.Milliseconds())
 	last := r.Header.Get("Last-Event-ID")
 	if last == "" {

@@ -16,7 +16,6 @@ import (
 	"github.com/rs/zerolog"
 
 	"sockline/alerting/history"
-	"sockline/alerting/page"
 	"sockline/alerting/publish"
 	"sockline/alerting/wording"
 	"sockline/config"
@@ -72,6 +71,7 @@ type daemon struct {
 	broker   feed.Broker
 	archive  *archive
 	board    *board
+	people   *people
 	metrics  *metrics
 	loop     *loop
 	output   *outward
@@ -119,6 +119,8 @@ func (d *daemon) prepare() (err error) {
 		return err
 	}
 	d.archive = newArchive(cfg.History.Directory, history.Options{Keep: cfg.History.Keep, Log: d.log}, d.release)
+	d.people = newPeople(d)
+	d.board.lifted = d.people.lifted
 	if d.output, err = newOutward(d); err != nil {
 		return err
 	}
@@ -204,9 +206,6 @@ func (d *daemon) openCapture() error {
 	return nil
 }
 
-// pageURL is where the page is.
-func (d *daemon) pageURL() string { return "http://" + d.listener.Addr().String() + "/" }
-
 // Run does the work until ctx is done, and stops in order within stopWithin.
 func (d *daemon) Run(ctx context.Context) error {
 	err := d.start(context.WithoutCancel(ctx))
@@ -246,40 +245,13 @@ func (d *daemon) start(ctx context.Context) error {
 	return d.startLoop(ctx)
 }
 
-// servePage serves the page beside everything else: when it fails, the log
-// says so, and alerts go on.
-func (d *daemon) servePage(ctx context.Context) error {
-	p, err := page.New(page.Options{
-		Airfield: d.current().Airfield.Name, Listen: d.listener.Addr().String(), Exercise: d.opts.exercise,
-		View: d.board.view.Load, Tape: d.board.tape, History: d.archive, Registry: d.metrics.registry,
-		Ready: d.notReady, Now: time.Now, Log: d.log,
-	})
-	if err != nil {
-		return err
-	}
-	ctx, cancel := context.WithCancel(ctx)
-	done := make(chan struct{})
-	go func() {
-		defer close(done)
-		if err := p.Serve(ctx, d.listener); err != nil {
-			d.log.Error().Err(err).Msg("the page is no longer served")
-		}
-	}()
-	d.teardown.add("the page", func(stop context.Context) error {
-		cancel()
-		return ended(stop, done)
-	})
-	d.log.Info().Str("url", d.pageURL()).Msg("serving the page")
-	return nil
-}
-
 // openHistory opens the history and takes up where the last run left off.
 // Whatever fails here shows in the status and stops nothing.
 func (d *daemon) openHistory(ctx context.Context) {
 	now := d.opts.clock.Stamp("", nil)
 	if d.archive.open() == nil {
 		if store, err := d.archive.reading(); err == nil {
-			if err := errors.Join(d.loop.restore(store, now), d.tell.takeUp(store)); err != nil {
+			if err := errors.Join(d.loop.restore(store, now), d.tell.takeUp(store), d.people.takeUp(store, now, d.opts.exercise)); err != nil {
 				d.log.Error().Err(err).Msg("part of the history cannot be read back; the rest is taken up")
 			}
 		}

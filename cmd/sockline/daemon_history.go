@@ -146,6 +146,18 @@ func (a *archive) record(e history.Entry) {
 	}
 }
 
+// recordDurably keeps an entry and waits for the disk. After an error of ctx it
+// waits in memory; after any other it is not kept.
+func (a *archive) recordDurably(ctx context.Context, e history.Entry) (uint64, error) {
+	a.mu.Lock()
+	w, why := a.writer, a.why
+	a.mu.Unlock()
+	if w == nil {
+		return 0, fmt.Errorf("the history is not open: %s", why)
+	}
+	return w.RecordDurably(ctx, e)
+}
+
 // health is that of the store, or why there is none.
 func (a *archive) health() history.Health {
 	a.mu.Lock()

@@ -39,6 +39,7 @@ type Visitor struct {
 type Gate struct {
 	book  book
 	limit limiter
+	heard limiter // of what is told of somebody who may not
 	slots chan struct{}
 	decoy hash
 
@@ -62,12 +63,20 @@ func NewGate(path string) (*Gate, error) {
 	}
 	return &Gate{
 		book: book{path: path}, slots: make(chan struct{}, atOnce), decoy: decoy,
-		limit: limiter{buckets: make(map[string]*bucket)}, sessions: make(map[[sha256.Size]byte]*session),
+		limit: limiter{buckets: make(map[string]*bucket)}, heard: limiter{buckets: make(map[string]*bucket)}, sessions: make(map[[sha256.Size]byte]*session),
 	}, nil
 }
 
 // Users is how many there are, and what is wrong with their file.
 func (g *Gate) Users(now time.Time) (int, error) { return g.book.state(now) }
+
+// Change is what has become of a user.
+type Change struct{ Name, What string }
+
+// Changes is what has changed in the file of users since it was asked for last;
+// the first time, everybody who is there. The error is what is wrong with the
+// file: the users of before are then no users any more, which is no change.
+func (g *Gate) Changes(now time.Time) ([]Change, error) { return g.book.changes(now) }
 
 // LogIn checks a name and a password that came from an address, and begins a
 // session. The key goes into the cookie.
@@ -153,6 +162,10 @@ func (g *Gate) Visitor(key string, now time.Time) Visitor {
 func (v Visitor) Carries(token string) bool {
 	return v.Token != "" && subtle.ConstantTimeCompare([]byte(token), []byte(v.Token)) == 1
 }
+
+// Worth tells whether what a user was refused is worth another line: nobody
+// fills the history by asking.
+func (g *Gate) Worth(name string, now time.Time) bool { return g.heard.take(name, "", now) }
 
 // LogOut ends a session.
 func (g *Gate) LogOut(key string) {

@@ -120,7 +120,7 @@ func Write(path string, users []User) error {
 		return fmt.Errorf("write the users: %w", err)
 	}
 	_, err = f.Write(text.Bytes())
-	err = errors.Join(err, f.Chmod(mode), f.Sync(), f.Close())
+	err = errors.Join(err, f.Chmod(mode), sameOwner(f, path), f.Sync(), f.Close())
 	if err == nil {
 		err = os.Rename(f.Name(), path)
 	}
@@ -161,6 +161,7 @@ type book struct {
 	size   int64
 	mod    time.Time
 	err    error
+	told   map[string]User // as of the last changes; nil before the first
 }
 
 // find is the user of a name; false if there is none. A file that cannot be
@@ -201,4 +202,36 @@ func (b *book) look(now time.Time) {
 	for _, u := range list {
 		b.users[u.Name] = u
 	}
+}
+
+// changes compares the users with those of the time before.
+func (b *book) changes(now time.Time) (out []Change, err error) {
+	b.mu.Lock()
+	defer b.mu.Unlock()
+	b.look(now)
+	if b.err != nil {
+		return nil, b.err
+	}
+	first := b.told == nil
+	for name, u := range b.users {
+		before, known := b.told[name]
+		switch {
+		case first:
+			out = append(out, Change{name, "is a user as " + u.Role.String()})
+		case !known:
+			out = append(out, Change{name, "added as " + u.Role.String()})
+		case before.Role != u.Role:
+			out = append(out, Change{name, "is " + u.Role.String() + " and was " + before.Role.String()})
+		case before.hash.String() != u.hash.String():
+			out = append(out, Change{name, "has another password"})
+		}
+	}
+	for name := range b.told {
+		if _, still := b.users[name]; !still {
+			out = append(out, Change{name, "removed"})
+		}
+	}
+	b.told = b.users
+	slices.SortFunc(out, func(x, y Change) int { return strings.Compare(x.Name, y.Name) })
+	return out, nil
 }
