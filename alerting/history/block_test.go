@@ -134,7 +134,7 @@ func TestSealFindsEveryFlippedBit(t *testing.T) {
 	}
 }
 
-// TestFormatExamples holds the two examples of format.md, which come from an
+// TestFormatExamples holds the examples of format.md, which come from an
 // independent program: what is on disk must stay readable.
 func TestFormatExamples(t *testing.T) {
 	unhex := func(s string) []byte {
@@ -159,6 +159,8 @@ func TestFormatExamples(t *testing.T) {
 		t.Errorf("step read as %+v, %v", st, err)
 	}
 
+	frameExample(t, unhex, step)
+
 	// Of the earlier version, which is still read, and as it is written now.
 	before := unhex(`01 04 00 00 01 9f 1d 8c e2 00 7b 22 76 65 72 73 69 6f 6e 22 3a 22 31 22 7d
 		46 be c9 d3 0e ac 59 54 0e 7b 3c 38 6f 21 37 93 4f da 9b ae 73 61 c4 db ed 6a 23 af 43 11 58 bd`)
@@ -182,6 +184,27 @@ func TestFormatExamples(t *testing.T) {
 	first, _ := parseRecord(seqKey(1), record)
 	if err != nil || r.Kind != KindAcknowledge || string(r.Payload) != `{"occurrence":"a","who":"Io"}` || !r.follows(first.Hash) {
 		t.Errorf("record of somebody read as %+v, %s, %v", r, r.Payload, err)
+	}
+}
+
+// frameExample is the third example of format.md.
+func frameExample(t *testing.T, unhex func(string) []byte, step sensors.Instant) {
+	t.Helper()
+	var steps []Step
+	for i, v := range [][2]float64{{5.1, 359}, {5.2, 0}, {5, 358}} {
+		at := step + sensors.Instant(i)*sensors.Second
+		steps = append(steps, Step{At: at, Stations: []string{"far07"},
+			Readings: []sensors.Reading{{Time: at, Arrival: at + 80, Speed: v[0], From: v[1]}}})
+	}
+	want := []keyed{
+		{unhex("00 a8 c0 00 00"), unhex("01 01 03 03 01 00 00 94 51 9e 3d")},
+		{unhex("00 a8 c0 00 01"), unhex("01 03 00 00 00 d0 0f 00 a0 01 01 40 64 b0 00 81 ce 05 94 ae a9 e8 47")},
+	}
+	if got := encodeWindow(1, steps); !reflect.DeepEqual(got, want) {
+		t.Errorf("the window is written as % x", got)
+	}
+	if !givesBack(want, steps, []string{"far07"}) {
+		t.Error("the window of the example is not read as it was")
 	}
 }
 

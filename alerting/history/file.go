@@ -23,6 +23,7 @@ const (
 	bucketSteps    = "steps"
 	bucketLate     = "late"
 	bucketStations = "stations"
+	bucketBlocks   = "blocks"
 )
 
 // ErrInUse is a history directory that another process holds open.
@@ -53,9 +54,10 @@ func journalLayout() layout {
 
 func dayLayout() layout {
 	return layout{
-		format:  "sockline readings 1",
-		buckets: []string{bucketSteps, bucketLate, bucketStations},
-		alloc:   1 << 20,
+		format:  "sockline readings 2",
+		buckets: []string{bucketSteps, bucketLate, bucketStations, bucketBlocks},
+		older:   map[string][]string{"sockline readings 1": {bucketSteps, bucketLate, bucketStations}},
+		alloc:   16 << 10, // small against the day of a few stations
 		mapped:  32 << 20,
 	}
 }
@@ -238,6 +240,12 @@ func (l layout) check(tx *bolt.Tx) error {
 	return nil
 }
 
+// markFormat says what format a file has.
+func markFormat(tx *bolt.Tx, l layout) error {
+	key := []byte("format")
+	return tx.Bucket([]byte(bucketAbout)).Put(key, seal(key, []byte(l.format)))
+}
+
 // createFile makes an empty file under a temporary name and gives it its own
 // only when it is whole and on disk: power lost while a database is being
 // initialised leaves one that cannot be opened.
@@ -258,12 +266,10 @@ func createFile(path string, l layout) error {
 		return fmt.Errorf("create %s: %w", path, err)
 	}
 	err = db.Update(func(tx *bolt.Tx) error {
-		about, err := tx.CreateBucket([]byte(bucketAbout))
-		if err != nil {
+		if _, err := tx.CreateBucket([]byte(bucketAbout)); err != nil {
 			return err
 		}
-		key := []byte("format")
-		if err := about.Put(key, seal(key, []byte(l.format))); err != nil {
+		if err := markFormat(tx, l); err != nil {
 			return err
 		}
 		for _, name := range l.buckets {

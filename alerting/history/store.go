@@ -41,6 +41,7 @@ type Store struct {
 	opts     Options
 	keep     atomic.Int64 // Options.Keep, until Retain
 	readOnly bool
+	window   sensors.Instant // of folding; less than foldWindow in tests only
 	shelf    shelf
 	journal  *file // held open; nil when read-only
 	head     head  // end of the chain; after Open only the Writer touches it
@@ -92,7 +93,7 @@ func newStore(dir string, opts Options, readOnly bool) *Store {
 	if opts.LockWait <= 0 {
 		opts.LockWait = time.Second
 	}
-	s := &Store{dir: dir, opts: opts, readOnly: readOnly}
+	s := &Store{dir: dir, opts: opts, readOnly: readOnly, window: foldWindow}
 	s.keep.Store(int64(opts.Keep))
 	s.health.Store(&Health{})
 	s.shelf = shelf{dir: dir, readOnly: readOnly, lockWait: opts.LockWait, report: s.reportDamage, open: map[string]*file{}}

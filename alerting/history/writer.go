@@ -8,6 +8,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 	"sync"
 	"syscall"
 	"time"
@@ -49,7 +50,9 @@ type Writer struct {
 	day      *file  // open file of readings, nil if none
 	dayName  string // of day
 	table    table
-	reported int // of Health.Damage, already journalled
+	folding  folding
+	quiet    bool // this round holds no records
+	reported int  // of Health.Damage, already journalled
 }
 
 // table is the list of stations that the last step referred to.
@@ -297,6 +300,7 @@ func (w *Writer) commit(r *round) error {
 		day  []*item
 		name string
 	)
+	w.quiet = !slices.ContainsFunc(r.items, func(it *item) bool { return len(it.drafts) > 0 })
 	for _, it := range r.items {
 		if !it.hasStep {
 			continue
@@ -321,14 +325,18 @@ func (w *Writer) writeDay(name string, items []*item) error {
 		return nil
 	}
 	if w.day == nil || w.dayName != name {
+		w.foldRest()
 		w.closeDay()
 		f, err := w.s.shelf.acquire(name, dayLayout(), true)
 		if err != nil {
 			return err
 		}
 		w.day, w.dayName = f, name
+		if w.folding, err = beginFolding(f, w.s.window); err != nil {
+			return err
+		}
 	}
-	known := w.table
+	known, fold := w.table, w.folding
 	err := w.day.update(func(tx *bolt.Tx) error {
 		steps, late := tx.Bucket([]byte(bucketSteps)), tx.Bucket([]byte(bucketLate))
 		steps.FillPercent, late.FillPercent = 1, 1 // keys only ever rise
@@ -352,14 +360,16 @@ func (w *Writer) writeDay(name string, items []*item) error {
 			if err != nil {
 				return err
 			}
+			fold.wrote(it.step)
 		}
-		return nil
+		return fold.fold(tx, w.quiet)
 	})
 	if err != nil {
-		known = table{} // whether it is on disk is unknown: look again
+		w.table = table{} // whether it is on disk is unknown: look again
+		return err
 	}
-	w.table = known
-	return err
+	w.table, w.folding = known, fold
+	return nil
 }
 
 // tableFor finds or adds the list of stations in the file of tx.
