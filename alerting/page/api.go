@@ -19,7 +19,7 @@ import (
 // routes is every address there is.
 func (p *Page) routes() *http.ServeMux {
 	mux := http.NewServeMux()
-	mux.HandleFunc("GET /{$}", p.front)
+	p.frontRoutes(mux)
 	mux.HandleFunc("GET /api/v1/now", p.now)
 	mux.HandleFunc("GET /api/v1/stream", p.stream)
 	mux.HandleFunc("GET /api/v1/layout", p.layout)
@@ -40,7 +40,7 @@ func (p *Page) routes() *http.ServeMux {
 // ServeHTTP sets what every answer carries, and refuses what no address takes.
 func (p *Page) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	h := w.Header()
-	h.Set("Content-Security-Policy", p.csp)
+	h.Set("Content-Security-Policy", contentSecurityPolicy)
 	h.Set("X-Content-Type-Options", "nosniff")
 	h.Set("Referrer-Policy", "no-referrer")
 	h.Set("Cross-Origin-Resource-Policy", "same-origin")

@@ -2,202 +2,222 @@ package page
 
 import (
 	"bytes"
+	"compress/gzip"
 	"crypto/sha256"
-	_ "embed" // for the template and its style
-	"encoding/base64"
+	"embed"
+	"encoding/hex"
 	"fmt"
 	"html/template"
+	"io"
+	"io/fs"
 	"net/http"
+	"path"
+	"strconv"
 	"strings"
-	"time"
 
 	"sockline/alerting"
+	"sockline/alerting/page/access"
 )
 
-//go:embed front.html
-var frontHTML string
+//go:embed templates/*.html
+var templateFiles embed.FS
 
-//go:embed front.css
-var frontCSS string
+//go:embed assets
+var assetFiles embed.FS
 
-// contentSecurityPolicy allows nothing but our own style sheet, by its hash:
-// whatever found its way into the page could neither run nor call out.
-func contentSecurityPolicy() string {
-	sum := sha256.Sum256([]byte(frontCSS))
-	return "default-src 'none'; style-src 'sha256-" + base64.StdEncoding.EncodeToString(sum[:]) +
-		"'; base-uri 'none'; form-action 'none'; frame-ancestors 'none'"
+// contentSecurityPolicy allows our own modules, style and connections, and
+// nothing that is written into a page: whatever found its way into one could
+// neither run nor call out. No text may become markup or a script by way of
+// the DOM either (Trusted Types).
+const contentSecurityPolicy = "default-src 'none'; script-src 'self'; style-src 'self'; img-src 'self'; " +
+	"connect-src 'self'; base-uri 'none'; form-action 'self'; frame-ancestors 'none'; " +
+	"require-trusted-types-for 'script'; trusted-types 'none'"
+
+// asset is one file that a browser gets beside the pages.
+type asset struct {
+	contentType   string
+	plain, packed []byte
 }
 
-// parseFront makes the template of the page.
-func parseFront() (*template.Template, error) {
-	t, err := template.New("front").Parse(frontHTML)
-	if err != nil {
-		return nil, fmt.Errorf("read the template of the page: %w", err)
+// glass is everything a browser gets: templates, and the files they name.
+type glass struct {
+	pages  map[string]*template.Template
+	assets map[string]asset
+	build  string // names this set of files: an address with it never changes what it gives
+}
+
+// assetTypes are the kinds of files there are.
+func assetType(name string) (string, error) {
+	switch path.Ext(name) {
+	case ".js":
+		return "text/javascript; charset=utf-8", nil
+	case ".css":
+		return "text/css; charset=utf-8", nil
+	case ".svg":
+		return "image/svg+xml", nil
+	case ".txt":
+		return "text/plain; charset=utf-8", nil
 	}
-	return t, nil
+	return "", fmt.Errorf("the file %s of the page is of no kind that is served", name)
 }
 
-// refresh is how often the page loads itself anew, in seconds.
-const refresh = 2
-
-// front is what the template is filled with: words only, ready to show.
-type front struct {
-	Style     template.CSS
-	Refresh   int
-	Lasts     int // whole seconds after which the browser blanks the page by itself
-	Airfield  string
-	Exercise  bool
-	Known     bool // false: everything is no information
-	Why       string
-	At        string
-	Condition string // the word
-	Mark      string // the shape beside it
-	Meaning   string
-	Remarks   []string
-	Alerts    []frontAlert
-	Paths     []frontPath
-	Ends      []End
-	Stations  []Station
-	Notice    string
+// newGlass reads and packs the files once: a request costs a lookup.
+func newGlass() (*glass, error) {
+	g := &glass{pages: make(map[string]*template.Template), assets: make(map[string]asset)}
+	entries, err := fs.ReadDir(assetFiles, "assets")
+	if err != nil {
+		return nil, fmt.Errorf("read the files of the page: %w", err)
+	}
+	sum := sha256.New()
+	for _, e := range entries {
+		plain, err := assetFiles.ReadFile("assets/" + e.Name())
+		if err != nil {
+			return nil, fmt.Errorf("read the files of the page: %w", err)
+		}
+		kind, err := assetType(e.Name())
+		if err != nil {
+			return nil, err
+		}
+		var packed bytes.Buffer
+		w, err := gzip.NewWriterLevel(&packed, gzip.BestCompression)
+		if err != nil {
+			return nil, fmt.Errorf("pack the files of the page: %w", err)
+		}
+		if _, err := w.Write(plain); err != nil {
+			return nil, fmt.Errorf("pack the files of the page: %w", err)
+		}
+		if err := w.Close(); err != nil {
+			return nil, fmt.Errorf("pack the files of the page: %w", err)
+		}
+		g.assets[e.Name()] = asset{kind, plain, packed.Bytes()}
+		fmt.Fprintf(sum, "%s %d\n", e.Name(), len(plain))
+		sum.Write(plain)
+	}
+	g.build = hex.EncodeToString(sum.Sum(nil)[:8])
+	for _, name := range []string{"now", "past", "event", "masts", "basis", "handover", "login"} {
+		t, err := template.ParseFS(templateFiles, "templates/frame.html", "templates/"+name+".html")
+		if err != nil {
+			return nil, fmt.Errorf("read the template of the page: %w", err)
+		}
+		g.pages[name] = t
+	}
+	return g, nil
 }
 
-type frontAlert struct {
-	Class    string
-	Word     string // fall or rise
-	Level    int
-	Name     string
-	Observed bool
-	Sentence string
+// frontRoutes is every address that a person visits, and what those name.
+func (p *Page) frontRoutes(mux *http.ServeMux) {
+	mux.HandleFunc("GET /{$}", p.frontNow)
+	mux.HandleFunc("GET /past", p.frontView("past", "Past"))
+	mux.HandleFunc("GET /past/{id}", p.frontView("event", "Past"))
+	mux.HandleFunc("GET /masts", p.frontView("masts", "Masts"))
+	mux.HandleFunc("GET /basis", p.frontView("basis", "Basis"))
+	mux.HandleFunc("GET /handover", p.frontView("handover", "Hand-over"))
+	mux.HandleFunc("GET /assets/{build}/{file}", p.frontAsset)
 }
 
-type frontPath struct {
-	Class      string
-	Word       string
-	Name       string
-	Sentence   string
-	Unobserved []string
-}
-
-// front renders the page.
-func (p *Page) front(w http.ResponseWriter, _ *http.Request) {
-	var out bytes.Buffer
-	if err := p.template.Execute(&out, p.fill()); err != nil {
-		p.internal(w, "render the page", err)
+// frontAsset answers with a file. The address holds the build, so that a
+// browser may keep the file for good and never mixes two versions.
+func (p *Page) frontAsset(w http.ResponseWriter, r *http.Request) {
+	a, ok := p.glass.assets[r.PathValue("file")]
+	if !ok || r.PathValue("build") != p.glass.build {
+		p.problem(w, http.StatusNotFound, "not-found", "There is nothing at this address.",
+			"The page may be of an earlier version; load it again.")
 		return
 	}
-	w.Header().Set("Content-Type", "text/html; charset=utf-8")
-	_, _ = w.Write(out.Bytes()) // an error is a client that has gone
+	h := w.Header()
+	h.Set("Content-Type", a.contentType)
+	h.Set("Cache-Control", "public, max-age=31536000, immutable")
+	h.Set("Vary", "Accept-Encoding")
+	body := a.plain
+	if strings.Contains(r.Header.Get("Accept-Encoding"), "gzip") {
+		h.Set("Content-Encoding", "gzip")
+		body = a.packed
+	}
+	h.Set("Content-Length", strconv.Itoa(len(body)))
+	if r.Method == http.MethodHead {
+		return
+	}
+	_, _ = io.Copy(w, bytes.NewReader(body)) // an error is a client that has gone
 }
 
-// fill puts the view into words. A view that is too old keeps the names of
-// what there is and loses every value.
-func (p *Page) fill() front {
+// frame is what every page is filled with.
+type frame struct {
+	Build    string
+	View     string // which page
+	Title    string
+	Heading  string // after the name of the airfield, in the title of the window
+	Airfield string
+	Exercise bool
+	Recorded bool // not live: the record of exercises, looked at from a program that is none
+	Visitor  visitor
+	ID       string // of the event that is looked at
+	Notice   string
+	Words    frontWords // of the page Now
+	Failed   string
+	Next     string
+}
+
+// newFrame fills in what all pages have in common.
+func (p *Page) newFrame(r *http.Request, view, title string) frame {
 	last := p.opts.View()
-	v, why := p.current()
-	f := front{
-		Style:    template.CSS(frontCSS),
-		Refresh:  refresh,
-		Lasts:    int(MaxAge / time.Second),
-		Airfield: p.opts.Airfield,
-		Exercise: p.exercise(last),
-		Known:    v != nil,
-		Why:      why,
-		Notice:   alerting.Notice,
+	f := frame{
+		Build: p.glass.build, View: view, Title: title, Heading: title, Airfield: p.opts.Airfield,
+		Exercise: p.exercise(last), Visitor: p.visitorOf(r), Notice: alerting.Notice, ID: r.PathValue("id"),
 	}
 	if last != nil && last.Airfield != "" {
 		f.Airfield = last.Airfield
 	}
-	if v == nil {
-		f.Condition, f.Mark = "No information", "none"
-		f.Meaning = "Nothing here says what the wind does. Read every path as not observed."
-		f.blank(last)
-		return f
-	}
-	// The browser counts on from here: a page that is no longer refreshed
-	// blanks itself when this view gets too old.
-	f.Lasts = int((MaxAge - max(0, p.opts.Now().Sub(v.Made))) / time.Second)
-	f.At = v.At.Time().Format(utcSeconds)
-	f.Condition, f.Mark, f.Meaning = conditionWords(v.Condition)
-	f.Remarks = v.Remarks
-	f.Ends, f.Stations = v.Ends, v.Stations
-	for _, a := range v.Alerts {
-		f.Alerts = append(f.Alerts, alertWords(a))
-	}
-	for _, path := range v.Paths {
-		f.Paths = append(f.Paths, pathWords(path))
-	}
 	return f
 }
 
-// noInformation stands where a value would stand.
-const noInformation = "No information."
+// frontView makes the handler of a page that its modules fill. The record of
+// exercises is looked at apart, as an exercise: it stands beside nothing live.
+func (p *Page) frontView(name, title string) http.HandlerFunc {
+	return func(w http.ResponseWriter, r *http.Request) {
+		f := p.newFrame(r, name, title)
+		if (name == "past" || name == "event") && r.URL.Query().Get("record") == "exercise" && !f.Exercise {
+			f.Exercise, f.Recorded = true, true
+		}
+		p.frontRender(w, http.StatusOK, name, &f)
+	}
+}
 
-// blank fills in the names of the last view without any of its values.
-func (f *front) blank(last *View) {
-	if last == nil {
+// frontNow renders the page that is left open: its words as of now, which the
+// modules replace by what the stream brings.
+func (p *Page) frontNow(w http.ResponseWriter, r *http.Request) {
+	f := p.newFrame(r, "now", "Now")
+	f.Words = p.frontWords()
+	f.Heading = f.Words.Condition
+	p.frontRender(w, http.StatusOK, "now", &f)
+}
+
+func (p *Page) frontRender(w http.ResponseWriter, status int, name string, f *frame) {
+	var out bytes.Buffer
+	if err := p.glass.pages[name].ExecuteTemplate(&out, "frame", f); err != nil {
+		p.internal(w, "render the page", err)
 		return
 	}
-	if len(last.Alerts) > 0 {
-		// Nothing is said when none was open: it would sound like calm.
-		f.Remarks = append(f.Remarks, "An alert was open at the last step worked out.")
-	}
-	for _, e := range last.Ends {
-		f.Ends = append(f.Ends, End{Runway: e.Runway, Sentence: noInformation})
-	}
-	for _, path := range last.Paths {
-		f.Paths = append(f.Paths, frontPath{Class: "unknown", Word: "No information", Name: path.Name})
-	}
-	for _, s := range last.Stations {
-		f.Stations = append(f.Stations, Station{ID: s.ID, State: "no information"})
-	}
+	w.Header().Set("Content-Type", "text/html; charset=utf-8")
+	w.WriteHeader(status)
+	_, _ = w.Write(out.Bytes()) // an error is a client that has gone
 }
 
-// conditionWords is the word, the shape and the meaning of a condition.
-func conditionWords(c alerting.Condition) (word, mark, meaning string) {
-	switch c {
-	case alerting.Observing:
-		return "Observing", "full", "Every path is observed where it has to be."
-	case alerting.PartlyObserving:
-		return "Partly observing", "half", "Some paths are not observed, or not where it matters."
-	case alerting.Blind:
-		return "Blind", "empty", "No path is observed."
-	}
-	return "No contact", "none", "Nothing is heard. Read every path as not observed."
+// visitor is who looks at a page, as far as the page is concerned.
+type visitor struct {
+	access.Visitor
+	Users bool // there are people who may log in
 }
 
-// alertWords is what an alert looks like: fall and rise are told apart by word
-// and colour, the level by word and by the weight of the border.
-func alertWords(a Alert) frontAlert {
-	f := frontAlert{Class: "fall", Word: "Headwind falls", Level: int(a.Level),
-		Name:     strings.ReplaceAll(a.Level.String(), "-", " "),
-		Observed: a.Observed, Sentence: a.Sentence}
-	if a.Kind == alerting.HeadwindGain {
-		f.Class, f.Word = "rise", "Headwind rises"
-	}
-	switch a.Level {
-	case alerting.Large:
-		f.Class += " level2"
-	case alerting.BeyondMargin:
-		f.Class += " level3"
-	default:
-		f.Class += " level1"
-	}
-	if !a.Observed {
-		f.Class += " unseen"
-	}
-	return f
+// visitorOf tells who looks. Without users everybody on this machine may look
+// and nobody may change anything.
+func (p *Page) visitorOf(r *http.Request) visitor {
+	return visitor{p.who(r), p.opts.Gate != nil}
 }
 
-// pathWords is what a path looks like. There is no state that means good.
-func pathWords(p Path) frontPath {
-	f := frontPath{Name: p.Name, Sentence: p.Sentence, Unobserved: p.Unobserved}
-	switch p.State {
-	case alerting.Raised:
-		f.Class, f.Word = "raised", "Alert open"
-	case alerting.BelowLimits:
-		f.Class, f.Word = "below", "Below limits"
-	default:
-		f.Class, f.Word = "unknown", "Not observed"
-	}
-	return f
+// frontLogin renders the form that logs somebody in, with why it failed the
+// last time, and where to go from it.
+func (p *Page) frontLogin(w http.ResponseWriter, r *http.Request, status int, failed, next string) {
+	f := p.newFrame(r, "login", "Log in")
+	f.Failed, f.Next = failed, next
+	p.frontRender(w, status, "login", &f)
 }

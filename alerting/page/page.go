@@ -14,7 +14,6 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
-	"html/template"
 	"net"
 	"net/http"
 	"time"
@@ -68,10 +67,9 @@ type Options struct {
 
 // Page is the HTTP handler.
 type Page struct {
-	opts     Options
-	mux      *http.ServeMux
-	csp      string
-	template *template.Template
+	opts  Options
+	mux   *http.ServeMux
+	glass *glass // what a browser gets
 
 	foreign *http.CrossOriginProtection
 
@@ -92,12 +90,12 @@ func New(o Options) (*Page, error) {
 	if o.Ready == nil {
 		o.Ready = func() []string { return nil }
 	}
-	t, err := parseFront()
+	g, err := newGlass()
 	if err != nil {
 		return nil, err
 	}
 	p := &Page{
-		opts: o, csp: contentSecurityPolicy(), template: t,
+		opts: o, glass: g,
 		foreign: http.NewCrossOriginProtection(),
 		streams: make(chan struct{}, maxStreams), ending: make(chan struct{}),
 	}

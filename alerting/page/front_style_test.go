@@ -8,17 +8,20 @@ import (
 	"testing"
 )
 
-// tokens reads the colours of the two themes from the style sheet.
+// styles is all that the style sheets say.
+func styles(t *testing.T) string {
+	t.Helper()
+	g := mustGlass(t)
+	return string(g.assets["frame.css"].plain) + string(g.assets["views.css"].plain)
+}
+
+// tokens reads the colours of the lights from the style sheet.
 func tokens(t *testing.T) map[string]map[string][3]float64 {
 	t.Helper()
-	light, dark, ok := strings.Cut(frontCSS, "@media (prefers-color-scheme: dark)")
-	if !ok {
-		t.Fatal("the style sheet has no dark theme")
-	}
-	dark, _, _ = strings.Cut(dark, "\n* {")
-	themes := map[string]map[string][3]float64{"light": {}, "dark": {}}
-	for name, css := range map[string]string{"light": light, "dark": dark} {
-		for _, m := range regexp.MustCompile(`--([a-z-]+): #([0-9a-f]{6});`).FindAllStringSubmatch(css, -1) {
+	themes := map[string]map[string][3]float64{}
+	for _, block := range regexp.MustCompile(`(?s):root([^{}]*) \{([^{}]*--ground[^{}]*)\}`).FindAllStringSubmatch(styles(t), -1) {
+		theme := map[string][3]float64{}
+		for _, m := range regexp.MustCompile(`--([a-z-]+): #([0-9a-f]{6});`).FindAllStringSubmatch(block[2], -1) {
 			var c [3]float64
 			for i := range c {
 				v, err := strconv.ParseUint(m[2][2*i:2*i+2], 16, 8)
@@ -27,8 +30,12 @@ func tokens(t *testing.T) map[string]map[string][3]float64 {
 				}
 				c[i] = float64(v) / 255
 			}
-			themes[name][m[1]] = c
+			theme[m[1]] = c
 		}
+		themes["root"+block[1]] = theme
+	}
+	if len(themes) != 5 { // day, the default of a dark system, dusk, night, late
+		t.Fatalf("the style sheet has %d lights, want 5", len(themes))
 	}
 	return themes
 }
@@ -68,6 +75,7 @@ func TestContrast(t *testing.T) {
 		{"quiet", "panel", 7}, {"quiet", "stripe", 7}, {"on-band", "band", 7},
 		{"fall", "panel", 3}, {"rise", "panel", 3}, {"rule", "panel", 3}, {"hatch", "panel", 3},
 		{"fall", "stripe", 3}, {"rise", "stripe", 3}, {"rule", "stripe", 3}, {"band", "ground", 3},
+		{"ink", "field", 7}, {"quiet", "field", 7}, {"middle", "panel", 3}, {"quiet", "ground", 7},
 	}
 	for name, theme := range tokens(t) {
 		for _, p := range pairs {
@@ -94,7 +102,7 @@ func TestNoGreen(t *testing.T) {
 		}
 	}
 	for _, word := range []string{"green", "lime", "olive", "teal"} {
-		if strings.Contains(frontCSS, word) {
+		if strings.Contains(styles(t), word) {
 			t.Errorf("the style sheet names %s", word)
 		}
 	}
@@ -105,7 +113,7 @@ func TestNoGreen(t *testing.T) {
 func TestStatesDifferWithoutColour(t *testing.T) {
 	rules := map[string]string{}
 	for _, selector := range []string{".below .swatch", ".unknown .swatch", ".raised .swatch", ".level1", ".level2", ".level3"} {
-		m := regexp.MustCompile(`(?m)^` + regexp.QuoteMeta(selector) + ` \{(.*)\}$`).FindStringSubmatch(frontCSS)
+		m := regexp.MustCompile(`(?m)^` + regexp.QuoteMeta(selector) + ` \{(.*)\}$`).FindStringSubmatch(styles(t))
 		if m == nil {
 			t.Fatalf("no rule for %s", selector)
 		}
@@ -117,7 +125,25 @@ func TestStatesDifferWithoutColour(t *testing.T) {
 		}
 		rules[selector] = body
 	}
-	if strings.Contains(frontCSS, "url(") || strings.Contains(frontCSS, "@import") {
+	if regexp.MustCompile(`url\([^#]`).MatchString(styles(t)) || strings.Contains(styles(t), "@import") {
 		t.Error("the style sheet asks for something from elsewhere")
+	}
+}
+
+// TestOnlyAMarkerFlashes: 2 times a second or once in two seconds, never the
+// text, and not at all where motion is to be reduced.
+func TestOnlyAMarkerFlashes(t *testing.T) {
+	css := styles(t)
+	endless := regexp.MustCompile(`([^{}]+)\{[^{}]*animation:([^;{}]*)infinite[^{}]*\}`).FindAllStringSubmatch(css, -1)
+	if len(endless) != 2 {
+		t.Fatalf("%d rules go on without end, want the two of the marker", len(endless))
+	}
+	for i, want := range []string{"500ms", "2s"} {
+		if !strings.Contains(endless[i][1], ".blink.") || !strings.Contains(endless[i][2], " "+want+" ") {
+			t.Errorf("the rule %s flashes with%s, want a marker with %s", strings.TrimSpace(endless[i][1]), endless[i][2], want)
+		}
+	}
+	if !regexp.MustCompile(`prefers-reduced-motion: reduce\) \{ \.blink\.fast, \.blink\.slow \{ animation: none`).MatchString(css) {
+		t.Error("the marker flashes where motion is to be reduced")
 	}
 }
