@@ -29,6 +29,7 @@ func (p *Page) routes() *http.ServeMux {
 	mux.Handle("GET /metrics", promhttp.HandlerFor(p.opts.Registry, promhttp.HandlerOpts{}))
 	mux.HandleFunc("GET /healthz", p.health)
 	mux.HandleFunc("GET /readyz", p.ready)
+	mux.HandleFunc("GET /api/v1/visitor", p.visitorObject)
 	mux.HandleFunc("GET /login", p.logInForm)
 	mux.HandleFunc("POST /login", p.logIn)
 	mux.HandleFunc("POST /logout", p.logOut)

@@ -108,6 +108,19 @@ func (p *Page) allowed(w http.ResponseWriter, r *http.Request, role access.Role)
 	return access.Visitor{}, false
 }
 
+// visitorObject tells somebody who they are, with the token of their session: for
+// modules and programs that did not load a page. Other sites cannot read it.
+func (p *Page) visitorObject(w http.ResponseWriter, r *http.Request) {
+	v := p.who(r)
+	p.json(w, http.StatusOK, "application/json", struct {
+		Name  string `json:"name"` // empty: nobody has logged in
+		Role  string `json:"role"`
+		Token string `json:"token"`
+		Users bool   `json:"users"` // there are people who may log in
+		marks
+	}{v.Name, v.Role.String(), v.Token, p.opts.Gate != nil, p.marks()})
+}
+
 // logInForm shows the form.
 func (p *Page) logInForm(w http.ResponseWriter, r *http.Request) {
 	if p.opts.Gate == nil {
