@@ -56,6 +56,16 @@ func LevelOf(word string) (Level, bool) {
 	return NoLevel, false
 }
 
+// Cause is what brings a change about.
+type Cause string
+
+// The causes.
+const (
+	Unresolved Cause = "unresolved"
+	Outflow    Cause = "outflow"
+	GustFront  Cause = "gust-front"
+)
+
 // PathState is what can be said of a path as a whole.
 type PathState string
 

@@ -1,6 +1,8 @@
 package engine
 
 import (
+	"math"
+
 	"sockline/alerting/hazard"
 	"sockline/alerting/shear"
 	"sockline/sensors/averages"
@@ -10,7 +12,9 @@ import (
 func (e *Engine) assess(s *averages.Snapshot) {
 	e.ground.update(s)
 	posterior := e.field.Step(s)
+	e.posterior = posterior
 	e.result.OutflowShare, e.result.Doubt = 0, nil
+	e.result.Outflows = e.outflows.Step(s.At(), posterior)
 	exercise := e.settings.Exercise
 	var live []int
 	if posterior != nil {
@@ -29,6 +33,7 @@ func (e *Engine) assess(s *averages.Snapshot) {
 		a.Reason = pg.reason
 		a.Missing = pg.missing
 		a.Exercise = exercise
+		a.Crosswind = crosswindRange(s, pg)
 		if posterior == nil || !pg.usable {
 			// Two points are the least that a change needs; without them the
 			// path counts as not observed at all.
@@ -60,4 +65,26 @@ func (e *Engine) Stretch(path int) (s *shear.Stretch, owner int) {
 		return nil, owner
 	}
 	return pg.stretch, owner
+}
+
+// crosswindRange is the greatest difference of crosswind between the live masts
+// beside a path, m/s: of the mean over all their blocks.
+func crosswindRange(s *averages.Snapshot, pg *pathGround) float64 {
+	least, most := math.Inf(1), math.Inf(-1)
+	east, north := pg.path.Direction()
+	for _, i := range pg.beside {
+		m := s.Mast(i)
+		if m.State != averages.Live {
+			continue
+		}
+		sum, n := 0.0, 0.0
+		for b := range m.Blocks {
+			if m.Blocks[b].Present {
+				sum += float64(m.Blocks[b].East*north) - float64(m.Blocks[b].North*east)
+				n++
+			}
+		}
+		least, most = math.Min(least, sum/n), math.Max(most, sum/n)
+	}
+	return math.Max(most-least, 0)
 }

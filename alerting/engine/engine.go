@@ -19,6 +19,7 @@ import (
 	"sockline/alerting/front"
 	"sockline/alerting/hazard"
 	"sockline/alerting/lifecycle"
+	"sockline/alerting/outflow"
 	"sockline/alerting/windfield"
 	"sockline/sensors"
 	"sockline/sensors/averages"
@@ -47,17 +48,20 @@ type Settings struct {
 
 // Engine holds the state of the chain. Not safe for concurrent use.
 type Engine struct {
-	settings Settings
-	byTopic  map[string]int
-	decoders []*decode.Decoder
-	joining  []int // stations with a topic for each quantity
-	checkers []*quality.Checker
-	recorder *averages.Recorder
-	field    *windfield.Estimator
-	ground   *ground
-	fronts   *front.Tracker
-	machine  *lifecycle.Machine
-	counts   Counts
+	settings  Settings
+	byTopic   map[string]int
+	decoders  []*decode.Decoder
+	joining   []int // stations with a topic for each quantity
+	checkers  []*quality.Checker
+	recorder  *averages.Recorder
+	field     *windfield.Estimator
+	outflows  *outflow.Tracker
+	posterior *windfield.Posterior // of the last step; nil when it saw nothing
+	ahead     forecaster
+	ground    *ground
+	fronts    *front.Tracker
+	machine   *lifecycle.Machine
+	counts    Counts
 	learner
 
 	allowances []allowance // of messages and readings, by station
@@ -90,9 +94,10 @@ type Result struct {
 	Snapshot     *averages.Snapshot
 	Assessments  []hazard.Assessment // one for each path, in order
 	Transitions  []lifecycle.Transition
-	Fronts       []front.Front // that pass or have lately passed, the first first
-	Tables       []Table       // learnt since the step before, for the journal
-	OutflowShare float64       // posterior probability that an outflow is under way; 0 when blind
+	Fronts       []front.Front     // that pass or have lately passed, the first first
+	Tables       []Table           // learnt since the step before, for the journal
+	OutflowShare float64           // posterior probability that an outflow is under way; 0 when blind
+	Outflows     []outflow.Outflow // those that are likelier than not, with place and motion
 	// Doubt is the posterior probability, by station, that a mast is wrong: its
 	// neighbours contradict it. nil when blind.
 	Doubt []float64
@@ -131,6 +136,7 @@ func New(s Settings) (*Engine, error) {
 	}
 	e.fronts = newFronts(s.Airfield, e.ground.aloft, layout)
 	e.field = windfield.New(masts, e.ground.targets, layout, s.Prior)
+	e.outflows = outflow.NewTracker(e.ground.lines(), s.Prior.OutflowSpacing)
 	e.machine = lifecycle.New(lifecycle.Settings{
 		Airfield: s.Airfield.ID, Paths: pathNames(s.Airfield), StationIDs: ids, Hold: s.Hold,
 	})
@@ -281,7 +287,7 @@ func (e *Engine) Warm(t sensors.Instant) {
 	s := e.recorder.Snapshot(t)
 	e.ground.update(s)
 	e.fronts.Step(s)
-	e.field.Step(s)
+	e.outflows.Step(t, e.field.Step(s))
 }
 
 // take moves the readings of step t out of pending, in order and without

@@ -8,6 +8,7 @@ import (
 
 	"sockline/alerting/airfield"
 	"sockline/alerting/hazard"
+	"sockline/alerting/outflow"
 	"sockline/alerting/shear"
 	"sockline/alerting/windfield"
 	"sockline/sensors/averages"
@@ -55,6 +56,17 @@ func newGround(a *airfield.Airfield, reach float64) *ground {
 		g.addRunway(&a.Runways[i])
 	}
 	return g
+}
+
+// lines are the grounds of the paths, in the airfield's order.
+func (g *ground) lines() []outflow.Path {
+	out := make([]outflow.Path, len(g.airfield.Paths))
+	for i, p := range g.airfield.Paths {
+		extent := p.Extent()
+		out[i].FromX, out[i].FromY = p.At(extent.From)
+		out[i].ToX, out[i].ToY = p.At(extent.To)
+	}
+	return out
 }
 
 func (g *ground) addRunway(r *airfield.Runway) {
@@ -108,6 +120,10 @@ func (g *ground) addPath(p, lead airfield.Path, l line, span airfield.Interval, 
 	pg := pathGround{path: p, beside: airfield.MastsBeside(p, g.masts, g.reach)}
 	pg.beside = slices.DeleteFunc(pg.beside, func(m int) bool { return g.aloft[m] })
 	pg.view.Reversed = p.Runway() != lead.Runway()
+	if p.Operation() == airfield.Landing {
+		pg.view.Crossing = p.GlideHeight(0)
+		pg.view.Glide = (p.GlideHeight(1000) - pg.view.Crossing) / 1000
+	}
 	for i, s := range l.before {
 		if s <= span.From+1e-6 && s >= span.To-1e-6 {
 			points = append(points, l.first+i)

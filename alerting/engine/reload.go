@@ -43,6 +43,7 @@ func (e *Engine) Reload(next *Engine) []lifecycle.Transition {
 	}
 	next.field = next.field.Follow(e.field, as)
 	next.fronts = next.fronts.Follow(e.fronts, as)
+	next.outflows.TakeOver(e.outflows)
 	next.late = next.follow(e.late, now)
 	for _, r := range e.pending {
 		if i := now[r.Station]; i >= 0 && kept[r.Station] {

@@ -13,18 +13,23 @@ import (
 // of the design. All speeds in m/s as magnitudes (never negative), all
 // distances in metres before the path's threshold.
 type Change struct {
-	Median, Low, High float64        // 50 %, 5 % and 95 % points of M
-	Probability       [4]float64     // P(M >= the level's change), by alerting.Level; [0] unused
-	CloseProbability  [4]float64     // P(M >= the level's change less the hysteresis)
-	From, To          float64        // where it begins and ends, in the direction of flight
-	AtEdge            bool           // an end lies at an end of an observed interval
-	MaxSlope          float64        // greatest change over 305 m (1000 ft) within the pair, 1/s
-	MeanSlope         float64        // change over its length, 1/s
-	FBar              float64        // horizontal F-factor averaged over 1 km at the fastest declared approach; 0 for a gain
-	Kilometre         float64        // loss over 1 km at which F-bar reaches its margin here, m/s; 0 for a gain
-	Level             alerting.Level // highest level with Probability >= confidence
-	HoldLevel         alerting.Level // highest level that still holds under the hysteresis
-	Used              []int          // stations (indices, ascending) that carry the estimate
+	Median, Low, High float64    // 50 %, 5 % and 95 % points of M
+	Probability       [4]float64 // P(M >= the level's change), by alerting.Level; [0] unused
+	CloseProbability  [4]float64 // P(M >= the level's change less the hysteresis)
+	From, To          float64    // where it begins and ends, in the direction of flight
+	AtEdge            bool       // an end lies at an end of an observed interval
+	MaxSlope          float64    // greatest change over 305 m (1000 ft) within the pair, 1/s
+	MeanSlope         float64    // change over its length, 1/s
+	FBar              float64    // horizontal F-factor averaged over 1 km at the fastest declared approach; 0 for a gain
+	Kilometre         float64    // loss over 1 km at which F-bar reaches its margin here, m/s; 0 for a gain
+	// FBarVertical is what the sinking air would add to FBar at the height of the
+	// glide path: an estimate by continuity, not a measurement. 0 where there is
+	// no glide path.
+	FBarVertical float64
+	Cause        alerting.Cause
+	Level        alerting.Level // highest level with Probability >= confidence
+	HoldLevel    alerting.Level // highest level that still holds under the hysteresis
+	Used         []int          // stations (indices, ascending) that carry the estimate
 }
 
 // Assessment is what one step says of one path.
@@ -35,6 +40,9 @@ type Assessment struct {
 	Reason   string              // why it is not complete, in words; empty if complete
 	Loss     Change              // meaningful only when len(Observed) > 0
 	Gain     Change
-	Missing  []int // stations (indices) beside this path that are not live
-	Exercise bool  // a reading in use marks itself as synthetic
+	// Crosswind is the greatest difference of crosswind between live masts beside
+	// this path, m/s, as measured; 0 with fewer than two.
+	Crosswind float64
+	Missing   []int // stations (indices) beside this path that are not live
+	Exercise  bool  // a reading in use marks itself as synthetic
 }

@@ -3,6 +3,7 @@ package hazard
 import (
 	"sockline/alerting"
 	"sockline/alerting/shear"
+	"sockline/alerting/windfield"
 	"sockline/sensors/quantity"
 )
 
@@ -56,6 +57,9 @@ const (
 type View struct {
 	Before   []float64
 	Reversed bool // the flight runs against the order of the stretch's points
+	// Glide is the slope of the glide path and Crossing its height above the
+	// threshold, m; both 0 where no glide path is flown.
+	Glide, Crossing float64
 }
 
 // Judge fills loss and gain of an assessment from a measured stretch.
@@ -67,6 +71,7 @@ func Judge(a *Assessment, s *shear.Stretch, v View, l Levels) {
 	// F-bar counts for a loss only.
 	kilometre := LossOfFBar(l.MarginFBar, ground)
 	a.Loss.FBar = s.KilometreLoss() * ground / (quantity.StandardGravity * fbarLength)
+	a.Loss.FBarVertical = verticalFBar(s.KilometreLoss()/fbarLength, v, a.Loss, l)
 	a.Loss.Probability[alerting.BeyondMargin] = s.EitherAtLeast(l.Beyond(), kilometre)
 	a.Loss.CloseProbability[alerting.BeyondMargin] = s.EitherAtLeast(l.Beyond()-l.Hysteresis, kilometre*HoldFBar)
 	a.Loss.Kilometre = kilometre
@@ -92,6 +97,7 @@ func judgeSide(c *Change, s *shear.Stretch, side *shear.Side, v View, l Levels) 
 			c.CloseProbability[level] = side.AtLeast(change - l.Hysteresis)
 		}
 	}
+	c.Cause = causeOf(side.Kinds(l.Noticeable))
 	p := s.Place(side, v.Before)
 	enter, end := p.Enter, p.End
 	if v.Reversed {
@@ -139,4 +145,41 @@ func highest(p [4]float64, l Levels, most alerting.Level) alerting.Level {
 		}
 	}
 	return alerting.NoLevel
+}
+
+// verticalFBar is what sinking air adds to the F-factor over the steepest
+// kilometre of a loss, at the height h of the glide path over its middle. In an
+// outflow that is alike in all directions the air sinks with w = -2 h dU/dx, so
+// that -w/V_a = 2 h (dU/dx) / V_a (G.P. Byrd, F.H. Proctor, R.L. Bowles,
+// "Evaluation of a technique to quantify microburst windshear hazard potential
+// to aircraft", IEEE CDC 1990; from memory).
+func verticalFBar(slope float64, v View, c Change, l Levels) float64 {
+	if v.Glide == 0 || l.FastestApproach <= 0 {
+		return 0
+	}
+	h := v.Crossing + v.Glide*(c.From+c.To)/2
+	return 2 * max(h, 0) * slope / l.FastestApproach
+}
+
+// sureCause is the share of the draws with a noticeable change that must agree
+// on what brings it about.
+const sureCause = 0.7
+
+// causeOf tells the cause from how many of the draws with a noticeable change
+// hold which pattern.
+func causeOf(kinds [4]int) alerting.Cause {
+	all := 0
+	for _, n := range kinds {
+		all += n
+	}
+	least := int(sureCause * float64(all))
+	switch {
+	case all == 0:
+		return alerting.Unresolved
+	case kinds[windfield.OutflowPattern] > least:
+		return alerting.Outflow
+	case kinds[windfield.FrontPattern] > least:
+		return alerting.GustFront
+	}
+	return alerting.Unresolved
 }

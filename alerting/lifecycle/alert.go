@@ -65,7 +65,8 @@ type Alert struct {
 	MeasuredAt                    sensors.Instant // when Change was last measured (older than Updated while not observed)
 	MaxSlope, MeanSlope           float64         // 1/s, magnitudes
 	FBar                          float64
-	Cause                         string // "unresolved"
+	FBarVertical                  float64 // estimated, not measured; see hazard.Change
+	Cause                         alerting.Cause
 	Trend                         Trend
 	PeakChange                    float64 // m/s, signed
 	PeakAt                        sensors.Instant

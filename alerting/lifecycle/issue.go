@@ -34,7 +34,7 @@ func (s *slot) worthTelling(T sensors.Instant) string {
 	case a.Trend != was.Trend:
 		return "trend " + string(a.Trend)
 	case a.Cause != was.Cause:
-		return "cause " + a.Cause
+		return "cause " + string(a.Cause)
 	case moved >= issueChange:
 		return fmt.Sprintf("changed by %.1f kt", moved/quantity.Knot)
 	case shifted >= issuePlace:

@@ -33,9 +33,6 @@ const (
 	placeSlack = 1
 )
 
-// CauseUnresolved is the cause while nothing tells an outflow from a front.
-const CauseUnresolved = "unresolved"
-
 // kinds are the kinds of alert of a path, in the order in which they are
 // judged and issued.
 var kinds = [...]alerting.Kind{alerting.HeadwindLoss, alerting.HeadwindGain}
@@ -192,7 +189,7 @@ func (m *Machine) begin(T sensors.Instant, path, kind int, a *hazard.Assessment,
 		Occurrence: occurrence,
 		Path:       path, Runway: name.Runway, Operation: name.Operation,
 		Kind: kinds[kind], Level: c.Level, State: Open, Opened: T,
-		Probability: c.Probability[c.Level], Cause: CauseUnresolved, Trend: TrendUnknown,
+		Probability: c.Probability[c.Level], Cause: alerting.Unresolved, Trend: TrendUnknown,
 		Exercise: a.Exercise,
 	}
 	s.missing = append(s.missing[:0], a.Missing...)
@@ -210,7 +207,10 @@ func (s *slot) take(T sensors.Instant, c *hazard.Change) {
 		a.Change, a.ChangeLow, a.ChangeHigh = -c.Median, -c.High, -c.Low
 	}
 	a.From, a.To, a.AtEdge = c.From, c.To, c.AtEdge
-	a.MaxSlope, a.MeanSlope, a.FBar = c.MaxSlope, c.MeanSlope, c.FBar
+	a.MaxSlope, a.MeanSlope, a.FBar, a.FBarVertical = c.MaxSlope, c.MeanSlope, c.FBar, c.FBarVertical
+	if c.Cause != "" && c.Cause != alerting.Unresolved { // once known, it stays until another is known
+		a.Cause = c.Cause
+	}
 	a.Observed, a.MeasuredAt = true, T
 	if a.PeakAt == 0 || c.Median > magnitude(a.PeakChange) {
 		a.PeakChange, a.PeakAt = a.Change, T

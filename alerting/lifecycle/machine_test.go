@@ -290,7 +290,7 @@ func TestAlertAtOpening(t *testing.T) {
 	if loss.PeakChange != loss.Change || loss.PeakAt != start || loss.MeasuredAt != start {
 		t.Errorf("peak %v at %v, measured %v", loss.PeakChange, loss.PeakAt, loss.MeasuredAt)
 	}
-	if !loss.Exercise || loss.Cause != CauseUnresolved || loss.Trend != TrendUnknown {
+	if !loss.Exercise || loss.Cause != alerting.Unresolved || loss.Trend != TrendUnknown {
 		t.Errorf("exercise %v cause %q trend %q", loss.Exercise, loss.Cause, loss.Trend)
 	}
 	if !slices.Equal(loss.Used, []string{"far07", "final07", "touch07"}) || loss.Missing == nil {

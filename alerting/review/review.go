@@ -81,8 +81,8 @@ func (ls *Lives) Take(a *lifecycle.Alert) {
 	l.Issues++
 	l.updated = a.Updated
 	l.Exercise = l.Exercise || a.Exercise
-	if a.Cause != "" && a.Cause != lifecycle.CauseUnresolved || l.Cause == "" {
-		l.Cause = a.Cause // what was once told apart stays
+	if a.Cause != "" && a.Cause != alerting.Unresolved || l.Cause == "" {
+		l.Cause = string(a.Cause) // what was once told apart stays
 	}
 	if word := a.Level.String(); a.State == lifecycle.Open && (len(l.Steps) == 0 || l.Steps[len(l.Steps)-1].Level != word) {
 		l.Steps = append(l.Steps, LevelSince{word, a.Updated.Time()})

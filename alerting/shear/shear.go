@@ -34,6 +34,22 @@ const (
 type Side struct {
 	Sorted []float64 // M of every draw, ascending
 	sign   float64   // 1: a fall of the headwind, -1: a rise
+	joint  []float64 // M of every draw, in the order of the draws
+	kinds  *[windfield.Draws]windfield.PatternKind
+}
+
+// Kinds counts the draws whose M is at least change (m/s) by what lies over
+// the ambient field in them.
+func (s *Side) Kinds(change float64) (n [4]int) {
+	if s.kinds == nil {
+		return n
+	}
+	for d, m := range s.joint {
+		if m >= change {
+			n[s.kinds[d]]++
+		}
+	}
+	return n
 }
 
 // Place is where the mean profile changes most.
@@ -44,7 +60,7 @@ type Place struct {
 }
 
 // Quantile of M, by linear interpolation between the draws.
-func (s *Side) Quantile(p float64) float64 { return quantile(s.Sorted, p) }
+func (s *Side) Quantile(p float64) float64 { return Quantile(s.Sorted, p) }
 
 // AtLeast is P(M >= change).
 func (s *Side) AtLeast(change float64) float64 { return share(s.Sorted, change) }
@@ -61,9 +77,9 @@ type Stretch struct {
 
 	kilometreSorted []float64 // greatest loss over 1 km of every draw, ascending
 
-	// joint holds, for each draw in its own order, M and the greatest change
-	// over 1 km of the loss: P(either) needs both.
-	jointLoss, jointKilometre []float64
+	// jointKilometre holds, for each draw in its own order, the greatest loss
+	// over 1 km: P(either) needs that and M.
+	jointKilometre []float64
 
 	line []float64 // one draw
 	seen []int     // the observed points
@@ -74,10 +90,9 @@ func NewStretch(points []int) *Stretch {
 	n := len(points)
 	draws := func() []float64 { return make([]float64, windfield.Draws) }
 	s := &Stretch{Points: points, Observed: make([]bool, n), Mean: make([]float64, n)}
-	s.Loss = Side{Sorted: draws(), sign: 1}
-	s.Gain = Side{Sorted: draws(), sign: -1}
-	s.kilometreSorted = draws()
-	s.jointLoss, s.jointKilometre = draws(), draws()
+	s.Loss = Side{Sorted: draws(), sign: 1, joint: draws()}
+	s.Gain = Side{Sorted: draws(), sign: -1, joint: draws()}
+	s.kilometreSorted, s.jointKilometre = draws(), draws()
 	s.line = make([]float64, n)
 	s.seen = make([]int, 0, n)
 	return s
@@ -97,8 +112,9 @@ func (s *Stretch) Measure(p *windfield.Posterior) {
 		kilometre := s.kilometre()
 		s.Loss.Sorted[d], s.Gain.Sorted[d] = loss, gain
 		s.kilometreSorted[d] = kilometre
-		s.jointLoss[d], s.jointKilometre[d] = loss, kilometre
+		s.Loss.joint[d], s.Gain.joint[d], s.jointKilometre[d] = loss, gain, kilometre
 	}
+	s.Loss.kinds, s.Gain.kinds = &p.Kinds, &p.Kinds
 	slices.Sort(s.Loss.Sorted)
 	slices.Sort(s.Gain.Sorted)
 	slices.Sort(s.kilometreSorted)
@@ -118,13 +134,13 @@ func (s *Stretch) lookUp() {
 }
 
 // KilometreLoss is the median of the greatest loss over 1 km, m/s.
-func (s *Stretch) KilometreLoss() float64 { return quantile(s.kilometreSorted, 0.5) }
+func (s *Stretch) KilometreLoss() float64 { return Quantile(s.kilometreSorted, 0.5) }
 
 // EitherAtLeast is the probability that the loss reaches change (m/s), or its
 // greatest part over 1 km reaches kilometre (m/s).
 func (s *Stretch) EitherAtLeast(change, kilometre float64) float64 {
 	n := 0
-	for d, m := range s.jointLoss {
+	for d, m := range s.Loss.joint {
 		if m >= change || s.jointKilometre[d] >= kilometre {
 			n++
 		}
@@ -259,7 +275,8 @@ func (s *Stretch) at(i float64) float64 {
 	return float64(s.Mean[k]*(1-f)) + float64(s.Mean[k+1]*f)
 }
 
-func quantile(sorted []float64, p float64) float64 {
+// Quantile of ascending values, by linear interpolation between them.
+func Quantile(sorted []float64, p float64) float64 {
 	x := p * float64(len(sorted)-1)
 	k := min(int(x), len(sorted)-2)
 	f := x - float64(k)

@@ -125,8 +125,8 @@ func (e *Estimator) addGain(en *entry, s *state, f Field) {
 			for i, m := range en.live {
 				ee, eno, nn := covariance(f, g.X-e.masts[m].X, g.Y-e.masts[m].Y)
 				o := t*n + (b*nl+i)*2
-				cross[o] = g.headwind(mean+float64(fade*ee), float64(fade*eno))
-				cross[o+1] = g.headwind(float64(fade*eno), mean+float64(fade*nn))
+				cross[o] = g.Headwind(mean+float64(fade*ee), float64(fade*eno))
+				cross[o+1] = g.Headwind(float64(fade*eno), mean+float64(fade*nn))
 			}
 		}
 	}

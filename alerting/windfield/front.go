@@ -210,7 +210,7 @@ func (b *frontBank) column(en *entry, j, d int, dst []float64) {
 
 func (b *frontBank) now(j, d int, dst []float64) {
 	for t, g := range b.targets {
-		dst[t] = g.headwind(b.fronts[j].wind(d, g.X, g.Y, 0))
+		dst[t] = g.Headwind(b.fronts[j].wind(d, g.X, g.Y, 0))
 	}
 }
 

@@ -70,20 +70,43 @@ const (
 	compact
 )
 
-// template is one outflow of unit strength: its wind at a place is Wind.
+// template is one outflow of unit strength: its wind at a place is wind.
 type template struct {
 	x, y   float64 // centre, m
 	radius float64 // of the greatest wind, m
 	shape  shape
+	// stretch above 1 makes it an ellipse: across its strong axis, a unit vector,
+	// both radius and strength are smaller by it. The map is linear, so that
+	// divergence stays one.
+	stretch     float64
+	east, north float64
 }
 
 // wind of the template at a place, for a greatest wind of 1 m/s.
 func (t template) wind(x, y float64) (east, north float64) {
 	dx, dy := x-t.x, y-t.y
+	if t.stretch > 1 {
+		return t.stretched(dx, dy)
+	}
 	r := math.Hypot(dx, dy)
 	if r < 1e-6 {
 		return 0, 0
 	}
 	g := outflowShape(t.shape, r/t.radius) / r
 	return g * dx, g * dy
+}
+
+// stretched is the wind of an ellipse: in its axes, with the shorter one
+// stretched, it is round.
+func (t template) stretched(dx, dy float64) (east, north float64) {
+	along := float64(dx*t.east) + float64(dy*t.north)
+	across := (float64(dx*t.north) - float64(dy*t.east)) * t.stretch
+	r := math.Hypot(along, across)
+	if r < 1e-6 {
+		return 0, 0
+	}
+	g := outflowShape(t.shape, r/t.radius) / r
+	along *= g
+	across *= g / t.stretch
+	return float64(along*t.east) + float64(across*t.north), float64(along*t.north) - float64(across*t.east)
 }

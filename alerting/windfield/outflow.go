@@ -35,7 +35,7 @@ func newOutflowBank(masts []Mast, targets []Target, ages [blocks]float64, p Prio
 		}
 		for i, g := range targets {
 			east, north := t.wind(g.X, g.Y)
-			b.atTarget[j*len(targets)+i] = g.headwind(east, north)
+			b.atTarget[j*len(targets)+i] = g.Headwind(east, north)
 		}
 	}
 	b.c, b.q, b.rest = strengthPrior(p.OutflowStrength, p.OutflowTime, ages)

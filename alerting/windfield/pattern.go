@@ -55,12 +55,11 @@ type patterns struct {
 	lines     [][]float64
 }
 
-// positive is the factor that a positive strength puts on the evidence of
-// pattern j: twice the posterior probability of it.
-func (p *patterns) positive(j int, b0, b1, b2 float64) float64 {
+// strengthNow is the posterior mean of today's strength of pattern j before it
+// is held positive.
+func (p *patterns) strengthNow(j int, b0, b1, b2 float64) float64 {
 	t := p.today[j*dims : j*dims+dims : j*dims+dims]
-	now := float64(t[0]*b0) + float64(t[1]*b1) + float64(t[2]*b2)
-	return math.Erfc(-now * p.sharpness[j])
+	return float64(t[0]*b0) + float64(t[1]*b1) + float64(t[2]*b2)
 }
 
 // patternsFor computes, once for a state and class, what the evidence needs.
@@ -130,8 +129,13 @@ type strength struct {
 }
 
 func (e *Estimator) strengthOf(s *state, k, j int, b [dims]float64) strength {
-	p := [6]float64(s.patterns[k].precision[j*6 : j*6+6])
 	_, q, rest := e.classes[k].prior(j)
+	return strengthFrom([6]float64(s.patterns[k].precision[j*6:j*6+6]), q, rest, b)
+}
+
+// strengthFrom is the posterior of the strengths with the covariance p, given
+// b.
+func strengthFrom(p [6]float64, q [dims]float64, rest float64, b [dims]float64) strength {
 	var st strength
 	st.mean = mul3(p, b)
 	pq := mul3(p, q)

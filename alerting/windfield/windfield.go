@@ -37,8 +37,8 @@ type Mast struct {
 // vector of the flight.
 type Target struct{ X, Y, East, North float64 }
 
-// headwind of a wind (m/s) for the target's flight.
-func (t Target) headwind(east, north float64) float64 {
+// Headwind of a wind (m/s) for the target's flight.
+func (t Target) Headwind(east, north float64) float64 {
 	return -(float64(east*t.East) + float64(north*t.North))
 }
 
@@ -50,6 +50,28 @@ type Posterior struct {
 	OutflowShare float64   // posterior probability that an outflow is under way
 	FrontShare   float64   // posterior probability that a front is passing
 	Doubt        []float64 // posterior probability that each mast is wrong
+
+	Kinds    [Draws]PatternKind // what lies over the ambient field in each draw
+	Over     []Outflow          // [Draws][2] the outflows in each draw; Strength 0 without one
+	Outflows []Outflow          // every outflow that is held possible
+}
+
+// PatternKind is what a draw takes to lie over the ambient field.
+type PatternKind uint8
+
+// The kinds of pattern.
+const (
+	NoPattern PatternKind = iota
+	OutflowPattern
+	FrontPattern
+	FaultPattern
+)
+
+func kindOf(class int) PatternKind {
+	if class == derivedClass {
+		return OutflowPattern
+	}
+	return PatternKind(class + 1)
 }
 
 // Estimator holds the gains and the little state that persists: the evidence
@@ -71,6 +93,8 @@ type Estimator struct {
 	cache     cache
 	memory    ambientMemory
 	doubts    doubtMemory
+	derived   []derived // outflows made for the step at hand
+	pairing   pairing
 	faultGain []float64 // log of each mast's prior of being wrong over the even-handed one
 
 	// Scratch and result, sized once.
@@ -99,10 +123,15 @@ type Estimator struct {
 type part struct {
 	state, class, pattern int // class -1: none
 	weight                float64
+	now, sharpness        float64 // today's strength before it is held positive, and 1 / (sqrt(2) its deviation)
 }
 
-// faultClass is where the faults stand among the classes.
-const faultClass = 2
+// Where the outflows and the faults stand among the classes.
+const (
+	outflowClass = 0
+	faultClass   = 2
+	derivedClass = 3 // outflows made for the step at hand: derived.go
+)
 
 // New prepares an estimator for masts and targets (m in one local plane).
 func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *Estimator {
@@ -141,12 +170,15 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.slope = make([]float64, len(targets))
 	e.stateLog = make([]float64, len(e.fields))
 	e.weights = make([]float64, len(prior.Fields))
-	e.parts = make([]part, 0, len(e.fields)*(total+1))
+	e.parts = make([]part, 0, len(e.fields)*(total+1+mostDerived))
+	e.pairing = newPairing(e.outflows.count(), n)
+	e.newDerived()
 	e.times = make([]float64, 0, len(masts))
 	e.bases = make([]float64, 0, len(masts))
 	e.posterior.Doubt = make([]float64, len(masts))
 	e.posterior.Mean = make([]float64, len(targets))
 	e.posterior.Draws = make([]float64, Draws*len(targets))
+	e.posterior.Over = make([]Outflow, 2*Draws)
 	return e
 }
 
@@ -189,6 +221,7 @@ func (e *Estimator) Step(s *averages.Snapshot) *Posterior {
 	e.observe(s, en)
 	e.weigh(s.At(), en)
 	e.draw(en)
+	e.listOutflows()
 	e.posterior.Live = en.live
 	return &e.posterior
 }
@@ -225,7 +258,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 			top = max(top, e.stateLog[k]+math.Log(e.weights[k]))
 		}
 	}
-	e.parts = e.parts[:0]
+	e.parts, e.derived = e.parts[:0], e.derived[:0]
 	total := 0.0
 	plain := 1 - e.prior.OutflowShare - e.prior.FrontShare - e.prior.FaultShare
 	for k := range ambient {
@@ -233,7 +266,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 		e.parts = append(e.parts, part{state: k, class: -1, weight: w})
 		total += w
 	}
-	shares := [...]float64{e.prior.OutflowShare, e.prior.FrontShare, evenHanded}
+	shares := [...]float64{e.prior.OutflowShare * roundShare, e.prior.FrontShare, evenHanded}
 	var found [len(shares)]float64
 	for k := ambient; k < len(en.states); k++ {
 		e.solve(en, en.states[k])
@@ -241,6 +274,11 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 			w := e.weighPatterns(en, k, c, shares[c]/float64(len(e.prior.Disturbed)), top, total)
 			total += w
 			found[c] += w
+			if c == outflowClass && w > worthDeriving*total {
+				w = e.derive(en, k, e.prior.OutflowShare/float64(len(e.prior.Disturbed)), top)
+				total += w
+				found[c] += w
+			}
 		}
 	}
 	// A state of the air is judged by what it explains with or without a
@@ -322,9 +360,11 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 		if l < least {
 			continue
 		}
-		weight := math.Exp(l+scale) * p.positive(j, b[j], b[n+j], b[2*n+j])
+		now := p.strengthNow(j, b[j], b[n+j], b[2*n+j])
+		// A positive strength puts twice its posterior probability on the evidence.
+		weight := math.Exp(l+scale) * math.Erfc(-now*p.sharpness[j])
 		sum += weight
-		e.parts = append(e.parts, part{state: k, class: c, pattern: j, weight: weight})
+		e.parts = append(e.parts, part{state: k, class: c, pattern: j, weight: weight, now: now, sharpness: p.sharpness[j]})
 	}
 	return sum
 }
@@ -366,6 +406,11 @@ func (e *Estimator) draw(en *entry) {
 		default:
 			excess = positiveNormal(st.now, st.spread, e.levels[d]) - st.now
 		}
+		p.Kinds[d] = kindOf(pt.class)
+		p.Over[2*d], p.Over[2*d+1] = Outflow{}, Outflow{}
+		if p.Kinds[d] == OutflowPattern {
+			p.Over[2*d], p.Over[2*d+1] = e.outflowsOf(pt, st.now+excess, 0)
+		}
 		for t := range row {
 			v := e.base[t] + float64(excess*e.slope[t]) + z[t]
 			row[t] = v
@@ -391,13 +436,19 @@ func (e *Estimator) shape(en *entry, s *state, pt part) strength {
 		clear(e.slope)
 		return strength{}
 	}
-	var b [dims]float64
-	for d := range dims {
-		e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
-		b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
+	var st strength
+	var line []float64
+	if pt.class == derivedClass {
+		st, line = e.derivedShape(en, s, &e.derived[pt.pattern])
+	} else {
+		var b [dims]float64
+		for d := range dims {
+			e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
+			b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
+		}
+		st = e.strengthOf(s, pt.class, pt.pattern, b)
+		line = e.line(en, s, pt.class, pt.pattern)
 	}
-	st := e.strengthOf(s, pt.class, pt.pattern, b)
-	line := e.line(en, s, pt.class, pt.pattern)
 	for t := range nt {
 		base, slope := e.plain[t], float64(st.open*line[dims*nt+t])
 		for d := range dims {

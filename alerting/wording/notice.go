@@ -122,7 +122,10 @@ func (n Notice) JSON() []byte {
 	o.fixed("shear_kt_per_1000ft", a.MaxSlope/quantity.KnotPer1000Foot, 1)
 	o.fixed("mean_slope_kt_per_1000ft", a.MeanSlope/quantity.KnotPer1000Foot, 1)
 	o.fixed("fbar", a.FBar, 3)
-	o.text("cause", a.Cause)
+	if a.FBarVertical > 0 {
+		o.fixed("fbar_vertical_estimate", a.FBarVertical, 3)
+	}
+	o.text("cause", string(a.Cause))
 	o.text("trend", string(a.Trend))
 	o.raw("peak", peak(a.PeakChange, a.PeakAt))
 	o.raw("stations", stations(a.Used, a.Missing))

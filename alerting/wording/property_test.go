@@ -54,7 +54,7 @@ func (d draw) alert() lifecycle.Alert {
 		Change: m[1], ChangeLow: m[0], ChangeHigh: m[2], Probability: d.Float64(),
 		From: max(place[0], place[1]), To: min(place[0], place[1]), AtEdge: d.IntN(2) == 0, Observed: d.IntN(2) == 0,
 		MeasuredAt: updated, MaxSlope: math.Abs(d.number(0.02)), MeanSlope: math.Abs(d.number(0.01)), FBar: d.number(0.05),
-		Cause: lifecycle.CauseUnresolved, Trend: pick(d, lifecycle.Growing, lifecycle.Steady, lifecycle.Fading, lifecycle.TrendUnknown),
+		Cause: alerting.Unresolved, Trend: pick(d, lifecycle.Growing, lifecycle.Steady, lifecycle.Fading, lifecycle.TrendUnknown),
 		PeakChange: m[2], PeakAt: updated, Used: []string{"far07"}, Missing: pick(d, nil, []string{"a"}, []string{"a", "b", "c"}),
 		Exercise: d.IntN(2) == 0,
 	}

@@ -155,7 +155,7 @@ var flow = [...][]string{
 	{"sensors/averages"},
 	{"alerting/airfield", "alerting/kinematics"},
 	{"alerting/windfield", "alerting/drift", "alerting/front"},
-	{"alerting/shear"},
+	{"alerting/shear", "alerting/outflow"},
 	{"alerting/hazard"},
 	{"alerting/lifecycle"},
 	{"alerting/wording", "alerting/engine"},
@@ -204,7 +204,7 @@ func TestFlowDoesNotTurnBack(t *testing.T) {
 // evaluation: they wait for nothing and share nothing.
 var inline = [...]string{
 	"sensors", "sensors/quantity", "sensors/decode", "sensors/quality", "sensors/correction", "sensors/averages",
-	"alerting", "alerting/airfield", "alerting/kinematics", "alerting/windfield", "alerting/drift", "alerting/front", "alerting/shear", "alerting/hazard",
+	"alerting", "alerting/airfield", "alerting/kinematics", "alerting/windfield", "alerting/drift", "alerting/front", "alerting/shear", "alerting/outflow", "alerting/hazard",
 	"alerting/lifecycle", "alerting/wording", "alerting/engine",
 }
 
