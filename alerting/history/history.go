@@ -126,5 +126,7 @@ type Health struct {
 	WaitingSteps    int    // in memory, not yet on disk
 	WaitingRecords  int
 
+	KeptBack string // why old readings are not deleted although their time is over; empty if they are
+
 	Damage []string // what was found damaged, and what was done about it
 }

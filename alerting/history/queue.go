@@ -2,6 +2,7 @@ package history
 
 import (
 	"encoding/json"
+	"slices"
 	"time"
 
 	"sockline/sensors"
@@ -123,6 +124,11 @@ func (it *item) issues() (n int) {
 		}
 	}
 	return n
+}
+
+// holds reports whether the item may keep readings from being deleted.
+func (it *item) holds() bool {
+	return slices.ContainsFunc(it.drafts, func(d draft) bool { return d.kind == KindHold })
 }
 
 func (it *item) dropReadings(g *Gap) {

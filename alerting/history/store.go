@@ -47,6 +47,8 @@ type Store struct {
 	head     head  // end of the chain; after Open only the Writer touches it
 	writing  atomic.Bool
 
+	retention sync.Mutex // held while holds are read and what they do not cover is deleted
+
 	healthMu sync.Mutex // writers of health
 	health   atomic.Pointer[Health]
 }
@@ -189,42 +191,6 @@ func (s *Store) days() ([]string, error) {
 		}
 	}
 	return days, nil
-}
-
-// Retain sets how long readings are kept from now on, as Options.Keep does.
-func (s *Store) Retain(keep time.Duration) { s.keep.Store(int64(keep)) }
-
-// Prune deletes the readings of days that ended before now - Keep, and what
-// was set aside of such days. It returns the names of the deleted files.
-func (s *Store) Prune(now sensors.Instant) ([]string, error) {
-	keep := time.Duration(s.keep.Load())
-	if keep <= 0 || s.readOnly {
-		return nil, nil
-	}
-	entries, err := os.ReadDir(s.dir)
-	if err != nil {
-		return nil, fmt.Errorf("list the history: %w", err)
-	}
-	limit := now.Add(-keep)
-	var gone []string
-	for _, e := range entries {
-		rest, ok := strings.CutPrefix(e.Name(), dayPrefix)
-		if !ok || len(rest) < len(dayLayoutGo) {
-			continue
-		}
-		day, err := time.Parse(dayLayoutGo, rest[:len(dayLayoutGo)])
-		if err != nil || sensors.At(day.AddDate(0, 0, 1)) > limit || s.shelf.inUse(e.Name()) {
-			continue
-		}
-		if err := os.Remove(filepath.Join(s.dir, e.Name())); err != nil {
-			return gone, fmt.Errorf("delete old readings: %w", err)
-		}
-		gone = append(gone, e.Name())
-	}
-	if len(gone) == 0 {
-		return nil, nil
-	}
-	return gone, syncDir(s.dir)
 }
 
 // shelf holds the open files. A file is opened once a process, whoever asks,

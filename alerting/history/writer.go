@@ -406,6 +406,10 @@ func (w *Writer) writeJournal(r *round) error {
 	if len(r.values) == 0 {
 		return nil
 	}
+	if slices.ContainsFunc(r.items, (*item).holds) {
+		w.s.retention.Lock() // not while old readings are being deleted
+		defer w.s.retention.Unlock()
+	}
 	return w.s.journal.update(func(tx *bolt.Tx) error {
 		// After a failure the records may be there or not, and the file may
 		// have been found damaged and begun anew.

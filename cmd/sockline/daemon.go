@@ -428,7 +428,9 @@ func (d *daemon) prune() {
 	if v == nil || err != nil {
 		return
 	}
-	d.pruneJudgements(v.At)
+	if holds, err := store.Holds(v.At); err == nil { // else Prune says why not
+		d.pruneJudgements(v.At, holds)
+	}
 	gone, err := store.Prune(v.At)
 	if err != nil {
 		d.log.Error().Err(err).Msg("old readings are not all deleted")

@@ -6,6 +6,7 @@ import (
 	"github.com/prometheus/client_golang/prometheus"
 
 	"sockline/alerting/engine"
+	"sockline/alerting/history"
 	"sockline/alerting/judged"
 	"sockline/alerting/lifecycle"
 	"sockline/config"
@@ -78,9 +79,9 @@ func measureJudgements(registry *prometheus.Registry, state func() judged.State)
 
 // pruneJudgements deletes judgements that are older than the readings that are
 // kept: what they are held against would be missing.
-func (d *daemon) pruneJudgements(now sensors.Instant) {
+func (d *daemon) pruneJudgements(now sensors.Instant, holds history.Holds) {
 	h := d.current().History
-	gone, err := judged.Prune(h.Directory, now.Add(-h.Keep), nil)
+	gone, err := judged.Prune(h.Directory, now.Add(-h.Keep), holds.CoverDay)
 	if err != nil {
 		d.log.Error().Err(err).Msg("old judgements are not all deleted")
 	}
