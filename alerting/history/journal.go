@@ -225,8 +225,15 @@ type chain struct {
 	head   head
 	first  uint64 // first broken sequence, 0 if none
 	broken uint64
+	named  []uint64 // the first of the broken sequences, up to mostNamed
+	days   heads
+	known  Head // the chain is looked at where it should have stood like this
+	passed bool // and it did
 	index  index
 }
+
+// mostNamed bounds how many broken records are named one by one.
+const mostNamed = 1000
 
 // index is what the journal's index must hold: made from the records.
 type index struct {
@@ -242,7 +249,9 @@ func (c *chain) fault(seq uint64) {
 	if c.first == 0 {
 		c.first = seq
 	}
-	c.broken++
+	if c.broken++; len(c.named) < mostNamed {
+		c.named = append(c.named, seq)
+	}
 }
 
 // add takes in what a sound record adds to the index.
@@ -281,6 +290,10 @@ func (c *chain) check(key, value []byte) {
 		// Go on from the stored hash, so that one broken record breaks no
 		// other except where its own stored hash is what was changed.
 		c.head = head{seq: r.Seq, hash: r.Hash}
+		c.passed = c.passed || r.Seq == c.known.Seq && r.Hash == c.known.Hash
+		if err == nil {
+			c.days.add(r)
+		}
 	}
 }
 
@@ -315,8 +328,11 @@ func walk(f *file, from uint64, fn func(key, value []byte) error) error {
 }
 
 // walkChain checks the whole chain.
-func walkChain(f *file) (*chain, error) {
+func walkChain(f *file) (*chain, error) { return walkChainPast(f, Head{}) }
+
+func walkChainPast(f *file, known Head) (*chain, error) {
 	c := newChain()
+	c.known = known
 	err := walk(f, 0, func(key, value []byte) error {
 		c.check(key, value)
 		return nil

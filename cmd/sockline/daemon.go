@@ -250,6 +250,7 @@ func (d *daemon) start(ctx context.Context) error {
 func (d *daemon) openHistory(ctx context.Context) {
 	now := d.opts.clock.Stamp("", nil)
 	if d.archive.open() == nil {
+		d.openHatch()
 		if store, err := d.archive.reading(); err == nil {
 			if err := errors.Join(d.loop.restore(store, now), d.tell.takeUp(store), d.people.takeUp(store, now, d.opts.exercise)); err != nil {
 				d.log.Error().Err(err).Msg("part of the history cannot be read back; the rest is taken up")
@@ -275,7 +276,7 @@ func (d *daemon) openHistory(ctx context.Context) {
 	}()
 	d.teardown.add("the history", func(stop context.Context) error {
 		cancel()
-		err := ended(stop, done)
+		err := errors.Join(ended(stop, done), d.archive.hatch(stop))
 		d.archive.record(history.Entry{Kind: history.KindStop, At: d.loop.last, Payload: []byte(d.instance)})
 		return errors.Join(err, d.archive.close(stop))
 	})

@@ -24,8 +24,9 @@ type archive struct {
 	dir     string
 	opts    history.Options
 	log     zerolog.Logger
-	release func(wording.Notice) // marked as recorded or not; from one goroutine at a time
-	opened  func()               // called when it could be opened at last
+	release func(wording.Notice)        // marked as recorded or not; from one goroutine at a time
+	opened  func()                      // called when it could be opened at last
+	hatch   func(context.Context) error // closes the socket for commands
 
 	mu      sync.Mutex
 	store   *history.Store // nil while not open
@@ -44,7 +45,7 @@ type issueKey struct {
 }
 
 func newArchive(dir string, opts history.Options, release func(wording.Notice)) *archive {
-	return &archive{dir: dir, opts: opts, log: opts.Log, release: release, opened: func() {}, waiting: make(map[issueKey]wording.Notice)}
+	return &archive{dir: dir, opts: opts, log: opts.Log, release: release, opened: func() {}, hatch: func(context.Context) error { return nil }, waiting: make(map[issueKey]wording.Notice)}
 }
 
 // open tries to open the history; its error is also kept for health.

@@ -9,15 +9,13 @@ import (
 	"io"
 	"net"
 	"net/http"
-	"net/url"
 	"os"
-	"strconv"
 	"strings"
 	"time"
 
 	"sockline/alerting"
 	"sockline/alerting/history"
-	"sockline/sensors"
+	"sockline/alerting/history/backup"
 )
 
 // eventFlags are the flags that both commands about events have.
@@ -127,14 +125,11 @@ func (s eventSource) open() (*history.Store, error) {
 
 // list gives the newest object of each selected event.
 func (s eventSource) list(ctx context.Context, f history.Filter) ([]json.RawMessage, error) {
-	store, err := s.open()
+	store, done, err := lookInto(ctx, s.directory, backup.Nothing())
 	if err != nil {
 		return nil, err
 	}
-	if store == nil {
-		return s.listRunning(ctx, f)
-	}
-	// The store counts an event by when it was open; here, as with the daemon,
+	// The store counts an event by when it was open; here, as with the page,
 	// it counts by when it was opened.
 	limit := f.Limit
 	if f.From != 0 {
@@ -147,46 +142,21 @@ func (s eventSource) list(ctx context.Context, f history.Filter) ([]json.RawMess
 			objects = append(objects, e.Object)
 		}
 	}
-	return objects, errors.Join(err, store.Close())
-}
-
-// listRunning asks the daemon what list would read.
-func (s eventSource) listRunning(ctx context.Context, f history.Filter) ([]json.RawMessage, error) {
-	query := url.Values{"limit": {strconv.Itoa(f.Limit)}}
-	for name, at := range map[string]sensors.Instant{"from": f.From, "to": f.To} {
-		if at != 0 {
-			query.Set(name, at.Time().Format(time.RFC3339Nano))
-		}
-	}
-	if f.Open {
-		query.Set("open", "true")
-	}
-	var answer struct {
-		Events []json.RawMessage `json:"events"`
-	}
-	err := s.ask(ctx, "/api/v1/events?"+query.Encode(), &answer)
-	return answer.Events, err
+	return objects, errors.Join(err, done())
 }
 
 // show gives every issue of an event.
 func (s eventSource) show(ctx context.Context, id string) ([]json.RawMessage, error) {
-	store, err := s.open()
+	store, done, err := lookInto(ctx, s.directory, backup.Nothing())
 	if err != nil {
 		return nil, err
-	}
-	if store == nil {
-		var answer struct {
-			Issues []json.RawMessage `json:"issues"`
-		}
-		err := s.ask(ctx, "/api/v1/events/"+url.PathEscape(id), &answer)
-		return answer.Issues, err
 	}
 	event, err := store.Event(id)
 	issues := make([]json.RawMessage, len(event.Objects))
 	for i, object := range event.Objects {
 		issues[i] = object
 	}
-	return issues, errors.Join(err, store.Close())
+	return issues, errors.Join(err, done())
 }
 
 // The bounds of a question to the daemon.

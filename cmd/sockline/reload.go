@@ -137,6 +137,7 @@ func (a *archive) retain(keep time.Duration) {
 // recordLate tells a history that could not be opened at the start what is in
 // force, from the next step on.
 func (d *daemon) recordLate() {
+	d.openHatch()
 	if v := d.board.view.Load(); v != nil {
 		d.archive.record(history.Entry{Kind: history.KindConfiguration, At: v.At + sensors.Second, Payload: d.current().Source})
 	}
