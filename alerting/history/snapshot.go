@@ -25,6 +25,10 @@ const secretPrefix = "signing."
 // writes size bytes. The Writer is not kept waiting by a slow fn: from a
 // store that has one, each file is first copied beside itself.
 func (s *Store) Snapshot(ctx context.Context, want func(day string) bool, fn func(name string, size int64, content func(io.Writer) error) error) error {
+	if err := s.snapshotOf(journalName, fn); err != nil {
+		return fmt.Errorf("copy %s: %w", journalName, err)
+	}
+	// Only now: a day may have begun since, and the journal knows of it.
 	names, err := s.members()
 	if err != nil {
 		return err
@@ -37,7 +41,7 @@ func (s *Store) Snapshot(ctx context.Context, want func(day string) bool, fn fun
 			continue
 		}
 		err := s.snapshotOf(name, fn)
-		if errors.Is(err, os.ErrNotExist) && name != journalName {
+		if errors.Is(err, os.ErrNotExist) {
 			continue // deleted since the listing
 		}
 		if err != nil {
@@ -47,13 +51,13 @@ func (s *Store) Snapshot(ctx context.Context, want func(day string) bool, fn fun
 	return nil
 }
 
-// members are the files that belong to the history, the journal first.
+// members are the files that belong to the history, but the journal.
 func (s *Store) members() ([]string, error) {
 	entries, err := os.ReadDir(s.dir)
 	if err != nil {
 		return nil, fmt.Errorf("list the history: %w", err)
 	}
-	names := []string{journalName}
+	var names []string
 	for _, e := range entries {
 		name := e.Name()
 		ours := strings.HasPrefix(name, dayPrefix) || strings.HasPrefix(name, journalName) || strings.HasSuffix(name, ".dat")

@@ -161,7 +161,7 @@ var flow = [...][]string{
 	{"alerting/wording", "alerting/engine"},
 	{"alerting/attention", "alerting/page/access"},
 	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page", "alerting/judged"},
-	{"alerting/history/export"},
+	{"alerting/history/export", "alerting/history/backup"},
 	{"alerting/history/bundle"},
 	{"alerting/review"},
 }
