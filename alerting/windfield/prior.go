@@ -62,7 +62,7 @@ func DefaultPrior() Prior {
 		DriftDeviation:  2,
 		DriftTime:       300,
 		Instrument:      0.25,
-		OutflowShare:    0.2,
+		OutflowShare:    0.25,
 		OutflowStrength: 7,
 		OutflowTime:     90,
 		OutflowRadii:    []float64{500, 850, 1400},

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"encoding/json"
 	"fmt"
 	"math"
 	"slices"
@@ -12,6 +13,7 @@ import (
 	"sockline/alerting/engine"
 	"sockline/alerting/lifecycle"
 	"sockline/alerting/page"
+	"sockline/alerting/shear"
 	"sockline/alerting/wording"
 	"sockline/config"
 	"sockline/sensors"
@@ -31,6 +33,8 @@ type report struct {
 	Stations  []stationHealth
 	Notices   []wording.Notice // issued in this step
 	Layout    layout
+	// What the plan draws: the headwind along every path, and outflows.
+	Profiles, Outflows []json.RawMessage
 	// SharedClock is how far all stations are ahead of this host's clock.
 	SharedClock time.Duration
 	Why         []string // of each notice, for the log
@@ -45,7 +49,8 @@ type reporter struct {
 	rejected  []uint64          // by station
 	winds     []*windObject     // by station, nil where there is none
 	variation func(sensors.Instant) (float64, error)
-	layout    layout // as of the day of its variation
+	layout    layout               // as of the day of its variation
+	points    []shear.ProfilePoint // reused
 }
 
 // endMast is a runway end and the mast that tells its wind.
@@ -111,6 +116,7 @@ func (r *reporter) of(e *engine.Engine, res *engine.Result) *report {
 		out.Ends = append(out.Ends, r.end(end, e, res))
 	}
 	out.Layout = r.drawn(res.At)
+	r.weather(e, res, out)
 	return out
 }
 
@@ -171,6 +177,7 @@ func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 		Made: made, At: rep.At, ValidUntil: rep.At.Add(validFor), Condition: rep.Condition,
 		Remarks: remarks(status), Exercise: status.Exercise, StatusJSON: status.JSON(),
 		LayoutJSON: rep.Layout.json, LayoutID: rep.Layout.id,
+		Profiles: rep.Profiles, Outflows: rep.Outflows,
 	}
 	for _, e := range rep.Ends {
 		v.Ends = append(v.Ends, page.End{Runway: e.Runway, Observed: e.Observed, Sentence: wording.EndText(e), JSON: e.JSON()})
