@@ -88,3 +88,6 @@ func crosswindRange(s *averages.Snapshot, pg *pathGround) float64 {
 	}
 	return math.Max(most-least, 0)
 }
+
+// View is how a path looks at its stretch.
+func (e *Engine) View(path int) hazard.View { return e.ground.paths[path].view }

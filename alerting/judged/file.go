@@ -189,6 +189,9 @@ func ReadDay(dir, day string, from, to sensors.Instant, fn func(*Step) error) (R
 	sources, faults := sourcesOf(all)
 	report.Faults = append(report.Faults, faults...)
 	for _, s := range sources {
+		if s.start.Add(BlockSteps*time.Second) <= from || to != 0 && s.start >= to {
+			continue
+		}
 		b, err := decodeBlock(s.context, s.body)
 		if err != nil {
 			report.Faults = append(report.Faults, fmt.Sprintf("%s: the block of %s %v", FileOf(day), s.start, err))

@@ -180,3 +180,6 @@ func (j *Judge) steepen(a *hazard.Assessment, s *Step, path int) {
 		}
 	}
 }
+
+// Complete tells whether all the ground that a path needs was observed.
+func (s *Step) Complete(path int) bool { return s.block.grounds[s.row.ground].paths[path].complete }

@@ -60,6 +60,8 @@ func commands() []command {
 		historyVerifyCommand(),
 		historyBackupCommand(),
 		historyExportCommand(),
+		eventsReportCommand(),
+		historySummaryCommand(),
 		usersAddCommand(),
 		usersListCommand(),
 		usersRemoveCommand(),

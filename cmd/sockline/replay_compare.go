@@ -14,6 +14,7 @@ import (
 
 	"sockline/alerting"
 	"sockline/alerting/history"
+	"sockline/alerting/history/backup"
 	"sockline/alerting/judged"
 	"sockline/alerting/lifecycle"
 	"sockline/alerting/review"
@@ -55,11 +56,20 @@ type comparison struct {
 // compare prints which alerts another configuration would have given, or
 // whether the same one gives the same again.
 func compare(ctx context.Context, p *program, cfg *config.Config, dir string, from, to sensors.Instant, flags compareFlags) (err error) {
-	store, err := openForReplay(dir)
+	// Half a day more on either side: days are warmed up, and end with their
+	// alerts.
+	span := backup.Span{From: from, To: to}
+	if from != 0 {
+		span.From = from.Add(-12 * time.Hour)
+	}
+	if to != 0 {
+		span.To = to.Add(12 * time.Hour)
+	}
+	store, done, err := lookInto(ctx, dir, span)
 	if err != nil {
 		return err
 	}
-	defer func() { err = errors.Join(err, store.Close()) }()
+	defer func() { err = errors.Join(err, done()) }()
 	c := &comparison{ctx: ctx, p: p, dir: dir, store: store, cfg: cfg, from: from.CeilSecond(), to: to,
 		analyse: *flags.analyse, bar: newProgress(p, "compare")}
 	began := p.now()
