@@ -126,6 +126,8 @@ type Health struct {
 	WaitingSteps    int    // in memory, not yet on disk
 	WaitingRecords  int
 
+	DayHead Head // where the journal stood at the end of the last day that has ended; zero before
+
 	KeptBack string // why old readings are not deleted although their time is over; empty if they are
 
 	Damage []string // what was found damaged, and what was done about it

@@ -208,6 +208,30 @@ func (h *heads) end() Head {
 	return Head{Day: dayOf(h.latest), Seq: h.last.seq, Hash: h.last.hash}
 }
 
+// followHeads takes in records that are on disk now, and tells where the chain
+// stood at the end of each day that has ended: a copy of that, kept elsewhere,
+// shows later editing.
+func (s *Store) followHeads(values [][]byte, first uint64) {
+	told := len(s.ends.done)
+	for i, value := range values {
+		if r, err := parseRecord(seqKey(first+uint64(i)), value); err == nil {
+			s.ends.add(r)
+		}
+	}
+	for _, h := range s.ends.done[told:] {
+		s.opts.Log.Info().Str("component", "history").Str("day", h.Day).Uint64("records", h.Seq).Str("sha256", h.Hash.String()).
+			Msg("the journal at the end of a day; keep this line elsewhere")
+	}
+	s.tellHead()
+}
+
+// tellHead puts the newest end of a day into Health.
+func (s *Store) tellHead() {
+	if n := len(s.ends.done); n > 0 {
+		s.setHealth(func(h *Health) { h.DayHead = s.ends.done[n-1] })
+	}
+}
+
 // Excerpt is a stretch of the chain without holes.
 type Excerpt struct {
 	Before Digest // hash of the record before the first

@@ -45,6 +45,7 @@ type Store struct {
 	shelf    shelf
 	journal  *file // held open; nil when read-only
 	head     head  // end of the chain; after Open only the Writer touches it
+	ends     heads // of the days; likewise
 	writing  atomic.Bool
 
 	retention sync.Mutex // held while holds are read and what they do not cover is deleted
@@ -141,7 +142,8 @@ func (s *Store) checkJournal() error {
 		s.reportDamage(fmt.Sprintf("%s: the chain is broken at record %d (%d broken in all); what is written goes on after the last record",
 			journalName, c.first, c.broken))
 	}
-	s.head = c.head
+	s.head, s.ends = c.head, c.days
+	s.tellHead()
 	if err := s.upgradeJournal(); err != nil {
 		return err
 	}

@@ -455,6 +455,7 @@ func mend(err error) string {
 func (w *Writer) succeeded(r *round) {
 	if len(r.values) > 0 {
 		w.s.head = r.end
+		w.s.followHeads(r.values, r.start.seq+1)
 	}
 	w.mu.Lock()
 	steps, records := len(w.queue.items), w.queue.records

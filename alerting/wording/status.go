@@ -23,8 +23,17 @@ type Status struct {
 	Subscribed     bool     // and every topic of the masts is granted
 	ClockOffset    float64  // of the host clock from the arrival clock, s
 	Degraded       string   // why the history may miss things; empty while it is whole
+	DayHead        DayHead  // of the journal; zero before the first day has ended
 	Remarks        []string // whole sentences
 	Exercise       bool
+}
+
+// DayHead is where the journal of the history stood at the end of a UTC day:
+// with a copy of it, kept elsewhere, later editing shows.
+type DayHead struct {
+	Day     string // 2006-01-02
+	Records uint64
+	SHA256  string // hash of the last of them, hexadecimal
 }
 
 // JSON is the status object of the outside face.
@@ -36,6 +45,13 @@ func (s *Status) JSON() []byte {
 	broker.flag("subscribed", s.Subscribed)
 	history.flag("degraded", s.Degraded != "")
 	history.text("reason", s.Degraded)
+	if s.DayHead.Day != "" {
+		var head object
+		head.text("day", s.DayHead.Day)
+		head.count("records", int(s.DayHead.Records))
+		head.text("sha256", s.DayHead.SHA256)
+		history.raw("day_head", head.end())
+	}
 	o.text("condition", string(s.Condition))
 	o.text("instance", s.Instance)
 	o.text("airfield", s.Airfield)

@@ -146,6 +146,9 @@ func (d *daemon) status(rep *report) *wording.Status {
 	if h.Degraded {
 		s.Degraded = h.Reason
 	}
+	if h.DayHead.Day != "" {
+		s.DayHead = wording.DayHead{Day: h.DayHead.Day, Records: h.DayHead.Seq, SHA256: h.DayHead.Hash.String()}
+	}
 	remark := func(text string) { s.Remarks = append(s.Remarks, text) }
 	if d.embedded != nil {
 		remark(wording.EmbeddedBroker)
