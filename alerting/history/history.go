@@ -55,7 +55,7 @@ type Batch struct {
 }
 
 // Released is an issue on its way out. Recorded is true when it is on disk,
-// together with every reading up to its step.
+// together with every reading up to its step that no gap in the journal names.
 type Released struct {
 	Step     sensors.Instant
 	Issue    Issue
@@ -127,6 +127,12 @@ type Health struct {
 	WaitingRecords  int
 
 	DayHead Head // where the journal stood at the end of the last day that has ended; zero before
+
+	// Of the disk, where Options.Space tells.
+	Space           Space
+	SpaceLow        string // why, and the mend, when little of it is free
+	ReadingsStopped bool   // so little that readings are given up, to keep room for events
+	Reserve         uint64 // bytes kept for events when the disk is full
 
 	KeptBack string // why old readings are not deleted although their time is over; empty if they are
 

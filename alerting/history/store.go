@@ -32,7 +32,10 @@ type Options struct {
 	// LockWait is how long Open waits for another process to let go of a
 	// file. 0 is 1 s.
 	LockWait time.Duration
-	Log      zerolog.Logger
+	// Space tells how much of the disk is free, DiskSpace in life. With nil
+	// the disk is not watched.
+	Space func() (Space, error)
+	Log   zerolog.Logger
 }
 
 // Store is a history directory. Its methods may be called from any goroutine.

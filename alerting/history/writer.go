@@ -1,13 +1,9 @@
 package history
 
 import (
-	"bytes"
 	"context"
-	"encoding/binary"
-	"encoding/json"
 	"errors"
 	"fmt"
-	"math"
 	"slices"
 	"sync"
 	"syscall"
@@ -51,14 +47,9 @@ type Writer struct {
 	dayName  string // of day
 	table    table
 	folding  folding
+	space    spaceGuard
 	quiet    bool // this round holds no records
 	reported int  // of Health.Damage, already journalled
-}
-
-// table is the list of stations that the last step referred to.
-type table struct {
-	id  uint32
-	ids []string
 }
 
 // Writer starts the one writer of the store. It must be closed before the
@@ -238,11 +229,15 @@ func (w *Writer) run() {
 		}
 		r := &round{items: items}
 		for wait := firstRetry; ; wait = min(2*wait, lastRetry) {
+			w.watchSpace(r)
 			err := w.commit(r)
 			if err == nil {
 				break
 			}
 			w.failed(err)
+			if w.makeRoom(err) {
+				continue // at once: there is room again
+			}
 			select {
 			case <-w.opts.After(wait):
 			case <-w.stop:
@@ -317,86 +312,6 @@ func (w *Writer) commit(r *round) error {
 		return err
 	}
 	return w.writeJournal(r)
-}
-
-// writeDay writes steps of one day into its file.
-func (w *Writer) writeDay(name string, items []*item) error {
-	if len(items) == 0 {
-		return nil
-	}
-	if w.day == nil || w.dayName != name {
-		w.foldRest()
-		w.closeDay()
-		f, err := w.s.shelf.acquire(name, dayLayout(), true)
-		if err != nil {
-			return err
-		}
-		w.day, w.dayName = f, name
-		if w.folding, err = beginFolding(f, w.s.window); err != nil {
-			return err
-		}
-	}
-	known, fold := w.table, w.folding
-	err := w.day.update(func(tx *bolt.Tx) error {
-		steps, late := tx.Bucket([]byte(bucketSteps)), tx.Bucket([]byte(bucketLate))
-		steps.FillPercent, late.FillPercent = 1, 1 // keys only ever rise
-		for _, it := range items {
-			var err error
-			if known, err = tableFor(tx, known, it.stations); err != nil {
-				return err
-			}
-			key, id := stepKey(it.step), binary.AppendUvarint(nil, uint64(known.id))
-			// How many late ones there are stands with the step, so that their
-			// loss is seen.
-			body := append(binary.AppendUvarint(bytes.Clone(id), uint64(it.lates)), it.body...)
-			if err := steps.Put(key, seal(key, body)); err != nil {
-				return err
-			}
-			if it.late != nil {
-				err = late.Put(key, seal(key, append(id, it.late...)))
-			} else {
-				err = late.Delete(key) // of an earlier submission of this step
-			}
-			if err != nil {
-				return err
-			}
-			fold.wrote(it.step)
-		}
-		return fold.fold(tx, w.quiet)
-	})
-	if err != nil {
-		w.table = table{} // whether it is on disk is unknown: look again
-		return err
-	}
-	w.table, w.folding = known, fold
-	return nil
-}
-
-// tableFor finds or adds the list of stations in the file of tx.
-func tableFor(tx *bolt.Tx, known table, ids []string) (table, error) {
-	if known.id != 0 && equalStrings(known.ids, ids) {
-		return known, nil
-	}
-	tables, err := readTables(tx)
-	if err != nil {
-		return table{}, err
-	}
-	for id, stored := range tables {
-		if id <= math.MaxUint32 && equalStrings(stored, ids) {
-			return table{id: uint32(id), ids: stored}, nil
-		}
-	}
-	b := tx.Bucket([]byte(bucketStations))
-	id, err := b.NextSequence()
-	if err != nil {
-		return table{}, err
-	}
-	key := binary.BigEndian.AppendUint32(nil, uint32(id))
-	text, err := json.Marshal(append([]string{}, ids...))
-	if err != nil {
-		return table{}, err
-	}
-	return table{id: uint32(id), ids: append([]string(nil), ids...)}, b.Put(key, seal(key, text))
 }
 
 func (w *Writer) writeJournal(r *round) error {
@@ -481,15 +396,4 @@ func (w *Writer) succeeded(r *round) {
 			close(it.done)
 		}
 	}
-}
-
-// closeDay lets go of the file of readings.
-func (w *Writer) closeDay() {
-	if w.day == nil {
-		return
-	}
-	if err := w.s.shelf.release(w.day); err != nil {
-		w.s.opts.Log.Error().Str("component", "history").Err(err).Msg("a file of readings did not close in order")
-	}
-	w.day, w.dayName, w.table = nil, "", table{}
 }

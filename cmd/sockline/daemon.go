@@ -118,7 +118,10 @@ func (d *daemon) prepare() (err error) {
 	if err = d.reachBroker(); err != nil {
 		return err
 	}
-	d.archive = newArchive(cfg.History.Directory, history.Options{Keep: cfg.History.Keep, Log: d.log}, d.release)
+	d.archive = newArchive(cfg.History.Directory, history.Options{
+		Keep: cfg.History.Keep, Log: d.log,
+		Space: func() (history.Space, error) { return history.DiskSpace(cfg.History.Directory) },
+	}, d.release)
 	d.people = newPeople(d)
 	d.board.lifted = d.people.lifted
 	if d.output, err = newOutward(d); err != nil {

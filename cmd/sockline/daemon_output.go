@@ -177,6 +177,11 @@ func (d *daemon) status(rep *report) *wording.Status {
 		remark(strings.ToUpper((*r)[:1]) + (*r)[1:] + ".")
 	}
 	s.Remarks = append(s.Remarks, d.tell.remarks()...)
+	for _, why := range []string{h.SpaceLow, h.KeptBack} {
+		if why != "" {
+			remark(strings.ToUpper(why[:1]) + why[1:] + ".")
+		}
+	}
 	if len(h.Damage) > 0 {
 		remark("Parts of the history were found damaged; the log says which.")
 	}

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"math"
 	"runtime"
 	"slices"
 	"time"
@@ -188,6 +189,13 @@ func (m *metrics) forget(cfg *config.Config) {
 	}
 }
 
+func freeShare(s history.Space) float64 {
+	if s.Total == 0 {
+		return math.NaN()
+	}
+	return float64(s.Free) / float64(s.Total)
+}
+
 // conditions are those that a living daemon can be in.
 func conditions() []alerting.Condition {
 	return []alerting.Condition{alerting.Observing, alerting.PartlyObserving, alerting.Blind}
@@ -209,6 +217,10 @@ func (m *metrics) sample(from sources) {
 	count("history_records_total", "Records of the journal that are on disk.", func() float64 { return float64(h().Records) })
 	count("history_unrecorded_issues_total", "Issues of alerts told without being on disk.", func() float64 { return float64(h().Unrecorded) })
 	count("history_dropped_steps_total", "Steps of readings given up because too many waited.", func() float64 { return float64(h().StepsDropped) })
+	gauge("history_disk_free_ratio", "Share of the disk of the history that is free; NaN while it is not known.", func() float64 { return freeShare(h().Space) })
+	gauge("history_readings_stopped", "Whether readings are given up because the disk is nearly full.", func() float64 { return truth(h().ReadingsStopped) })
+	gauge("history_reserve_bytes", "Disk space kept for events when the disk is full.", func() float64 { return float64(h().Reserve) })
+	gauge("history_deletion_stopped", "Whether old readings are not deleted because a hold may be unknown.", func() float64 { return truth(h().KeptBack != "") })
 	gauge("history_waiting_steps", "Steps in memory that are not on disk yet.", func() float64 { return float64(h().WaitingSteps) })
 
 	gauge("broker_connected", "Whether readings can come in.", func() float64 { return truth(from.input().Connected) })
