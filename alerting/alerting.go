@@ -18,7 +18,29 @@ type Kind string
 const (
 	HeadwindLoss Kind = "headwind-loss"
 	HeadwindGain Kind = "headwind-gain"
+	// The others are no change of headwind along a path.
+	WindShift     Kind = "wind-shift"     // the wind turns, behind a line or slowly
+	VerticalShear Kind = "vertical-shear" // the wind differs with height
+	Crosswind     Kind = "crosswind"      // more than the limit set, at the runway end
+	Tailwind      Kind = "tailwind"       // the same
 )
+
+// Kinds lists the kinds, in the order in which those of one path are told.
+func Kinds() []Kind {
+	return []Kind{HeadwindLoss, HeadwindGain, WindShift, VerticalShear, Crosswind, Tailwind}
+}
+
+// Highest is the highest level that an alert of this kind can have: only a loss
+// uses up a margin, and a limit is kept or not.
+func (k Kind) Highest() Level {
+	switch k {
+	case HeadwindLoss:
+		return BeyondMargin
+	case Crosswind, Tailwind:
+		return Noticeable
+	}
+	return Large
+}
 
 // Level is how large the change is. The zero Level is none.
 type Level int

@@ -5,6 +5,7 @@ import (
 	"math"
 
 	"sockline/alerting/airfield"
+	"sockline/alerting/vertical"
 	"sockline/sensors/quantity"
 )
 
@@ -40,6 +41,7 @@ func (t *table) alerts() Alerts {
 	s.Confidence, _ = a.quantity("confidence", bare(), bounds{"0.5", "0.99"}, "0.8")
 	s.Hysteresis, hysteresis = a.quantity("hysteresis", speed(), bounds{"0 kt", "10 kt"}, "2 kt")
 	s.Hold, _ = a.duration("hold", bounds{"5 s", "10 min"}, "60 s")
+	a.others(&s)
 
 	// What follows compares keys, so it needs both sides to be sound.
 	if slow && fast && s.FastestApproachSpeed < s.ApproachSpeed {
@@ -66,6 +68,28 @@ func (t *table) alerts() Alerts {
 		a.done()
 	}
 	return s
+}
+
+// others are the limits of what is no change of headwind. Those of the wind at
+// a runway end are off unless they are given: they hang on the aircraft.
+func (t *table) others(s *Alerts) {
+	s.WindShift, _ = t.quantity("wind_shift", angle(), bounds{"10 deg", "180 deg"}, "30 deg")
+	word, _ := t.oneOf("vertical_shear", "strong", "moderate", "strong", "severe", "off")
+	for _, c := range []vertical.Class{vertical.Moderate, vertical.Strong, vertical.Severe} {
+		if c.String() == word {
+			s.VerticalShear = c
+		}
+	}
+	optional := func(name string, b bounds) float64 {
+		if _, ok := t.values[name]; !ok {
+			t.asked = append(t.asked, name)
+			return 0
+		}
+		v, _ := t.quantity(name, speed(), b, b.low)
+		return v
+	}
+	s.CrosswindLimit = optional("crosswind_limit", bounds{"5 kt", "60 kt"})
+	s.TailwindLimit = optional("tailwind_limit", bounds{"3 kt", "40 kt"})
 }
 
 // knots is a speed as an operator writes it.

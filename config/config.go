@@ -22,6 +22,7 @@ import (
 	"github.com/BurntSushi/toml"
 
 	"sockline/alerting/airfield"
+	"sockline/alerting/vertical"
 	"sockline/sensors"
 )
 
@@ -62,6 +63,10 @@ type Alerts struct {
 	Confidence           float64 // probability at which a level opens
 	Hysteresis           float64 // how far a change must fall below a level, m/s
 	Hold                 time.Duration
+	WindShift            float64        // turn of the wind from which on it is told, degrees
+	VerticalShear        vertical.Class // from which on a vertical shear is told; none: none is
+	CrosswindLimit       float64        // at a runway end, over two minutes, m/s; 0: none
+	TailwindLimit        float64        // the same
 
 	StallMargin    float64 // 1 - 1/1.3 of ApproachSpeed, m/s
 	MarginDerived  bool    // Margin comes from StallMargin, not from the file

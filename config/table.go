@@ -63,12 +63,6 @@ func (t *table) mistyped(name, want string, v any) {
 	t.blame(t.key(name), render(v), "write "+want, "%s is not what belongs here", typeName(v))
 }
 
-// laterKeys are keys that a reader of the documentation may expect, but that
-// this version does nothing with. To accept one would be to promise it.
-func laterKeys() []string {
-	return []string{"alerts.crosswind_limit", "alerts.tailwind_limit", "alerts.wind_shift"}
-}
-
 // done reports every key that nobody asked for.
 func (t *table) done() {
 	var unknown []string
@@ -83,9 +77,6 @@ func (t *table) done() {
 		message, mend := "there is no such key here", "known keys: "+strings.Join(t.asked, ", ")
 		if near := nearest(name, t.asked); near != "" {
 			mend = "did you mean " + near + "?"
-		}
-		if slices.Contains(laterKeys(), withoutIndices(path)) {
-			message, mend = "this key is not in this version of the program", "take the line out"
 		}
 		t.add(t.src.key(path), path, "", mend, "%s", message)
 	}

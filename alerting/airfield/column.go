@@ -74,3 +74,18 @@ func (a *Airfield) Aloft() []bool {
 	}
 	return aloft
 }
+
+// NearestMast is the mast that tells the wind at a place, such as a threshold:
+// the nearest one on the ground within so many m of it, -1 if there is none. It
+// is the same whether it reports or not: the wind of a runway end must not
+// change its source unseen.
+func (a *Airfield) NearestMast(p Point, within float64) int {
+	aloft := a.Aloft()
+	best, least := -1, within
+	for i, m := range a.Masts {
+		if d := math.Hypot(m.X-p.X, m.Y-p.Y); !aloft[i] && d <= least {
+			best, least = i, d
+		}
+	}
+	return best
+}

@@ -20,6 +20,7 @@ import (
 	"sockline/alerting/hazard"
 	"sockline/alerting/lifecycle"
 	"sockline/alerting/outflow"
+	"sockline/alerting/vertical"
 	"sockline/alerting/windfield"
 	"sockline/sensors"
 	"sockline/sensors/averages"
@@ -60,6 +61,7 @@ type Engine struct {
 	ahead     forecaster
 	ground    *ground
 	fronts    *front.Tracker
+	others    others
 	machine   *lifecycle.Machine
 	counts    Counts
 	learner
@@ -95,6 +97,7 @@ type Result struct {
 	Assessments  []hazard.Assessment // one for each path, in order
 	Transitions  []lifecycle.Transition
 	Fronts       []front.Front     // that pass or have lately passed, the first first
+	Vertical     []vertical.Shear  // of the columns of air that report, in the airfield's order
 	Tables       []Table           // learnt since the step before, for the journal
 	OutflowShare float64           // posterior probability that an outflow is under way; 0 when blind
 	Outflows     []outflow.Outflow // those that are likelier than not, with place and motion
@@ -135,6 +138,7 @@ func New(s Settings) (*Engine, error) {
 		masts[i] = windfield.Mast{X: m.X, Y: m.Y, Aloft: e.ground.aloft[i]}
 	}
 	e.fronts = newFronts(s.Airfield, e.ground.aloft, layout)
+	e.others = newOthers(s, e.ground)
 	e.field = windfield.New(masts, e.ground.targets, layout, s.Prior)
 	e.outflows = outflow.NewTracker(e.ground.lines(), s.Prior.OutflowSpacing)
 	e.machine = lifecycle.New(lifecycle.Settings{
@@ -262,6 +266,7 @@ func (e *Engine) Step(t sensors.Instant) *Result {
 	snapshot := e.recorder.Snapshot(t)
 	e.result.Fronts = e.fronts.Step(snapshot)
 	e.assess(snapshot)
+	e.assessOthers(snapshot)
 	e.transitions = e.machine.Step(t, e.assessments, e.transitions[:0])
 	e.result.At = t
 	e.result.Readings = e.step

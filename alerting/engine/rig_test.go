@@ -130,6 +130,9 @@ func (a *aerodrome) settings() engine.Settings {
 		Levels: hazard.Levels{
 			Noticeable: al.Noticeable, Large: al.Large, Margin: al.Margin, MarginFBar: al.MarginFBar,
 			FastestApproach: al.FastestApproachSpeed, Confidence: al.Confidence, Hysteresis: al.Hysteresis,
+			Limits: hazard.Limits{
+				WindShift: al.WindShift, Vertical: al.VerticalShear, Crosswind: al.CrosswindLimit, Tailwind: al.TailwindLimit,
+			},
 		},
 		Window: a.cfg.Analysis.Window, Lateness: a.cfg.Analysis.Lateness, Reach: a.cfg.Analysis.Reach,
 		Hold: al.Hold, Exercise: true, Prior: windfield.DefaultPrior(),
@@ -238,7 +241,7 @@ func (r *recorder) frame(i int, as *hazard.Assessment) frame {
 	for _, s := range as.Missing {
 		f.missing = append(f.missing, r.a.cfg.Stations[s].ID)
 	}
-	for _, kind := range []alerting.Kind{alerting.HeadwindLoss, alerting.HeadwindGain} {
+	for _, kind := range alerting.Kinds() {
 		if alert, ok := r.open[p.Name()+" "+string(kind)]; ok {
 			f.alerts = append(f.alerts, alert)
 		}
@@ -307,8 +310,8 @@ func (r *recorder) issue(at sensors.Instant, tr lifecycle.Transition) {
 		fail("it says that it comes from %s", tr.From)
 	case a.Level < alerting.Noticeable || a.Level > alerting.BeyondMargin:
 		fail("level %s", a.Level)
-	case a.Kind == alerting.HeadwindGain && a.Level == alerting.BeyondMargin:
-		fail("a gain cannot use up the margin")
+	case a.Level > a.Kind.Highest():
+		fail("a %s cannot have the level %s", a.Kind, a.Level)
 	case a.Kind == alerting.HeadwindLoss && a.Change > 0, a.Kind == alerting.HeadwindGain && a.Change < 0:
 		fail("the change is %.2f m/s", a.Change)
 	case a.ChangeLow > a.Change || a.Change > a.ChangeHigh:

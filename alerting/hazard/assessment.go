@@ -32,6 +32,22 @@ type Change struct {
 	Used         []int          // stations (indices, ascending) that carry the estimate
 }
 
+// Other is what the assessment says of a kind that is no change of headwind;
+// nil for loss and gain.
+func (a *Assessment) Other(k alerting.Kind) *Other {
+	switch k {
+	case alerting.WindShift:
+		return &a.Shift
+	case alerting.VerticalShear:
+		return &a.Vertical
+	case alerting.Crosswind:
+		return &a.Cross
+	case alerting.Tailwind:
+		return &a.Tail
+	}
+	return nil
+}
+
 // Assessment is what one step says of one path.
 type Assessment struct {
 	Path     int                 // index into the airfield's paths
@@ -43,6 +59,8 @@ type Assessment struct {
 	// Crosswind is the greatest difference of crosswind between live masts beside
 	// this path, m/s, as measured; 0 with fewer than two.
 	Crosswind float64
-	Missing   []int // stations (indices) beside this path that are not live
-	Exercise  bool  // a reading in use marks itself as synthetic
+	// What is judged besides, each with its own Seen.
+	Shift, Vertical, Cross, Tail Other
+	Missing                      []int // stations (indices) beside this path that are not live
+	Exercise                     bool  // a reading in use marks itself as synthetic
 }

@@ -16,6 +16,7 @@ type Levels struct {
 	FastestApproach   float64 // airspeed of the fastest declared approach
 	Confidence        float64 // probability at which a level opens
 	Hysteresis        float64 // how far below a level the change must fall before it counts as over
+	Limits            Limits  // of everything that is no change of headwind
 }
 
 // mergeWithin: when the large change and the margin lie closer than this, in

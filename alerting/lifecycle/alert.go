@@ -5,6 +5,7 @@ package lifecycle
 
 import (
 	"sockline/alerting"
+	"sockline/alerting/hazard"
 	"sockline/sensors"
 )
 
@@ -67,6 +68,7 @@ type Alert struct {
 	FBar                          float64
 	FBarVertical                  float64 // estimated, not measured; see hazard.Change
 	Cause                         alerting.Cause
+	Detail                        hazard.Detail `json:",omitzero"` // of the kinds besides loss and gain
 	Trend                         Trend
 	PeakChange                    float64 // m/s, signed
 	PeakAt                        sensors.Instant

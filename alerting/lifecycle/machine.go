@@ -35,7 +35,10 @@ const (
 
 // kinds are the kinds of alert of a path, in the order in which they are
 // judged and issued.
-var kinds = [...]alerting.Kind{alerting.HeadwindLoss, alerting.HeadwindGain}
+var kinds = [...]alerting.Kind{
+	alerting.HeadwindLoss, alerting.HeadwindGain,
+	alerting.WindShift, alerting.VerticalShear, alerting.Crosswind, alerting.Tailwind,
+}
 
 // PathName is what the life of an alert needs of a path: its names, and where
 // it lies, so that alerts on different paths can be compared by place.
@@ -120,16 +123,10 @@ func (m *Machine) Step(T sensors.Instant, as []hazard.Assessment, dst []Transiti
 // advance takes one path and kind through the step T.
 func (m *Machine) advance(T sensors.Instant, path, kind int, a *hazard.Assessment, dst []Transition) []Transition {
 	s := &m.slots[path*len(kinds)+kind]
-	var c *hazard.Change
-	if a != nil && len(a.Observed) > 0 {
-		c = &a.Loss
-		if kinds[kind] == alerting.HeadwindGain {
-			c = &a.Gain
-		}
-	}
+	c, o := sizeOf(a, kinds[kind])
 	if !s.open {
 		if c != nil && c.Level > alerting.NoLevel && T > m.asOf {
-			dst = m.begin(T, path, kind, a, c, dst)
+			dst = m.begin(T, path, kind, a, c, o, dst)
 		}
 		return dst
 	}
@@ -144,8 +141,8 @@ func (m *Machine) advance(T sensors.Instant, path, kind int, a *hazard.Assessmen
 	// ground that is no smaller may take its place. Anything less would hide
 	// the larger one that may still be there.
 	var because CloseReason
-	if c != nil && (s.overObserved(a.Observed) || c.Level >= s.alert.Level) {
-		because = s.measure(T, c, m.settings.Hold)
+	if c != nil && (o != nil || s.overObserved(a.Observed) || c.Level >= s.alert.Level) {
+		because = s.measure(T, c, o, m.settings.Hold)
 	} else {
 		because = s.loseSight(T)
 	}
@@ -159,6 +156,27 @@ func (m *Machine) advance(T sensors.Instant, path, kind int, a *hazard.Assessmen
 		dst = m.issue(T, s, why, dst)
 	}
 	return dst
+}
+
+// sizeOf is what an assessment says of a kind; nil where it is not seen. The
+// second is nil for loss and gain.
+func sizeOf(a *hazard.Assessment, k alerting.Kind) (*hazard.Change, *hazard.Other) {
+	if a == nil {
+		return nil, nil
+	}
+	if o := a.Other(k); o != nil {
+		if !o.Seen {
+			return nil, nil
+		}
+		return &o.Change, o
+	}
+	switch {
+	case len(a.Observed) == 0:
+		return nil, nil
+	case k == alerting.HeadwindGain:
+		return &a.Gain, nil
+	}
+	return &a.Loss, nil
 }
 
 // overObserved reports whether both ends of the alert's ground are observed.
@@ -177,7 +195,7 @@ func within(observed []airfield.Interval, x float64) bool {
 }
 
 // begin opens an alert.
-func (m *Machine) begin(T sensors.Instant, path, kind int, a *hazard.Assessment, c *hazard.Change, dst []Transition) []Transition {
+func (m *Machine) begin(T sensors.Instant, path, kind int, a *hazard.Assessment, c *hazard.Change, o *hazard.Other, dst []Transition) []Transition {
 	name := m.settings.Paths[path]
 	s := &m.slots[path*len(kinds)+kind]
 	occurrence := m.occurrence(T, m.place(path, c.From, c.To))
@@ -193,15 +211,22 @@ func (m *Machine) begin(T sensors.Instant, path, kind int, a *hazard.Assessment,
 		Exercise: a.Exercise,
 	}
 	s.missing = append(s.missing[:0], a.Missing...)
-	s.take(T, c)
+	s.take(T, c, o)
 	why := fmt.Sprintf("level %s met with probability %.2f", c.Level, s.alert.Probability)
 	return m.issue(T, s, why, dst)
 }
 
 // take copies what the step measured into the alert, and notes which levels
 // it met.
-func (s *slot) take(T sensors.Instant, c *hazard.Change) {
+func (s *slot) take(T sensors.Instant, c *hazard.Change, o *hazard.Other) {
 	a := &s.alert
+	if o != nil {
+		if o.Over { // what was measured last stands
+			a.Observed, a.MeasuredAt = true, T
+			return
+		}
+		a.Detail = o.Detail
+	}
 	a.Change, a.ChangeLow, a.ChangeHigh = c.Median, c.Low, c.High
 	if a.Kind == alerting.HeadwindLoss {
 		a.Change, a.ChangeLow, a.ChangeHigh = -c.Median, -c.High, -c.Low
@@ -223,16 +248,16 @@ func (s *slot) take(T sensors.Instant, c *hazard.Change) {
 
 // measure takes a step in which the change was measured: levels, trend, and
 // whether it is over.
-func (s *slot) measure(T sensors.Instant, c *hazard.Change, hold time.Duration) CloseReason {
+func (s *slot) measure(T sensors.Instant, c *hazard.Change, o *hazard.Other, hold time.Duration) CloseReason {
 	a := &s.alert
 	if T.Sub(a.MeasuredAt) != time.Second { // a gap is no trend
 		a.Memory.Trend = TrendMemory{}
 		a.Trend = TrendUnknown
 	}
-	if a.Memory.Trend.add(c.Median) {
+	if (o == nil || !o.Over) && a.Memory.Trend.add(c.Median) {
 		a.Trend = a.Memory.Trend.judge(a.Trend)
 	}
-	s.take(T, c)
+	s.take(T, c, o)
 	held := &a.Memory.Held
 	if T.Sub(held[alerting.Noticeable]) >= hold {
 		a.Probability = c.Probability[a.Level]

@@ -128,6 +128,9 @@ func (n Notice) JSON() []byte {
 	o.text("cause", string(a.Cause))
 	o.text("trend", string(a.Trend))
 	o.raw("peak", peak(a.PeakChange, a.PeakAt))
+	if !alongPath(a.Kind) {
+		o.raw("detail", detail(a.Kind, &a.Detail))
+	}
 	o.raw("stations", stations(a.Used, a.Missing))
 	o.text("text", n.text)
 	o.flag("recorded", n.recorded)

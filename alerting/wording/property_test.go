@@ -12,8 +12,10 @@ import (
 
 	"sockline/alerting"
 	"sockline/alerting/airfield"
+	"sockline/alerting/front"
 	"sockline/alerting/hazard"
 	"sockline/alerting/lifecycle"
+	"sockline/alerting/vertical"
 	"sockline/sensors"
 	"sockline/sensors/quantity"
 )
@@ -48,7 +50,7 @@ func (d draw) alert() lifecycle.Alert {
 	a := lifecycle.Alert{
 		ID: `an "odd" <id>` + "\n", Occurrence: "o", Revision: 1 + d.IntN(9),
 		Runway: pick(d, "07", "25", "16L"), Operation: pick(d, airfield.Landing, airfield.TakeOff),
-		Kind:  pick(d, alerting.HeadwindLoss, alerting.HeadwindGain),
+		Kind:  pick(d, alerting.Kinds()...),
 		Level: pick(d, alerting.Noticeable, alerting.Large, alerting.BeyondMargin), State: lifecycle.Open,
 		Opened: opened, Updated: updated,
 		Change: m[1], ChangeLow: m[0], ChangeHigh: m[2], Probability: d.Float64(),
@@ -58,6 +60,7 @@ func (d draw) alert() lifecycle.Alert {
 		PeakChange: m[2], PeakAt: updated, Used: []string{"far07"}, Missing: pick(d, nil, []string{"a"}, []string{"a", "b", "c"}),
 		Exercise: d.IntN(2) == 0,
 	}
+	a.Detail = d.detail()
 	a.Memory.Held[a.Level] = pick(d, opened, updated)
 	if a.Kind == alerting.HeadwindLoss {
 		a.Change, a.ChangeLow, a.ChangeHigh, a.PeakChange = -m[1], -m[2], -m[0], -m[2]
@@ -67,6 +70,61 @@ func (d draw) alert() lifecycle.Alert {
 		a.Because = pick(d, lifecycle.BelowLevel, lifecycle.NotObserved, lifecycle.PathWithdrawn, lifecycle.ExpiredWhileDown)
 	}
 	return a
+}
+
+func (d draw) detail() hazard.Detail {
+	wind := func() quantity.Vector { return quantity.Vector{East: d.number(8), North: d.number(8)} }
+	return hazard.Detail{
+		Turn: d.number(90), Before: wind(), After: wind(), Moving: d.IntN(2) == 0, Lower: 10, Upper: math.Abs(d.number(80)),
+		RateKnown: d.IntN(2) == 0, Rate: math.Abs(d.number(5)), Neutral: d.number(2), Class: pick(d, "", "strong"),
+		Sign: pick(d, vertical.NoSign, vertical.NightInversion, vertical.StillBelow, vertical.Jet), Limit: pick(d, 0, 10.3),
+		FromLeft: d.IntN(2) == 0, Mast: pick(d, "", "tower-10"), Variation: d.number(10),
+	}
+}
+
+// Every front and every pair of levels has its notice, keys in one order, and
+// sentences that keep to the rules, whatever the numbers are.
+func TestRandomFrontsAndColumns(t *testing.T) {
+	d := draw{rand.New(rand.NewPCG(9, 9)), 10}
+	var keys, verticalKeys []string
+	for range 2_000 {
+		wind := func() quantity.Vector { return quantity.Vector{East: d.number(8), North: d.number(8)} }
+		v := FrontView{At: opened, Variation: d.number(8), Exercise: d.IntN(2) == 0, Front: front.Front{
+			Kind: pick(d, front.GustFront, front.WindShift), First: opened, Confidence: d.Float64(), Moving: d.IntN(2) == 0,
+			X: d.number(3000), Y: d.number(3000), Toward: 360 * d.Float64(), Band: math.Abs(d.number(300)), Speed: math.Abs(d.number(9)),
+			SpeedLow: math.Abs(d.number(7)), SpeedHigh: math.Abs(d.number(12)), Aligned: d.IntN(2) == 0, Apparent: pick(d, 0, 12.0),
+			Before: wind(), After: wind(), Change: wind(), Turn: d.number(90),
+		}}
+		for i := range d.IntN(4) {
+			at := opened.Add(time.Duration(d.IntN(600)) * time.Second)
+			v.Front.Arrivals = append(v.Front.Arrivals, front.Arrival{Place: pick(d, "threshold 07", "far07"), Mast: i - 1, X: d.number(3000),
+				At: at, Earliest: at - 9000, Latest: at + 9000, Arrived: d.IntN(2) == 0})
+		}
+		got := keysOf(t, v.JSON())
+		if keys == nil {
+			keys = got
+		}
+		c := VerticalView{Variation: 3, Exercise: d.IntN(2) == 0, Shear: vertical.Shear{Place: "tower-10", LowerM: 10, UpperM: 40, Below: wind(),
+			Above: wind(), Difference: math.Abs(d.number(8)), RateKnown: d.IntN(2) == 0, Rate: math.Abs(d.number(5)),
+			Class: pick(d, vertical.Unclassed, vertical.Severe), Neutral: d.number(2), Sign: pick(d, vertical.NoSign, vertical.NightInversion, vertical.Jet)}}
+		other := keysOf(t, c.JSON())
+		if verticalKeys == nil {
+			verticalKeys = other
+		}
+		if !slices.Equal(keys, got) || !slices.Equal(verticalKeys, other) {
+			t.Fatalf("keys %v, %v", got, other)
+		}
+		for _, b := range [][]byte{v.JSON(), c.JSON()} {
+			if !bytes.Contains(b, []byte(`"notice":`)) || bytes.Contains(b, []byte("NaN")) {
+				t.Fatalf("%s", b)
+			}
+		}
+		lexical(t, v.Text())
+		lexical(t, c.Text())
+		if t.Failed() {
+			return
+		}
+	}
 }
 
 // keysOf are the top keys of an object in their order.
@@ -101,7 +159,13 @@ func TestRandomNotices(t *testing.T) {
 		c := Context{Airfield: "skerrymoor", Exercise: d.IntN(2) == 0, Margin: pick(d, 0, 17.3*quantity.Knot), MarginIsStall: d.IntN(2) == 0}
 		n := Of(lifecycle.Transition{At: a.Updated, Alert: a}, c).WithRecorded(d.IntN(2) == 0)
 		b := n.JSON()
-		if got := keysOf(t, b); !slices.Equal(got, alertKeys) {
+		got := keysOf(t, b)
+		if other := slices.Index(got, "detail"); (other >= 0) != !alongPath(a.Kind) {
+			t.Fatalf("detail of a %s: %s", a.Kind, b)
+		} else if other >= 0 {
+			got = slices.Delete(got, other, other+1)
+		}
+		if !slices.Equal(got, alertKeys) {
 			t.Fatalf("keys %v in %s", got, b)
 		}
 		if bytes.Contains(b, []byte("-0.0,")) || bytes.Contains(b, []byte(":-0,")) {
@@ -127,7 +191,7 @@ func TestRandomNotices(t *testing.T) {
 		if exercise := a.Exercise || c.Exercise; back.Exercise != exercise || exercise != strings.HasPrefix(n.Text(), "EXERCISE") {
 			t.Fatalf("exercise in %s", b)
 		}
-		if a.AtEdge && a.State == lifecycle.Open && !strings.Contains(n.Text(), "at least") && !strings.Contains(n.Text(), "less than 1 kt") && !strings.Contains(n.Text(), "unknown amount") {
+		if alongPath(a.Kind) && a.AtEdge && a.State == lifecycle.Open && !strings.Contains(n.Text(), "at least") && !strings.Contains(n.Text(), "less than 1 kt") && !strings.Contains(n.Text(), "unknown amount") {
 			t.Fatalf("at the edge without at least: %s", n.Text())
 		}
 		if !a.Observed && a.State == lifecycle.Open && !strings.Contains(n.Text(), "Not observed now: last measured at "+clock(a.MeasuredAt)) {

@@ -25,6 +25,9 @@ func sentence(a *lifecycle.Alert, c Context) string {
 	if a.State == lifecycle.Closed {
 		return closingSentence(a)
 	}
+	if !alongPath(a.Kind) {
+		return otherSentence(a)
+	}
 	w, m := wordsOf(a.Kind), markOf(a.Operation)
 	amount := estimate(a.Change, a.ChangeLow, a.ChangeHigh, a.AtEdge)
 	where := flight(a) + ", " + m.stretch(a.From, a.To) + ", at mast height"
@@ -106,6 +109,9 @@ func meaning(a *lifecycle.Alert, c Context) string {
 // measurement, and even that says nothing of the wind between the masts; the
 // others say outright that the end was not seen.
 func closingSentence(a *lifecycle.Alert) string {
+	if !alongPath(a.Kind) {
+		return otherClosing(a)
+	}
 	w, m := wordsOf(a.Kind), markOf(a.Operation)
 	change := "the " + w.noun + " of the headwind " + flight(a)
 	last := estimate(a.Change, a.ChangeLow, a.ChangeHigh, a.AtEdge)

@@ -144,11 +144,15 @@ func (s *story) end() {
 	text := fmt.Sprintf("EXERCISE ended after %d steps of one second. Masts that reported: %d of %d. Alerts that opened: %d.",
 		s.steps, s.masts, len(s.cfg.Stations), s.alerts)
 	if g := s.greatest; s.alerts > 0 {
-		verb := "fall"
-		if g.Kind == alerting.HeadwindGain {
-			verb = "rise"
+		verb := "a fall of the headwind"
+		switch g.Kind {
+		case alerting.HeadwindLoss:
+		case alerting.HeadwindGain:
+			verb = "a rise of the headwind"
+		default: // whichever is the first thing that changed
+			verb = "a change of the wind"
 		}
-		text += fmt.Sprintf(" The largest change: a %s of the headwind by about %.0f kt, %s %s, at %s.",
+		text += fmt.Sprintf(" The largest change: %s by about %.0f kt, %s %s, at %s.",
 			verb, quantity.Knots(math.Abs(g.PeakChange)), g.Operation, g.Runway, g.PeakAt.Time().Format("15:04:05"))
 	}
 	s.print("\n" + wrap("", text, storyWidth) + wrap("", alerting.Notice, storyWidth))

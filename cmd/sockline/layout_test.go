@@ -154,7 +154,7 @@ var flow = [...][]string{
 	{"sensors/quality", "sensors/correction", "sensors/mast"},
 	{"sensors/averages"},
 	{"alerting/airfield", "alerting/kinematics"},
-	{"alerting/windfield", "alerting/drift", "alerting/front"},
+	{"alerting/windfield", "alerting/drift", "alerting/front", "alerting/vertical"},
 	{"alerting/shear", "alerting/outflow"},
 	{"alerting/hazard"},
 	{"alerting/lifecycle"},
@@ -204,7 +204,7 @@ func TestFlowDoesNotTurnBack(t *testing.T) {
 // evaluation: they wait for nothing and share nothing.
 var inline = [...]string{
 	"sensors", "sensors/quantity", "sensors/decode", "sensors/quality", "sensors/correction", "sensors/averages",
-	"alerting", "alerting/airfield", "alerting/kinematics", "alerting/windfield", "alerting/drift", "alerting/front", "alerting/shear", "alerting/outflow", "alerting/hazard",
+	"alerting", "alerting/airfield", "alerting/kinematics", "alerting/windfield", "alerting/drift", "alerting/front", "alerting/vertical", "alerting/shear", "alerting/outflow", "alerting/hazard",
 	"alerting/lifecycle", "alerting/wording", "alerting/engine",
 }
 

@@ -157,11 +157,9 @@ func (m *metrics) follow(cfg *config.Config) {
 	for _, p := range cfg.Airfield.Paths {
 		m.paths = append(m.paths, [2]string{p.Runway(), p.Operation()})
 		m.observed.WithLabelValues(p.Runway(), p.Operation())
-		for _, k := range []alerting.Kind{alerting.HeadwindLoss, alerting.HeadwindGain} {
-			for l := alerting.Noticeable; l <= alerting.BeyondMargin; l++ {
-				if k == alerting.HeadwindLoss || l < alerting.BeyondMargin { // a rise uses up no margin
-					m.opened.WithLabelValues(p.Runway(), p.Operation(), string(k), l.String())
-				}
+		for _, k := range alerting.Kinds() {
+			for l := alerting.Noticeable; l <= k.Highest(); l++ {
+				m.opened.WithLabelValues(p.Runway(), p.Operation(), string(k), l.String())
 			}
 		}
 	}

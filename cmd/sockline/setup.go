@@ -30,6 +30,9 @@ func levels(cfg *config.Config) hazard.Levels {
 	return hazard.Levels{
 		Noticeable: a.Noticeable, Large: a.Large, Margin: a.Margin, MarginFBar: a.MarginFBar,
 		FastestApproach: a.FastestApproachSpeed, Confidence: a.Confidence, Hysteresis: a.Hysteresis,
+		Limits: hazard.Limits{
+			WindShift: a.WindShift, Vertical: a.VerticalShear, Crosswind: a.CrosswindLimit, Tailwind: a.TailwindLimit,
+		},
 	}
 }
 

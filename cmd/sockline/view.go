@@ -9,7 +9,6 @@ import (
 	"time"
 
 	"sockline/alerting"
-	"sockline/alerting/airfield"
 	"sockline/alerting/engine"
 	"sockline/alerting/lifecycle"
 	"sockline/alerting/page"
@@ -35,6 +34,8 @@ type report struct {
 	Layout    layout
 	// What the plan draws: the headwind along every path, and outflows.
 	Profiles, Outflows []json.RawMessage
+	// Fronts and Vertical are the objects of the fronts and of the columns of air.
+	Fronts, Vertical []json.RawMessage
 	// SharedClock is how far all stations are ahead of this host's clock.
 	SharedClock time.Duration
 	Why         []string // of each notice, for the log
@@ -65,23 +66,10 @@ func newReporter(cfg *config.Config, exercise bool) *reporter {
 	r.variation = func(t sensors.Instant) (float64, error) { return cfg.Airfield.Variation(t.Time()) }
 	for _, rw := range cfg.Airfield.Runways {
 		for _, e := range rw.Ends {
-			r.ends = append(r.ends, endMast{e.Designator, e.Bearing, nearest(cfg, e.Threshold)})
+			r.ends = append(r.ends, endMast{e.Designator, e.Bearing, cfg.Airfield.NearestMast(e.Threshold, cfg.Analysis.Reach)})
 		}
 	}
 	return r
-}
-
-// nearest is the mast that stands nearest to a threshold, and no farther than
-// its wind is taken to reach; -1 if none. It is the same mast whether it
-// reports or not: the wind of an end must not change its source unseen.
-func nearest(cfg *config.Config, threshold airfield.Point) int {
-	best, least := -1, cfg.Analysis.Reach
-	for i, m := range cfg.Airfield.Masts {
-		if d := math.Hypot(m.X-threshold.X, m.Y-threshold.Y); d <= least {
-			best, least = i, d
-		}
-	}
-	return best
 }
 
 // of puts a step into a report. The assessments and the snapshot belong to the
@@ -117,7 +105,28 @@ func (r *reporter) of(e *engine.Engine, res *engine.Result) *report {
 	}
 	out.Layout = r.drawn(res.At)
 	r.weather(e, res, out)
+	r.objects(out, res)
 	return out
+}
+
+// objects adds the fronts and the columns of air of a step.
+func (r *reporter) objects(out *report, res *engine.Result) {
+	variation, err := r.variation(res.At)
+	if err != nil {
+		variation = math.NaN() // then no direction is told
+	}
+	exercise := r.exercise
+	for i := range res.Assessments {
+		exercise = exercise || res.Assessments[i].Exercise
+	}
+	for i := range res.Fronts {
+		v := wording.FrontView{Front: res.Fronts[i], At: res.At, Variation: variation, Exercise: exercise}
+		out.Fronts = append(out.Fronts, v.JSON())
+	}
+	for i := range res.Vertical {
+		v := wording.VerticalView{Shear: res.Vertical[i], Variation: variation, Exercise: exercise}
+		out.Vertical = append(out.Vertical, v.JSON())
+	}
 }
 
 func (r *reporter) path(i int, res *engine.Result) wording.PathView {
@@ -178,6 +187,7 @@ func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 		Remarks: remarks(status), Exercise: status.Exercise, StatusJSON: status.JSON(),
 		LayoutJSON: rep.Layout.json, LayoutID: rep.Layout.id,
 		Profiles: rep.Profiles, Outflows: rep.Outflows,
+		Fronts: rep.Fronts, Vertical: rep.Vertical,
 	}
 	for _, e := range rep.Ends {
 		v.Ends = append(v.Ends, page.End{Runway: e.Runway, Observed: e.Observed, Sentence: wording.EndText(e), JSON: e.JSON()})

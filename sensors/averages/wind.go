@@ -2,6 +2,7 @@ package averages
 
 import (
 	"math"
+	"time"
 
 	"sockline/sensors"
 	"sockline/sensors/quantity"
@@ -78,9 +79,37 @@ func (r *Recorder) Wind(station int, t sensors.Instant) (Wind, bool) {
 // TenMinutes is the vector mean and the scalar mean of the last ten minutes of
 // a station; false unless two thirds of them hold data.
 func (r *Recorder) TenMinutes(station int, t sensors.Instant) (v quantity.Vector, speed float64, ok bool) {
+	return r.Mean(station, reportSpan*time.Second, t)
+}
+
+// Measured is the vector mean over a stretch up to t as it was measured at the
+// height of the mast, without what correction makes of it; false unless two
+// thirds of the stretch hold data.
+func (r *Recorder) Measured(station int, over time.Duration, t sensors.Instant) (v quantity.Vector, ok bool) {
+	v, speed, ok := r.Mean(station, over, t)
+	if !ok || speed <= 0 {
+		return v, ok
+	}
+	m := &r.masts[station]
+	raw, n := 0.0, 0
+	for age := range int(over / time.Second) {
+		if b := m.at(t - sensors.Instant(age)*sensors.Second); b != nil {
+			raw += b.raw / float64(b.n)
+			n++
+		}
+	}
+	// All readings of a direction are corrected by one factor.
+	by := raw / float64(n) / speed
+	return quantity.Vector{East: v.East * by, North: v.North * by}, true
+}
+
+// Mean is the vector mean and the scalar mean of a station over a stretch up
+// to t, as corrected; false unless two thirds of it hold data.
+func (r *Recorder) Mean(station int, over time.Duration, t sensors.Instant) (v quantity.Vector, speed float64, ok bool) {
 	m := &r.masts[station]
 	n := 0
-	for age := range reportSpan {
+	span := min(int(over/time.Second), memory)
+	for age := range span {
 		b := m.at(t - sensors.Instant(age)*sensors.Second)
 		if b == nil {
 			continue
@@ -90,7 +119,7 @@ func (r *Recorder) TenMinutes(station int, t sensors.Instant) (v quantity.Vector
 		speed += b.speed / float64(b.n)
 		n++
 	}
-	if n == 0 || 3*n < 2*(reportSpan/m.interval) {
+	if n == 0 || 3*n < 2*max(span/m.interval, 1) {
 		return quantity.Vector{}, 0, false
 	}
 	k := float64(n)

@@ -130,6 +130,39 @@ func trueChange(g *ground, w *Weather, runway string, t float64) (loss, gain flo
 	return quantity.Knots(loss), quantity.Knots(gain)
 }
 
+// judgeTurn holds an expected wind shift against the true turn of the wind at
+// the masts: the greatest between a time of the span and one up to 15 min
+// before it, with 5 m/s at one of them (levels 30 and 60 degrees).
+func judgeTurn(t *testing.T, g *ground, w *Weather, scene *Scene, e Expectation) {
+	t.Helper()
+	from := func(s float64) []quantity.Vector {
+		var all []quantity.Vector
+		for _, m := range g.masts {
+			u, v := w.Wind(m[0], m[1], 10, s)
+			all = append(all, quantity.Vector{East: u, North: v})
+		}
+		return all
+	}
+	most := 0.0
+	for s := e.Span.From; s < min(e.Span.To, scene.Length.Seconds()); s += 15 {
+		now := from(s)
+		for back := 60.0; back <= 900 && back <= s; back += 60 {
+			for i, before := range from(s - back) {
+				if max(before.Speed(), now[i].Speed()) >= 5 {
+					most = max(most, math.Abs(math.Remainder(now[i].From()-before.From(), 360)))
+				}
+			}
+		}
+	}
+	level := map[string]float64{"": 30, "noticeable": 30, "large": 60}[e.Level]
+	if e.Kind == ExpectAlert && most < level*1.1 {
+		t.Errorf("line %d expects a wind shift, the wind turns by %.0f degrees against %g", e.Line, most, level)
+	}
+	if e.Kind == ExpectNoAlert && most >= level {
+		t.Errorf("line %d expects no wind shift, the wind turns by %.0f degrees against %g", e.Line, most, level)
+	}
+}
+
 // Each scene's wind must deserve what the scene expects: an alert's level is
 // truly reached before it is due, and where there is to be none it is truly
 // not reached (levels 10, 15 kt, and 17.25 kt: 23 % of 75 kt).
@@ -144,7 +177,7 @@ func TestScenesDeserveTheirExpectations(t *testing.T) {
 				t.Fatal("it expects nothing")
 			}
 			for _, e := range scene.Expectations {
-				if e.Operation == "take-off" || (e.Kind != ExpectAlert && e.Kind != ExpectNoAlert) {
+				if (e.Operation == "take-off" && e.AlertKind != "wind-shift") || (e.Kind != ExpectAlert && e.Kind != ExpectNoAlert) {
 					continue
 				}
 				runways := []string{e.Runway}
@@ -152,6 +185,10 @@ func TestScenesDeserveTheirExpectations(t *testing.T) {
 					runways = []string{"07", "25"}
 				}
 				most := 0.0
+				if e.AlertKind == "wind-shift" {
+					judgeTurn(t, g, weather, scene, e)
+					continue
+				}
 				for _, runway := range runways {
 					for s := e.Span.From; s < min(e.Span.To, scene.Length.Seconds()); s += 5 {
 						loss, gain := trueChange(g, weather, runway, s)

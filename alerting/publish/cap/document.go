@@ -132,6 +132,8 @@ func eventWords(k alerting.Kind) string {
 		return "loss of headwind"
 	case alerting.HeadwindGain:
 		return "gain of headwind"
+	case alerting.VerticalShear:
+		return "change of the wind with height"
 	}
 	return strings.ReplaceAll(string(k), "-", " ")
 }
