@@ -158,11 +158,28 @@ func (m *metrics) follow(cfg *config.Config) {
 		m.paths = append(m.paths, [2]string{p.Runway(), p.Operation()})
 		m.observed.WithLabelValues(p.Runway(), p.Operation())
 		for _, k := range alerting.Kinds() {
+			if !canOpen(cfg, k) {
+				continue
+			}
 			for l := alerting.Noticeable; l <= k.Highest(); l++ {
 				m.opened.WithLabelValues(p.Runway(), p.Operation(), string(k), l.String())
 			}
 		}
 	}
+}
+
+// canOpen tells whether an alert of this kind can open at all: one that hangs on
+// a limit that is not set, or on a column of air that is not there, cannot.
+func canOpen(cfg *config.Config, k alerting.Kind) bool {
+	switch k {
+	case alerting.Crosswind:
+		return cfg.Alerts.CrosswindLimit > 0
+	case alerting.Tailwind:
+		return cfg.Alerts.TailwindLimit > 0
+	case alerting.VerticalShear:
+		return len(cfg.Airfield.Columns()) > 0
+	}
+	return true
 }
 
 // forget deletes the series of stations and paths that a configuration does

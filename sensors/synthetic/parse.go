@@ -54,6 +54,7 @@ const maxSceneLength = 24 * time.Hour
 //	roughness  0.03 m
 //	turbulence A | B | C | none                  classes of IEC 61400-1
 //	eddies     0.8 m/s length 1000 m time 300 s
+//	aloft      from 250 deg 24 kt above 25 m [starts 3 min grows 4 min]
 //	veer       40 deg starts 3 min takes 10 min  negative: backs
 //	rise       from 160 deg 20 kt starts 4 min grows 2 min
 //	           [holds 5 min fades 2 min] [crosses PLACE toward 340 deg 8 m/s]
@@ -199,11 +200,13 @@ func (p *parser) single(keyword string, l *line) {
 		s.Turbulence = l.turbulenceClass()
 	case "eddies":
 		l.eddies(s)
+	case "aloft":
+		l.aloft(s)
 	case "masts":
 		l.masts(s)
 	default:
 		l.fail("there is no such statement; expected title, airfield, start, length, seed, wind, roughness, " +
-			"turbulence, eddies, veer, rise, front, outflow, masts, mast, broker or expect")
+			"turbulence, eddies, aloft, veer, rise, front, outflow, masts, mast, broker or expect")
 	}
 }
 

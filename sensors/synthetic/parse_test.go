@@ -26,6 +26,7 @@ wind       240 deg 10 kt
 roughness  0.1 m
 turbulence B
 eddies     0.8 m/s length 1000 m time 300 s
+aloft      from 250 deg 12 m/s above 25 m starts 3 min grows 4 min
 veer       -40 deg starts 3 min takes 10 min
 rise       from 180 deg 10 m/s starts 4 min grows 90 s
 rise       grows 1 min from 90 deg 5 m/s starts 0 s fades 2 min holds 5 min crosses 100 m east -200 m north toward 270 deg 8 m/s
@@ -71,6 +72,7 @@ func TestParseEveryStatement(t *testing.T) {
 		Start: 1782914400 * sensors.Second, Length: 20 * time.Minute, Seed: 7,
 		From: 240, Speed: 10 * 1852.0 / 3600, Roughness: 0.1, Turbulence: 0.14,
 		Eddies: Eddies{Deviation: 0.8, Length: 1000, Time: 300},
+		Aloft:  Aloft{From: 250, Speed: 12, Above: 25, Starts: 180, Grows: 240},
 		Veers:  []Veer{{By: -40, Starts: 180, Takes: 600}},
 		Rises: []Rise{
 			{Wind: quantity.FromDirection(10, 180), History: History{Starts: 240, Grows: 90}, Stays: true},
@@ -98,16 +100,16 @@ func TestParseEveryStatement(t *testing.T) {
 		},
 		Outages: []Span{{300, 420}},
 		Expectations: []Expectation{
-			{Line: 27, Kind: ExpectAlert, AlertKind: "headwind-loss", Operation: "landing", Runway: "07", Level: "large", Span: Span{0, 540}},
-			{Line: 28, Kind: ExpectNoAlert, Span: always},
-			{Line: 29, Kind: ExpectNoAlert, Level: "large", Span: Span{180, 181}},
-			{Line: 30, Kind: ExpectNoAlert, AlertKind: "headwind-gain", Operation: "take-off", Runway: "25", Span: always},
-			{Line: 31, Kind: ExpectNoAlert, Operation: "landing", Runway: "25", Span: always},
-			{Line: 32, Kind: ExpectClosed, AlertKind: "headwind-loss", Operation: "landing", Runway: "07", Because: "not-observed", Span: Span{540, forever}},
-			{Line: 33, Kind: ExpectUnseen, AlertKind: "headwind-loss", Operation: "landing", Runway: "07", Span: Span{480, 540}},
-			{Line: 34, Kind: ExpectState, State: "not-observed", Operation: "landing", Runway: "07", Span: Span{240, 480}},
-			{Line: 35, Kind: ExpectUnobserved, FromM: 5000, ToM: -500, Operation: "landing", Runway: "07", Span: always},
-			{Line: 36, Kind: ExpectMissing, Mast: "far07", Operation: "landing", Runway: "07", Span: Span{540, forever}},
+			{Line: 28, Kind: ExpectAlert, AlertKind: "headwind-loss", Operation: "landing", Runway: "07", Level: "large", Span: Span{0, 540}},
+			{Line: 29, Kind: ExpectNoAlert, Span: always},
+			{Line: 30, Kind: ExpectNoAlert, Level: "large", Span: Span{180, 181}},
+			{Line: 31, Kind: ExpectNoAlert, AlertKind: "headwind-gain", Operation: "take-off", Runway: "25", Span: always},
+			{Line: 32, Kind: ExpectNoAlert, Operation: "landing", Runway: "25", Span: always},
+			{Line: 33, Kind: ExpectClosed, AlertKind: "headwind-loss", Operation: "landing", Runway: "07", Because: "not-observed", Span: Span{540, forever}},
+			{Line: 34, Kind: ExpectUnseen, AlertKind: "headwind-loss", Operation: "landing", Runway: "07", Span: Span{480, 540}},
+			{Line: 35, Kind: ExpectState, State: "not-observed", Operation: "landing", Runway: "07", Span: Span{240, 480}},
+			{Line: 36, Kind: ExpectUnobserved, FromM: 5000, ToM: -500, Operation: "landing", Runway: "07", Span: always},
+			{Line: 37, Kind: ExpectMissing, Mast: "far07", Operation: "landing", Runway: "07", Span: Span{540, forever}},
 		},
 	}
 	got, wanted := reflect.ValueOf(*s), reflect.ValueOf(*want)

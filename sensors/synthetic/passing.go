@@ -83,6 +83,28 @@ func (r *Rise) going(t float64) float64 {
 	return r.History.At(t)
 }
 
+// Aloft is another wind above a height, as over the cold air of a clear night:
+// what lies below does not feel it.
+type Aloft struct {
+	From, Speed   float64 // degrees true, m/s; the same at all heights above
+	Above         float64 // m; 0: there is none
+	Starts, Grows float64 // s: it takes the place of the wind below in this time
+}
+
+// over is the wind at the height z (m) at t (s), where it would be u, v without
+// another wind aloft.
+func (a *Aloft) over(u, v, z, t float64) (float64, float64) {
+	if a.Above <= 0 || z < a.Above || t <= a.Starts {
+		return u, v
+	}
+	share := 1.0
+	if a.Grows > 0 {
+		share = min((t-a.Starts)/a.Grows, 1)
+	}
+	wind := quantity.FromDirection(a.Speed, a.From)
+	return u + share*(wind.East-u), v + share*(wind.North-v)
+}
+
 // Veer is a slow turn of the mean wind: linear from Starts for Takes seconds.
 type Veer struct {
 	By            float64 // degrees, clockwise positive

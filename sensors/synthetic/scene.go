@@ -21,6 +21,7 @@ type Scene struct {
 	From, Speed float64 // mean wind at 10 m: where it comes from (degrees true), m/s
 	Roughness   float64 // length for the mean wind's log profile, m; 0 means 0.03 (open ground)
 	Veers       []Veer
+	Aloft       Aloft
 	Rises       []Rise
 	Fronts      []Front
 	Outflows    []Outflow
@@ -114,6 +115,7 @@ func (w *Weather) withoutEddies(x, y, z, t float64) (u, v float64) {
 		factor := math.Log(max(z, 1)/w.roughness) / math.Log(referenceHeight/w.roughness)
 		u, v = u*factor, v*factor
 	}
+	u, v = w.scene.Aloft.over(u, v, z, t)
 	for i := range w.scene.Outflows {
 		du, dv := w.scene.Outflows[i].Wind(x, y, z, t)
 		u, v = u+du, v+dv

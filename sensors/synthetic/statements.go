@@ -36,6 +36,21 @@ func (l *line) eddies(s *Scene) {
 	s.Eddies = e
 }
 
+// aloft: from ANGLE SPEED above LENGTH [starts T grows T].
+func (l *line) aloft(s *Scene) {
+	a := Aloft{}
+	l.options(map[string]func(){
+		"from": func() {
+			a.From = l.direction()
+			a.Speed = l.speed("the wind aloft", 0, maxGround)
+		},
+		"above":  func() { a.Above = l.length("the height", 2, 500) },
+		"starts": func() { a.Starts = l.seconds() },
+		"grows":  func() { a.Grows = l.seconds() },
+	}, "from", "above")
+	s.Aloft = a
+}
+
 // veer: ANGLE starts T takes T.
 func (l *line) veer(s *Scene) {
 	v := Veer{By: l.angle("the turn", -360, 360)}
