@@ -367,3 +367,42 @@ func BenchmarkReadDay(b *testing.B) {
 		})
 	}
 }
+
+// BenchmarkYear judges a year anew: the ten minutes of a scene over and over.
+func BenchmarkYear(b *testing.B) {
+	f := loadField(b)
+	for _, scene := range []string{"quiet", "gusty", "outflow-on-path"} {
+		dir, day, _, _ := keep(b, f, scene, f.levels())
+		content, err := os.ReadFile(filepath.Join(dir, judged.FileOf(day)))
+		if err != nil {
+			b.Fatal(err)
+		}
+		year := b.TempDir()
+		start := sensors.At(time.Date(2025, 1, 1, 0, 0, 0, 0, time.UTC))
+		size := 0
+		for d := range 365 {
+			at := start.Add(time.Duration(d) * 24 * time.Hour)
+			again := judged.Again(content, at)
+			size += len(again)
+			if err := os.WriteFile(filepath.Join(year, judged.FileOf(judged.DayOf(at))), again, 0o600); err != nil {
+				b.Fatal(err)
+			}
+		}
+		b.Run(scene, func(b *testing.B) {
+			steps := 0
+			for b.Loop() {
+				days, err := judged.Days(year)
+				if err != nil {
+					b.Fatal(err)
+				}
+				steps = 0
+				for _, day := range days {
+					steps += judgeDay(b, f, year, day)
+				}
+			}
+			b.ReportMetric(float64(b.N*steps)/b.Elapsed().Seconds(), "steps/s")
+			b.ReportMetric(float64(steps)/31_536_000, "years")
+			b.ReportMetric(float64(size)/1e6, "MB")
+		})
+	}
+}

@@ -23,6 +23,7 @@ type SummaryOptions struct {
 	Stations  []sensors.Station
 	Software  string
 	Progress  func(share float64) // told now and then; may be nil
+	Stop      func() bool         // asked now and then whether to give up; may be nil
 }
 
 // Summary is what a period amounts to.
@@ -142,8 +143,13 @@ func (u *Summary) readings(s *history.Store, o SummaryOptions) error {
 		if steps == 0 {
 			first = step.At - sensors.Second
 		}
-		if steps++; steps%4096 == 0 && o.Progress != nil {
-			o.Progress(float64(step.At-o.From) / float64(o.To-o.From))
+		if steps++; steps%4096 == 0 {
+			if o.Progress != nil {
+				o.Progress(float64(step.At-o.From) / float64(o.To-o.From))
+			}
+			if o.Stop != nil && o.Stop() {
+				return errStopped
+			}
 		}
 		for _, r := range step.Readings {
 			if st := stateOf(at, step.Stations, r.Station); st != nil {
@@ -168,7 +174,7 @@ func (u *Summary) readings(s *history.Store, o SummaryOptions) error {
 		}
 		return nil
 	})
-	if err != nil && steps == 0 {
+	if errors.Is(err, errStopped) || err != nil && steps == 0 {
 		return fmt.Errorf("sum a period up: %w", err)
 	}
 	u.fault(err)

@@ -41,7 +41,7 @@ func historySummaryCommand() command {
 					return err
 				}
 				bar := newProgress(p, "summary")
-				u, err := summarize(store, dir, begin, end, func(share float64) { bar.draw(func() float64 { return share }) })
+				u, err := summarize(ctx, store, dir, begin, end, func(share float64) { bar.draw(func() float64 { return share }) })
 				bar.end()
 				if err = errors.Join(err, done()); err != nil {
 					return err
@@ -72,7 +72,7 @@ func period(month string, from, to sensors.Instant) (begin, end sensors.Instant,
 
 // summarize sums a period up by the configuration that was last in force in
 // it.
-func summarize(store *history.Store, dir string, from, to sensors.Instant, progress func(float64)) (review.Summary, error) {
+func summarize(ctx context.Context, store *history.Store, dir string, from, to sensors.Instant, progress func(float64)) (review.Summary, error) {
 	all, err := configurationsOf(store)
 	if err != nil {
 		return review.Summary{}, fmt.Errorf("look for the configuration in the history: %w", err)
@@ -83,7 +83,7 @@ func summarize(store *history.Store, dir string, from, to sensors.Instant, progr
 	}
 	return review.Summarize(store, review.SummaryOptions{
 		Airfield: cfg.Airfield.Name, Directory: dir, From: from, To: to, Changes: changesOf(cfg), Stations: cfg.Stations,
-		Software: softwareText(), Progress: progress,
+		Software: softwareText(), Progress: progress, Stop: func() bool { return ctx.Err() != nil },
 	})
 }
 
