@@ -9,10 +9,11 @@ import (
 	"maps"
 	"net/http"
 	"net/http/httptest"
-	"net/url"
+	"os"
 	"path/filepath"
 	"slices"
 	"strings"
+	"sync"
 	"testing"
 
 	"sockline/alerting/attention"
@@ -108,20 +109,78 @@ type guarded struct {
 	keys     map[string]string
 }
 
+// userRoles are the users of these tests.
+func userRoles() map[string]access.Role {
+	return map[string]access.Role{"guest": access.Viewer, "keeper": access.Tower, "safety": access.Officer, "chief": access.Administrator}
+}
+
+// loggedIn is a gate with a session for each user.
+type loggedIn struct {
+	gate     *access.Gate
+	sessions map[string]access.Visitor
+	keys     map[string]string
+}
+
+// shared is one for all tests that neither log in nor out: passwords are made
+// to be slow.
+var shared = sync.OnceValue(func() *loggedIn {
+	dir, err := os.MkdirTemp("", "users")
+	if err != nil {
+		panic(err)
+	}
+	defer os.RemoveAll(dir)
+	l, err := logEverybodyIn(filepath.Join(dir, "users"))
+	if err != nil {
+		panic(err)
+	}
+	return l
+})
+
+func logEverybodyIn(path string) (*loggedIn, error) {
+	var users []access.User
+	for name, role := range userRoles() {
+		u, err := access.New(name, role, password)
+		if err != nil {
+			return nil, err
+		}
+		users = append(users, u)
+	}
+	if err := access.Write(path, users); err != nil {
+		return nil, err
+	}
+	gate, err := access.NewGate(path)
+	if err != nil {
+		return nil, err
+	}
+	l := &loggedIn{gate, map[string]access.Visitor{}, map[string]string{}}
+	for name := range userRoles() {
+		if l.keys[name], l.sessions[name], err = gate.LogIn(context.Background(), name, password, "192.0.2.1", noon); err != nil {
+			return nil, err
+		}
+	}
+	return l, nil
+}
+
 func guard(t *testing.T) *guarded {
 	t.Helper()
-	g := &guarded{deeds: &deeds{}, sessions: map[string]access.Visitor{}, keys: map[string]string{}}
-	roles := map[string]access.Role{"guest": access.Viewer, "keeper": access.Tower, "safety": access.Officer, "chief": access.Administrator}
-	gate := gateOf(t, roles)
-	g.Page, _ = serve(t, sample(0), func(o *Options) { o.Gate, o.People = gate, g.deeds })
-	for name := range roles {
-		key, v, err := gate.LogIn(t.Context(), name, password, "192.0.2.1", noon)
-		if err != nil {
-			t.Fatal(err)
-		}
-		g.sessions[name], g.keys[name] = v, key
-	}
+	return guardWith(t, shared())
+}
+
+func guardWith(t *testing.T, l *loggedIn) *guarded {
+	t.Helper()
+	g := &guarded{deeds: &deeds{}, sessions: l.sessions, keys: l.keys}
+	g.Page, _ = serve(t, sample(0), func(o *Options) { o.Gate, o.People = l.gate, g.deeds })
 	return g
+}
+
+// guardAlone is guard for a test that logs in.
+func guardAlone(t *testing.T) *guarded {
+	t.Helper()
+	l, err := logEverybodyIn(filepath.Join(t.TempDir(), "users"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	return guardWith(t, l)
 }
 
 // request is one request in a matrix.
@@ -185,7 +244,7 @@ func everyDeed() map[string]struct {
 // TestWhoMayDoWhat: everybody may do what their role does, once, under their
 // own name, and nothing else; nobody who is not logged in may do anything.
 func TestWhoMayDoWhat(t *testing.T) {
-	g := guard(t)
+	g := guardAlone(t)
 	for path, d := range everyDeed() {
 		for name, v := range g.sessions {
 			g.deeds.did = nil
@@ -350,92 +409,6 @@ func TestWhoMayRead(t *testing.T) {
 			if r := g.ask(q); r.StatusCode != 200 {
 				t.Errorf("%v: answer %d", q, r.StatusCode)
 			}
-		}
-	}
-}
-
-// form posts the form of the log-in.
-func (g *guarded) form(path, from string, header map[string]string, values url.Values) *http.Response {
-	h := map[string]string{"Content-Type": "application/x-www-form-urlencoded"}
-	maps.Copy(h, header)
-	return g.ask(request{method: "POST", path: path, body: values.Encode(), from: from, header: h})
-}
-
-func TestLogIn(t *testing.T) {
-	g := guard(t)
-	good := url.Values{"name": {" Keeper "}, "password": {password}, "next": {"/past?x=1"}}
-	r := g.form("/login", "192.0.2.9", nil, good)
-	cookies := r.Cookies()
-	if r.StatusCode != 303 || r.Header.Get("Location") != "/past?x=1" || len(cookies) != 1 {
-		t.Fatalf("answer %d to %s with %v", r.StatusCode, r.Header.Get("Location"), cookies)
-	}
-	c := cookies[0]
-	if c.Name != cookiePlain || !c.HttpOnly || c.SameSite != http.SameSiteStrictMode || c.MaxAge != 12*3600 || c.Path != "/" || c.Domain != "" || len(c.Value) < 43 {
-		t.Errorf("cookie %+v", c)
-	}
-	v := g.Page.opts.Gate.Visitor(c.Value, noon)
-	if v.Name != "keeper" {
-		t.Fatalf("the session is that of %+v", v)
-	}
-	// Out again, and only with the token.
-	out := map[string]string{"Cookie": cookiePlain + "=" + c.Value}
-	if r := g.form("/logout", "", out, nil); r.StatusCode != 403 {
-		t.Errorf("out without a token: answer %d", r.StatusCode)
-	}
-	r = g.form("/logout", "", out, url.Values{"token": {v.Token}})
-	if after := g.Page.opts.Gate.Visitor(c.Value, noon); r.StatusCode != 303 || r.Cookies()[0].MaxAge >= 0 || after.Name != "" {
-		t.Errorf("out: answer %d, then %+v", r.StatusCode, after)
-	}
-	want := []Access{{"keeper", "log-in as tower", "192.0.2.9", true}, {"keeper", "log-out", "127.0.0.1", true}}
-	if !slices.Equal(g.deeds.audited, want) {
-		t.Errorf("kept: %v", g.deeds.audited)
-	}
-}
-
-func TestLogInRefused(t *testing.T) {
-	g := guard(t)
-	values := func(name, password string) url.Values { return url.Values{"name": {name}, "password": {password}} }
-	for _, tt := range []struct {
-		values url.Values
-		who    string
-	}{
-		{values("keeper", "gannet over the sea"), "keeper"}, {values("nobody", password), "nobody"},
-		{values("", ""), ""}, {values(password, ""), ""}, // typed into the wrong field
-	} {
-		g.deeds.audited = nil
-		r := g.form("/login", "", nil, tt.values)
-		if body := text(t, r); r.StatusCode != 403 || len(r.Cookies()) != 0 || !strings.Contains(body, "name or the password is wrong") {
-			t.Errorf("%v: answer %d %v", tt.values, r.StatusCode, r.Cookies())
-		}
-		if !slices.Equal(g.deeds.audited, []Access{{tt.who, "log-in refused", "127.0.0.1", false}}) {
-			t.Errorf("%v: kept %v", tt.values, g.deeds.audited)
-		}
-	}
-	if r := g.form("/login", "", map[string]string{"Sec-Fetch-Site": "cross-site"}, values("keeper", password)); r.StatusCode != 403 || len(r.Cookies()) != 0 {
-		t.Errorf("from a foreign page: answer %d", r.StatusCode)
-	}
-	refused := 0
-	for range 20 {
-		r := g.form("/login", "192.0.2.66", nil, values("keeper", "wrong and wrong again"))
-		if r.StatusCode == 429 && r.Header.Get("Retry-After") != "" {
-			refused++
-		}
-	}
-	if refused != 15 {
-		t.Errorf("%d of 20 tries were refused unseen, want 15", refused)
-	}
-	if r := g.form("/login", "192.0.2.66", nil, values("keeper", password)); r.StatusCode != 429 {
-		t.Errorf("the right password after too many tries: answer %d", r.StatusCode)
-	}
-}
-
-func TestNextStaysHere(t *testing.T) {
-	for to, want := range map[string]string{
-		"": "/", "/": "/", "/past?a=b": "/past?a=b", "https://elsewhere.example/": "/", "//elsewhere.example": "/", "/\\elsewhere.example": "/",
-		"javascript:alert(1)": "/", "/login": "/", "past": "/", "/%2f/elsewhere.example": "/", "/a\r\nSet-Cookie: x": "/",
-	} {
-		if got := next(to); got != want {
-			t.Errorf("next %q is %q, want %q", to, got, want)
 		}
 	}
 }

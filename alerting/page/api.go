@@ -7,7 +7,9 @@ import (
 	"net"
 	"net/http"
 	"net/url"
+	"slices"
 	"strconv"
+	"strings"
 	"time"
 
 	"github.com/prometheus/client_golang/prometheus/promhttp"
@@ -24,8 +26,8 @@ func (p *Page) routes() *http.ServeMux {
 	mux.HandleFunc("GET /api/v1/stream", p.stream)
 	mux.HandleFunc("GET /api/v1/layout", p.layout)
 	mux.HandleFunc("GET /api/v1/stations", p.stations)
-	mux.HandleFunc("GET /api/v1/events", p.events)
-	mux.HandleFunc("GET /api/v1/events/{id}", p.event)
+	mux.HandleFunc("GET /api/v1/basis", p.basis)
+	p.pastRoutes(mux)
 	mux.Handle("GET /metrics", promhttp.HandlerFor(p.opts.Registry, promhttp.HandlerOpts{}))
 	mux.HandleFunc("GET /healthz", p.health)
 	mux.HandleFunc("GET /readyz", p.ready)
@@ -126,9 +128,17 @@ func (p *Page) stations(w http.ResponseWriter, _ *http.Request) {
 		Stations: make([]json.RawMessage, 0, len(v.Stations)), Exercise: p.exercise(v), Notice: alerting.Notice,
 	}
 	for _, x := range v.Stations {
-		b.Stations = append(b.Stations, x.JSON)
+		b.Stations = append(b.Stations, x.whole(b.At))
 	}
 	p.json(w, http.StatusOK, "application/json", b)
+}
+
+// whole is the health of a mast with what is remembered of it, up to a time.
+func (s *Station) whole(until string) json.RawMessage {
+	if n := len(s.JSON); len(s.More) > 0 && n > 2 {
+		return slices.Concat(s.JSON[:n-1], []byte(`,"gaps_until":"`+until+`",`), s.More, []byte("}"))
+	}
+	return s.JSON
 }
 
 // exercise reports whether what is shown is an exercise: the whole program, or
@@ -152,14 +162,15 @@ func (p *Page) events(w http.ResponseWriter, r *http.Request) {
 		p.internal(w, "list events", err)
 		return
 	}
-	if events == nil {
-		events = []json.RawMessage{} // an empty list, not null
+	highest := make(map[string]string, len(events))
+	for _, e := range events {
+		highest[e.ID] = e.Highest.String()
 	}
 	p.json(w, http.StatusOK, "application/json", struct {
-		Events   []json.RawMessage `json:"events"`
-		Exercise bool              `json:"exercise"`
-		Notice   string            `json:"notice"`
-	}{events, p.exercise(p.opts.View()), alerting.Notice})
+		Events  []json.RawMessage `json:"events"`
+		Highest map[string]string `json:"highest_level"` // that each had, by id
+		marks
+	}{ready(events, func(e Event) []byte { return e.Object }), highest, p.marks()})
 }
 
 // eventQuery reads a query strictly: a misspelt name must not look like an
@@ -196,14 +207,38 @@ func eventQuery(raw string) (EventQuery, error) {
 				return q, fmt.Errorf("open=%q: write open=true for the open ones, or leave it out", value)
 			}
 			q.Open = true
+		case "runway":
+			q.Runway = value
+		case "operation", "kind", "cause":
+			if !slices.Contains(choices(name), value) {
+				return q, fmt.Errorf("%s=%q: choose %s", name, value, strings.Join(choices(name), ", "))
+			}
+			*map[string]*string{"operation": &q.Operation, "kind": &q.Kind, "cause": &q.Cause}[name] = value
+		case "level":
+			level, ok := alerting.LevelOf(value)
+			if !ok {
+				return q, fmt.Errorf("level=%q: choose noticeable, large or beyond-margin; higher ones count, too", value)
+			}
+			q.Level = level
 		default:
-			return q, fmt.Errorf("there is no parameter %q; there are from, to, limit and open", name)
+			return q, fmt.Errorf("there is no parameter %q; there are from, to, limit, open, runway, operation, kind, level and cause", name)
 		}
 	}
 	if q.From != 0 && q.To != 0 && q.From >= q.To {
 		return q, errors.New("from must be before to")
 	}
 	return q, nil
+}
+
+// choices are the words that a parameter takes.
+func choices(name string) []string {
+	switch name {
+	case "operation":
+		return []string{"landing", "take-off"}
+	case "kind":
+		return []string{"headwind-loss", "headwind-gain", "wind-shift", "vertical-shear", "crosswind", "tailwind"}
+	}
+	return []string{"outflow", "gust-front", "unresolved"}
 }
 
 func (p *Page) event(w http.ResponseWriter, r *http.Request) {

@@ -21,6 +21,7 @@ import (
 	"github.com/prometheus/client_golang/prometheus"
 	"github.com/rs/zerolog"
 
+	"sockline/alerting"
 	"sockline/alerting/page/access"
 	"sockline/sensors"
 )
@@ -33,6 +34,18 @@ type EventQuery struct {
 	From, To sensors.Instant // opened at or after From and before To
 	Open     bool            // only those still open
 	Limit    int             // at most so many, the newest
+
+	// Empty ones do not matter.
+	Runway, Operation string
+	Kind, Cause       string
+	Level             alerting.Level // at least, at any time
+}
+
+// Event is one event as it is listed.
+type Event struct {
+	ID      string
+	Highest alerting.Level // that it had
+	Object  []byte         // its newest alert object
 }
 
 // ErrNoEvent is what History.Event returns for an id it does not know.
@@ -41,8 +54,8 @@ var ErrNoEvent = errors.New("there is no event with this id")
 // History is the record of past events, as much of it as the page needs. Its
 // methods are called from many goroutines.
 type History interface {
-	// Events lists events as JSON objects, the newest first.
-	Events(q EventQuery) ([]json.RawMessage, error)
+	// Events lists events, the newest first.
+	Events(q EventQuery) ([]Event, error)
 	// Event is every issue of one event as JSON objects, the oldest first;
 	// ErrNoEvent if the id is unknown.
 	Event(id string) ([]json.RawMessage, error)
@@ -59,6 +72,8 @@ type Options struct {
 	Gate     *access.Gate // who may do it; nil: nobody, and others than this machine see nothing
 	TLS      *tls.Config  // nil: unencrypted, and on this machine only
 	History  History
+	Review   Review       // nil: nothing is worked out from the history
+	Basis    func() Basis // nil: it does not say what it runs by
 	Registry *prometheus.Registry
 	Ready    func() []string  // why the program is not ready; nil: it is
 	Now      func() time.Time // wall time
@@ -74,6 +89,7 @@ type Page struct {
 	foreign *http.CrossOriginProtection
 
 	streams chan struct{} // holds one for each open stream
+	work    chan struct{} // holds one while something is worked out from the history
 	ending  chan struct{} // closed when the server ends
 	body    bodyCache
 }
@@ -97,7 +113,7 @@ func New(o Options) (*Page, error) {
 	p := &Page{
 		opts: o, glass: g,
 		foreign: http.NewCrossOriginProtection(),
-		streams: make(chan struct{}, maxStreams), ending: make(chan struct{}),
+		streams: make(chan struct{}, maxStreams), ending: make(chan struct{}), work: make(chan struct{}, 1),
 	}
 	p.mux = p.routes()
 	return p, nil

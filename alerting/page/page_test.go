@@ -27,12 +27,12 @@ var noon = time.Date(2026, 7, 1, 14, 15, 41, 0, time.UTC)
 // events is a History in memory.
 type events struct {
 	asked EventQuery
-	list  []json.RawMessage
+	list  []Event
 	known map[string][]json.RawMessage
 	err   error
 }
 
-func (e *events) Events(q EventQuery) ([]json.RawMessage, error) { e.asked = q; return e.list, e.err }
+func (e *events) Events(q EventQuery) ([]Event, error) { e.asked = q; return e.list, e.err }
 
 func (e *events) Event(id string) ([]json.RawMessage, error) {
 	if e.err != nil {
@@ -66,9 +66,9 @@ func sample(age time.Duration) *View {
 			{"a2", alerting.HeadwindGain, alerting.Noticeable, false, "The headwind rises by about 12 kt (9 to 15) after take-off from runway 25. Not observed now: last measured at 14:14:02 UTC.", []byte(`{"id":"a2"}`)},
 		},
 		Stations: []Station{
-			{"touch07", "live", true, "0.4 s old", []byte(`{"id":"touch07"}`)},
-			{"far07", "stale", false, "last heard 14:12:09 UTC", []byte(`{"id":"far07"}`)},
-			{"final07", "live", true, "0.6 s old", []byte(`{"id":"final07"}`)},
+			{"touch07", "live", true, "0.4 s old", []byte(`{"id":"touch07"}`), nil},
+			{"far07", "stale", false, "last heard 14:12:09 UTC", []byte(`{"id":"far07"}`), nil},
+			{"final07", "live", true, "0.6 s old", []byte(`{"id":"final07"}`), nil},
 		},
 		StatusJSON: []byte(`{"condition":"partly-observing"}`),
 	}
@@ -192,12 +192,16 @@ func TestEvents(t *testing.T) {
 		{"?from=yesterday", EventQuery{}, "write it as 2026-07-01T14:00:00Z"},
 		{"?from=2026-07-01T14:00:00Z&to=2026-07-01T14:00:00Z", EventQuery{}, "from must be before to"},
 		{"?open=yes", EventQuery{}, "open=true"},
+		{"?runway=07&operation=landing&kind=headwind-loss&cause=outflow&level=large", EventQuery{Limit: 100, Runway: "07", Operation: "landing",
+			Kind: "headwind-loss", Cause: "outflow", Level: alerting.Large}, ""},
+		{"?operation=approach", EventQuery{}, "choose landing, take-off"},
+		{"?level=3", EventQuery{}, "choose noticeable"},
 		{"?opened=true", EventQuery{}, `no parameter "opened"`},
 		{"?a;b", EventQuery{}, "well formed"},
 	}
 	for _, tt := range tests {
 		t.Run(tt.query, func(t *testing.T) {
-			h := &events{list: []json.RawMessage{json.RawMessage(`{"id":"e1"}`)}}
+			h := &events{list: []Event{{"e1", alerting.Large, []byte(`{"id":"e1"}`)}}}
 			p, _ := serve(t, sample(0), func(o *Options) { o.History = h })
 			r := get(p, "/api/v1/events"+tt.query)
 			m := object(t, r)
@@ -207,7 +211,7 @@ func TestEvents(t *testing.T) {
 				}
 				return
 			}
-			if r.StatusCode != 200 || h.asked != tt.want || fmt.Sprint(m["events"]) != "[map[id:e1]]" {
+			if r.StatusCode != 200 || h.asked != tt.want || fmt.Sprint(m["events"]) != "[map[id:e1]]" || fmt.Sprint(m["highest_level"]) != "map[e1:large]" {
 				t.Errorf("answer %d, asked %+v, events %v; want 200, %+v", r.StatusCode, h.asked, m["events"], tt.want)
 			}
 		})

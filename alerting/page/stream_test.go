@@ -325,7 +325,8 @@ func TestStuckReadersAreCut(t *testing.T) {
 	if d := time.Duration(latest.Load()); d > 15*time.Second {
 		t.Errorf("the last stuck reader was cut after %s, want 15 s at most", d)
 	}
-	if slowest > 100*time.Millisecond {
+	// Far below what a stuck reader takes; a busy machine alone costs some.
+	if slowest > time.Second {
 		t.Errorf("a writer waited %s", slowest)
 	}
 	t.Logf("stuck readers cut after %s at the latest; writers waited %s at most", time.Duration(latest.Load()), slowest)

@@ -92,4 +92,5 @@ type Station struct {
 	Live     bool
 	Sentence string
 	JSON     []byte // the health object
+	More     []byte // further members of it, for who asks for the stations
 }

@@ -72,6 +72,8 @@ type daemon struct {
 	archive  *archive
 	board    *board
 	people   *people
+	started  time.Time
+	inForce  atomic.Int64 // the first step under the configuration, an Instant; 0 before it is known
 	metrics  *metrics
 	loop     *loop
 	output   *outward
@@ -89,7 +91,7 @@ type daemon struct {
 // newDaemon makes a daemon and takes the addresses it listens on. It must be
 // run, or closed.
 func newDaemon(cfg *config.Config, o daemonOptions) (*daemon, error) {
-	d := &daemon{opts: o, log: o.log, instance: o.instance, listening: make(chan struct{}), pruning: make(chan struct{}, 1)}
+	d := &daemon{opts: o, log: o.log, instance: o.instance, started: time.Now(), listening: make(chan struct{}), pruning: make(chan struct{}, 1)}
 	d.cfg.Store(cfg)
 	if d.opts.notify == nil {
 		d.opts.notify = &notifier{}
@@ -268,6 +270,7 @@ func (d *daemon) openHistory(ctx context.Context) {
 	// With the first step that it judges: what an earlier run judged later than
 	// this start would count from is done.
 	first := max(d.loop.engine.LastStep(), takenUp(now, d.loop.engine.Lateness())) + sensors.Second
+	d.inForce.Store(int64(first))
 	d.archive.record(history.Entry{Kind: history.KindConfiguration, At: first, Payload: d.current().Source})
 	d.archive.record(history.Entry{Kind: history.KindStart, At: now, Payload: []byte(d.instance)})
 	d.archive.opened = d.recordLate

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"bytes"
 	"context"
 	"encoding/json"
 	"errors"
@@ -10,6 +11,7 @@ import (
 
 	"github.com/rs/zerolog"
 
+	"sockline/alerting"
 	"sockline/alerting/history"
 	"sockline/alerting/page"
 	"sockline/alerting/wording"
@@ -207,13 +209,13 @@ func (a *archive) reading() (*history.Store, error) {
 }
 
 // Events lists events for the page.
-func (a *archive) Events(q page.EventQuery) ([]json.RawMessage, error) {
+func (a *archive) Events(q page.EventQuery) ([]page.Event, error) {
 	s, err := a.reading()
 	if err != nil {
 		return nil, err
 	}
 	f := history.Filter{From: q.From, To: q.To, Open: q.Open}
-	if q.From == 0 {
+	if q.From == 0 && !selects(q) {
 		f.Limit = q.Limit
 	}
 	// The store counts an event by when it was open, the page by when it
@@ -225,17 +227,59 @@ func (a *archive) Events(q page.EventQuery) ([]json.RawMessage, error) {
 	if err != nil { // some are damaged; the others can be shown
 		a.log.Error().Err(err).Msg("some events cannot be read")
 	}
-	var out []json.RawMessage
+	var out []page.Event
 	for _, e := range found {
-		if e.Opened < q.From {
-			continue
-		}
 		if q.Limit > 0 && len(out) == q.Limit {
 			break
 		}
-		out = append(out, e.Object)
+		if e.Opened < q.From || !fits(q, e.Object) {
+			continue
+		}
+		highest := highestLevel(s, e)
+		if highest < q.Level {
+			continue
+		}
+		out = append(out, page.Event{ID: e.ID, Highest: highest, Object: e.Object})
 	}
 	return out, nil
+}
+
+// selects reports whether a query looks into the events.
+func selects(q page.EventQuery) bool {
+	return q.Runway != "" || q.Operation != "" || q.Kind != "" || q.Cause != "" || q.Level > alerting.NoLevel
+}
+
+// fits reports whether an alert object is one of those that are asked for.
+func fits(q page.EventQuery, object []byte) bool {
+	if q.Runway == "" && q.Operation == "" && q.Kind == "" && q.Cause == "" {
+		return true
+	}
+	var said struct{ Runway, Operation, Kind, Cause string }
+	if json.Unmarshal(object, &said) != nil {
+		return false
+	}
+	same := func(want, is string) bool { return want == "" || want == is }
+	return same(q.Runway, said.Runway) && same(q.Operation, said.Operation) && same(q.Kind, said.Kind) && same(q.Cause, said.Cause)
+}
+
+// highestLevel is the highest level that an event had: its newest object may
+// tell of a lower one. What of it cannot be read is passed over.
+func highestLevel(s *history.Store, e history.EventSummary) alerting.Level {
+	objects := [][]byte{e.Object}
+	if whole, err := s.Event(e.ID); err == nil {
+		objects = whole.Objects
+	}
+	highest := alerting.NoLevel
+	for _, o := range objects {
+		// The keys of an object and their order are a contract, and reading all
+		// of it would cost ten times as much.
+		_, rest, _ := bytes.Cut(o, []byte(`"level":"`))
+		word, _, _ := bytes.Cut(rest, []byte(`"`))
+		if l, ok := alerting.LevelOf(string(word)); ok {
+			highest = max(highest, l)
+		}
+	}
+	return highest
 }
 
 // Event is every issue of one event for the page.

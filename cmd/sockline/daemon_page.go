@@ -27,6 +27,7 @@ func (d *daemon) servePage(ctx context.Context) error {
 	o := page.Options{
 		Airfield: cfg.Airfield.Name, Listen: d.listener.Addr().String(), Exercise: d.opts.exercise,
 		View: d.board.view.Load, Tape: d.board.tape, People: d.people, History: d.archive, Registry: d.metrics.registry,
+		Review: newReviewer(d), Basis: d.basis,
 		Ready: d.notReady, Now: time.Now, Log: d.log,
 	}
 	var err error

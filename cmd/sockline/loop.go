@@ -101,6 +101,9 @@ func (l *loop) take(m sensors.Message) {
 		l.capture.take(m)
 	}
 	station, _, err := l.engine.Receive(m)
+	if err != nil && station >= 0 {
+		l.reporter.memories[station].reject(m.Received, m.Payload, err)
+	}
 	if err != nil && worthLogging(err) {
 		l.complain(station, m, err)
 	}

@@ -34,7 +34,7 @@ type deedObject struct {
 	Runway     *string  `json:"runway,omitempty"`
 	Operation  string   `json:"operation,omitempty"`
 	Felt       string   `json:"felt,omitempty"`
-	FeltAt     string   `json:"felt_at,omitempty"`
+	Entered    string   `json:"entered,omitempty"`   // when a report was written down; at is when it was felt
 	AmountKt   *float64 `json:"amount_kt,omitempty"` // null or missing: unknown
 	FromM      *float64 `json:"from_m,omitempty"`
 	ToM        *float64 `json:"to_m,omitempty"`
@@ -59,14 +59,15 @@ func deedOf(r history.Record) (o deedObject, err error) {
 		o.Who, o.Event, o.Text, err = n.Who, n.Event, n.Text, fault
 	case history.KindAcknowledge:
 		a, fault := r.Acknowledgement()
-		o.Who, o.Occurrence, err = a.Who, a.Occurrence, fault
+		o.Kind, o.Who, o.Occurrence, err = "acknowledgement", a.Who, a.Occurrence, fault
 	case history.KindShelve:
 		s, fault := r.Shelving()
-		o.Who, o.Occurrence, o.Reason, o.Until, o.Ended, o.Why, err = s.Who, s.Occurrence, s.Reason, moments(s.Until), &s.Ended, s.Why, fault
+		o.Kind, o.Who, o.Occurrence, o.Reason, o.Until, o.Ended, o.Why, err = "shelving", s.Who, s.Occurrence, s.Reason, moments(s.Until), &s.Ended, s.Why, fault
 	case history.KindPilotReport:
 		p, fault := r.PilotReport()
 		o.Who, o.ID, o.Event, o.Text, o.Runway, o.Operation, err = p.Who, p.ID, p.Event, p.Text, &p.Runway, p.Operation, fault
-		o.Felt, o.FeltAt, o.FromM, o.ToM, o.GoAround, o.Aircraft = p.Felt, seconds(p.At), p.FromM, p.ToM, &p.GoAround, p.Aircraft
+		o.Felt, o.Entered, o.FromM, o.ToM, o.GoAround, o.Aircraft = p.Felt, o.At, p.FromM, p.ToM, &p.GoAround, p.Aircraft
+		o.At = seconds(p.At)
 		if p.Amount != 0 {
 			o.AmountKt = pointer(decimals(p.Amount/quantity.Knot, 1))
 		}

@@ -28,6 +28,7 @@ type change struct {
 // The configuration goes into the journal with the first step under it.
 func (l *loop) put(c change) {
 	before := l.cfg
+	c.next.reporter.remember(l.reporter)
 	l.held = append(l.held, l.engine.Reload(c.next.engine)...)
 	l.cfg, l.words, l.ids, l.reporter = c.next.cfg, c.next.words, c.next.ids, c.next.reporter
 	first := l.engine.LastStep() + sensors.Second
@@ -83,6 +84,7 @@ func (d *daemon) reload(ctx context.Context, path string) (sensors.Instant, erro
 // loop, between two steps, and waits for nothing.
 func (d *daemon) follow(before, now *config.Config) {
 	d.cfg.Store(now)
+	d.inForce.Store(int64(d.loop.engine.LastStep() + sensors.Second))
 	d.archive.retain(now.History.Keep)
 	d.tell.follow(now)
 	stays := make(map[string]bool)

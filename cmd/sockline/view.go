@@ -36,6 +36,7 @@ type report struct {
 	Profiles, Outflows []json.RawMessage
 	// Fronts and Vertical are the objects of the fronts and of the columns of air.
 	Fronts, Vertical []json.RawMessage
+	More             [][]byte // by station: what is remembered of it
 	// SharedClock is how far all stations are ahead of this host's clock.
 	SharedClock time.Duration
 	Why         []string // of each notice, for the log
@@ -50,7 +51,8 @@ type reporter struct {
 	rejected  []uint64          // by station
 	winds     []*windObject     // by station, nil where there is none
 	variation func(sensors.Instant) (float64, error)
-	layout    layout               // as of the day of its variation
+	layout    layout // as of the day of its variation
+	memories  []*mastMemory
 	points    []shear.ProfilePoint // reused
 }
 
@@ -63,6 +65,9 @@ type endMast struct {
 
 func newReporter(cfg *config.Config, exercise bool) *reporter {
 	r := &reporter{cfg: cfg, exercise: exercise, rejected: make([]uint64, len(cfg.Stations))}
+	for range cfg.Stations {
+		r.memories = append(r.memories, &mastMemory{})
+	}
 	r.variation = func(t sensors.Instant) (float64, error) { return cfg.Airfield.Variation(t.Time()) }
 	for _, rw := range cfg.Airfield.Runways {
 		for _, e := range rw.Ends {
@@ -90,6 +95,8 @@ func (r *reporter) of(e *engine.Engine, res *engine.Result) *report {
 		if h.Live {
 			out.Live++
 		}
+		r.memories[i].step(res.At, h.Live)
+		out.More = append(out.More, r.memories[i].object())
 		out.Stations = append(out.Stations, h)
 	}
 	switch {
@@ -201,7 +208,7 @@ func viewOf(rep *report, status *wording.Status, made time.Time) *page.View {
 	for i := range rep.Stations {
 		h := &rep.Stations[i]
 		v.Stations = append(v.Stations, page.Station{
-			ID: h.ID, State: h.State, Live: h.Live, Sentence: h.sentence(), JSON: h.object(),
+			ID: h.ID, State: h.State, Live: h.Live, Sentence: h.sentence(), JSON: h.object(), More: rep.More[i],
 		})
 		switch {
 		case !h.Live:
