@@ -78,6 +78,17 @@ func newEddyField(e Eddies, carriedU, carriedV float64, rng *rand.Rand) *eddyFie
 	return f
 }
 
+// Covariance is that of one component at two places dx, dy metres apart, tau
+// seconds apart, in m2/s2: the closed form of eddyField. The places are counted
+// in the frame that moves with the wind.
+func (e Eddies) Covariance(dx, dy, tau float64) float64 {
+	if e.Deviation <= 0 {
+		return 0
+	}
+	h := (dx*dx + dy*dy) / (2 * e.Length * e.Length)
+	return e.Deviation * e.Deviation * (1 - h) * math.Exp(-h-tau*tau/(2*e.Time*e.Time))
+}
+
 // eddyRadius inverts the distribution 1 - (1 + h) exp(-h), h = rho^2/2, of the
 // relative wave number by bisection.
 func eddyRadius(p float64) float64 {

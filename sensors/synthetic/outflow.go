@@ -89,10 +89,7 @@ func (h History) decaying(t float64) float64 {
 // Wind is the outflow's wind at x, y (m) and height z (m), t seconds after the
 // start of the scene.
 func (o *Outflow) Wind(x, y, z, t float64) (u, v float64) {
-	share := o.History.At(t)
-	if o.Model == ModelHolmesOliver {
-		share = o.History.decaying(t)
-	}
+	share := o.Share(t)
 	if share == 0 {
 		return 0, 0
 	}
@@ -160,4 +157,19 @@ func (o *Outflow) profile(z float64) float64 {
 	}
 	scale := height / obPeakHeight
 	return math.Exp(-z/scale) - math.Exp(-z/(obLayer*scale))
+}
+
+// Share is how much of the full strength has come at t, from 0 to 1, seconds
+// from the start of the scene.
+func (o *Outflow) Share(t float64) float64 {
+	if o.Model == ModelHolmesOliver {
+		return o.History.decaying(t)
+	}
+	return o.History.At(t)
+}
+
+// Centre is where the outflow stands at t, m.
+func (o *Outflow) Centre(t float64) (x, y float64) {
+	age := t - o.History.Starts
+	return o.X + o.MotionX*age, o.Y + o.MotionY*age
 }

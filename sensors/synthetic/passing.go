@@ -121,3 +121,9 @@ func (v Veer) At(t float64) float64 {
 	}
 	return v.By * (t - v.Starts) / v.Takes
 }
+
+// Reaches is when the middle of the front passes x, y, in seconds from the
+// start of the scene.
+func (f *Front) Reaches(x, y float64) float64 {
+	return f.Passes - f.behind(x, y, f.Passes)/f.Speed
+}
