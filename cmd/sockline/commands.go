@@ -48,6 +48,7 @@ func commands() []command {
 		runCommand(),
 		checkCommand(),
 		simulateCommand(),
+		surveyCommand(),
 		recordCommand(),
 		replayCommand(),
 		tryCommand(),

@@ -160,7 +160,7 @@ var flow = [...][]string{
 	{"alerting/lifecycle"},
 	{"alerting/wording", "alerting/engine"},
 	{"alerting/attention", "alerting/page/access"},
-	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page", "alerting/judged"},
+	{"alerting/history", "alerting/publish", "alerting/publish/cap", "alerting/publish/webhook", "alerting/page", "alerting/judged", "alerting/survey"},
 	{"alerting/history/export", "alerting/history/backup"},
 	{"alerting/history/bundle"},
 	{"alerting/review"},

@@ -24,6 +24,7 @@ type progress struct {
 	label      string
 	began, was time.Time
 	calls      uint
+	left       bool // say how long it will take, too
 	drawn      bool
 }
 
@@ -35,6 +36,12 @@ func newProgress(p *program, label string) *progress {
 		g.began = g.now()
 		g.was = g.began
 	}
+	return g
+}
+
+// withLeft also says how long the rest will take.
+func (g *progress) withLeft() *progress {
+	g.left = true
 	return g
 }
 
@@ -62,11 +69,28 @@ func (g *progress) draw(share func() float64) {
 	done := min(max(share(), 0), 1)
 	n := int(done * progressWidth)
 	fmt.Fprintf(g.out, "\r%s [%s%s] %3.0f %%", g.label, strings.Repeat("=", n), strings.Repeat(" ", progressWidth-n), done*100)
+	if g.left && done > 0 {
+		fmt.Fprintf(g.out, ", %-*s", leftWidth, timeLeft(time.Duration(float64(now.Sub(g.began))*(1-done)/done)))
+	}
+}
+
+// leftWidth is the length of the longest words of timeLeft.
+const leftWidth = 18
+
+// timeLeft is how long something will take, in words.
+func timeLeft(d time.Duration) string {
+	switch {
+	case d < time.Minute:
+		return fmt.Sprintf("%d s left", max(int(d.Seconds()), 1))
+	case d < 2*time.Hour:
+		return fmt.Sprintf("%.0f min left", d.Minutes())
+	}
+	return fmt.Sprintf("%.0f h left", d.Hours())
 }
 
 // end wipes the bar away.
 func (g *progress) end() {
 	if g.drawn {
-		fmt.Fprintf(g.out, "\r%s\r", strings.Repeat(" ", len(g.label)+progressWidth+9))
+		fmt.Fprintf(g.out, "\r%s\r", strings.Repeat(" ", len(g.label)+progressWidth+11+leftWidth))
 	}
 }

@@ -1,0 +1,6 @@
+//go:build race
+
+package survey
+
+// racing: the race detector makes an engine ten times as slow.
+const racing = true
