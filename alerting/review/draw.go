@@ -132,13 +132,16 @@ func (e *Event) planPath(s *sheet, x, y func(float64) float64) {
 	for _, o := range e.observed {
 		stroke(o.From, o.To, `stroke="`+ink+`" stroke-width="1.6"`)
 	}
-	colour, word := fallColour, "fell"
-	if e.Kind == string(alerting.HeadwindGain) {
-		colour, word = riseColour, "rose"
+	colour, words := ink, e.Kind
+	switch e.Kind {
+	case string(alerting.HeadwindLoss):
+		colour, words = fallColour, fmt.Sprintf("the headwind fell by about %.0f kt here", math.Abs(e.Worst.ChangeKt))
+	case string(alerting.HeadwindGain):
+		colour, words = riseColour, fmt.Sprintf("the headwind rose by about %.0f kt here", math.Abs(e.Worst.ChangeKt))
 	}
 	stroke(e.Worst.FromM, e.Worst.ToM, `stroke="`+colour+`" stroke-width="5" stroke-opacity="0.85"`)
 	mx, my := p.At((e.Worst.FromM + e.Worst.ToM) / 2)
-	s.text(min(max(x(mx), 110), 610), y(my)-14, "middle", fmt.Sprintf("the headwind %s by about %.0f kt here", word, math.Abs(e.Worst.ChangeKt)))
+	s.text(min(max(x(mx), 110), 610), y(my)-14, "middle", words)
 }
 
 // mast draws a mast and the way its wind blows, 1 px for each knot and some.

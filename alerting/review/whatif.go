@@ -3,6 +3,7 @@ package review
 import (
 	"fmt"
 	"reflect"
+	"slices"
 	"time"
 
 	"sockline/alerting/hazard"
@@ -31,6 +32,7 @@ type Rejudger struct {
 	last    sensors.Instant
 	found   []hazard.Assessment
 	turns   []lifecycle.Transition
+	open    []lifecycle.Alert // reused
 
 	Steps   int      // judged
 	Missing int      // seconds between the first and the last of them that are not kept
@@ -63,6 +65,15 @@ func (r *Rejudger) Step(s *judged.Step) error {
 	r.turns = r.machine.Step(s.At, r.found, r.turns[:0])
 	r.take(r.turns)
 	return nil
+}
+
+// Open tells whether an alert that opened before a moment is open.
+func (r *Rejudger) Open(before sensors.Instant) bool {
+	if r.machine == nil {
+		return false
+	}
+	r.open = r.machine.Open(r.open[:0])
+	return slices.ContainsFunc(r.open, func(a lifecycle.Alert) bool { return a.Opened < before })
 }
 
 // Break tells that a time follows that is judged elsewhere: alerts that are

@@ -7,16 +7,14 @@ import (
 	"flag"
 	"fmt"
 	"reflect"
-	"runtime"
 	"slices"
-	"sync"
 	"time"
 
 	"sockline/alerting"
+	"sockline/alerting/engine"
 	"sockline/alerting/history"
 	"sockline/alerting/history/backup"
 	"sockline/alerting/judged"
-	"sockline/alerting/lifecycle"
 	"sockline/alerting/review"
 	"sockline/alerting/wording"
 	"sockline/config"
@@ -235,6 +233,9 @@ func (c *comparison) other() ([]review.Life, error) {
 		left  []string // days that need the analysis
 		why   string
 	)
+	if err := c.warm(rejudger); err != nil {
+		return nil, err
+	}
 	for i, day := range days {
 		c.bar.draw(func() float64 { return float64(i) / float64(len(days)) })
 		if err := c.ctx.Err(); err != nil {
@@ -253,6 +254,9 @@ func (c *comparison) other() ([]review.Life, error) {
 			left, why = append(left, day), reason
 		}
 	}
+	if err := c.endOpen(rejudger); err != nil {
+		return nil, err
+	}
 	c.result.Steps = rejudger.Steps
 	c.result.Way = review.Rejudged
 	if rejudger.Missing > 0 {
@@ -261,7 +265,6 @@ func (c *comparison) other() ([]review.Life, error) {
 	if !rejudger.Exact {
 		c.note("a level lies between two whole knots: its probability is interpolated, and an alert may open some seconds earlier or later than the analysis has it")
 	}
-	lives = append(lives, rejudger.Lives(c.from, c.to)...)
 	if len(left) > 0 {
 		if len(left) < len(days) {
 			c.result.Way = review.Mixed
@@ -273,10 +276,69 @@ func (c *comparison) other() ([]review.Life, error) {
 		if err != nil {
 			return nil, err
 		}
-		lives = append(lives, found...)
+		lives = found
 	}
+	lives = append(lives, goingOn(rejudger.Lives(c.from, c.to), lives)...)
 	slices.SortStableFunc(lives, func(a, b review.Life) int { return a.Opened.Compare(b.Opened) })
 	return lives, nil
+}
+
+// goingOn leaves out of judged alerts those that go on with one that was
+// analysed, from a day that ended with it open.
+func goingOn(lives, analysed []review.Life) []review.Life {
+	return slices.DeleteFunc(lives, func(l review.Life) bool {
+		return slices.ContainsFunc(analysed, func(a review.Life) bool {
+			return a.Runway == l.Runway && a.Operation == l.Operation && a.Kind == l.Kind &&
+				a.Opened.Before(l.Opened) && (a.Closed == nil || !a.Closed.Before(l.Opened))
+		})
+	})
+}
+
+// warm judges the two hours before the first step asked for, so that an alert
+// that was open then is not taken for a new one. Where that cannot be done the
+// day after it says why.
+func (c *comparison) warm(r *review.Rejudger) error {
+	if c.analyse {
+		return nil
+	}
+	begin := c.from.Add(-engine.Memory)
+	for _, day := range slices.Compact([]string{judged.DayOf(begin), judged.DayOf(c.from)}) {
+		var unfit *unfitError
+		if _, err := judged.ReadDay(c.dir, day, begin, c.from, r.Step); errors.As(err, &unfit) || errors.Is(err, judged.ErrNewer) {
+			r.Break()
+		} else if err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// endOpen goes on after the last step asked for until none of the alerts that
+// opened before it is open.
+func (c *comparison) endOpen(r *review.Rejudger) error {
+	days, err := judged.Days(c.dir)
+	if err != nil {
+		return err
+	}
+	for _, day := range days {
+		if day < judged.DayOf(c.to) || !r.Open(c.to) {
+			continue
+		}
+		_, err := judged.ReadDay(c.dir, day, c.to, 0, func(s *judged.Step) error {
+			if !r.Open(c.to) {
+				return errReplayed
+			}
+			return r.Step(s)
+		})
+		var unfit *unfitError
+		if errors.As(err, &unfit) || errors.Is(err, judged.ErrNewer) {
+			break // as they stood when this could no longer be judged
+		}
+		if err != nil && !errors.Is(err, errReplayed) {
+			return err
+		}
+	}
+	return nil
 }
 
 // judgeDay judges what is kept of a day; false, with the reason, where that
@@ -342,81 +404,6 @@ func analysisDiffers(a, b *config.Config) string {
 		return "the limit of the F-factor or the fastest approach differs"
 	}
 	return ""
-}
-
-// analyseDays goes through the readings of days, as many at once as there are
-// processors. Each day is warmed up from two hours before it, and ends when
-// none of its alerts is open.
-func (c *comparison) analyseDays(days []string) ([]review.Life, error) {
-	type outcome struct {
-		lives []review.Life
-		steps int
-		err   error
-	}
-	found := make([]outcome, len(days))
-	var (
-		wg   sync.WaitGroup
-		mu   sync.Mutex
-		next int
-		done int
-	)
-	for range min(runtime.GOMAXPROCS(0), len(days)) {
-		wg.Go(func() {
-			for {
-				mu.Lock()
-				i := next
-				next++
-				c.bar.draw(func() float64 { return float64(done) / float64(len(days)) })
-				mu.Unlock()
-				if i >= len(days) {
-					return
-				}
-				o := &found[i]
-				o.lives, o.steps, o.err = c.analyseDay(days[i])
-				mu.Lock()
-				done++
-				mu.Unlock()
-			}
-		})
-	}
-	wg.Wait()
-	var lives []review.Life
-	for i, o := range found {
-		if o.err != nil {
-			return nil, fmt.Errorf("analyse %s: %w", days[i], o.err)
-		}
-		c.result.Steps += o.steps
-		lives = append(lives, o.lives...)
-	}
-	return lives, nil
-}
-
-func (c *comparison) analyseDay(day string) ([]review.Life, int, error) {
-	begin := max(dayStart(day), c.from)
-	end := min(dayStart(day).Add(24*time.Hour), c.to)
-	lives := review.NewLives()
-	open := map[string]bool{}
-	r, err := newQuietReplayer(c.ctx, c.p, c.cfg, c.exercise, func(n wording.Notice) error {
-		a := n.Alert()
-		at := a.Opened
-		if at >= begin && at < end {
-			lives.Take(&a)
-			open[a.ID] = true
-			if a.State == lifecycle.Closed {
-				delete(open, a.ID)
-			}
-		}
-		return nil
-	})
-	if err != nil {
-		return nil, 0, err
-	}
-	r.from, r.cold, r.past = begin, true, &c.past
-	r.over = func(t sensors.Instant) bool { return t >= end && len(open) == 0 }
-	if err := r.store(c.store); err != nil && !errors.Is(err, errReplayed) {
-		return nil, 0, err
-	}
-	return lives.OpenedIn(begin, end), r.steps, nil
 }
 
 // changedKeys names what differs between two configurations, as far as levels

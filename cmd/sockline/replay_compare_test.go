@@ -6,6 +6,7 @@ import (
 	"path/filepath"
 	"strings"
 	"testing"
+	"time"
 
 	"sockline/alerting/history"
 	"sockline/alerting/judged"
@@ -121,6 +122,16 @@ func TestCompare(t *testing.T) {
 	// Rounding of figures apart, both ways give the same alerts.
 	if a, b := verdicts(kept.Comparison), verdicts(analysed.Comparison); a != b {
 		t.Errorf("from what is kept:\n%s\nanalysed:\n%s", a, b)
+	}
+	// From the midst of an alert to that of another: the first is none of these,
+	// the second has its end.
+	lives := analysed.Comparison.Pairs
+	part := []string{"--history", dir, "--config", higher, "--from", lives[0].Recorded[0].Opened.Add(20 * time.Second).Format(time.RFC3339),
+		"--to", lives[len(lives)-1].Recorded[0].Opened.Add(20 * time.Second).Format(time.RFC3339)}
+	judgedPart, _ := whatIf(t, part...)
+	analysedPart, _ := whatIf(t, append(part, "--analyse")...)
+	if a, b := verdicts(judgedPart.Comparison), verdicts(analysedPart.Comparison); a != b || len(judgedPart.Comparison.Pairs) == 0 || len(judgedPart.Comparison.Pairs) >= len(lives) {
+		t.Errorf("in part, from what is kept:\n%s\nanalysed:\n%s\nall of it:\n%s", a, b, verdicts(analysed.Comparison))
 	}
 	wider := writeFile(t, "wider.toml", string(source)+"\n[analysis]\nreach = \"900 m\"\n")
 	other, _ := whatIf(t, "--history", dir, "--config", wider)
