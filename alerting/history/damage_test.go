@@ -258,7 +258,11 @@ func TestDamageIsJournalledAndReported(t *testing.T) {
 	if err := os.Truncate(filepath.Join(dir, journalName), 0); err != nil {
 		t.Fatal(err)
 	}
-	if _, err := ReadOnly(dir); err == nil || !isDamage(err) {
+	ro, err := ReadOnly(dir)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if _, err := ro.Events(Filter{}); err == nil || !isDamage(err) {
 		t.Errorf("reading only: %v", err)
 	}
 	if _, err := os.Stat(filepath.Join(dir, journalName)); err != nil {

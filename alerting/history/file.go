@@ -38,14 +38,17 @@ type layout struct {
 	format  string // content of about/format
 	buckets []string
 	older   map[string][]string // formats of earlier versions that are read, each with its buckets
-	alloc   int                 // the file grows in steps of so many bytes
-	mapped  int                 // address space to begin with, so that growth rarely waits for a reader
+	// salvage fills a new file with what an old, damaged one still holds.
+	salvage func(path string, db *bolt.DB, report func(string)) error
+	alloc   int // the file grows in steps of so many bytes
+	mapped  int // address space to begin with, so that growth rarely waits for a reader
 }
 
 func journalLayout() layout {
 	return layout{
 		format:  "sockline journal 2",
 		buckets: []string{bucketRecords, bucketEvents, bucketIDs, bucketPeople},
+		salvage: salvageNewest,
 		older:   map[string][]string{"sockline journal 1": {bucketRecords, bucketEvents, bucketIDs}},
 		alloc:   64 << 10,
 		mapped:  16 << 20,
@@ -86,7 +89,7 @@ func (f *file) open(create bool) error {
 			if !create || f.readOnly {
 				return fmt.Errorf("open %s: %w", f.path, os.ErrNotExist)
 			}
-			if err := createFile(f.path, f.layout); err != nil {
+			if err := createFile(f.path, f.layout, f.report); err != nil {
 				return err
 			}
 		}
@@ -249,7 +252,7 @@ func markFormat(tx *bolt.Tx, l layout) error {
 // createFile makes an empty file under a temporary name and gives it its own
 // only when it is whole and on disk: power lost while a database is being
 // initialised leaves one that cannot be opened.
-func createFile(path string, l layout) error {
+func createFile(path string, l layout, report func(string)) error {
 	tmp, err := os.CreateTemp(filepath.Dir(path), filepath.Base(path)+".*.new")
 	if err != nil {
 		return fmt.Errorf("create %s: %w", path, err)
@@ -279,6 +282,9 @@ func createFile(path string, l layout) error {
 		}
 		return nil
 	})
+	if err == nil && l.salvage != nil {
+		err = l.salvage(path, db, report)
+	}
 	if err = errors.Join(err, db.Close(), syncPath(name)); err != nil {
 		return fmt.Errorf("create %s: %w", path, err)
 	}

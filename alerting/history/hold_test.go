@@ -36,7 +36,7 @@ func emptyDay(tb testing.TB, dir string, day sensors.Instant) string {
 	tb.Helper()
 	template := filepath.Join(dir, "template")
 	if _, err := os.Stat(template); err != nil {
-		if err := createFile(template, dayLayout()); err != nil {
+		if err := createFile(template, dayLayout(), func(string) {}); err != nil {
 			tb.Fatal(err)
 		}
 	}

@@ -254,6 +254,17 @@ func (c *chain) fault(seq uint64) {
 	}
 }
 
+// missing names the records from one sequence to before another.
+func (c *chain) missing(from, to uint64) {
+	for seq := from; seq < to && len(c.named) < mostNamed; seq++ {
+		c.fault(seq)
+		from++
+	}
+	if from < to { // more than are named
+		c.broken += to - from
+	}
+}
+
 // add takes in what a sound record adds to the index.
 func (x index) add(r Record) {
 	if r.Kind.byPeople() {
@@ -278,7 +289,8 @@ func (c *chain) check(key, value []byte) {
 	want := c.head.seq + 1
 	switch {
 	case len(key) == 8 && r.Seq != want:
-		c.fault(want) // a record is missing
+		c.missing(want, r.Seq)
+		c.fault(r.Seq) // nothing proves the one after a gap
 	case err != nil:
 		c.fault(want)
 	case !r.follows(c.head.hash):

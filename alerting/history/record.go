@@ -89,12 +89,15 @@ func (r Record) header() []byte {
 
 // follows reports whether the record's hash is that of its content after the
 // hash before.
-func (r Record) follows(before [sha256.Size]byte) bool {
+func (r Record) follows(before [sha256.Size]byte) bool { return r.hashAfter(before) == r.Hash }
+
+// hashAfter is the hash that the record's content has after the hash before.
+func (r Record) hashAfter(before [sha256.Size]byte) [sha256.Size]byte {
 	rest := r.chained
 	if r.version == recordVersion2 {
 		rest = digest(r.chained)
 	}
-	return link(before, r.Seq, r.header(), rest) == r.Hash
+	return link(before, r.Seq, r.header(), rest)
 }
 
 // clone is the record with memory of its own.

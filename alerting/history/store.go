@@ -85,10 +85,15 @@ func Open(dir string, opts Options) (*Store, error) {
 }
 
 // ReadOnly opens the history in dir for reading while no daemon runs. It
-// holds a file only while it reads from it.
+// holds a file only while it reads from it. With a damaged journal it opens,
+// too: what asks for records then fails, Verify says why, and the readings are
+// there.
 func ReadOnly(dir string) (*Store, error) {
 	s := newStore(dir, Options{}, true)
 	j, err := s.acquireJournal()
+	if isDamage(err) {
+		return s, nil
+	}
 	if err != nil {
 		return nil, fmt.Errorf("open the history: %w", err)
 	}

@@ -71,7 +71,7 @@ func (r *Report) journal(j *file, known Head) error {
 	r.Records, r.Broken, r.First, r.Named = c.head.seq, c.broken, c.first, c.named
 	r.Head, r.Heads = fmt.Sprintf("%x", c.head.hash), c.days.done
 	for _, seq := range c.named {
-		r.Faults = append(r.Faults, fmt.Sprintf("%s: record %d is missing or not as it was written", journalName, seq))
+		r.Faults = append(r.Faults, fmt.Sprintf("%s: record %d is missing, not as it was written, or cannot be proved because the one before it is missing", journalName, seq))
 	}
 	switch {
 	case known.Seq == 0 || c.passed:
