@@ -49,6 +49,9 @@ func (e *Engine) assess(s *averages.Snapshot) {
 		a.Loss.Used, a.Gain.Used = live, live
 		hazard.Judge(a, pg.stretch, pg.view, e.settings.Levels)
 	}
+	if posterior != nil {
+		e.fewer(s.At(), s, posterior)
+	}
 }
 
 // Stretch is the ground of a path as the last step measured it, and the first

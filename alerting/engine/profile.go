@@ -39,10 +39,25 @@ func (e *Engine) Profile(path int, dst []shear.ProfilePoint) []shear.ProfilePoin
 	return dst
 }
 
-// forecaster is the scratch of forecasts, made when first asked for.
+// forecaster is the scratch of what might be: a minute ahead, or with one mast
+// fewer. Made when first asked for.
 type forecaster struct {
 	posterior windfield.Posterior
 	stretches map[*shear.Stretch]*shear.Stretch
+}
+
+// stretch is a second one over the same ground, to measure another posterior.
+func (f *forecaster) stretch(of *shear.Stretch) *shear.Stretch {
+	if f.stretches == nil {
+		f.stretches = make(map[*shear.Stretch]*shear.Stretch)
+	}
+	s, ok := f.stretches[of]
+	if !ok {
+		s = shear.NewStretch(of.Points)
+		f.stretches[of] = s
+	}
+	copy(s.Observed, of.Observed)
+	return s
 }
 
 // Forecast is what a path's greatest changes will be after so many seconds if
@@ -57,17 +72,11 @@ func (e *Engine) Forecast(path int, seconds float64) (shear.Forecast, bool) {
 	}
 	f := &e.ahead
 	nt := len(e.posterior.Mean)
-	if f.stretches == nil {
-		f.stretches = make(map[*shear.Stretch]*shear.Stretch)
+	if f.posterior.Mean == nil {
 		f.posterior.Mean = make([]float64, nt)
 		f.posterior.Draws = make([]float64, windfield.Draws*nt)
 	}
-	s, ok := f.stretches[pg.stretch]
-	if !ok {
-		s = shear.NewStretch(pg.stretch.Points)
-		f.stretches[pg.stretch] = s
-	}
-	copy(s.Observed, pg.stretch.Observed)
+	s := f.stretch(pg.stretch)
 	f.posterior.Kinds = e.posterior.Kinds
 	copy(f.posterior.Draws, e.posterior.Draws)
 	clear(f.posterior.Mean)

@@ -30,6 +30,14 @@ type Change struct {
 	Level        alerting.Level // highest level with Probability >= confidence
 	HoldLevel    alerting.Level // highest level that still holds under the hysteresis
 	Used         []int          // stations (indices, ascending) that carry the estimate
+	Fewer        Fewer
+}
+
+// Fewer is what the median of M would be without one mast.
+type Fewer struct {
+	Known  bool // false: no mast was left out in this step
+	Mast   int  // station (index)
+	Median float64
 }
 
 // Other is what the assessment says of a kind that is no change of headwind;

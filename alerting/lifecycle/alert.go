@@ -73,8 +73,18 @@ type Alert struct {
 	PeakChange                    float64 // m/s, signed
 	PeakAt                        sensors.Instant
 	Used, Missing                 []string // station ids, in configured order
-	Exercise                      bool
-	Memory                        Memory // what the judging of later steps needs besides the above
+	// Fewer is what the change would be without one of the masts, by station, of
+	// the last minute: how far the alert hangs on a single one.
+	Fewer    []Fewer
+	Exercise bool
+	Memory   Memory // what the judging of later steps needs besides the above
+}
+
+// Fewer is the change without one mast.
+type Fewer struct {
+	Station string
+	At      sensors.Instant
+	Change  float64 // m/s, signed like Alert.Change
 }
 
 // Memory is the part of an alert's state that no surface shows. It is kept in

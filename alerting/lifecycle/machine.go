@@ -143,6 +143,7 @@ func (m *Machine) advance(T sensors.Instant, path, kind int, a *hazard.Assessmen
 	var because CloseReason
 	if c != nil && (o != nil || s.overObserved(a.Observed) || c.Level >= s.alert.Level) {
 		because = s.measure(T, c, o, m.settings.Hold)
+		m.fewer(T, &s.alert, c)
 	} else {
 		because = s.loseSight(T)
 	}
@@ -212,6 +213,7 @@ func (m *Machine) begin(T sensors.Instant, path, kind int, a *hazard.Assessment,
 	}
 	s.missing = append(s.missing[:0], a.Missing...)
 	s.take(T, c, o)
+	m.fewer(T, &s.alert, c)
 	why := fmt.Sprintf("level %s met with probability %.2f", c.Level, s.alert.Probability)
 	return m.issue(T, s, why, dst)
 }
@@ -244,6 +246,32 @@ func (s *slot) take(T sensors.Instant, c *hazard.Change, o *hazard.Other) {
 	for l := alerting.Noticeable; l <= max(c.Level, c.HoldLevel); l++ {
 		a.Memory.Held[l] = T
 	}
+}
+
+// fewerFor is how long it counts what the change was without a mast.
+const fewerFor = time.Minute
+
+// fewer notes what the change would be without a mast. The list of an issued
+// alert belongs to whoever was given it: a new one is made at each note.
+func (m *Machine) fewer(T sensors.Instant, a *Alert, c *hazard.Change) {
+	if !c.Fewer.Known || c.Fewer.Mast >= len(m.settings.StationIDs) {
+		if len(a.Fewer) > 0 && T.Sub(a.Fewer[0].At) >= fewerFor { // the oldest comes first
+			a.Fewer = slices.Clone(a.Fewer[1:])
+		}
+		return
+	}
+	next := make([]Fewer, 0, len(a.Fewer)+1)
+	station := m.settings.StationIDs[c.Fewer.Mast]
+	for _, f := range a.Fewer {
+		if f.Station != station && T.Sub(f.At) < fewerFor {
+			next = append(next, f)
+		}
+	}
+	change := c.Fewer.Median
+	if a.Kind == alerting.HeadwindLoss {
+		change = -change
+	}
+	a.Fewer = append(next, Fewer{Station: station, At: T, Change: change})
 }
 
 // measure takes a step in which the change was measured: levels, trend, and

@@ -15,7 +15,7 @@ const (
 	noiseSteps     = 12
 	noiseLeast     = 0.04 // m2/s2
 	noiseRatio     = 1.6
-	absentVariance = 1e4 // m2/s2: a block without data
+	absentVariance = 1e6 // m2/s2: a block without data
 	// oddOneOut: a mast keeps its own noise step only if its variance differs
 	// from the masts' median by more than this factor; otherwise the median,
 	// which is the better estimate, serves.
@@ -87,7 +87,7 @@ func (e *Estimator) entryFor(s *averages.Snapshot) *entry {
 		mast := s.Mast(m)
 		mask := uint8(0)
 		for b := range blocks {
-			if !mast.Blocks[b].Present {
+			if !mast.Blocks[b].Present || m == e.without {
 				mask |= 1 << b
 			}
 		}

@@ -31,17 +31,15 @@ func newDoubtMemory(masts int) doubtMemory {
 	return doubtMemory{masts: masts, stood: make([]bool, ambientSlots*masts)}
 }
 
-// remember keeps which masts stand alone at t, if t lies on the grid. doubt is
-// the posterior that each is wrong, gain the logarithm by which its prior had
-// been raised or lowered from an even-handed one.
-func (d *doubtMemory) remember(t sensors.Instant, doubt, gain []float64) {
+// remember keeps which masts stand alone at t, if t lies on the grid. alone is
+// Posterior.Alone.
+func (d *doubtMemory) remember(t sensors.Instant, alone []float64) {
 	if t%ambientEvery != 0 {
 		return
 	}
 	slot := int(t/ambientEvery) % ambientSlots
 	d.at[slot] = t
-	for i, p := range doubt {
-		odds := p / math.Max(1-p, 1e-12) * math.Exp(-gain[i])
+	for i, odds := range alone {
 		d.stood[slot*d.masts+i] = odds > 1
 	}
 }

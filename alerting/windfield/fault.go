@@ -5,7 +5,9 @@ import (
 )
 
 // faultBank is the thought that one mast is wrong: its error is a steady wind
-// of any direction that no target feels. It is the leave-one-out residual
+// of any direction that no target feels, in all its blocks or, where it has just
+// begun, in the newest one or two: pattern j is mast j%masts with the newest
+// blocks-j/masts of them wrong. It is the leave-one-out residual
 // (O. Dubrule, "Cross validation of kriging in a unique neighborhood",
 // Mathematical Geology 15, 1983; from memory) as a member of the mixture: what
 // speaks against it is only that faults are rare, the more so while a mast has
@@ -16,7 +18,10 @@ type faultBank struct {
 	deviation float64 // of the error, one component, m/s
 }
 
-func (b *faultBank) count() int { return b.masts }
+func (b *faultBank) count() int { return blocks * b.masts }
+
+// newest is how many of the newest blocks pattern j holds wrong.
+func (b *faultBank) newest(j int) int { return blocks - j/b.masts }
 
 // prior: two strengths, east and north, in every block alike. No sign is
 // required: q is zero, and the positive "today's strength" a dummy.
@@ -37,11 +42,14 @@ func place(en *entry, mast int) int {
 
 func (b *faultBank) project(en *entry, w, out []float64) {
 	clear(out)
+	n := b.count()
 	for i, m := range en.live {
-		for k := range blocks {
-			o := (k*len(en.live) + i) * 2
-			out[m] += w[o]
-			out[b.masts+m] += w[o+1]
+		for j := m; j < n; j += b.masts {
+			for k := range b.newest(j) {
+				o := (k*len(en.live) + i) * 2
+				out[j] += w[o]
+				out[n+j] += w[o+1]
+			}
 		}
 	}
 }
@@ -49,24 +57,27 @@ func (b *faultBank) project(en *entry, w, out []float64) {
 func (b *faultBank) gram(en *entry, s *state, m []float64) {
 	east, north := make([]float64, en.n), make([]float64, en.n)
 	solved := make([]float64, en.n)
-	for _, mast := range en.live {
-		b.column(en, mast, 0, east)
-		b.column(en, mast, 1, north)
+	for j := range b.count() {
+		if place(en, j%b.masts) < 0 {
+			continue
+		}
+		b.column(en, j, 0, east)
+		b.column(en, j, 1, north)
 		multiply(en, s, east, solved)
-		m[mast*6] = blas64.Dot(vec(solved), vec(east))
-		m[mast*6+1] = blas64.Dot(vec(solved), vec(north))
+		m[j*6] = blas64.Dot(vec(solved), vec(east))
+		m[j*6+1] = blas64.Dot(vec(solved), vec(north))
 		multiply(en, s, north, solved)
-		m[mast*6+3] = blas64.Dot(vec(solved), vec(north))
+		m[j*6+3] = blas64.Dot(vec(solved), vec(north))
 	}
 }
 
 func (b *faultBank) column(en *entry, j, d int, dst []float64) {
 	clear(dst)
-	i := place(en, j)
+	i := place(en, j%b.masts)
 	if i < 0 || d == 2 {
 		return
 	}
-	for k := range blocks {
+	for k := range b.newest(j) {
 		dst[(k*len(en.live)+i)*2+d] = 1
 	}
 }

@@ -19,7 +19,7 @@ func TestFollow(t *testing.T) {
 		e := New(places, targets, layout, DefaultPrior())
 		at := 30 * sensors.Second
 		e.memory.remember(at, []float64{0, -1, -2, -3}[:e.memory.states])
-		e.doubts.remember(at, []float64{0.9, 0.1, 0.8}, []float64{0, 0, 0})
+		e.doubts.remember(at, []float64{9, 0.1, 4})
 		return e
 	}
 	doubted := func(e *Estimator) (all []int) {

@@ -75,7 +75,7 @@ func DefaultPrior() Prior {
 		FrontSpeeds:     []float64{6, 13},
 		FrontSpacing:    400,
 		FrontWidths:     []float64{300, 1000},
-		FaultShare:      0.00003,
+		FaultShare:      0.0001,
 		FaultShareLater: 0.03,
 		FaultDeviation:  8,
 		LeastStateShare: 0.01,

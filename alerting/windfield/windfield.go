@@ -50,6 +50,10 @@ type Posterior struct {
 	OutflowShare float64   // posterior probability that an outflow is under way
 	FrontShare   float64   // posterior probability that a front is passing
 	Doubt        []float64 // posterior probability that each mast is wrong
+	// Alone is, for each mast, the odds that it is wrong from an even-handed prior:
+	// above 1 its neighbours contradict it, be it a fault or an outflow that no
+	// other feels.
+	Alone []float64
 
 	Kinds    [Draws]PatternKind // what lies over the ambient field in each draw
 	Over     []Outflow          // [Draws][2] the outflows in each draw; Strength 0 without one
@@ -113,6 +117,8 @@ type Estimator struct {
 	parts     []part
 	weights   []float64
 	posterior Posterior
+	fewer     Posterior // of Without; made when first asked for
+	without   int       // the mast that is left out
 	times     []float64
 	bases     []float64
 	sorted    []float64
@@ -175,10 +181,8 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.newDerived()
 	e.times = make([]float64, 0, len(masts))
 	e.bases = make([]float64, 0, len(masts))
-	e.posterior.Doubt = make([]float64, len(masts))
-	e.posterior.Mean = make([]float64, len(targets))
-	e.posterior.Draws = make([]float64, Draws*len(targets))
-	e.posterior.Over = make([]Outflow, 2*Draws)
+	e.posterior = newPosterior(len(masts), len(targets))
+	e.without = noMast
 	return e
 }
 
@@ -213,7 +217,10 @@ func reverseBits(d int) int {
 
 // Step is the posterior for a snapshot; nil when no mast is live or the
 // observations cannot be used (never for masts at different places).
-func (e *Estimator) Step(s *averages.Snapshot) *Posterior {
+func (e *Estimator) Step(s *averages.Snapshot) *Posterior { return e.step(s) }
+
+// step is Step, or Without when a mast is left out.
+func (e *Estimator) step(s *averages.Snapshot) *Posterior {
 	en := e.entryFor(s)
 	if en == nil {
 		return nil
@@ -287,23 +294,31 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	for k := range ambient {
 		e.stateLog[k] = math.Log(float64(plain*math.Exp(e.stateLog[k]-top)) + patterned)
 	}
-	e.memory.remember(t, e.stateLog[:ambient])
+	if e.without == noMast {
+		e.memory.remember(t, e.stateLog[:ambient])
+	}
 	for i := range e.parts {
 		e.parts[i].weight /= total
 	}
 	e.posterior.OutflowShare = found[0] / total
 	e.posterior.FrontShare = found[1] / total
 	e.doubt()
-	e.doubts.remember(t, e.posterior.Doubt, e.faultGain)
+	if e.without == noMast {
+		e.doubts.remember(t, e.posterior.Alone)
+	}
 }
 
 // doubt fills the probability that each mast is wrong.
 func (e *Estimator) doubt() {
-	clear(e.posterior.Doubt)
-	for _, p := range e.parts {
-		if p.class == faultClass {
-			e.posterior.Doubt[p.pattern] += p.weight
+	p := &e.posterior
+	clear(p.Doubt)
+	for _, pt := range e.parts {
+		if pt.class == faultClass {
+			p.Doubt[pt.pattern%len(p.Doubt)] += pt.weight
 		}
+	}
+	for i, d := range p.Doubt {
+		p.Alone[i] = d / math.Max(1-d, 1e-12) * math.Exp(-e.faultGain[i])
 	}
 }
 
@@ -344,13 +359,16 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
 		evidence[j] = v/2 + p.logOdds[j]
 		if c == faultClass {
-			evidence[j] += e.faultGain[j]
+			evidence[j] += e.faultGain[j%len(e.faultGain)]
 		}
 		best = max(best, evidence[j])
 	}
 	scale := math.Log(share/float64(n)) + (e.stateLog[k] - top)
 	// The factor for a positive strength is at most 2.
 	least := math.Log(negligible*total) - scale - math.Ln2
+	if c == faultClass {
+		least = math.Inf(-1) // few, and what their neighbours say of each is told
+	}
 	if best < least {
 		return 0
 	}

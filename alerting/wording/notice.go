@@ -132,6 +132,9 @@ func (n Notice) JSON() []byte {
 		o.raw("detail", detail(a.Kind, &a.Detail))
 	}
 	o.raw("stations", stations(a.Used, a.Missing))
+	if len(a.Fewer) > 0 {
+		o.raw("one_fewer", oneFewer(a))
+	}
 	o.text("text", n.text)
 	o.flag("recorded", n.recorded)
 	o.flag("exercise", n.exercise)
@@ -153,5 +156,23 @@ func stations(used, missing []string) []byte {
 	var o object
 	o.list("used", used)
 	o.list("missing", missing)
+	return o.end()
+}
+
+// oneFewer is the range of the change with any one mast left out, and the mast
+// whose absence would change it most.
+func oneFewer(a *lifecycle.Alert) []byte {
+	low, high, weakest := math.Inf(1), math.Inf(-1), a.Fewer[0]
+	for _, f := range a.Fewer {
+		low, high = math.Min(low, f.Change), math.Max(high, f.Change)
+		if math.Abs(f.Change-a.Change) > math.Abs(weakest.Change-a.Change) {
+			weakest = f
+		}
+	}
+	var o object
+	o.knots("low_kt", low)
+	o.knots("high_kt", high)
+	o.text("rests_most_on", weakest.Station)
+	o.count("masts", len(a.Fewer))
 	return o.end()
 }
