@@ -112,7 +112,7 @@ func newBank(x, y []float64, middleX, middleY float64) *bank {
 				if r == 0 {
 					row[i] = float64(dx*b.east[h]) + float64(dy*b.north[h])
 				} else {
-					row[i] = math.Hypot(dx+r*b.east[h], dy+r*b.north[h]) - r
+					row[i] = math.Hypot(dx+float64(r*b.east[h]), dy+float64(r*b.north[h])) - r
 				}
 			}
 		}
@@ -155,7 +155,7 @@ func (p *posterior) weigh(b *bank, hits []hit, waiting []int, behind, change qua
 	edges := math.Exp(p.atOnce - best)
 	for i := range p.weight {
 		l := p.weight[i] - best
-		if l < -12 {
+		if l < -hopeless {
 			p.weight[i] = 0
 			continue
 		}
@@ -199,7 +199,7 @@ func (p *posterior) together(hits []hit, agree, chance float64) {
 	}
 	ssr := max(wtt-float64(wt*wt)/w, 0)
 	p.atOnce = math.Log(priorAtOnce) + agree + chance -
-		(ssr+logs+math.Log(w)+float64(len(hits)-1)*math.Log(2*math.Pi))/2
+		(ssr+logs+math.Log(w)+float64(float64(len(hits)-1)*math.Log(2*math.Pi)))/2
 }
 
 // times fills weight with the logarithm of prior times likelihood of each line,
@@ -209,12 +209,15 @@ func (p *posterior) times(b *bank, hits []hit, behind, change quantity.Vector) {
 	for range len(hits) - 1 {
 		chance += math.Log(chanceSpan)
 	}
+	constant := float64(float64(len(hits)-1) * math.Log(2*math.Pi))
 	agree := agreement(hits, change)
 	p.together(hits, agree, chance)
 	// The directions are weighed once for all straight lines, and per mast for
 	// the round ones, whose change points away from their centre.
 	var prior [headings][speeds]float64
 	fillPrior(b, behind, change, &prior)
+	least := leastSpread(hits)
+	best := p.atOnce
 	i := 0
 	for c := range curves {
 		for h := range headings {
@@ -225,12 +228,12 @@ func (p *posterior) times(b *bank, hits []hit, behind, change quantity.Vector) {
 			}
 			for s := range speeds {
 				slow := 1 / b.speed[s]
-				var w, wt, wtt, logs float64
-				product := 1.0
+				var w, wt, wtt float64
+				product, logs := 1.0, 0.0
 				for k := range hits {
 					q := &hits[k]
 					away := row[q.place] * slow
-					rough := lineStrays * (away - row[hits[0].place]*slow)
+					rough := lineStrays * (away - float64(row[hits[0].place]*slow))
 					v := float64(q.sd*q.sd) + lineRough*lineRough + float64(rough*rough)
 					r := q.t - away
 					iv := 1 / v
@@ -241,22 +244,49 @@ func (p *posterior) times(b *bank, hits []hit, behind, change quantity.Vector) {
 						logs, product = logs+math.Log(product), 1
 					}
 				}
-				logs += math.Log(product)
 				mean := wt / w
 				ssr := max(wtt-float64(wt*mean), 0)
 				p.t0[i], p.spread[i] = mean, 1/w
-				// The integral over t0 of the normal densities.
-				p.weight[i] = b.curved[c] + prior[h][s] + turned + chance -
-					(ssr+logs+math.Log(w)+float64(len(hits)-1)*math.Log(2*math.Pi))/2
+				// The integral over t0 of the normal densities; a line that cannot
+				// come within reach of the best is spared its logarithm.
+				like := b.curved[c] + prior[h][s] + turned + chance - (ssr+constant)/2
+				if p.weight[i] = math.Inf(-1); like-least/2 > best-hopeless {
+					p.weight[i] = like - (logs+math.Log(product*w))/2
+					best = max(best, p.weight[i])
+				}
 				i++
 			}
 		}
 	}
 }
 
+// hopeless is the logarithm of how much less likely than the best a line may be
+// and still count.
+const hopeless = 12
+
+// leastSpread is the least that the logarithm of the product of the variances
+// times the sum of their inverses can be, over all lines: it grows with each of
+// them.
+func leastSpread(hits []hit) float64 {
+	w, logs := 0.0, 0.0
+	for k := range hits {
+		v := float64(hits[k].sd*hits[k].sd) + lineRough*lineRough
+		w += 1 / v
+		logs += math.Log(v)
+	}
+	return logs + math.Log(w)
+}
+
 // chanceSpan is the time over which changes that have nothing to do with each
 // other would be spread, s.
 const chanceSpan = 600.0
+
+// concentrated is the log of how much likelier a direction is than by chance,
+// given the cosine of its angle to where it is expected: von Mises, with
+// I0(kappa) = exp(kappa)/sqrt(2 pi kappa).
+func concentrated(cos float64) float64 {
+	return float64(kappa*(cos-1)) + math.Log(2*math.Pi*kappa)/2
+}
 
 // agreement is the log of how much likelier the directions of the changes are
 // about their mean than anywhere.
@@ -268,7 +298,7 @@ func agreement(hits []hit, mean quantity.Vector) float64 {
 	sum := 0.0
 	for k := range hits {
 		cos := (float64(hits[k].change.East*mean.East) + float64(hits[k].change.North*mean.North)) / size
-		sum += kappa*(cos-1) + 0.5*math.Log(2*math.Pi*kappa)
+		sum += concentrated(cos)
 	}
 	// The mean is their own.
 	return sum * float64(len(hits)-1) / float64(len(hits))
@@ -281,7 +311,7 @@ func (b *bank) roundAgreement(hits []hit, curve, heading int) float64 {
 	for k := range hits {
 		e, n := b.outward(curve, heading, hits[k].place)
 		cos := float64(hits[k].change.East*e) + float64(hits[k].change.North*n)
-		sum += kappa*(cos-1) + 0.5*math.Log(2*math.Pi*kappa)
+		sum += concentrated(cos)
 	}
 	return sum * float64(len(hits)-1) / float64(len(hits))
 }
@@ -306,6 +336,10 @@ func fillPrior(b *bank, behind, change quantity.Vector, prior *[headings][speeds
 		part = 0
 	}
 	size := change.Speed()
+	var climate [speeds]float64
+	for s := range climate {
+		climate[s] = logNormal(b.speed[s], climateSpeed, climateSpread) * cell
+	}
 	for h := range headings {
 		e, n := b.east[h], b.north[h]
 		ahead := float64(behind.East*e) + float64(behind.North*n)
@@ -318,10 +352,9 @@ func fillPrior(b *bank, behind, change quantity.Vector, prior *[headings][speeds
 			likeChange = heading((float64(change.East*e)+float64(change.North*n))/size, headingChange)
 		}
 		for s := range speeds {
-			climate := logNormal(b.speed[s], climateSpeed, climateSpread) * cell
-			p := (float64((1-part-headingUniform)*likeChange) + headingUniform/headings) * climate
-			if part > 0 && ahead > 1 {
-				p += float64(part*likeBehind) * logNormal(b.speed[s], shareBehind*ahead, spreadBehind) * cell
+			p := (float64((1-part-headingUniform)*likeChange) + headingUniform/headings) * climate[s]
+			if likeBehind > 1e-9 && ahead > 1 {
+				p += float64(float64(part*likeBehind) * float64(logNormal(b.speed[s], shareBehind*ahead, spreadBehind)*cell))
 			}
 			prior[h][s] = math.Log(max(p, 1e-30))
 		}
@@ -392,7 +425,7 @@ func (p *posterior) run(b *bank, toward, now float64) (mean, spread float64) {
 		d := speed * (now - p.t0[line]) / c
 		mean += float64(w * d)
 		square += float64(w * float64(d*d))
-		within += float64(w*speed) * speed * (p.spread[line] + lineRough*lineRough)
+		within += float64(float64(w*speed) * float64(speed*(p.spread[line]+lineRough*lineRough)))
 	})
 	return mean, math.Sqrt(max(square-float64(mean*mean), 0) + within)
 }

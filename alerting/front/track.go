@@ -36,6 +36,7 @@ type track struct {
 	hits          []onset // in the order in which they were found
 	front         Front
 	told          bool // front holds a result worth telling
+	rests         bool // none of its onsets is fitted any more
 	predicted     []prediction
 	before, after quantity.Vector
 	run           float64 // m beyond the middle of the masts that the line stood ...

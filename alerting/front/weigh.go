@@ -23,6 +23,9 @@ func (t *Tracker) weigh(tr *track, now sensors.Instant) {
 	if f.Kind = GustFront; f.Lasts > sharp {
 		f.Kind = WindShift
 	}
+	if tr.told && tr.rests && len(t.waiting) == 0 {
+		return // all has been seen: nothing would change
+	}
 	before := tr.told
 	tr.told = false
 	if len(tr.hits) < leastMasts || f.Change.Speed() < leastChange {
@@ -92,8 +95,10 @@ func (t *Tracker) gather(tr *track) {
 	tr.front.Hit = tr.front.Hit[:0]
 	tr.before, tr.after = quantity.Vector{}, quantity.Vector{}
 	n := float64(len(tr.hits))
+	tr.rests = true
 	for k := range tr.hits {
 		o := &tr.hits[k]
+		tr.rests = tr.rests && o.settled
 		at, c := o.from(tr.front.First), o.change()
 		if size := c.Speed(); size > 0 {
 			c = scaled(c, 1/size)

@@ -217,7 +217,7 @@ func Night(t time.Time, latitude, longitude float64) bool {
 	declination := 23.45 * degree * math.Sin(2*math.Pi*float64(284+t.YearDay())/365)
 	hours := float64(t.Hour()) + float64(t.Minute())/60 + longitude/15
 	hour := (hours - 12) * 15 * degree
-	sine := math.Sin(latitude*degree)*math.Sin(declination) +
-		math.Cos(latitude*degree)*math.Cos(declination)*math.Cos(hour)
+	sine := float64(math.Sin(latitude*degree)*math.Sin(declination)) +
+		float64(math.Cos(latitude*degree)*math.Cos(declination)*math.Cos(hour))
 	return sine < math.Sin(-0.83*degree)
 }

@@ -33,7 +33,7 @@ func (v *FrontView) ends() (x0, y0, x1, y1 float64) {
 		low, high = min(low, along), max(high, along)
 	}
 	low, high = low-lineBeyond, high+lineBeyond
-	return f.X + low*cos, f.Y - low*sin, f.X + high*cos, f.Y - high*sin
+	return f.X + float64(low*cos), f.Y - float64(low*sin), f.X + float64(high*cos), f.Y - float64(high*sin)
 }
 
 // JSON is the front object: speeds in knots, lengths in metres, directions of
