@@ -108,6 +108,8 @@ func (t *table) analysis() Analysis {
 	var s Analysis
 	s.Window, _ = a.duration("window", bounds{"6 s", "2 min"}, defaultWindow)
 	s.Lateness, _ = a.duration("lateness", bounds{"0 s", "10 s"}, "1 s")
+	siting, _ := a.oneOf("siting", "learn", "learn", "remove")
+	s.RemoveSiting = siting == "remove"
 	s.Reach, _ = a.quantity("reach", length(), bounds{"100 m", "3 km"}, fmt.Sprintf("%g m", airfield.Reach))
 	a.done()
 	return s

@@ -78,6 +78,9 @@ type Analysis struct {
 	Window   time.Duration // of the station wind
 	Lateness time.Duration // how long a step waits for its readings
 	Reach    float64       // how far a mast speaks for the wind, m
+	// RemoveSiting takes out of the analysis what the places of the masts do to
+	// their winds, where enough is learnt.
+	RemoveSiting bool
 }
 
 // Broker says where the readings come from.

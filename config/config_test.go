@@ -183,7 +183,7 @@ func TestEveryKeyArrives(t *testing.T) {
 		a.MarginFBar != 0.12 || a.Confidence != 0.75 || a.Hold != 45*time.Second {
 		t.Errorf("%+v", a)
 	}
-	if want := (Analysis{20 * time.Second, 1500 * time.Millisecond, 900}); cfg.Analysis != want {
+	if want := (Analysis{Window: 20 * time.Second, Lateness: 1500 * time.Millisecond, Reach: 900}); cfg.Analysis != want {
 		t.Errorf("%+v", cfg.Analysis)
 	}
 	if cfg.MQTT.Prefix != "met/pellmark/wind" || cfg.Page.Listen != "[::1]:8080" || cfg.History.Keep != 720*time.Hour ||

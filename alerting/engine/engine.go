@@ -38,6 +38,9 @@ type Settings struct {
 	Stations []sensors.Station // in the order of the airfield's masts
 	Levels   hazard.Levels
 	Window   time.Duration // of the station wind
+	// Siting removes what the places of the masts do to their winds, where enough
+	// is learnt; without it that is learnt only.
+	Siting   bool
 	Lateness time.Duration // how long after its end a step waits for readings
 	Reach    float64       // how far from a mast ground counts as observed, m
 	Hold     time.Duration // how long a level must be left before it counts as over
@@ -129,7 +132,7 @@ func New(s Settings) (*Engine, error) {
 		d.Beware(ids)
 	}
 	e.allowances = newAllowances(s.Stations)
-	e.learner = newLearner(s.Stations, ids)
+	e.learner = newLearner(s.Stations, ids, s.Airfield.Aloft())
 	layout := averages.NewLayout(s.Window)
 	e.recorder = averages.NewRecorder(s.Stations, layout)
 	e.ground = newGround(s.Airfield, s.Reach)
@@ -263,6 +266,9 @@ func (e *Engine) Step(t sensors.Instant) *Result {
 	e.take(t)
 	e.evaluateReadings()
 	e.learn(t, e.recorder)
+	if e.settings.Siting {
+		e.removeSiting(t, e.recorder)
+	}
 	snapshot := e.recorder.Snapshot(t)
 	e.result.Fronts = e.fronts.Step(snapshot)
 	e.assess(snapshot)
@@ -289,6 +295,9 @@ func (e *Engine) Warm(t sensors.Instant) {
 	e.take(t)
 	e.evaluateReadings()
 	e.learn(t, e.recorder)
+	if e.settings.Siting {
+		e.removeSiting(t, e.recorder)
+	}
 	s := e.recorder.Snapshot(t)
 	e.ground.update(s)
 	e.fronts.Step(s)

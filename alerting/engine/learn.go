@@ -19,6 +19,7 @@ const TablesBack = 72 * time.Hour
 const (
 	clockTable     = "clocks"
 	neighbourTable = "neighbours"
+	sitingTable    = "siting"
 )
 
 // Table is something learnt, for the journal. Clocks change at UTC minutes,
@@ -39,15 +40,36 @@ type namedTable struct {
 type learner struct {
 	clocks *quality.Clocks
 	watch  *drift.Watch
-	means  []drift.Mean    // reused
-	loaded sensors.Instant // what was learnt up to here is in the journal
-	tables []Table         // since the last step
+	siting *drift.Siting
+	// sitingDay is the UTC day whose siting the recorder removes; -1: none yet.
+	sitingDay sensors.Instant
+	means     []drift.Mean    // reused
+	loaded    sensors.Instant // what was learnt up to here is in the journal
+	tables    []Table         // since the last step
 
 	tablesOut []Table // given out with the last step
 }
 
-func newLearner(stations []sensors.Station, ids []string) learner {
-	return learner{clocks: quality.NewClocks(stations), watch: drift.New(ids), means: make([]drift.Mean, len(ids))}
+func newLearner(stations []sensors.Station, ids []string, aloft []bool) learner {
+	return learner{
+		clocks: quality.NewClocks(stations), watch: drift.New(ids), means: make([]drift.Mean, len(ids)),
+		siting: drift.NewSiting(ids, aloft), sitingDay: -1,
+	}
+}
+
+// removeSiting has the recorder remove what the sites of the masts do to their
+// winds: what was learnt up to the begin of the UTC day of t.
+func (l *learner) removeSiting(t sensors.Instant, r *averages.Recorder) {
+	const aDay = sensors.Instant(24 * 3600 * 1000)
+	// The step of midnight still belongs to the day before.
+	day := (t - 1) - (t-1)%aDay
+	if day == l.sitingDay {
+		return
+	}
+	l.sitingDay = day
+	for i, s := range l.siting.InForce(day) {
+		r.SetSiting(i, s)
+	}
 }
 
 // learn does what is due at step t, after its readings have been taken in.
@@ -64,9 +86,15 @@ func (l *learner) learn(t sensors.Instant, r *averages.Recorder) {
 			m.Vector, m.Speed, m.Present = r.TenMinutes(i, t)
 		}
 		l.watch.Take(l.means)
+		l.siting.Take(l.means)
 	}
 	if t%(3600*sensors.Second) == 0 && l.watch.Turn(t) {
 		l.keep(t, neighbourTable, l.watch.Table(t))
+	}
+	if t%(3600*sensors.Second) == 0 {
+		if learnt := l.siting.Turn(t); learnt != nil {
+			l.keep(t, sitingTable, learnt)
+		}
 	}
 }
 
@@ -92,6 +120,9 @@ func (e *Engine) LoadTable(t Table) error {
 	l := &e.learner
 	var err error
 	switch named.Table {
+	case sitingTable:
+		l.sitingDay = -1
+		err = l.siting.Load(named.Data)
 	case clockTable:
 		err = l.clocks.Load(named.Data)
 	case neighbourTable:
@@ -105,6 +136,21 @@ func (e *Engine) LoadTable(t Table) error {
 		return fmt.Errorf("take up the table of %s: %w", t.At, err)
 	}
 	l.loaded = max(l.loaded, t.At)
+	return nil
+}
+
+// LoadSiting takes up what the journal holds of the sites of the masts, also of
+// days to come, for a replay: it says what was removed on each day. Other
+// tables are left alone.
+func (e *Engine) LoadSiting(t Table) error {
+	var named namedTable
+	if err := json.Unmarshal(t.Payload, &named); err != nil || named.Table != sitingTable {
+		return nil // it is read, and complained of, by those who need it
+	}
+	e.sitingDay = -1
+	if err := e.siting.Load(named.Data); err != nil {
+		return fmt.Errorf("take up the table of %s: %w", t.At, err)
+	}
 	return nil
 }
 

@@ -37,6 +37,7 @@ func (e *Engine) Reload(next *Engine) []lifecycle.Transition {
 		}
 	}
 	next.clocks.TakeShared(e.clocks)
+	next.siting.TakeOver(e.siting)
 	next.loaded, next.tables, next.tablesOut = e.loaded, e.tables, e.tablesOut
 	if !bytes.Equal(next.clocks.Table(), applied) {
 		next.keep(e.last, clockTable, next.clocks.Table())

@@ -127,6 +127,7 @@ const reportSeed = 7_000_000
 // study is what the arrivals told a minute ahead were worth, in s.
 type study struct {
 	wanted, said, within int
+	possible             int // arrivals before which two masts have been passed for twenty seconds, a minute ahead
 	errors               []float64
 	speed, heading       []float64 // errors two minutes after the passage: part, degrees
 }
@@ -163,6 +164,15 @@ func (st *study) passage(t *testing.T, r *rig, seed uint64) {
 				continue
 			}
 			st.wanted++
+			passed := 0
+			for _, before := range truth[len(r.places):] {
+				if before <= at-80 && before >= 240 {
+					passed++
+				}
+			}
+			if passed >= 2 {
+				st.possible++
+			}
 			if moving < 0 || fronts[moving].Arrivals[i].Arrived && i >= len(r.places) {
 				continue
 			}
@@ -196,10 +206,11 @@ func TestArrivals(t *testing.T) {
 		}
 		median := quantile(st.errors, 0.5)
 		share := float64(st.within) / float64(max(st.said, 1))
-		t.Logf("%s, %d episodes: said of %d of %d arrivals, error median %.1f s, 90 %% %.1f s; the interval of 90 %% holds %.2f; speed off by %.0f %%, heading by %.1f degrees in the median",
-			name, n, st.said, st.wanted, median, quantile(st.errors, 0.9), share, 100*quantile(st.speed, 0.5), quantile(st.heading, 0.5))
-		if st.said < st.wanted/5 {
-			t.Errorf("%s: a minute ahead %d of %d arrivals are told", name, st.said, st.wanted)
+		t.Logf("%s, %d episodes: said of %d of %d arrivals (%d with two masts passed by then), error median %.1f s, 90 %% %.1f s; the interval of 90 %% holds %.2f; speed off by %.0f %%, heading by %.1f degrees in the median",
+			name, n, st.said, st.wanted, st.possible, median, quantile(st.errors, 0.9), share, 100*quantile(st.speed, 0.5), quantile(st.heading, 0.5))
+		// One mast alone tells of no line.
+		if st.said < st.possible/2 {
+			t.Errorf("%s: a minute ahead %d of %d arrivals are told that could be", name, st.said, st.possible)
 		}
 		if median > 20 {
 			t.Errorf("%s: the median error of the arrival is %.1f s", name, median)
@@ -219,15 +230,18 @@ func TestNoFrontInOtherWeather(t *testing.T) {
 	r := newRig(t, "skerrymoor")
 	total := 0
 	for _, kind := range []synthetic.EpisodeKind{synthetic.EpisodeQuiet, synthetic.EpisodeGusty, synthetic.EpisodeConvective, synthetic.EpisodeOutflow} {
-		lines, shifts := 0, 0
+		lines, shifts, turned := 0, 0, 0
 		for k := range n {
 			r.reset()
 			seen := map[sensors.Instant]bool{}
-			shifted := false
+			shifted, told := false, false
 			r.play(t, synthetic.DrawEpisode(reportSeed+uint64(k), kind, r.line()), func(_ int, fronts []front.Front) {
 				for i := range fronts {
 					seen[fronts[i].First] = seen[fronts[i].First] || fronts[i].Moving
 					shifted = shifted || !fronts[i].Moving
+					// What opens a wind shift: 30 degrees with 5 m/s.
+					f := &fronts[i]
+					told = told || math.Abs(f.Turn) >= 30 && max(f.Before.Speed(), f.After.Speed()) >= 5
 				}
 			})
 			for _, moving := range seen {
@@ -238,8 +252,11 @@ func TestNoFrontInOtherWeather(t *testing.T) {
 			if shifted {
 				shifts++
 			}
+			if told {
+				turned++
+			}
 		}
-		t.Logf("%s: %d episodes of 25 min, %d lines told, slow turns in %d", kind, n, lines, shifts)
+		t.Logf("%s: %d episodes of 25 min, %d lines told, slow turns in %d, a turn that opens an alert in %d", kind, n, lines, shifts, turned)
 		total += lines
 	}
 	if total > 1+4*n/10 {

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"bytes"
 	"errors"
 	"fmt"
 	"time"
@@ -62,6 +63,11 @@ func (r *replayer) store(store *history.Store) error {
 		r.past = &past
 	}
 	h.starts = r.past.starts
+	for _, t := range r.past.sitings {
+		if err := h.engine.LoadSiting(t); err != nil {
+			return fmt.Errorf("replay the history: %w", err)
+		}
+	}
 	h.follow(r.past.configurations)
 	r.share = func() float64 {
 		return float64(r.engine.LastStep()-h.first) / float64(max(end-h.first, 1))
@@ -88,11 +94,20 @@ func openForReplay(dir string) (*history.Store, error) {
 type past struct {
 	starts         []sensors.Instant
 	configurations []inForce
+	sitings        []engine.Table // what was learnt of the sites of the masts
 }
 
 func pastOf(store *history.Store) (p past, err error) {
 	if p.starts, err = startsOf(store); err == nil {
 		p.configurations, err = configurationsOf(store)
+	}
+	if err == nil {
+		err = store.Journal(1, func(rec history.Record) error {
+			if rec.Kind == history.KindTable {
+				p.sitings = append(p.sitings, engine.Table{At: rec.At, Payload: bytes.Clone(rec.Payload)})
+			}
+			return nil
+		})
 	}
 	if err != nil {
 		return p, fmt.Errorf("replay the history: %w", err)

@@ -18,6 +18,7 @@ func engineSettings(cfg *config.Config, exercise bool) engine.Settings {
 		Window:   cfg.Analysis.Window,
 		Lateness: cfg.Analysis.Lateness,
 		Reach:    cfg.Analysis.Reach,
+		Siting:   cfg.Analysis.RemoveSiting,
 		Hold:     cfg.Alerts.Hold,
 		Exercise: exercise,
 		Prior:    windfield.DefaultPrior(),

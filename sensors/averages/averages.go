@@ -143,6 +143,7 @@ type mast struct {
 	staleAfter time.Duration
 	last       sensors.Instant
 	bins       [memory]bin
+	siting     Siting
 	turbulence Turbulence
 }
 
@@ -272,6 +273,10 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 			blk.East /= float64(n)
 			blk.North /= float64(n)
 			blk.Present = 3*n >= 2*expected
+			if m.siting.On {
+				v := m.siting.remove(quantity.Vector{East: blk.East, North: blk.North})
+				blk.East, blk.North = v.East, v.North
+			}
 		}
 		if b < 2 {
 			filled += n
