@@ -156,3 +156,26 @@ func TestLoad(t *testing.T) {
 		t.Errorf("nothing was judged: %+v", nobody.Figures[0])
 	}
 }
+
+// TestLifeKeepsThePlaceOfItsGreatest holds that a life tells where its greatest
+// change was, not where it ended.
+func TestLifeKeepsThePlaceOfItsGreatest(t *testing.T) {
+	lives := NewLives()
+	a := lifecycle.Alert{ID: "a", State: lifecycle.Open, Level: alerting.Noticeable, Opened: sensors.At(dawn), Cause: "unresolved"}
+	for i, row := range []struct {
+		peak, from float64
+		at         int
+		level      alerting.Level
+		cause      alerting.Cause
+	}{{-6, 3000, 0, 1, "unresolved"}, {-12, 2000, 5, 2, "outflow"}, {-12, 500, 5, 2, "unresolved"}, {-12, 100, 5, 1, "unresolved"}} {
+		a.PeakChange, a.PeakAt, a.From, a.To = row.peak, sensors.At(dawn)+sensors.Instant(row.at)*sensors.Second, row.from, row.from-500
+		a.Level, a.Cause, a.Updated = row.level, row.cause, sensors.At(dawn)+sensors.Instant(5*i)*sensors.Second
+		lives.Take(&a)
+	}
+	a.State, a.Closed, a.Because = lifecycle.Closed, sensors.At(dawn)+60*sensors.Second, lifecycle.BelowLevel
+	lives.Take(&a)
+	l := lives.List()[0]
+	if l.FromM != 2000 || l.ToM != 1500 || l.PeakKt != -23.3 || l.Level != "large" || l.Cause != "outflow" || len(l.Steps) != 3 || l.Issues != 5 || l.Closed == nil {
+		t.Errorf("%+v", l)
+	}
+}

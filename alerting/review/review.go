@@ -19,7 +19,6 @@ import (
 	"sockline/alerting/history"
 	"sockline/alerting/lifecycle"
 	"sockline/sensors"
-	"sockline/sensors/quantity"
 )
 
 // Life is one alert from its opening to its closing, as it is looked back at.
@@ -90,8 +89,10 @@ func (ls *Lives) Take(a *lifecycle.Alert) {
 	if a.Level > l.highest {
 		l.highest, l.Level = a.Level, a.Level.String()
 	}
-	if kt := a.PeakChange / quantity.Knot; a.PeakAt != 0 && math.Abs(kt) >= math.Abs(l.PeakKt) {
-		l.PeakKt, l.PeakAt = math.Round(kt*10)/10, a.PeakAt.Time()
+	// The place is that of the first issue that has the greatest change: later
+	// ones tell where the change is by then.
+	if a.PeakAt != 0 && !l.PeakAt.Equal(a.PeakAt.Time()) {
+		l.PeakKt, l.PeakAt = tenthKt(a.PeakChange), a.PeakAt.Time()
 		l.FromM, l.ToM = math.Round(a.From), math.Round(a.To)
 	}
 	if a.State == lifecycle.Closed {

@@ -1,7 +1,9 @@
 package main
 
 import (
+	"bytes"
 	"encoding/json"
+	"errors"
 	"os"
 	"path/filepath"
 	"strings"
@@ -10,27 +12,29 @@ import (
 
 	"sockline/alerting/history"
 	"sockline/alerting/judged"
+	"sockline/alerting/page"
 	"sockline/alerting/review"
 	"sockline/config"
 	"sockline/sensors"
 )
 
-// twice is an outflow of two strengths within half an hour.
+// twice is an outflow of two strengths within a quarter of an hour, the second
+// after midnight.
 const twice = `
 airfield   skerrymoor
-start      2026-07-01T23:45:00Z
-length     24 min
+start      2026-07-01T23:51:00Z
+length     15 min
 seed       5
 wind       240 deg 6 kt
 turbulence C
 eddies     0.4 m/s length 1000 m time 300 s
-outflow    at 1000 m before 07 strength 26 kt radius 900 m starts 4 min grows 1 min holds 2 min fades 1 min
-outflow    at 800 m before 07 strength 10 kt radius 900 m starts 14 min grows 1 min holds 3 min fades 1 min
+outflow    at 1000 m before 07 strength 26 kt radius 900 m starts 2 min grows 1 min holds 1 min fades 1 min
+outflow    at 800 m before 07 strength 10 kt radius 900 m starts 9 min grows 1 min holds 2 min fades 1 min
 `
 
 // kept is a history with all that a daemon leaves of a scene: what is in force,
 // the readings, the issues, and what was judged.
-func kept(tb testing.TB, configuration, scene string, people ...history.Entry) (dir string) {
+func kept(tb testing.TB, configuration, scene string) (dir string) {
 	tb.Helper()
 	cfg, err := config.Load(configuration)
 	if err != nil {
@@ -57,9 +61,6 @@ func kept(tb testing.TB, configuration, scene string, people ...history.Entry) (
 	if err := w.Close(tb.Context()); err != nil {
 		tb.Fatal(err)
 	}
-	for _, e := range people {
-		r.writer.Record(e)
-	}
 	r.close()
 	return dir
 }
@@ -77,13 +78,13 @@ func (r *recorder) closeJudged(stamp sensors.Instant, j *judgements) {
 	}
 }
 
-func whatIf(t *testing.T, args ...string) (w review.WhatIf, text string) {
+func whatIf(t *testing.T, args ...string) (w review.WhatIf) {
 	t.Helper()
 	o := succeed(t, append([]string{"replay", "--compare", "--output", "json"}, args...)...)
 	if err := json.Unmarshal([]byte(o.stdout), &w); err != nil {
 		t.Fatal(err)
 	}
-	return w, succeed(t, append([]string{"replay", "--compare"}, args...)...).stdout
+	return w
 }
 
 // TestCompare holds that the configuration in force gives every issue again and
@@ -93,7 +94,12 @@ func whatIf(t *testing.T, args ...string) (w review.WhatIf, text string) {
 func TestCompare(t *testing.T) {
 	configuration := small(t)
 	dir := kept(t, configuration, twice)
-	same, text := whatIf(t, "--history", dir)
+	same := whatIf(t, "--history", dir)
+	var said bytes.Buffer
+	if err := review.WriteWhatIf(&said, same); err != nil {
+		t.Fatal(err)
+	}
+	text := said.String()
 	if same.Way != review.Repeated || same.Repeat == nil || !same.Repeat.Exact || same.Repeat.Issues < 20 {
 		t.Fatalf("the same configuration: %+v\n%s", same.Repeat, text)
 	}
@@ -111,11 +117,11 @@ func TestCompare(t *testing.T) {
 		return writeFile(t, "other.toml", strings.Replace(string(source), old, new, 1))
 	}
 	higher := change(`noticeable_change = "10 kt"`, `noticeable_change = "14 kt"`)
-	kept, text := whatIf(t, "--history", dir, "--config", higher)
+	kept := whatIf(t, "--history", dir, "--config", higher)
 	if kept.Way != review.Rejudged || kept.Comparison.Vanishes+kept.Comparison.Changes == 0 || kept.Comparison.Recorded[0] != same.Comparison.Recorded[0] {
-		t.Errorf("a higher level: %+v\n%s", kept, text)
+		t.Errorf("a higher level: %+v", kept)
 	}
-	analysed, _ := whatIf(t, "--history", dir, "--config", higher, "--analyse")
+	analysed := whatIf(t, "--history", dir, "--config", higher, "--analyse")
 	if analysed.Way != review.Analysed {
 		t.Errorf("it was asked to be analysed: %s", analysed.Way)
 	}
@@ -128,13 +134,14 @@ func TestCompare(t *testing.T) {
 	lives := analysed.Comparison.Pairs
 	part := []string{"--history", dir, "--config", higher, "--from", lives[0].Recorded[0].Opened.Add(20 * time.Second).Format(time.RFC3339),
 		"--to", lives[len(lives)-1].Recorded[0].Opened.Add(20 * time.Second).Format(time.RFC3339)}
-	judgedPart, _ := whatIf(t, part...)
-	analysedPart, _ := whatIf(t, append(part, "--analyse")...)
+	judgedPart := whatIf(t, part...)
+	analysedPart := whatIf(t, append(part, "--analyse")...)
 	if a, b := verdicts(judgedPart.Comparison), verdicts(analysedPart.Comparison); a != b || len(judgedPart.Comparison.Pairs) == 0 || len(judgedPart.Comparison.Pairs) >= len(lives) {
 		t.Errorf("in part, from what is kept:\n%s\nanalysed:\n%s\nall of it:\n%s", a, b, verdicts(analysed.Comparison))
 	}
+	usualLevels(t, configuration, dir)
 	wider := writeFile(t, "wider.toml", string(source)+"\n[analysis]\nreach = \"900 m\"\n")
-	other, _ := whatIf(t, "--history", dir, "--config", wider)
+	other := whatIf(t, "--history", dir, "--config", wider)
 	if other.Way != review.Analysed || !strings.Contains(strings.Join(other.Notes, " "), "[analysis]") {
 		t.Errorf("another reach: %s %v", other.Way, other.Notes)
 	}
@@ -156,4 +163,52 @@ func verdicts(c review.Comparison) string {
 		b.WriteString(p.Verdict + " " + strings.Join(p.What, "; ") + "\n")
 	}
 	return b.String()
+}
+
+// usualLevels checks that a month judged by the usual other levels has, by
+// those in force, the alerts that were told.
+func usualLevels(t *testing.T, configuration, dir string) {
+	t.Helper()
+	cfg, err := config.Load(configuration)
+	if err != nil {
+		t.Fatal(err)
+	}
+	cfg.History.Directory = dir
+	store, err := history.ReadOnly(dir)
+	if err != nil {
+		t.Fatal(err)
+	}
+	last, _, err := store.LastStep()
+	if err != nil {
+		t.Fatal(err)
+	}
+	answer, err := otherLevels(t.Context(), store, cfg, last)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var v review.Variants
+	if err := json.Unmarshal(answer, &v); err != nil {
+		t.Fatal(err)
+	}
+	told := len(listed(t, dir))
+	if len(v.Variants) != 6 || !v.Variants[0].InUse || v.Variants[0].Alerts[0] != told || !v.Variants[0].Exact || len(v.Faults) > 0 || v.Hours < 0.2 {
+		t.Errorf("%d alerts were told: %s", told, answer)
+	}
+	lower, higher := v.Variants[1], v.Variants[2]
+	if lower.OpenMinutes <= v.Variants[0].OpenMinutes || higher.OpenMinutes >= v.Variants[0].OpenMinutes {
+		t.Errorf("alerts stand longer by lower levels and shorter by higher ones: %s", answer)
+	}
+	if err := store.Close(); err != nil {
+		t.Fatal(err)
+	}
+	cfg.History.Directory = t.TempDir() // nothing was judged there
+	if store, err = history.ReadOnly(dir); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := otherLevels(t.Context(), store, cfg, last); !errors.Is(err, page.ErrNothing) {
+		t.Errorf("nothing is kept: %v", err)
+	}
+	if err := store.Close(); err != nil {
+		t.Fatal(err)
+	}
 }

@@ -29,11 +29,6 @@ func (r *reviewer) Playback(ctx context.Context, event string) (json.RawMessage,
 	return r.of(ctx, event)
 }
 
-// errLater is for what this program does not work out.
-func errLater(what string) error {
-	return fmt.Errorf("%w: %s are not made by this version", page.ErrNothing, what)
-}
-
 // Report implements page.Review: the report of an event, on one page.
 func (r *reviewer) Report(_ context.Context, w io.Writer, id string) error {
 	store, _, err := r.event(id)
@@ -135,7 +130,19 @@ func (r *reviewer) Statistics(ctx context.Context, from, to sensors.Instant) (js
 	return json.Marshal(u)
 }
 
-// WhatIf implements page.Review.
-func (r *reviewer) WhatIf(context.Context) (json.RawMessage, error) {
-	return nil, errLater("other levels")
+// WhatIf implements page.Review: the last month judged by the usual other
+// levels.
+func (r *reviewer) WhatIf(ctx context.Context) (json.RawMessage, error) {
+	store, err := r.archive.reading()
+	if err != nil {
+		return nil, fmt.Errorf("%w: %w", page.ErrNotKept, err)
+	}
+	last, ok, err := store.LastStep()
+	if err != nil {
+		return nil, err
+	}
+	if !ok {
+		return nil, fmt.Errorf("%w: the history holds no readings", page.ErrNothing)
+	}
+	return otherLevels(ctx, store, r.current(), last)
 }
