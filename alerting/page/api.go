@@ -26,6 +26,7 @@ func (p *Page) routes() *http.ServeMux {
 	mux.HandleFunc("GET /api/v1/stream", p.stream)
 	mux.HandleFunc("GET /api/v1/layout", p.layout)
 	mux.HandleFunc("GET /api/v1/stations", p.stations)
+	mux.HandleFunc("GET /api/v1/openapi.json", p.description)
 	mux.HandleFunc("GET /api/v1/basis", p.basis)
 	p.pastRoutes(mux)
 	mux.Handle("GET /metrics", promhttp.HandlerFor(p.opts.Registry, promhttp.HandlerOpts{}))

@@ -112,8 +112,13 @@ func (s *somebody) answer(tb testing.TB, r *http.Request) (int, map[string]any) 
 		tb.Fatal(err)
 	}
 	defer w.Body.Close()
+	body, err := io.ReadAll(w.Body)
+	if err != nil {
+		tb.Fatal(err)
+	}
+	keepExchange(tb, r, w, body)
 	var m map[string]any
-	if err := json.NewDecoder(w.Body).Decode(&m); err != nil {
+	if err := json.Unmarshal(body, &m); err != nil {
 		tb.Fatalf("%s: %v", r.URL.Path, err)
 	}
 	return w.StatusCode, m
