@@ -59,6 +59,7 @@ func dayLayout() layout {
 	return layout{
 		format:  "sockline readings 2",
 		buckets: []string{bucketSteps, bucketLate, bucketStations, bucketBlocks},
+		salvage: salvageReadings,
 		older:   map[string][]string{"sockline readings 1": {bucketSteps, bucketLate, bucketStations}},
 		alloc:   16 << 10, // small against the day of a few stations
 		mapped:  32 << 20,
@@ -81,13 +82,18 @@ type file struct {
 }
 
 // open opens the file, which must exist unless create is set. A damaged file
-// is set aside under a dated name and, with create, begun anew; read-only, it
-// is left alone and the error says so.
+// is set aside under a dated name, and a new one begun with what it still
+// holds, an empty one only where create is set; read-only, it is left alone
+// and the error says so.
 func (f *file) open(create bool) error {
+	var damage error
 	for range 3 {
 		if _, err := os.Lstat(f.path); errors.Is(err, os.ErrNotExist) {
-			if !create || f.readOnly {
+			switch {
+			case f.readOnly, !create && damage == nil:
 				return fmt.Errorf("open %s: %w", f.path, os.ErrNotExist)
+			case !create && !readingsAside(f.path):
+				return damage
 			}
 			if err := createFile(f.path, f.layout, f.report); err != nil {
 				return err
@@ -101,12 +107,10 @@ func (f *file) open(create bool) error {
 		if !isDamage(err) || f.readOnly {
 			return err
 		}
-		if !create {
-			return err
-		}
+		damage = err
 		// Set aside by openBolt: the next round begins a new file.
 	}
-	return fmt.Errorf("open %s: damaged again each time it is begun anew; check the disk", f.path)
+	return fmt.Errorf("open %s: damaged again each time it is begun anew; check the disk: %w", f.path, damage)
 }
 
 func (f *file) openBolt() (*bolt.DB, error) {

@@ -213,12 +213,10 @@ func (s *salvager) leads(f found) bool {
 // there is one, and reports it. So it is also done by the next start when the
 // first was cut off in between.
 func salvageNewest(path string, db *bolt.DB, report func(string)) error {
-	asides, err := filepath.Glob(path + ".damaged-*")
-	if err != nil || len(asides) == 0 {
+	newest := newestAside(path)
+	if newest == "" {
 		return nil
 	}
-	slices.SortFunc(asides, func(a, b string) int { return modified(a).compare(modified(b), a, b) })
-	newest := asides[len(asides)-1]
 	taken, err := salvage(newest, db)
 	if err != nil {
 		return fmt.Errorf("take over the records of %s: %w", filepath.Base(newest), err)
@@ -227,6 +225,16 @@ func salvageNewest(path string, db *bolt.DB, report func(string)) error {
 		report(fmt.Sprintf("%s: %d intact records of %s are taken over into a new journal", path, taken, filepath.Base(newest)))
 	}
 	return nil
+}
+
+// newestAside is the file that was set aside last under this name, "" if none.
+func newestAside(path string) string {
+	asides, err := filepath.Glob(path + ".damaged-*")
+	if err != nil || len(asides) == 0 {
+		return ""
+	}
+	slices.SortFunc(asides, func(a, b string) int { return modified(a).compare(modified(b), a, b) })
+	return asides[len(asides)-1]
 }
 
 // moment is when a file was last written, as far as that can be told.
