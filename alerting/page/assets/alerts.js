@@ -33,7 +33,19 @@ export function occurrencesOf(body) {
   }
   const size = (/** @type {Shown} */ s) => Math.max(0, ...s.alerts.map((a) => Math.abs(a.change_kt || 0)));
   const open = (/** @type {Shown} */ s) => (s.alerts.length ? 1 : 0);
-  return out.sort((x, y) => open(y) - open(x) || levelNumber(y.occurrence.level) - levelNumber(x.occurrence.level) || size(y) - size(x));
+  return out.filter(worthShowing(body)).sort((x, y) => open(y) - open(x) || levelNumber(y.occurrence.level) - levelNumber(x.occurrence.level) || size(y) - size(x));
+}
+
+/**
+ * What has ended stays until somebody has seen it. Where nobody can say so, it
+ * stays for ten minutes.
+ * @param {any} body
+ * @returns {(s: Shown) => boolean}
+ */
+function worthShowing(body) {
+  if (document.body.dataset.users === "true") return () => true;
+  const now = Date.parse(body.at);
+  return (s) => s.alerts.length > 0 || !s.occurrence.ended || now - Date.parse(s.occurrence.ended) < 600000;
 }
 
 /** @param {Shown} s */
@@ -93,7 +105,7 @@ function update(node, s) {
   const [kind, side] = worst ? kindWords(worst.kind) : ["Has ended", "other"];
   const level = levelNumber(o.level);
   const unseen = worst && worst.observed === false;
-  const wanted = "alert " + side + " level" + level + (unseen || !worst ? " unseen" : "");
+  const wanted = "alert " + side + " level" + level + (unseen ? " unseen" : "") + (worst ? "" : " unseen ended");
   if (node.className !== wanted) node.className = wanted;
   const blink = /** @type {Element} */ (node.querySelector(".blink"));
   const raised = o.state === "raised-unseen" || o.state === "ended-unseen";
@@ -103,7 +115,9 @@ function update(node, s) {
   if (unseen) parts.push("not observed now");
   if (o.ended) parts.push("ended " + timeOf(o.ended) + " UTC");
   setText(/** @type {Element} */ (node.querySelector(".heading")), parts.join(" · "));
-  const [before, amount, after] = amountOf(o.sentence || (worst ? worst.text : ""));
+  // What it is now is large while it lasts, and not afterwards.
+  const text = o.sentence || (worst ? worst.text : "");
+  const [before, amount, after] = worst ? amountOf(text) : [text, "", ""];
   const spans = /** @type {Element} */ (node.querySelector(".sentence")).children;
   [before, amount, after].forEach((text, i) => setText(spans[i], text));
   keyed(/** @type {Element} */ (node.querySelector(".furthers")), alerts.slice(1), (a) => a.id,
@@ -140,12 +154,20 @@ export function showAlerts(body) {
   const open = shown.filter((s) => s.alerts.length > 0).length;
   setText(head, open === 0 ? "Alerts" : open === 1 ? "Alerts: 1 is open" : "Alerts: " + open + " are open, the largest first");
   if (shown.length === 0) {
-    if (!host.querySelector(".none")) host.replaceChildren(el("p", { class: "none" }, "No alert is open. That does not mean no windshear."));
+    if (!host.querySelector(".none")) host.replaceChildren(el("p", { class: "none" }));
+    setText(/** @type {Element} */ (host.querySelector(".none")), noneOpen(body.condition));
     return shown;
   }
   keyed(host, shown, (s) => s.occurrence.id, make, update);
   fit();
   return shown;
+}
+
+/** What it means that none is open. @param {string} condition */
+function noneOpen(condition) {
+  if (condition === "observing") return "No alert is open. That does not mean no windshear.";
+  if (condition === "partly-observing") return "No alert is open on what is observed. That does not mean no windshear.";
+  return "Nothing is observed, so nothing can be told. That does not mean no windshear.";
 }
 
 /**

@@ -27,6 +27,7 @@ async function ask() {
       ...fact("Running since", basis.started ? dayAndTime(basis.started) + " UTC" : ""), ...fact("Configuration in force since", basis.configuration_since ? dayAndTime(basis.configuration_since) + " UTC" : ""),
       ...fact("Its fingerprint", basis.configuration_hash || basis.fingerprint)];
     if (facts.length) byId("running").prepend(el("dl", null, ...facts));
+    if (Array.isArray(basis.method) && basis.method.length) byId("method").replaceChildren(...basis.method.map((/** @type {any} */ m) => el("li", null, String(m))));
     host.replaceChildren(basis.configuration ? configuration(basis.configuration) : el("p", null, "The program does not give its configuration."));
   } catch (e) {
     host.replaceChildren(el("p", null, e instanceof Error ? e.message : String(e)));

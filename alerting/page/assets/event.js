@@ -49,7 +49,7 @@ async function begin() {
     return;
   }
   summary();
-  told();
+  told(false);
   downloads();
   void people();
   void playback();
@@ -71,10 +71,22 @@ function summary() {
       el("dt", null, "Id"), el("dd", null, id)));
 }
 
-function told() {
-  /** @type {Element} */ (byId("issues").querySelector("tbody")).replaceChildren(...issues.map((i) => el("tr", null,
-    el("td", null, timeOf(i.state === "closed" ? i.closed || i.updated : i.updated)), el("td", null, i.state + (i.state === "closed" ? ", since " + closingWords(i.closed_because) : "")),
+/** @param {any} i an issue */
+const timeOfIssue = (i) => (i.state === "closed" ? i.closed || i.updated : i.updated);
+
+/**
+ * Shows what was told: the opening, each change of level or of what is
+ * observed, the greatest and the closing; everything where it is asked for.
+ * @param {boolean} whole
+ */
+function told(whole) {
+  const greatest = issues.reduce((best, i) => (Math.abs(i.change_kt || 0) > Math.abs(best.change_kt || 0) ? i : best), issues[0]);
+  const some = issues.filter((i, n) => whole || n === 0 || i === greatest || i.state === "closed" || i.level !== issues[n - 1].level || i.observed !== issues[n - 1].observed);
+  /** @type {Element} */ (byId("issues").querySelector("tbody")).replaceChildren(...some.map((i) => el("tr", null,
+    el("td", null, timeOf(timeOfIssue(i))), el("td", null, i.state + (i.state === "closed" ? ", since " + closingWords(i.closed_because) : "")),
     el("td", null, levelWords(i.level)), el("td", null, i.text))));
+  const more = byId("issues-more");
+  more.replaceChildren(some.length < issues.length || whole ? el("button", { type: "button", onclick: () => told(!whole) }, whole ? "Show the main ones only" : "Show all " + issues.length) : "");
 }
 
 /** Everything that people said about it. */
@@ -104,7 +116,9 @@ function said(n) {
 
 function downloads() {
   const link = (/** @type {string} */ path, /** @type {string} */ words) => el("li", null, el("a", { class: "button", href: address + path, download: true }, words));
-  byId("downloads").replaceChildren(link("/report", "Report (HTML)"), link("/csv", "Readings and issues (CSV)"), link("/bundle", "Bundle with readings, configuration and digests"));
+  // Exports are for officers, where there are users at all.
+  if (document.body.dataset.users === "true" && !may("officer")) byId("downloads").replaceChildren(el("li", null, needs("A download", "officer")));
+  else byId("downloads").replaceChildren(link("/report", "Report (HTML)"), link("/csv", "Readings and issues (CSV)"), link("/bundle", "Bundle with readings, configuration and digests"));
   const host = byId("hold");
   if (!may("officer")) {
     host.replaceChildren(needs("To hold the readings of this event", "officer"));
@@ -175,7 +189,7 @@ function moment() {
   setText(byId("at-told"), dayAndTime(second.at) + " UTC");
   range.setAttribute("aria-valuetext", dayAndTime(second.at) + " UTC");
   const now = Date.parse(second.at);
-  const before = issues.filter((i) => Date.parse(i.state === "closed" ? i.closed || i.updated : i.updated) <= now);
+  const before = issues.filter((i) => Date.parse(timeOfIssue(i)) <= now);
   const issue = before[before.length - 1];
   setText(byId("then"), !issue ? "Nothing had been told yet." : issue.state === "closed" ? "It had closed, since " + closingWords(issue.closed_because) + "." : issue.text);
   const alerts = second.alerts || (issue && issue.state === "open" ? [issue] : []);

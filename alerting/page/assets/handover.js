@@ -43,11 +43,11 @@ async function ask() {
   const time = (/** @type {Date} */ t) => t.toISOString().slice(0, 19) + "Z";
   const exercise = document.body.dataset.exercise === "true";
   try {
-    const { events } = await read("/api/v1/events?limit=200&from=" + time(from) + "&to=" + time(to));
+    const { events, highest_level: highest } = await read("/api/v1/events?limit=200&from=" + time(from) + "&to=" + time(to));
     const own = events.filter((/** @type {any} */ e) => e.exercise === exercise);
     list("last", own.slice(0, 12).map((/** @type {any} */ e) => {
       const peak = e.peak && typeof e.peak.change_kt === "number" ? ", at most " + Math.abs(Math.round(e.peak.change_kt)) + " kt" : "";
-      return el("a", { href: "/past/" + encodeURIComponent(e.id) }, timeOf(e.opened) + " UTC " + pathName(e.runway, e.operation) + ": " + kindWords(e.kind)[0].toLowerCase() + peak + ", level " + levelNumber(e.level));
+      return el("a", { href: "/past/" + encodeURIComponent(e.id) }, timeOf(e.opened) + " UTC " + pathName(e.runway, e.operation) + ": " + kindWords(e.kind)[0].toLowerCase() + peak + ", level " + levelNumber((highest && highest[e.id]) || e.level));
     }).concat(own.length > 12 ? [el("a", { href: "/past" }, "and " + (own.length - 12) + " more")] : []), "No alert was opened. That does not mean no windshear.");
   } catch (e) {
     byId("last").replaceChildren(el("p", null, message(e)));

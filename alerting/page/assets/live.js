@@ -6,8 +6,11 @@ import { Stream } from "./stream.js";
 import { byId, el, setText } from "./dom.js";
 import { conditionWords, levelNumber, timeOf } from "./words.js";
 
-/** Without a new step for so long everything is no information, in ms. */
-export const limit = 5000;
+/**
+ * Without a new step for so long everything is no information, in ms: five
+ * seconds, less the time that it takes to notice and to paint.
+ */
+export const limit = 4600;
 
 /**
  * Decides from steps and the running of a clock whether what is shown may still

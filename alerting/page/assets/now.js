@@ -102,7 +102,7 @@ function items(body) {
   item("shelf", shelved + " shelved", shelved > 0);
   const state = sound.state();
   item("sound", soundWords[state], state !== "on");
-  setText(byId("sound-switch"), sound.on ? "Sound off here" : "Sound on here");
+  setText(byId("sound-switch"), sound.on ? "Turn sound off" : "Turn sound on");
   const used = body.runway_in_use || "";
   if (runwayField instanceof HTMLSelectElement) {
     if (document.activeElement !== runwayField && runwayField.value !== used) runwayField.value = used;

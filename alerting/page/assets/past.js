@@ -6,7 +6,7 @@ import { byId, el } from "./dom.js";
 import { read } from "./ask.js";
 import { live } from "./live.js";
 import { pilotReport } from "./forms.js";
-import { dayAndTime, kindWords, lasting, levelNumber, levelWords, pathName } from "./words.js";
+import { dayAndTime, kindWords, lasting, levelWords, pathName } from "./words.js";
 
 const exercise = document.body.dataset.exercise === "true";
 const apart = document.body.dataset.live === "false";
@@ -31,16 +31,14 @@ async function show() {
   const table = byId("events");
   told.textContent = "Loading the events.";
   try {
-    const { events } = await read("/api/v1/events?limit=1000" + span());
+    const { events, highest_level: highest } = await read("/api/v1/events?limit=1000" + span() + wanted());
     choices(events);
-    const path = field("path").value, cause = field("cause").value, least = Number(field("level").value);
-    const own = events.filter((/** @type {any} */ e) => e.exercise === exercise);
-    const fit = own.filter((/** @type {any} */ e) => (path === "" || path === e.runway + " " + e.operation) && (cause === "" || cause === e.cause) && highest(e) >= least);
+    const fit = events.filter((/** @type {any} */ e) => e.exercise === exercise);
     told.textContent = fit.length === 0 ? "No event fits. That does not mean that there was no windshear." :
       fit.length + (fit.length === 1 ? " event" : " events") + (events.length === 1000 ? ", of the newest 1000 that are listed at once" : "") + ".";
-    /** @type {Element} */ (table.querySelector("tbody")).replaceChildren(...fit.map(row));
+    /** @type {Element} */ (table.querySelector("tbody")).replaceChildren(...fit.map((/** @type {any} */ e) => row(e, (highest && highest[e.id]) || e.level)));
     table.hidden = fit.length === 0;
-    const others = events.length - own.length;
+    const others = events.length - fit.length;
     byId("apart").replaceChildren(others === 0 ? "" : apart ? el("a", { href: "/past" }, "The record of real weather is shown apart.") :
       exercise ? others + " events of real weather are not shown here." :
         el("a", { href: "/past?record=exercise" }, others + " events of exercises are shown apart."));
@@ -50,18 +48,23 @@ async function show() {
   }
 }
 
-/** The highest level of an event. @param {any} e */
-function highest(e) {
-  return Math.max(levelNumber(e.level), levelNumber((e.peak && e.peak.level) || ""));
+/** The path, level and cause that are asked for, as the API takes them. */
+function wanted() {
+  const [runway, operation] = field("path").value.split(" ");
+  const words = ["", "noticeable", "large", "beyond-margin"];
+  const least = words[Number(field("level").value)];
+  const cause = field("cause").value;
+  return (runway ? "&runway=" + encodeURIComponent(runway) + "&operation=" + encodeURIComponent(operation) : "") +
+    (least === "noticeable" ? "" : "&level=" + least) + (cause ? "&cause=" + encodeURIComponent(cause) : "");
 }
 
-/** @param {any} e */
-function row(e) {
+/** @param {any} e @param {string} highest its highest level */
+function row(e, highest) {
   const lasted = e.closed ? lasting((Date.parse(e.closed) - Date.parse(e.opened)) / 1000) : "open";
   const peak = e.peak && typeof e.peak.change_kt === "number" ? kindWords(e.kind)[0] + " by about " + Math.abs(Math.round(e.peak.change_kt)) + " kt" : e.text;
   const address = "/past/" + encodeURIComponent(e.id) + (apart ? "?record=exercise" : "");
   return el("tr", null, el("td", null, el("a", { href: address }, dayAndTime(e.opened))), el("td", null, lasted), el("td", null, pathName(e.runway, e.operation)),
-    el("td", null, levelWords(e.level)), el("td", null, (e.cause || "").replaceAll("-", " ")), el("td", null, peak));
+    el("td", null, levelWords(highest)), el("td", null, (e.cause || "").replaceAll("-", " ")), el("td", null, peak));
 }
 
 /** The paths that there are, beside those already in the list. @param {any[]} events */

@@ -4,6 +4,7 @@
 
 import { svg } from "./dom.js";
 import { along, knot, outline, Scale, towards, unobserved } from "./ground.js";
+import { Labels } from "./labels.js";
 import { barb, mastSign } from "./signs.js";
 import { levelNumber, kindWords, knots, stateWords, timeOf } from "./words.js";
 
@@ -36,6 +37,9 @@ export class Plan {
     this.width = 0;
     /** @type {Map<number, number>} how many alerts are drawn on a side, by its bearing */
     this.stacks = new Map();
+    /** @type {[number, number, string][]} texts of what is drawn */
+    this.told = [];
+    this.labels = new Labels(0, 0, 15);
     new ResizeObserver(() => {
       if (Math.abs(host.clientWidth - this.width) > 4) this.fit();
     }).observe(host);
@@ -79,7 +83,7 @@ export class Plan {
       const used = ends.find((/** @type {any} */ e) => e.designator === this.runway) || ends[0];
       up = used ? used.bearing_true_deg : 0;
     }
-    const most = Math.max(260, window.innerHeight * (this.up === "runway" ? 0.75 : 0.36));
+    const most = Math.max(260, window.innerHeight * (this.up === "runway" ? 0.75 : 0.42));
     this.scale = new Scale(places, up, this.width, most, 46);
     this.moving = svg("g");
     const root = svg("svg", { viewBox: `0 0 ${this.width} ${this.scale.height.toFixed(0)}`, role: "img", "aria-label": "Plan of the airfield, to scale. What it shows is said in the sentences beside it." },
@@ -106,7 +110,7 @@ export class Plan {
     group.append(svg("path", { class: "scale", d: `M10 ${y - 5}v5h${long.toFixed(1)}v-5` }),
       svg("text", { x: 14 + long, y }, km + " km"));
     const [nx, ny] = scale.direction(0);
-    const [cx, cy] = [this.width - 26, 34];
+    const [cx, cy] = [this.width - 26, 48];
     group.append(svg("path", { class: "scale", d: `M${cx - nx * 18} ${cy - ny * 18}L${cx + nx * 18} ${cy + ny * 18}m${(-nx * 9 - ny * 6).toFixed(1)} ${(-ny * 9 + nx * 6).toFixed(1)}L${cx + nx * 18} ${cy + ny * 18}l${(-nx * 9 + ny * 6).toFixed(1)} ${(-ny * 9 - nx * 6).toFixed(1)}` }),
       svg("text", { x: cx + nx * 30, y: cy + ny * 30 + 5, "text-anchor": "middle" }, "N"));
     return group;
@@ -116,16 +120,31 @@ export class Plan {
   draw(body) {
     this.body = body;
     if (!this.scale || !this.moving) return;
+    this.labels = new Labels(this.width, this.scale.height, Math.max(14, parseFloat(getComputedStyle(this.host).fontSize) * 0.85));
+    for (const m of this.layout.masts) {
+      const [x, y] = this.scale.at([m.east_m, m.north_m]);
+      this.labels.keep(x, y, 9);
+    }
+    for (const path of this.shown()) {
+      for (let m = path.length_from_m; m > path.length_to_m; m -= 16 / this.scale.perMetre) {
+        const [x, y] = this.scale.at(along(path, m));
+        this.labels.keep(x, y, 7);
+      }
+    }
     const parts = [];
     for (const front of body.fronts || []) parts.push(this.front(front));
     for (const path of this.shown()) parts.push(this.path(path, body));
     for (const outflow of body.outflows || []) parts.push(this.outflow(outflow));
-    parts.push(this.thresholds(body));
-    for (const mast of this.layout.masts) parts.push(this.mast(mast, body));
     this.stacks = new Map();
     for (const path of this.shown()) parts.push(this.places(path, this.open(path, body)));
-    for (const front of body.fronts || []) parts.push(this.arrivals(front));
-    this.moving.replaceChildren(...parts);
+    for (const mast of this.layout.masts) parts.push(this.mast(mast, body));
+    // Texts come last and find their places in this order.
+    this.thresholds(body);
+    for (const [x, y, text] of this.told) this.labels.add(x, y, text);
+    this.told = [];
+    for (const front of body.fronts || []) this.arrivals(front);
+    for (const mast of this.layout.masts) this.name(mast, body);
+    this.moving.replaceChildren(...parts, this.labels.group);
   }
 
   /** Everything that is a value goes. */
@@ -202,9 +221,8 @@ export class Plan {
       const line = [[p[0] + sx * (off - 8), p[1] + sy * (off - 8)], [p[0] + sx * off, p[1] + sy * off], [q[0] + sx * off, q[1] + sy * off], [q[0] + sx * (off - 8), q[1] + sy * (off - 8)]];
       const word = kindWords(a.kind)[0].split(" ").pop();
       const at = scale.at(along(path, (a.from_m + a.to_m) / 2));
-      group.append(svg("path", { class: "place place" + levelNumber(a.level), d: outline(line) }),
-        svg("text", { x: at[0] + sx * (off + 14), y: at[1] + sy * (off + 14) + 5, "text-anchor": sx < -0.4 ? "end" : sx > 0.4 ? "start" : "middle" },
-          (path.operation === "landing" ? "Landing " : "Take-off ") + path.runway + ": " + word + " " + (a.change_kt === null ? "" : knots(Math.abs(a.change_kt)) + " kt") + ", level " + levelNumber(a.level)));
+      group.append(svg("path", { class: "place place" + levelNumber(a.level), d: outline(line) }));
+      this.told.push([at[0] + sx * off, at[1] + sy * off, (path.operation === "landing" ? "Landing " : "Take-off ") + path.runway + ": " + word + " " + (a.change_kt === null ? "" : knots(Math.abs(a.change_kt)) + " kt") + ", level " + levelNumber(a.level)]);
     });
     return group;
   }
@@ -212,24 +230,12 @@ export class Plan {
   /** @param {any} body */
   thresholds(body) {
     const scale = /** @type {Scale} */ (this.scale);
-    const group = svg("g");
     for (const r of this.layout.runways) {
       for (const e of r.ends) {
         const [x, y] = scale.at([e.east_m, e.north_m]);
-        const [ux, uy] = scale.direction(e.bearing_true_deg);
-        const used = body.runway_in_use === e.designator;
-        // On the side of the runway where no mast stands in the way.
-        const nearest = (/** @type {Place} */ p) => Math.min(...this.layout.masts.map((/** @type {any} */ m) => {
-          const [mx, my] = scale.at([m.east_m, m.north_m]);
-          return Math.hypot(mx + 20 - p[0], my + 8 - p[1]);
-        }));
-        /** @type {Place[]} */
-        const sides = [[x - ux * 12 + uy * 20, y - uy * 12 - ux * 20], [x - ux * 12 - uy * 20, y - uy * 12 + ux * 20]];
-        const [lx, ly] = nearest(sides[0]) >= nearest(sides[1]) ? sides[0] : sides[1];
-        group.append(svg("text", { x: lx, y: ly + 5, "text-anchor": "middle", "font-weight": "700" }, e.designator + (used ? " in use" : "")));
+        this.labels.add(x, y, e.designator + (body.runway_in_use === e.designator ? " in use" : ""), { bold: true, off: 14 });
       }
     }
-    return group;
   }
 
   /** @param {any} mast @param {any} body */
@@ -242,10 +248,15 @@ export class Plan {
     const wind = health && health.live && health.wind ? health.wind.two_minutes : null;
     if (wind) group.append(barb(x, y, scale.direction(wind.from_deg), wind.speed_ms / knot, (this.layout.latitude_deg || 0) < 0));
     group.append(mastSign(x, y, state));
-    const label = mast.id + (state === "live" ? "" : ": " + stateWords(state));
-    const right = x > this.width - 130;
-    group.append(svg("text", { class: "quiet", x: x + (right ? -12 : 12), y: y + 18, "text-anchor": right ? "end" : "start" }, label));
     return group;
+  }
+
+  /** @param {any} mast @param {any} body */
+  name(mast, body) {
+    const [x, y] = /** @type {Scale} */ (this.scale).at([mast.east_m, mast.north_m]);
+    const health = (body.stations || []).find((/** @type {any} */ s) => s.id === mast.id);
+    const state = health ? health.state : "unknown";
+    this.labels.add(x, y, mast.id + (state === "live" ? "" : ": " + stateWords(state)), { quiet: true });
   }
 
   /** Half of the odds within the inner outline, 95 of 100 within the outer one. @param {any} o */
@@ -264,7 +275,7 @@ export class Plan {
       group.append(svg("path", { class: "arrow", d: `M${x} ${y}L${ex} ${ey}M${ex - ux * 13 - uy * 8} ${ey - uy * 13 + ux * 8}L${ex} ${ey}L${ex - ux * 13 + uy * 8} ${ey - uy * 13 - ux * 8}` }));
     }
     const words = o.extent === "microburst" ? "microburst" : "outflow";
-    group.append(svg("text", { x: x + 10, y: y - 12 }, words + (o.probability === undefined ? "" : ", " + Math.round(o.probability * 100) + " in 100")));
+    this.told.push([x, y, words + (o.probability === undefined ? "" : ", " + Math.round(o.probability * 100) + " in 100")]);
     return group;
   }
 
@@ -281,21 +292,17 @@ export class Plan {
     const [mx, my] = [(a[0] + b[0]) / 2, (a[1] + b[1]) / 2];
     const [ex, ey] = [mx + ux * 34, my + uy * 34];
     group.append(svg("path", { class: "front-band", d: outline(band, true) }), svg("path", { class: "front-line", d: outline([a, b]) }),
-      svg("path", { class: "arrow", d: `M${mx} ${my}L${ex} ${ey}M${ex - ux * 11 - uy * 7} ${ey - uy * 11 + ux * 7}L${ex} ${ey}L${ex - ux * 11 + uy * 7} ${ey - uy * 11 - ux * 7}` }),
-      svg("text", { x: mx + ux * 44, y: my + uy * 44 }, f.kind === "wind-shift" ? "wind shift" : "gust front"));
+      svg("path", { class: "arrow", d: `M${mx} ${my}L${ex} ${ey}M${ex - ux * 11 - uy * 7} ${ey - uy * 11 + ux * 7}L${ex} ${ey}L${ex - ux * 11 + uy * 7} ${ey - uy * 11 - ux * 7}` }));
+    this.told.push([mx + ux * 30, my + uy * 30, f.kind === "wind-shift" ? "wind shift" : "gust front"]);
     return group;
   }
 
   /** When a front is at a threshold or mast. @param {any} f */
   arrivals(f) {
     const scale = /** @type {Scale} */ (this.scale);
-    const group = svg("g");
     for (const arrival of f.arrivals || []) {
       const [x, y] = scale.at([arrival.east_m, arrival.north_m]);
-      const right = x > this.width - 170;
-      group.append(svg("text", { x: x + (right ? -12 : 12), y: y + 34, "text-anchor": right ? "end" : "start" },
-        (arrival.arrived ? "since " : "front at ") + timeOf(arrival.at)));
+      this.labels.add(x, y, (arrival.arrived ? "front since " : "front at ") + timeOf(arrival.at));
     }
-    return group;
   }
 }

@@ -49,7 +49,7 @@ export function drawProfile(path, ground, profile, alerts, width) {
  */
 function chart(path, ground, profile, change, width) {
   const height = Math.max(120, Math.min(190, width * 0.42));
-  const [left, right, top, bottom] = [38, 8, 10, 26];
+  const [left, right, top, bottom] = [58, 8, 10, 28];
   const from = ground.length_from_m, to = ground.length_to_m;
   const points = profile.points.filter((/** @type {any} */ p) => p.observed && p.headwind_kt !== null);
   points.sort((/** @type {any} */ a, /** @type {any} */ b) => b.at_m - a.at_m);

@@ -52,7 +52,7 @@ export function mastSign(x, y, state) {
   const r = 7;
   if (state === "live") group.append(svg("circle", { class: "mast live", cx: x, cy: y, r }));
   else if (state === "late") {
-    group.append(svg("circle", { class: "mast live", cx: x, cy: y, r }), svg("path", { class: "mast", d: `M${x - 4} ${y}h8` }));
+    group.append(svg("circle", { class: "mast live", cx: x, cy: y, r }), svg("path", { class: "slit", d: `M${x - 7} ${y}h14` }));
   } else if (state === "starting") group.append(svg("circle", { class: "mast", cx: x, cy: y, r }));
   else if (state === "under-maintenance") {
     group.append(svg("path", { class: "mast", d: `M${x - 7} ${y - 7}h14v14h-14zM${x - 7} ${y + 7}l14-14` }));
