@@ -2,7 +2,9 @@ package engine
 
 import (
 	"slices"
+	"time"
 
+	"sockline/alerting"
 	"sockline/alerting/airfield"
 	"sockline/alerting/front"
 	"sockline/alerting/hazard"
@@ -91,10 +93,12 @@ func (e *Engine) assessOthers(s *averages.Snapshot) {
 			o.Seen = false
 		}
 		if len(a.Observed) > 0 {
-			hazard.JudgeShift(&a.Shift, e.result.Fronts, func(f *front.Front) bool { return reaches(f, pg) }, l)
+			hazard.JudgeShift(&a.Shift, e.result.Fronts, func(f *front.Front) bool { return reaches(f, pg, t) }, l)
 			a.Shift.From, a.Shift.To = a.Observed[0].From, a.Observed[len(a.Observed)-1].To
 			a.Shift.Used = a.Loss.Used
 		}
+		e.frontCause(&a.Loss, pg)
+		e.frontCause(&a.Gain, pg)
 		near := func(v *vertical.Shear) bool { return slices.Contains(q.columns, v.Column) }
 		if k := hazard.JudgeVertical(&a.Vertical, e.others.shears, near, l); k >= 0 {
 			v := &e.others.shears[k]
@@ -113,18 +117,38 @@ func (e *Engine) assessOthers(s *averages.Snapshot) {
 	}
 }
 
-// reaches tells whether the change of a front has come to a path: a mast beside
-// it has seen it, or it comes everywhere.
-func reaches(f *front.Front, pg *pathGround) bool {
+// shiftStands is how long after its last mast on a path a front is told there.
+// By then the means of ten minutes hold nothing of the wind before it.
+const shiftStands = 10 * time.Minute
+
+// reaches tells whether the change of a front has come to a path within the last
+// ten minutes: a mast beside it has seen it, or it comes everywhere.
+func reaches(f *front.Front, pg *pathGround, t sensors.Instant) bool {
 	if !f.Moving {
 		return true
 	}
-	for _, m := range f.Hit {
-		if slices.Contains(pg.beside, m) {
+	for i := range f.Arrivals {
+		a := &f.Arrivals[i]
+		if a.Mast >= 0 && a.Arrived && t.Sub(a.At) <= shiftStands && slices.Contains(pg.beside, a.Mast) && slices.Contains(f.Hit, a.Mast) {
 			return true
 		}
 	}
 	return false
+}
+
+// frontCause names a front as the cause of a change whose cause the wind field
+// leaves open, where its line lies across the ground of the change.
+func (e *Engine) frontCause(c *hazard.Change, pg *pathGround) {
+	if c.Cause != alerting.Unresolved || c.HoldLevel == alerting.NoLevel {
+		return
+	}
+	x0, y0 := pg.path.At(c.From)
+	x1, y1 := pg.path.At(c.To)
+	for i := range e.result.Fronts {
+		if f := &e.result.Fronts[i]; f.Kind == front.GustFront && f.Between(x0, y0, x1, y1) {
+			c.Cause = alerting.GustFront
+		}
+	}
 }
 
 // assessColumns compares the levels of every column.

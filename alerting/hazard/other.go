@@ -108,6 +108,9 @@ func JudgeShift(o *Other, fronts []front.Front, reached func(*front.Front) bool,
 		return alerting.NoLevel
 	}
 	o.set(f.Change.Speed(), levelOf(0), levelOf(shiftHolds), f.Confidence)
+	if o.Cause = alerting.Unresolved; f.Moving && f.Kind == front.GustFront {
+		o.Cause = alerting.GustFront
+	}
 	detail.Turn, detail.Before, detail.After, detail.Moving = f.Turn, f.Before, f.After, f.Moving
 	o.Detail = detail
 }

@@ -47,7 +47,12 @@ func TestJudgeShift(t *testing.T) {
 			t.Errorf("%+v: %+v", c, o)
 		}
 	}
+	line := turned(40, 9, 9)
+	line.Kind, line.Moving = front.GustFront, true
 	var o Other
+	if JudgeShift(&o, []front.Front{line}, always, limits()); o.Cause != alerting.GustFront || !o.Detail.Moving {
+		t.Errorf("behind a line: %+v", o)
+	}
 	JudgeShift(&o, []front.Front{turned(90, 9, 9)}, func(*front.Front) bool { return false }, limits())
 	if !o.Seen || !o.Over || o.Level != alerting.NoLevel {
 		t.Errorf("a front that has not come here: %+v", o)

@@ -110,20 +110,20 @@ func metres(m float64) string {
 	return strconv.Itoa(int(math.Round(m)))
 }
 
-// degrees is a turn in words, to the nearest ten.
+// degrees is a turn in words, to the nearest five.
 func degrees(turn float64) string {
-	ten := math.Round(math.Abs(turn)/10) * 10
+	five := math.Round(math.Abs(turn)/5) * 5
 	switch {
-	case math.IsNaN(ten) || ten > 180:
+	case math.IsNaN(five) || five > 180:
 		return "an unknown angle"
-	case ten == 0:
-		return "less than 10 degrees"
-	case ten == 180:
+	case five == 0:
+		return "less than 5 degrees"
+	case five == 180:
 		return "about 180 degrees"
 	case turn < 0:
-		return fmt.Sprintf("about %.0f degrees anticlockwise", ten)
+		return fmt.Sprintf("about %.0f degrees anticlockwise", five)
 	}
-	return fmt.Sprintf("about %.0f degrees clockwise", ten)
+	return fmt.Sprintf("about %.0f degrees clockwise", five)
 }
 
 // windFrom is a wind in words: degrees magnetic and knots.
