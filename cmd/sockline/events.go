@@ -1,8 +1,11 @@
 package main
 
 import (
+	"bytes"
 	"context"
+	"crypto/tls"
 	"encoding/json"
+	"encoding/pem"
 	"errors"
 	"flag"
 	"fmt"
@@ -90,6 +93,7 @@ func eventsShowCommand() command {
 type eventSource struct {
 	directory string
 	listen    string // address of the daemon's page; empty if it is not known
+	cert      string // file of its certificate; empty where it has none
 }
 
 // source is where the flags say the events are.
@@ -104,7 +108,7 @@ func (f eventFlags) source() (eventSource, error) {
 	if err != nil {
 		return eventSource{}, err
 	}
-	return eventSource{directory: cfg.History.Directory, listen: cfg.Page.Listen}, nil
+	return eventSource{directory: cfg.History.Directory, listen: cfg.Page.Listen, cert: cfg.Page.CertFile}, nil
 }
 
 // open opens the directory. A nil store without an error says that a daemon
@@ -169,11 +173,16 @@ const (
 func (s eventSource) ask(ctx context.Context, path string, answer any) error {
 	ctx, cancel := context.WithTimeout(ctx, askTimeout)
 	defer cancel()
-	request, err := http.NewRequestWithContext(ctx, http.MethodGet, "http://"+s.address()+path, nil)
+	client, scheme, err := s.client()
+	if err != nil {
+		return err
+	}
+	defer client.CloseIdleConnections()
+	request, err := http.NewRequestWithContext(ctx, http.MethodGet, scheme+s.address()+path, nil)
 	if err != nil {
 		return fmt.Errorf("ask the daemon: %w", err)
 	}
-	response, err := http.DefaultClient.Do(request)
+	response, err := client.Do(request)
 	if err != nil {
 		return fmt.Errorf("the history is held by a running daemon, which did not answer: %w", err)
 	}
@@ -196,11 +205,39 @@ func (s eventSource) ask(ctx context.Context, path string, answer any) error {
 	return nil
 }
 
+// client speaks to the page. Over TLS it trusts the very certificate that the
+// configuration names: on this machine the page is asked by an address that no
+// authority vouches for.
+func (s eventSource) client() (c *http.Client, scheme string, err error) {
+	t := &http.Transport{}
+	if s.cert == "" {
+		return &http.Client{Transport: t}, "http://", nil
+	}
+	text, err := os.ReadFile(s.cert)
+	if err != nil {
+		return nil, "", fmt.Errorf("read the certificate of the page: %w", err)
+	}
+	block, _ := pem.Decode(text)
+	if block == nil {
+		return nil, "", fmt.Errorf("there is no certificate in %s", s.cert)
+	}
+	t.TLSClientConfig = &tls.Config{
+		InsecureSkipVerify: true, // by name; what follows is stricter
+		VerifyConnection: func(state tls.ConnectionState) error {
+			if !bytes.Equal(state.PeerCertificates[0].Raw, block.Bytes) {
+				return fmt.Errorf("what answers at %s has another certificate than %s", s.listen, s.cert)
+			}
+			return nil
+		},
+	}
+	return &http.Client{Transport: t}, "https://", nil
+}
+
 // address is where to ask: the page's address, on this machine where it names
-// no host.
+// no host or all of them.
 func (s eventSource) address() string {
 	host, port, err := net.SplitHostPort(s.listen)
-	if err == nil && host == "" {
+	if ip := net.ParseIP(host); err == nil && (host == "" || ip != nil && ip.IsUnspecified()) {
 		return net.JoinHostPort("127.0.0.1", port)
 	}
 	return s.listen
