@@ -162,7 +162,7 @@ func WriteWhatIf(w io.Writer, r WhatIf) error {
 	if r.Repeat != nil {
 		writeRepeat(&b, r)
 	} else {
-		fmt.Fprintf(&b, "The other configuration has %s.\n", strings.Join(orNothing(r.Changed), "; "))
+		fmt.Fprintf(&b, "What the other configuration changes: %s.\n", strings.Join(orNothing(r.Changed), "; "))
 		fmt.Fprintln(&b, map[Way]string{
 			Rejudged: "What was kept of each step was judged by it.",
 			Analysed: "The readings were analysed anew by it.",

@@ -15,6 +15,8 @@ import (
 
 	"sockline/alerting"
 	"sockline/alerting/history"
+	"sockline/alerting/judged"
+	"sockline/alerting/review"
 	"sockline/sensors/feed/brokertest"
 )
 
@@ -77,6 +79,16 @@ func TestDaemon(t *testing.T) {
 	again := succeed(t, "replay", "--config", path, "--capture", capture).stdout
 	if want := strings.Join(issued, "\n") + "\n"; again != want {
 		t.Errorf("the replay of the capture differs from what was issued: %s", firstDifference(again, want))
+	}
+	var repeated review.WhatIf
+	if err := json.Unmarshal([]byte(succeed(t, "replay", "--history", dir, "--compare", "--output", "json").stdout), &repeated); err != nil {
+		t.Fatal(err)
+	}
+	if r := repeated.Repeat; r == nil || !r.Exact || r.Issues != len(issued) {
+		t.Errorf("what the daemon told does not come of its history again: %+v", r)
+	}
+	if r, err := judged.ReadDay(dir, "2026-07-01", 0, 0, func(*judged.Step) error { return nil }); err != nil || r.Steps == 0 || len(r.Faults) > 0 {
+		t.Errorf("what the daemon judged is not kept: %+v %v", r, err)
 	}
 	for _, a := range heard.heard() {
 		if !slices.Contains(issued, a) {

@@ -425,7 +425,11 @@ func changedKeys(a, b *config.Config) []string {
 	if a.Alerts.Hold != b.Alerts.Hold {
 		out = append(out, fmt.Sprintf("hold %v instead of %v", b.Alerts.Hold, a.Alerts.Hold))
 	}
-	if why := analysisDiffers(a, b); why != "" {
+	if a.Alerts.MarginFBar != b.Alerts.MarginFBar {
+		out = append(out, fmt.Sprintf("margin_fbar %g instead of %g", b.Alerts.MarginFBar, a.Alerts.MarginFBar))
+	}
+	speed("fastest_approach_speed", a.Alerts.FastestApproachSpeed, b.Alerts.FastestApproachSpeed)
+	if why := analysisDiffers(a, b); why != "" && len(out) == 0 {
 		out = append(out, why)
 	}
 	if len(out) == 0 && !bytes.Equal(a.Source, b.Source) {

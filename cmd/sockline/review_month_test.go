@@ -15,8 +15,8 @@ import (
 // TestReportOnAMonth holds that the report of an event out of a month of eight
 // masts, and the summary of that month, come within seconds.
 func TestReportOnAMonth(t *testing.T) {
-	if os.Getenv("SOCKLINE_LONG") == "" {
-		t.Skip("with SOCKLINE_LONG only: a month of readings takes minutes to write")
+	if os.Getenv("SOCKLINE_LARGE_HISTORY") == "" {
+		t.Skip("with SOCKLINE_LARGE_HISTORY only: a month of readings takes minutes to write")
 	}
 	dir := kept(t, skerrymoor, twice)
 	cfg, err := config.Load(skerrymoor)
