@@ -49,7 +49,7 @@ func New(format string, w io.Writer) (Sink, error) {
 	case "jsonl":
 		return newLines(w)
 	case "parquet":
-		return newParquet(w), nil
+		return newParquet(w)
 	}
 	return nil, fmt.Errorf("there is no format %q: choose csv, jsonl or parquet", format)
 }
