@@ -139,3 +139,20 @@ func TestAreas(t *testing.T) {
 		}
 	}
 }
+
+// Expected by drawing it: the corners of a square with points in and on it.
+func TestHull(t *testing.T) {
+	square := []airfield.Point{{X: 1, Y: 1}, {X: 0, Y: 0}, {X: 2, Y: 2}, {X: 2, Y: 0}, {X: 1, Y: 0}, {X: 0, Y: 2}, {X: 2, Y: 2}}
+	got := hull(square)
+	if len(got) != 4 || enclosed(got) != 4 {
+		t.Errorf("the hull is %v", got)
+	}
+	for _, p := range []airfield.Point{{X: 0.5, Y: 0.5}, {X: 1.9, Y: 1.9}} {
+		if !within(p, got) {
+			t.Errorf("%v lies outside of %v", p, got)
+		}
+	}
+	if within(airfield.Point{X: 2.1, Y: 1}, got) {
+		t.Error("what lies outside is inside")
+	}
+}

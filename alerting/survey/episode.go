@@ -5,6 +5,7 @@ import (
 	"time"
 
 	"sockline/alerting"
+	"sockline/alerting/airfield"
 	"sockline/alerting/engine"
 	"sockline/sensors"
 	"sockline/sensors/quantity"
@@ -50,7 +51,7 @@ type Case struct {
 }
 
 // CentreError is how far the centre told of an outflow lay from the true one at
-// the moment of its greatest change.
+// the moment of its greatest loss on any path, where that was large.
 type CentreError struct {
 	Told   bool    `json:"told"`
 	Off    float64 `json:"off_m"`
@@ -91,11 +92,12 @@ type player struct {
 	network *Network
 	study   synthetic.Study
 	grounds []*ground
+	hull    []airfield.Point // of the masts
 	brief   time.Duration
 }
 
 func newPlayer(n *Network, p Plan) *player {
-	return &player{network: n, study: n.study(p), grounds: grounds(n), brief: p.brief}
+	return &player{network: n, study: n.study(p), grounds: grounds(n), hull: hull(n.Settings.Airfield.MastPoints()), brief: p.brief}
 }
 
 // play runs episode i.
@@ -125,6 +127,7 @@ func (p *player) play(i int) (Episode, error) {
 	large := p.network.Settings.Levels.Large
 	tracks := p.tracks(&out)
 	awaited := p.thresholds(scene)
+	greatest := 0.0 // true loss on any ground so far, m/s
 	for {
 		found, second, more := run.next()
 		if !more {
@@ -146,6 +149,10 @@ func (p *player) play(i int) (Episode, error) {
 			}
 			if len(scene.Outflows) > 0 && second > warmUp {
 				p.place(&tracks[2*k], &scene.Outflows[0], g, second)
+				if truth.loss > greatest && truth.loss >= large {
+					greatest = truth.loss
+					out.Centre = p.centre(found, &scene.Outflows[0], second)
+				}
 			}
 		}
 	}
@@ -331,6 +338,20 @@ func (a *awaited) see(found *engine.Result, second int) {
 			a.Told, a.Off = true, round(place.At.Sub(start).Seconds()-a.at, 10)
 		}
 	}
+}
+
+// centre compares the likeliest outflow that is told with the true one.
+func (p *player) centre(found *engine.Result, o *synthetic.Outflow, second int) *CentreError {
+	x, y := o.Centre(float64(second))
+	c := &CentreError{Inside: within(airfield.Point{X: x, Y: y}, p.hull)}
+	likeliest := 0.0
+	for i := range found.Outflows {
+		if f := &found.Outflows[i]; f.Probability > likeliest {
+			likeliest = f.Probability
+			c.Told, c.Off = true, math.Round(math.Hypot(f.X-x, f.Y-y))
+		}
+	}
+	return c
 }
 
 // end brings the case into the form in which it is kept.

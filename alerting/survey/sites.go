@@ -251,6 +251,42 @@ func within(p airfield.Point, polygon []airfield.Point) bool {
 	return in
 }
 
+// hull is the convex hull of points, anticlockwise: R.A. Jarvis, "On the
+// identification of the convex hull of a finite set of points in the plane",
+// Information Processing Letters 2, 1973 (from memory).
+func hull(points []airfield.Point) (out []airfield.Point) {
+	first := 0
+	for i, p := range points {
+		if q := points[first]; p.X < q.X || p.X == q.X && p.Y < q.Y {
+			first = i
+		}
+	}
+	for at := first; len(out) <= len(points); {
+		out = append(out, points[at])
+		next := -1
+		for i, p := range points {
+			if p == points[at] {
+				continue
+			}
+			if next < 0 {
+				next = i
+				continue
+			}
+			a, b := points[at], points[next]
+			turn := (b.X-a.X)*(p.Y-a.Y) - (b.Y-a.Y)*(p.X-a.X)
+			farther := math.Hypot(p.X-a.X, p.Y-a.Y) > math.Hypot(b.X-a.X, b.Y-a.Y)
+			if turn < 0 || turn == 0 && farther {
+				next = i
+			}
+		}
+		if next < 0 || points[next] == points[first] {
+			break
+		}
+		at = next
+	}
+	return out
+}
+
 // besideRunway is how near to a runway's centreline no mast may stand unless
 // somebody says so, m: the width of an instrument runway strip to either side
 // (ICAO Annex 14; from memory).
