@@ -18,16 +18,18 @@ type Findings struct {
 	Large      float64 `json:"large_kt"`
 	Confidence float64 `json:"confidence"`
 
-	Detection []ClassShare `json:"detection"`       // losses on observed ground
-	Gains     []ClassShare `json:"detection_gains"` // gains on observed ground
-	Whole     []ClassShare `json:"detection_whole"` // losses on whole paths, observed or not
-	Calm      Share        `json:"detection_without_eddies"`
-	Eddying   Share        `json:"detection_with_eddies"`
-	Sound     Share        `json:"detection_without_fault"`
-	Broken    Share        `json:"detection_with_fault"`
-	Shapes    []NamedShare `json:"detection_by_shape"`
-	Along     []ClassShare `json:"detection_by_place_along"` // m before the threshold of its path
-	Beside    []ClassShare `json:"detection_by_place_beside"`
+	Detection   []ClassShare `json:"detection"`              // losses on observed ground
+	Gains       []ClassShare `json:"detection_gains"`        // gains on observed ground
+	Whole       []ClassShare `json:"detection_whole"`        // losses on whole paths, observed or not
+	Strong      Share        `json:"detection_strong"`       // losses of a third above the level in force, or more
+	StrongWhole Share        `json:"detection_strong_whole"` // the same on whole paths
+	Calm        Share        `json:"detection_without_eddies"`
+	Eddying     Share        `json:"detection_with_eddies"`
+	Sound       Share        `json:"detection_without_fault"`
+	Broken      Share        `json:"detection_with_fault"`
+	Shapes      []NamedShare `json:"detection_by_shape"`
+	Along       []ClassShare `json:"detection_by_place_along"` // m before the threshold of its path
+	Beside      []ClassShare `json:"detection_by_place_beside"`
 
 	Delay     Delay `json:"delay"`
 	Same      Delay `json:"delay_of_the_same"` // of the episodes of Reference

@@ -104,25 +104,13 @@ func (x Result) summary() []string {
 
 // summary of what was found.
 func (f *Findings) summary() []string {
-	strong, all := Share{}, f.Large*4/3
-	for _, c := range f.Detection {
-		if c.From >= all-0.5 {
-			strong.Hits, strong.Cases = strong.Hits+c.Hits, strong.Cases+c.Cases
-		}
-	}
 	var out []string
-	if strong.Cases > 0 {
-		out = append(out, fmt.Sprintf("Of losses of headwind of %.0f kt or more on observed ground, %.0f in 100 raise level 2 (%d of %d).",
-			all, 100*float64(strong.Hits)/float64(strong.Cases), strong.Hits, strong.Cases))
+	if s := f.Strong; s.Cases > 0 {
+		out = append(out, fmt.Sprintf("Of losses of headwind of %.0f kt or more on observed ground, %.0f in 100 raise level 2 (%d of %d; 95 %% interval %.0f to %.0f).",
+			f.Large*4/3, 100*s.Share, s.Hits, s.Cases, 100*s.Low, 100*s.High))
 	}
-	whole, found := 0, 0
-	for _, c := range f.Whole {
-		if c.From >= all-0.5 {
-			whole, found = whole+c.Cases, found+c.Hits
-		}
-	}
-	if whole > 0 {
-		out = append(out, fmt.Sprintf("Of those anywhere on the paths, observed or not, it is %.0f in 100: the rest comes down where no mast stands near enough, and the path says so.", 100*float64(found)/float64(whole)))
+	if s := f.StrongWhole; s.Cases > 0 {
+		out = append(out, fmt.Sprintf("Of those anywhere on the paths, observed or not, it is %.0f in 100: of the rest some come down where no mast stands near enough, and there the path says so.", 100*s.Share))
 	}
 	if f.Delay.Cases > f.Delay.Missed {
 		out = append(out, fmt.Sprintf("Half of the alerts are there within %.0f s of the loss passing %.0f kt, nine in ten within %.0f s.", f.Delay.Median, f.Large, f.Delay.P90))

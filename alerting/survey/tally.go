@@ -104,6 +104,7 @@ func (t *tally) detect(f *Findings) {
 	where := func(test func(*Episode) bool) Share {
 		return t.share(func(e *Episode, c *Case) bool { return test(e) && t.isStrongLoss(e, c) })
 	}
+	f.Strong = where(func(*Episode) bool { return true })
 	f.Calm = where(func(e *Episode) bool { return e.Eddies == 0 })
 	f.Eddying = where(func(e *Episode) bool { return e.Eddies > 0 })
 	f.Sound = where(func(e *Episode) bool { return e.Fault == "" })
@@ -123,6 +124,7 @@ func (t *tally) detect(f *Findings) {
 	// By place, everything that was strong enough on the whole path counts: what
 	// comes down where nothing is observed is missed.
 	strong := func(e *Episode, c *Case) bool { return !c.Gain && c.PeakAll >= t.strong() }
+	f.StrongWhole = t.share(strong)
 	along := func(c *Case) (float64, bool) {
 		if c.Along == nil {
 			return 0, false

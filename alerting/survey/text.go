@@ -133,7 +133,7 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 		fmt.Fprintf(b, "  %-12s kt  %s\n", c.class(), c.words())
 	}
 	fmt.Fprintf(b, "Losses of %.0f kt or more:\n", f.Large*4/3)
-	for _, s := range append([]NamedShare{{"without eddies", f.Calm}, {"with eddies", f.Eddying},
+	for _, s := range append([]NamedShare{{"all on observed ground", f.Strong}, {"all on the whole path", f.StrongWhole}, {"without eddies", f.Calm}, {"with eddies", f.Eddying},
 		{"all instruments sound", f.Sound}, {"one broken", f.Broken}}, f.Shapes...) {
 		fmt.Fprintf(b, "  %-28s  %s\n", s.Name, s.words())
 	}
