@@ -97,7 +97,8 @@ type player struct {
 }
 
 func newPlayer(n *Network, p Plan) *player {
-	return &player{network: n, study: n.study(p), grounds: grounds(n), hull: hull(n.Settings.Airfield.MastPoints()), brief: p.brief}
+	masts, _ := n.standing()
+	return &player{network: n, study: n.study(p), grounds: grounds(n), hull: hull(masts), brief: p.brief}
 }
 
 // play runs episode i.

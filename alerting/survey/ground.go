@@ -34,7 +34,7 @@ type ground struct {
 // grounds lists them for a network whose masts are all live.
 func grounds(n *Network) []*ground {
 	a := n.Settings.Airfield
-	masts := a.MastPoints()
+	masts, _ := n.standing()
 	var out []*ground
 	for r := range a.Runways {
 		lead, _ := runwaySpan(a, r)

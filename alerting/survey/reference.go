@@ -28,8 +28,9 @@ import (
 // testing composite hypotheses", Ann. Math. Statist. 9, 1938). It opens when z
 // reaches a limit, which is set so that it opens falsely as often as the engine.
 type reference struct {
-	outflow synthetic.Outflow // of strength one
-	specs   []synthetic.StationSpec
+	outflow synthetic.Outflow       // of strength one
+	specs   []synthetic.StationSpec // that tell of the wind along the ground
+	index   []int                   // their places among the stations
 	ages    [averages.Blocks]float64
 	n       int
 	inverse []float64 // K^-1
@@ -50,7 +51,12 @@ const undisturbed = 400.0
 func newReference(n *Network, scene *synthetic.Scene, o synthetic.Outflow) *reference {
 	o.Strength = 1
 	layout := averages.NewLayout(n.Settings.Window)
-	r := &reference{outflow: o, specs: n.Specs, n: averages.Blocks * 2 * len(n.Specs)}
+	r := &reference{outflow: o}
+	_, r.index = n.standing()
+	for _, i := range r.index {
+		r.specs = append(r.specs, n.Specs[i])
+	}
+	r.n = averages.Blocks * 2 * len(r.specs)
 	for b := range r.ages {
 		r.ages[b] = layout.Age(b)
 	}
@@ -63,9 +69,9 @@ func newReference(n *Network, scene *synthetic.Scene, o synthetic.Outflow) *refe
 	for b := range averages.Blocks {
 		for c := range averages.Blocks {
 			dt := r.ages[c] - r.ages[b]
-			for i := range n.Specs {
-				for j := range n.Specs {
-					dx, dy := n.Specs[i].X-n.Specs[j].X-u*dt, n.Specs[i].Y-n.Specs[j].Y-v*dt
+			for i := range r.specs {
+				for j := range r.specs {
+					dx, dy := r.specs[i].X-r.specs[j].X-u*dt, r.specs[i].Y-r.specs[j].Y-v*dt
 					cov := undisturbed + scene.Eddies.Covariance(dx, dy, dt)
 					if i == j {
 						cov += layout.Covariance(air, b, c)
@@ -74,7 +80,7 @@ func newReference(n *Network, scene *synthetic.Scene, o synthetic.Outflow) *refe
 						}
 					}
 					for d := range 2 {
-						k[((b*len(n.Specs)+i)*2+d)*r.n+(c*len(n.Specs)+j)*2+d] = cov
+						k[((b*len(r.specs)+i)*2+d)*r.n+(c*len(r.specs)+j)*2+d] = cov
 					}
 				}
 			}
@@ -106,7 +112,7 @@ func (r *reference) look(s *averages.Snapshot, t, unit, level float64) (z float6
 	n := len(r.specs)
 	for b := range averages.Blocks {
 		for i := range r.specs {
-			m := s.Mast(i)
+			m := s.Mast(r.index[i])
 			if m.State != averages.Live || !m.Blocks[b].Present {
 				return 0, false
 			}

@@ -18,7 +18,7 @@ func DesignOf(n *Network, candidates []Candidate, next int) (*Design, error) {
 		return nil, fmt.Errorf("%d next sites: choose from 1 to %d", next, MostSites)
 	}
 	p := newPlanning(n)
-	masts := n.Settings.Airfield.MastPoints()
+	masts, _ := n.standing()
 	blank := newField(p.fields, p.mean, p.noise, p.targets, masts)
 	full := blank.clone()
 	for i := range masts {
@@ -80,10 +80,13 @@ func (p *planning) sight(masts []airfield.Point) (length float64, complete []str
 	return length, complete
 }
 
-// worth takes each mast away in turn.
+// worth takes each mast away in turn. The upper levels of a tower are not among
+// them: of the wind along the ground they tell nothing.
 func (d *Design) worth(p *planning, blank, full *field, masts []airfield.Point) error {
 	length, complete := p.sight(masts)
-	for i, m := range p.network.Settings.Airfield.Masts {
+	_, index := p.network.standing()
+	for i, station := range index {
+		m := p.network.Settings.Airfield.Masts[station]
 		without := blank.clone()
 		for j := range masts {
 			if j != i {
@@ -128,7 +131,7 @@ func (d *Design) choose(p *planning, candidates []Candidate, next int) error {
 		return fmt.Errorf("%d sites are too many: give at most %d", len(candidates), MostCandidates)
 	}
 	a := p.network.Settings.Airfield
-	masts := a.MastPoints()
+	masts, _ := p.network.standing()
 	sites := slices.Clone(masts)
 	for _, c := range candidates {
 		sites = append(sites, c.Point)

@@ -65,10 +65,22 @@ func (p Plan) Check(n *Network) error {
 	return n.check()
 }
 
+// standing are the masts that tell of the wind along the ground, and their
+// indices: of a tower the upper levels are left out, as in the engine.
+func (n *Network) standing() (points []airfield.Point, index []int) {
+	aloft := n.Settings.Airfield.Aloft()
+	for i, m := range n.Settings.Airfield.Masts {
+		if !aloft[i] {
+			points, index = append(points, m.Point), append(index, i)
+		}
+	}
+	return points, index
+}
+
 // check names what is wrong with a network.
 func (n *Network) check() error {
 	a := n.Settings.Airfield
-	masts := a.MastPoints()
+	masts, index := n.standing()
 	if len(masts) < leastMasts {
 		return fmt.Errorf("%s has %s: a survey needs at least %d to tell a change along the paths from one across them; add [[station]] tables",
 			n.Name, countOf(len(masts), "mast", "masts"), leastMasts)
@@ -81,7 +93,7 @@ func (n *Network) check() error {
 	for i, m := range masts {
 		if besideNothing(a, m, n.Settings.Reach) {
 			far = append(far, fmt.Errorf("mast %s of %s stands %.1f km from the nearest path: it sees none of them (reach %.0f m); correct its position or take it out",
-				a.Masts[i].ID, n.Name, nearestPath(a, m)/1000, n.Settings.Reach))
+				a.Masts[index[i]].ID, n.Name, nearestPath(a, m)/1000, n.Settings.Reach))
 		}
 	}
 	// A mast that serves as a neighbour only is sensible up to where it can
