@@ -218,6 +218,31 @@ func TestTurbulenceEstimate(t *testing.T) {
 	}
 }
 
+// An instrument that reports every two or five seconds finds the same turbulence:
+// neighbouring readings of it are still alike, and that must not pass for calm.
+func TestTurbulenceOfSeldomReports(t *testing.T) {
+	const variance, speed, runs = 2.0, 8.0, 12
+	want := Turbulence{Variance: variance, Time: ExpectedTime(speed)}
+	for _, interval := range []int{2, 5} {
+		found := 0.0
+		for run := range uint64(runs) {
+			rng := rand.New(rand.NewPCG(22, run))
+			r, add := feed(t, station(time.Duration(interval)*time.Second), 30*time.Second)
+			u, v := autoregressive(rng, variance, want.Time), autoregressive(rng, variance, want.Time)
+			for k := 1; k <= 900; k++ {
+				east, north := speed+u(), v()
+				if k%interval == 0 {
+					add(epoch+sensors.Instant(k)*sensors.Second, math.Hypot(east, north), direction(east, north))
+				}
+			}
+			found += r.Snapshot(epoch+900*sensors.Second).Mast(0).Turbulence.Variance / runs
+		}
+		if ratio := found / variance; ratio < 0.85 || ratio > 1.15 {
+			t.Errorf("every %d s: variance %.2f, true %.2f", interval, found, variance)
+		}
+	}
+}
+
 func direction(east, north float64) float64 {
 	d := math.Atan2(-east, -north) * 180 / math.Pi
 	if d < 0 {

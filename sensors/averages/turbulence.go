@@ -173,13 +173,15 @@ func detrendedCovariances(x *[turbulenceSpan]float64, have *[turbulenceSpan]bool
 	return out
 }
 
-// coarseTurbulence serves instruments that report less than once a second:
-// too sparse for short lags, so half the variance of successive differences
-// with the time that the mean speed implies.
+// coarseTurbulence serves instruments that report less than once a second: too
+// sparse for short lags, so the variance follows from successive differences
+// with the time T that the mean speed implies. What is dt seconds apart is still
+// correlated: half the mean square of the differences is sigma2 (1 - exp(-dt/T)).
 func (m *mast) coarseTurbulence(t sensors.Instant, layout Layout) Turbulence {
 	end := t - sensors.Instant(layout.Total())*sensors.Second
 	var sum, speed float64
 	var pairs, n int
+	var apart [coarseGap + 1]int // pairs by their distance, s
 	var before *bin
 	for k := turbulenceSpan - 1; k >= 0; k-- {
 		b := m.at(end - sensors.Instant(k)*sensors.Second)
@@ -188,7 +190,8 @@ func (m *mast) coarseTurbulence(t sensors.Instant, layout Layout) Turbulence {
 		}
 		n++
 		speed += b.speed / float64(b.n)
-		if before != nil && b.second-before.second <= 30*sensors.Second {
+		if before != nil && b.second-before.second <= coarseGap*sensors.Second {
+			apart[(b.second-before.second)/sensors.Second]++
 			de := b.east/float64(b.n) - before.east/float64(before.n)
 			dn := b.north/float64(b.n) - before.north/float64(before.n)
 			sum += (float64(de*de) + float64(dn*dn)) / 2
@@ -199,13 +202,21 @@ func (m *mast) coarseTurbulence(t sensors.Instant, layout Layout) Turbulence {
 	if n*m.interval < turbulenceLeast || pairs < 10 {
 		return Turbulence{}
 	}
+	time := ExpectedTime(speed / float64(n))
+	fresh := 0.0
+	for dt, count := range apart {
+		fresh += float64(float64(count) * -math.Expm1(-float64(dt)/time))
+	}
 	return Turbulence{
-		Variance: math.Max(sum/float64(2*pairs), 1e-4),
-		Time:     ExpectedTime(speed / float64(n)),
+		Variance: math.Max(sum/(2*fresh), 1e-4),
+		Time:     time,
 		Speed:    speed / float64(n),
 		Seconds:  n * m.interval,
 	}
 }
+
+// coarseGap is the longest distance of two readings that are compared, s.
+const coarseGap = 30
 
 // ExpectedTime is the integral time in seconds to expect at 10 m in a wind of
 // speed m/s: T = L1/V with L1 = 8.1 x 0.7 z = 56.7 m (IEC 61400-1 ed. 3, annex
