@@ -174,18 +174,24 @@ func (d Delay) words() string {
 }
 
 func (f *Findings) estimatesText(b *strings.Builder) {
-	if f.Centre.Cases > 0 {
-		fmt.Fprintf(b, "\nCentre of an outflow among the masts: told in %d of %d, off by %.0f m (median), %.0f m (90th percentile)\n", f.Centre.Told, f.Centre.Cases, f.Centre.Median, f.Centre.P90)
-	}
-	if f.Arrival.Cases > 0 {
-		fmt.Fprintf(b, "Gust front at a threshold, one minute ahead: told in %d of %d, off by %.0f s (median), %.0f s (90th percentile)\n", f.Arrival.Told, f.Arrival.Cases, f.Arrival.Median, f.Arrival.P90)
-	}
+	f.Centre.text(b, "Centre of an outflow among the masts", "m")
+	f.Arrival.text(b, "Gust front at a threshold, one minute ahead", "s")
 	if f.Ground == nil {
 		return
 	}
 	fmt.Fprintf(b, "\nBlind ground: an outflow that stays, on each place of a grid of %.0f m, up to 1.5 km beside the paths\n", f.Ground.Step)
 	for _, c := range f.Ground.Counts {
 		fmt.Fprintf(b, "  %2.0f kt, radius %4.0f m: seen on %d places, unseen on %d, outside of what is observed on %d\n", c.Strength, c.Radius, c.Seen, c.Unseen, c.Outside)
+	}
+}
+
+func (o Off) text(b *strings.Builder, what, unit string) {
+	switch {
+	case o.Cases == 0:
+	case o.Told == 0:
+		fmt.Fprintf(b, "\n%s: told in none of %d\n", what, o.Cases)
+	default:
+		fmt.Fprintf(b, "\n%s: told in %d of %d, off by %.0f %s (median), %.0f %s (90th percentile)\n", what, o.Told, o.Cases, o.Median, unit, o.P90, unit)
 	}
 }
 
