@@ -47,6 +47,7 @@ type checkReport struct {
 	Stations       []checkStation `json:"stations"`
 	Paths          []checkPath    `json:"paths"`
 	Levels         checkLevels    `json:"levels"`
+	Others         checkOthers    `json:"others"`
 	EmbeddedBroker bool           `json:"embedded_broker"`
 	Told           []checkTold    `json:"told,omitempty"`
 	Warnings       []string       `json:"warnings"`
@@ -127,6 +128,7 @@ func checkReportOf(cfg *config.Config, now time.Time) checkReport {
 		r.Paths = append(r.Paths, r.path(cfg, p))
 	}
 	r.levels(cfg)
+	r.others(cfg)
 	r.told(cfg)
 	if cfg.Broker.Embedded {
 		r.warn("%s", wording.EmbeddedBroker)
@@ -182,7 +184,11 @@ func (r *checkReport) path(cfg *config.Config, p airfield.Path) checkPath {
 		magnetic := round(quantity.NormalizeDegrees(p.BearingTrue()-*r.Variation), 10)
 		c.BearingMagnetic = &magnetic
 	}
+	aloft := cfg.Airfield.Aloft()
 	for _, i := range airfield.MastsBeside(p, masts, cfg.Analysis.Reach) {
+		if aloft[i] {
+			continue
+		}
 		before, right := p.Along(masts[i].X, masts[i].Y)
 		c.Beside = append(c.Beside, checkBeside{ID: cfg.Airfield.Masts[i].ID, Before: tenth(before), Right: tenth(right)})
 	}

@@ -23,6 +23,7 @@ func (r checkReport) print(w io.Writer) error {
 		p.print(&b)
 	}
 	r.printLevels(&b)
+	r.printOthers(&b)
 	r.printTold(&b)
 	if len(r.Warnings) > 0 {
 		b.WriteString("\nTo be noted\n")
