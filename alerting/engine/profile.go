@@ -115,8 +115,8 @@ func ahead(o *windfield.Outflow, told []outflow.Outflow, d int, seconds float64)
 		}
 	}
 	z := windfield.Scores(d)
-	dx := seconds * (near.Motion.East + float64(near.Motion.Spread*z[0]))
-	dy := seconds * (near.Motion.North + float64(near.Motion.Spread*z[1]))
-	strength := o.Strength + seconds*(near.Growth+float64(near.GrowthSpread*z[2]))
+	dx := float64(seconds * (near.Motion.East + float64(near.Motion.Spread*z[0])))
+	dy := float64(seconds * (near.Motion.North + float64(near.Motion.Spread*z[1])))
+	strength := o.Strength + float64(seconds*(near.Growth+float64(near.GrowthSpread*z[2])))
 	return o.Moved(dx, dy, max(strength, 0))
 }

@@ -106,10 +106,10 @@ func (o *Outflow) Contour(p float64, corners int, dst [][2]float64) [][2]float64
 	// Cholesky factor of the covariance.
 	a := math.Sqrt(xx)
 	b := xy / a
-	c := math.Sqrt(math.Max(yy-b*b, 0))
+	c := math.Sqrt(math.Max(yy-float64(b*b), 0))
 	for k := range corners {
 		sin, cos := math.Sincos(2 * math.Pi * float64(k) / float64(corners))
-		dst = append(dst, [2]float64{o.X + size*a*cos, o.Y + size*(b*cos+c*sin)})
+		dst = append(dst, [2]float64{o.X + float64(size*a*cos), o.Y + float64(size*(float64(b*cos)+float64(c*sin)))})
 	}
 	return dst
 }
@@ -138,7 +138,7 @@ func estimate(parts []windfield.Outflow, total, spacing float64) Outflow {
 		radius += float64(p.Weight * (p.Radius - o.Radius) * (p.Radius - o.Radius))
 		strength += float64(p.Weight * (float64((p.Strength-o.Strength)*(p.Strength-o.Strength)) + float64(p.Spread*p.Spread)))
 	}
-	grid := gridSpread * spacing * spacing
+	grid := float64(gridSpread * spacing * spacing)
 	for k := range o.Spread {
 		o.Spread[k] /= sum
 	}
@@ -146,10 +146,10 @@ func estimate(parts []windfield.Outflow, total, spacing float64) Outflow {
 	o.Spread[2] += grid
 	const z = 1.6449 // 95 % point of the normal law
 	// The radii tried lie about half a radius apart.
-	sd := math.Sqrt(radius/sum + gridSpread*o.Radius*o.Radius/4)
-	o.RadiusLow, o.RadiusHigh = math.Max(o.Radius-z*sd, 0), o.Radius+z*sd
+	sd := math.Sqrt(radius/sum + float64(gridSpread*o.Radius*o.Radius)/4)
+	o.RadiusLow, o.RadiusHigh = math.Max(o.Radius-float64(z*sd), 0), o.Radius+float64(z*sd)
 	sd = math.Sqrt(strength / sum)
-	o.StrengthLow, o.StrengthHigh = math.Max(o.Strength-z*sd, 0), o.Strength+z*sd
+	o.StrengthLow, o.StrengthHigh = math.Max(o.Strength-float64(z*sd), 0), o.Strength+float64(z*sd)
 	return o
 }
 

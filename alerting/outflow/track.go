@@ -47,7 +47,7 @@ func (k *track) remember(t sensors.Instant, o *Outflow) {
 	k.x[s], k.y[s], k.strength[s] = o.X, o.Y, o.Strength
 	k.xx[s], k.yy[s] = o.Spread[0], o.Spread[2]
 	sd := (o.StrengthHigh - o.StrengthLow) / (2 * 1.6449)
-	k.ss[s] = math.Max(sd*sd, 0.01)
+	k.ss[s] = math.Max(float64(sd*sd), 0.01)
 }
 
 // gap is how far an outflow lies from the newest place of the track, m; 0 for
@@ -122,7 +122,7 @@ const (
 func reaches(paths []Path, o *Outflow, dst []Reach) []Reach {
 	for i, p := range paths {
 		for s := 0.0; s <= lookAhead; s += lookEvery {
-			if p.distance(o.X+s*o.Motion.East, o.Y+s*o.Motion.North) <= o.Radius {
+			if p.distance(o.X+float64(s*o.Motion.East), o.Y+float64(s*o.Motion.North)) <= o.Radius {
 				dst = append(dst, Reach{Path: i, Seconds: s})
 				break
 			}
@@ -142,5 +142,5 @@ func (p Path) distance(x, y float64) float64 {
 	if length2 > 0 {
 		f = min(max((float64((x-p.FromX)*dx)+float64((y-p.FromY)*dy))/length2, 0), 1)
 	}
-	return math.Hypot(x-p.FromX-f*dx, y-p.FromY-f*dy)
+	return math.Hypot(x-p.FromX-float64(f*dx), y-p.FromY-float64(f*dy))
 }

@@ -92,7 +92,7 @@ func positiveMean(mean, sd float64) float64 {
 	if above < 1e-9 {
 		return 0
 	}
-	density := math.Exp(-z*z/2) / math.Sqrt(2*math.Pi)
+	density := math.Exp(-float64(z*z)/2) / math.Sqrt(2*math.Pi)
 	return math.Max(mean+float64(sd*density)/above, 0)
 }
 
