@@ -119,7 +119,7 @@ func eventsExportCommand() command {
 				if err != nil {
 					return err
 				}
-				o := bundle.Options{Software: softwareText(), Now: sensors.At(p.now()), RedactNames: *names, RedactTexts: *texts}
+				o := bundle.Options{Software: softwareText(), RedactNames: *names, RedactTexts: *texts}
 				sum, err := exportEvent(ctx, source.directory, operands[0], *out, o)
 				if err != nil {
 					return err

@@ -83,11 +83,7 @@ func (r *reviewer) Bundle(ctx context.Context, w io.Writer, id string) error {
 	if err != nil {
 		return err
 	}
-	last, _, err := store.LastStep()
-	if err != nil {
-		return err
-	}
-	_, err = bundle.Write(ctx, w, store, id, bundle.Options{Software: version, Key: key, Now: last})
+	_, err = bundle.Write(ctx, w, store, id, bundle.Options{Software: softwareText(), Key: key})
 	return err
 }
 

@@ -43,8 +43,8 @@ const version = 1
 type Options struct {
 	Software string             // version of the program that makes it
 	Key      ed25519.PrivateKey // signs it
-	// Now is the newest moment that the history knows: an event that is still
-	// open is shown up to it.
+	// Now is how far an event that is still open is shown; 0 is up to the last
+	// stored step.
 	Now sensors.Instant
 	// RedactNames replaces what people are called, also within what they
 	// wrote; RedactTexts withholds what they wrote. The chain still verifies.

@@ -475,4 +475,9 @@ func TestOpenEvent(t *testing.T) {
 	if r := check(t, b.Bytes()); !r.OK() {
 		t.Errorf("%+v", r)
 	}
+	// Without a moment it reaches to the last step, the last of the hour.
+	sum, err = Write(t.Context(), io.Discard, s, event+"-x", Options{Key: key()})
+	if err != nil || sum.To != (opened+1800*sensors.Second).String() {
+		t.Errorf("%+v, %v", sum, err)
+	}
 }

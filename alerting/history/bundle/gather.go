@@ -41,7 +41,13 @@ func gather(s *history.Store, id string, o Options) (*content, error) {
 	c.occurrence, c.runway = object.Occurrence, object.Runway
 	c.from, c.to = c.event.Opened.Add(-Around), c.event.Closed.Add(Around)
 	if c.event.Closed == 0 {
-		c.to = max(o.Now, c.event.Updated) + sensors.Second
+		now := o.Now
+		if now == 0 {
+			if now, _, err = s.LastStep(); err != nil {
+				return nil, fmt.Errorf("event %q: %w", id, err)
+			}
+		}
+		c.to = max(now, c.event.Updated) + sensors.Second
 	}
 	if err := c.choose(s); err != nil {
 		return nil, err
