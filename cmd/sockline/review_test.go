@@ -46,13 +46,12 @@ func add(tb testing.TB, dir string, entries ...history.Entry) {
 	}
 }
 
-// TestReviewOfAnEvent holds that the report of an event has what it is for: who
+// reviewEvent holds that the report of an event has what it is for: who
 // saw it when, what people wrote (and nothing of it as markup), every mast, and
 // the notice; that it needs nothing else, and replaces no file. And that a
 // summary counts the same event.
-func TestReviewOfAnEvent(t *testing.T) {
-	configuration := small(t)
-	dir := kept(t, configuration, twice)
+func reviewEvent(t *testing.T, dir string) {
+	t.Helper()
 	first := listed(t, dir)[0]
 	opened, err := time.Parse(time.RFC3339, first["opened"].(string))
 	if err != nil {
@@ -118,7 +117,7 @@ func summaryOf(t *testing.T, dir string) {
 	if err := json.Unmarshal([]byte(o.stdout), &u); err != nil {
 		t.Fatal(err)
 	}
-	if u.Alerts != len(listed(t, dir)) || u.Hours < 0.2 || u.Hours > 0.3 || len(u.Stations) != 3 || u.Notice != alerting.Notice {
+	if u.Alerts != len(listed(t, dir)) || u.Hours < 0.15 || u.Hours > 0.25 || len(u.Stations) != 3 || u.Notice != alerting.Notice {
 		t.Errorf("%+v", u)
 	}
 	if a := u.Attention; a.Acknowledged.Value == nil || a.MedianS == nil || *a.MedianS < 12 || *a.MedianS >= 13 || a.Notes != 1 {
