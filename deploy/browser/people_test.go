@@ -10,6 +10,7 @@ import (
 	"time"
 
 	"github.com/chromedp/chromedp"
+	"github.com/chromedp/chromedp/kb"
 )
 
 const password = "gannet over the moor"
@@ -72,7 +73,7 @@ func (b *tab) logIn(name, word string) {
 func TestPeople(t *testing.T) {
 	t.Parallel()
 	d := tower(t)
-	b := open(t, d.url+"/login", screens[1], "403 (Forbidden)", "422 (Unprocessable")
+	b := open(t, d.url+"/login", screens[1], "403 (Forbidden)", "422 (Unprocessable", "what-if", "503 (Service Unavailable)")
 	b.shot("login")
 	b.accessible("the log-in")
 	b.logIn("ada-tower", "not the password")
@@ -82,6 +83,7 @@ func TestPeople(t *testing.T) {
 	b.until(10*time.Second, `document.body.dataset.role === "tower"`)
 	b.glass()
 	t.Run("runway in use", func(t *testing.T) {
+		b.until(10*time.Second, `document.querySelector("#controls option[value='07']")`)
 		eval[bool](b, `(() => { const f = document.querySelector("#controls select"); f.value = "07"; f.dispatchEvent(new Event("change")); return true })()`)
 		b.until(10*time.Second, `document.querySelector("#ends tr.used th") && document.querySelector("#ends tr.used th").textContent === "07"`)
 	})
@@ -91,6 +93,7 @@ func TestPeople(t *testing.T) {
 	t.Run("acknowledge by keyboard", func(t *testing.T) { acknowledge(t, b) })
 	t.Run("shelve", func(t *testing.T) { shelve(t, b) })
 	t.Run("pilot report", func(t *testing.T) { report(t, b) })
+	t.Run("look back", func(t *testing.T) { lookBack(t, b, d.url) })
 	t.Run("log out", func(t *testing.T) {
 		eval[bool](b, `(document.querySelector(".who button").click(), true)`)
 		b.until(10*time.Second, `document.body.dataset.role === "" && location.pathname === "/"`)
@@ -147,6 +150,29 @@ func report(t *testing.T, b *tab) {
 	b.until(10*time.Second, `/Recorded/.test(document.getElementById("report").innerText)`)
 	if said := eval[string](b, `fetch("/api/v1/pilot-reports").then((r) => r.text())`); !strings.Contains(said, "fell through at a mile") {
 		t.Errorf("the report is not listed: %.300s", said)
+	}
+}
+
+// lookBack finds the event among the past ones, plays it back and moves to
+// another moment.
+func lookBack(t *testing.T, b *tab, url string) {
+	b.do(chromedp.Navigate(url + "/past"))
+	b.until(30*time.Second, `document.querySelector("#events tbody a")`)
+	b.until(60*time.Second, `document.querySelectorAll("#statistics table").length > 3 || /not|nothing|busy/i.test(document.getElementById("statistics").innerText)`)
+	b.shot("past")
+	b.accessible("past events")
+	eval[bool](b, `(document.querySelector("#events tbody a").click(), true)`)
+	b.until(120*time.Second, `document.getElementById("at") && Number(document.getElementById("at").max) > 10 && document.querySelector("#plan svg") && document.querySelector("#series canvas")`)
+	before := eval[string](b, `document.getElementById("at-told").textContent + document.getElementById("plan").innerHTML`)
+	b.do(chromedp.Focus(chromedp.CSS("#at")))
+	for range 5 {
+		b.do(chromedp.KeyEvent(kb.ArrowLeft))
+	}
+	b.until(5*time.Second, fmt.Sprintf(`document.getElementById("at-told").textContent + document.getElementById("plan").innerHTML !== %q`, before))
+	b.shot("event")
+	b.accessible("one event")
+	if offered := eval[string](b, `document.getElementById("downloads").innerText`); !strings.Contains(offered, "officer") {
+		t.Errorf("tower is offered what is for officers: %s", offered)
 	}
 }
 

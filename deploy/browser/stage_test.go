@@ -90,7 +90,13 @@ func (s *stage) current() *page.View {
 }
 
 // Events and Event make the stage a History.
-func (s *stage) Events(page.EventQuery) ([]json.RawMessage, error) { return s.events, nil }
+func (s *stage) Events(page.EventQuery) ([]page.Event, error) {
+	var list []page.Event
+	for _, e := range s.events {
+		list = append(list, page.Event{Object: e})
+	}
+	return list, nil
+}
 
 // Event is every issue of an event.
 func (s *stage) Event(id string) ([]json.RawMessage, error) {

@@ -160,7 +160,7 @@ async function playback() {
   const ids = Array.from(new Set(seconds.flatMap((s) => (s.stations || []).map((m) => m.id))));
   shown.replaceChildren(...ids.map((m) => el("option", { value: m }, m)));
   shown.addEventListener("change", curves);
-  series = new Series(byId("series"), [{ label: "Speed (kt)", token: "--ink" }, { label: "Along the path (kt)", token: "--rise", dash: [8, 4] }], { height: 200, moved: (s) => {
+  series = new Series(byId("series"), [{ label: "Speed (kt)", token: "--ink" }, { label: "Along the path (kt)", token: "--rise", dash: [8, 4] }], { height: 200, value: (v) => (v < 0 ? "tail " : "") + Math.abs(Math.round(v)), moved: (s) => {
     range.value = String(Math.max(0, seconds.findIndex((x) => Date.parse(x.at) / 1000 >= s)));
     moment();
   } });

@@ -88,7 +88,10 @@ export function live(shows) {
       if (shows.step) shows.step(body);
     },
     alert(issue) { if (shows.alert) shows.alert(issue); },
-    resync(body) { if (shows.resync) shows.resync(body); },
+    resync(body) {
+      void renew();
+      if (shows.resync) shows.resync(body);
+    },
     link(open, reason) { why = open ? "The program sends nothing new." : reason; },
   });
   const look = () => watch.check(performance.now(), why);
@@ -97,6 +100,19 @@ export function live(shows) {
   document.addEventListener("visibilitychange", look);
   stream.start();
   return stream;
+}
+
+/**
+ * Another run of the program may be another version of it: a page whose own
+ * files are no longer served is made anew.
+ */
+async function renew() {
+  try {
+    const answer = await fetch("/assets/" + document.documentElement.dataset.build + "/icon.svg", { cache: "no-store" });
+    if (answer.status === 404) window.location.reload();
+  } catch {
+    return; // it is away again, and a step will come or not
+  }
 }
 
 /** @param {string} strong @param {string} more */
@@ -111,7 +127,7 @@ function line(strong, more) {
 /** What every view says of the moment. @param {any} body */
 function top(body) {
   const [word] = conditionWords(body.condition);
-  const open = (body.occurrences || []).length || (body.alerts || []).length;
+  const open = Math.max((body.occurrences || []).filter((/** @type {any} */ o) => !o.ended).length, (body.alerts || []).length ? 1 : 0);
   const worst = Math.max(0, ...(body.alerts || []).map((/** @type {any} */ a) => levelNumber(a.level)));
   const exercise = document.body.dataset.exercise === "true" ? "EXERCISE: " : "";
   const title = open ? "Level " + worst + " of 3" : word;

@@ -287,7 +287,7 @@ function remember(body) {
     byId("series").replaceChildren();
     series = new Series(byId("series"), names.map((/** @type {string} */ n, /** @type {number} */ i) => ({
       label: "Runway " + n, token: i % 2 ? "--rise" : "--ink", dash: [[], [8, 4], [2, 4], [12, 4, 2, 4]][i % 4],
-    })), { height: 150 });
+    })), { height: 150, value: (v) => (v < 0 ? "tail " : "") + Math.abs(Math.round(v)) });
   }
   const at = Math.round(Date.parse(body.at) / 1000);
   const times = /** @type {number[]} */ (memory[0]);

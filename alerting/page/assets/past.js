@@ -5,6 +5,7 @@
 import { byId, el } from "./dom.js";
 import { read } from "./ask.js";
 import { live } from "./live.js";
+import { otherLevels, statistics } from "./figures.js";
 import { pilotReport } from "./forms.js";
 import { dayAndTime, kindWords, lasting, levelWords, pathName } from "./words.js";
 
@@ -80,46 +81,13 @@ function choices(events) {
 }
 
 /**
- * An object of figures as a list, one within another as a list of its own.
- * Names become words; what is not known is said to be so.
- * @param {any} value
- * @returns {Node | string}
+ * @param {string} id @param {string} address
+ * @param {(answer: any) => Node[]} draw
  */
-function figures(value) {
-  if (value === null || value === undefined) return "not known";
-  if (Array.isArray(value)) {
-    if (value.length === 0) return "none";
-    if (value.every((v) => v && typeof v === "object" && !Array.isArray(v))) return rows(value);
-    return value.map((v) => String(v)).join(", ");
-  }
-  if (typeof value === "object") {
-    const facts = Object.entries(value).filter(([k]) => k !== "notice" && k !== "exercise");
-    return el("dl", null, ...facts.flatMap(([k, v]) => [el("dt", null, words(k)), el("dd", null, figures(v))]));
-  }
-  if (typeof value === "number") return Number.isInteger(value) ? String(value) : value.toPrecision(3);
-  return String(value);
-}
-
-/** @param {string} key */
-function words(key) {
-  return key.replaceAll("_", " ").replaceAll("-", " ").replace(/ kt$/, " (kt)").replace(/ s$/, " (s)").replace(/ m$/, " (m)");
-}
-
-/** @param {any[]} list objects with the same keys */
-function rows(list) {
-  const keys = Object.keys(list[0]).filter((k) => k !== "notice" && k !== "exercise");
-  return el("table", { class: "list" }, el("thead", null, el("tr", null, ...keys.map((k) => el("th", { scope: "col" }, words(k))))),
-    el("tbody", null, ...list.map((item) => el("tr", null, ...keys.map((k) => el("td", null, figures(item[k])))))));
-}
-
-/** @param {string} id @param {string} address @param {string} none */
-async function part(id, address, none) {
+async function part(id, address, draw) {
   const host = byId(id);
   try {
-    const answer = await read(address);
-    const { notice, exercise: mark, ...rest } = answer;
-    const empty = Object.values(rest).every((v) => v === null || (Array.isArray(v) && v.length === 0));
-    host.replaceChildren(empty ? el("p", null, none) : figures(rest));
+    host.replaceChildren(...draw(await read(address)));
   } catch (e) {
     host.replaceChildren(el("p", null, message(e)));
   }
@@ -146,8 +114,8 @@ async function all() {
   const asked = span();
   await show();
   await Promise.all([
-    part("statistics", "/api/v1/statistics" + (asked ? "?" + asked.slice(1) : ""), "There are no figures for this time."),
-    part("whatif", "/api/v1/what-if", "No other levels have been tried."),
+    part("statistics", "/api/v1/statistics" + (asked ? "?" + asked.slice(1) : ""), statistics),
+    part("whatif", "/api/v1/what-if", otherLevels),
     reports(),
   ]);
 }

@@ -159,7 +159,11 @@ export class Plan {
     const group = svg("g");
     const told = (body.paths || []).find((/** @type {any} */ p) => p.runway === path.runway && p.operation === path.operation);
     const from = path.length_from_m, to = path.length_to_m;
-    const observed = told ? told.observed || [] : [];
+    if (!told) { // nothing is said of it, not even that it is not observed
+      group.append(svg("path", { class: "unseen-edge", d: outline([scale.at(along(path, from)), scale.at(along(path, to))]) }));
+      return group;
+    }
+    const observed = told.observed || [];
     const [sx, sy] = scale.direction(path.bearing_true_deg - 90); // to the left of who flies
     for (const [a, b] of unobserved(observed, from, to)) {
       const [p, q] = [scale.at(along(path, a)), scale.at(along(path, b))];
@@ -171,7 +175,8 @@ export class Plan {
     for (const [a, b] of observed) {
       group.append(svg("path", { class: "seen", d: outline([scale.at(along(path, Math.min(a, from))), scale.at(along(path, Math.max(b, to)))]) }));
     }
-    group.append(this.bars(path, body, this.open(path, body)));
+    // Two paths over the same ground would cover each other's bars.
+    if (path.operation === this.operation) group.append(this.bars(path, body, this.open(path, body)));
     return group;
   }
 

@@ -49,7 +49,9 @@ export function drawProfile(path, ground, profile, alerts, width) {
  */
 function chart(path, ground, profile, change, width) {
   const height = Math.max(120, Math.min(190, width * 0.42));
-  const [left, right, top, bottom] = [58, 8, 10, 28];
+  // As wide as "tail 20" in the letters of the style sheet.
+  const letter = Math.max(14, parseFloat(getComputedStyle(document.body).fontSize) * 0.85);
+  const [left, right, top, bottom] = [letter * 4.4, 8, 10, letter * 1.7];
   const from = ground.length_from_m, to = ground.length_to_m;
   const points = profile.points.filter((/** @type {any} */ p) => p.observed && p.headwind_kt !== null);
   points.sort((/** @type {any} */ a, /** @type {any} */ b) => b.at_m - a.at_m);
@@ -61,14 +63,14 @@ function chart(path, ground, profile, change, width) {
   const x = (/** @type {number} */ m) => left + ((from - m) / (from - to)) * (width - left - right);
   const y = (/** @type {number} */ kt) => top + ((high - kt) / (high - low)) * (height - top - bottom);
   const root = svg("svg", { viewBox: `0 0 ${width} ${height}`, role: "img", "aria-label": label(path, change) });
-  const step = high - low > 50 ? 20 : 10;
-  for (let kt = low; kt <= high; kt += step) {
+  const step = high - low > 40 ? 20 : 10;
+  for (let kt = Math.ceil(low / step) * step; kt <= high; kt += step) {
     root.append(svg("path", { class: kt === 0 ? "zero" : "tick", d: `M${left} ${y(kt)}H${width - right}`, "stroke-dasharray": kt === 0 ? null : "1 5" }),
       svg("text", { class: "quiet", x: left - 6, y: y(kt) + 5, "text-anchor": "end" }, kt < 0 ? "tail " + -kt : String(kt)));
   }
   for (let m = Math.floor(from / 1000) * 1000; m >= to; m -= 1000) {
     root.append(svg("path", { class: "tick", d: `M${x(m)} ${height - bottom}v5` }));
-    if (m % 2000 === 0) root.append(svg("text", { class: "quiet", x: x(m), y: height - 6, "text-anchor": "middle" }, m === 0 ? "thr" : String(m / 1000)));
+    if (m % 2000 === 0) root.append(svg("text", { class: "quiet", x: x(m), y: height - 6, "text-anchor": "middle" }, place(path.operation, m)));
   }
   root.append(svg("path", { class: "threshold", d: `M${x(0)} ${top}V${height - bottom}` }));
   for (const [a, b] of unobserved(path.observed || [], from, to)) {
@@ -82,6 +84,12 @@ function chart(path, ground, profile, change, width) {
   }
   if (change) mark(root, points, change, x, y, { left, right: width - right, top, bottom: height - bottom });
   return root;
+}
+
+/** A place on the axis, in km: before the threshold, or from the start of the roll. @param {string} operation @param {number} m */
+function place(operation, m) {
+  if (m === 0) return operation === "landing" ? "threshold" : "start";
+  return operation === "landing" ? m / 1000 + (m < 0 ? " beyond" : "") : String(-m / 1000);
 }
 
 /** Stretches of points between which nothing is missing. @param {any[]} points @returns {any[][]} */

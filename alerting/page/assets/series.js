@@ -79,7 +79,7 @@ export class Series {
           value: (/** @type {any} */ _u, /** @type {number | null} */ v) => (v === null || v === undefined ? "none" : value(v)),
         }))],
       axes: [{ ...axis, values: (/** @type {any} */ _u, /** @type {number[]} */ s) => s.map(clock), space: 90 },
-        { ...axis, size: 58, values: (/** @type {any} */ _u, /** @type {number[]} */ v) => v.map(value) }],
+        { ...axis, size: 72, values: (/** @type {any} */ _u, /** @type {number[]} */ v) => v.map(value) }],
       hooks: this.options.moved ? { setCursor: [(/** @type {any} */ u) => {
         const i = u.cursor.idx;
         if (i !== null && i !== undefined && u.cursor.event && this.options.moved) this.options.moved(/** @type {number} */ (this.data[0][i]));
