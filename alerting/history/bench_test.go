@@ -1,6 +1,7 @@
 package history
 
 import (
+	"errors"
 	"fmt"
 	"math/rand/v2"
 	"os"
@@ -8,6 +9,7 @@ import (
 	"testing"
 
 	"github.com/rs/zerolog"
+	bolt "go.etcd.io/bbolt"
 
 	"sockline/sensors"
 )
@@ -78,33 +80,101 @@ func BenchmarkAppend(b *testing.B) {
 	}
 }
 
-// BenchmarkScan reads an hour of 20 masts back.
+// BenchmarkScan reads two hours of 20 masts back: folded as they lie after
+// ten minutes, as rows, and, for the share of the codec, the blocks alone from
+// memory. The wind is that of TestDensity.
 func BenchmarkScan(b *testing.B) {
-	const stations, steps = 20, 3600
-	s, err := Open(b.TempDir(), Options{Log: zerolog.Nop()})
+	const stations, steps = 20, 7200
+	for _, folded := range []bool{true, false} {
+		s, err := Open(b.TempDir(), Options{Log: zerolog.Nop()})
+		if err != nil {
+			b.Fatal(err)
+		}
+		defer s.Close()
+		w, wind, r, all := &Writer{s: s}, typicalWind(stations), &round{}, 0
+		for i := range steps {
+			step := start + sensors.Instant(61+i)*sensors.Second
+			rs := wind.step(step, nil)
+			all += len(rs)
+			r.items = append(r.items, &item{step: step, hasStep: true, stations: benchIDs(stations), body: appendReadings(nil, step, rs)})
+		}
+		if err := w.commit(r); err != nil {
+			b.Fatal(err)
+		}
+		name := "rows"
+		if folded {
+			name = "folded"
+			w.foldRest()
+		}
+		w.closeDay()
+		b.Run(name, func(b *testing.B) {
+			for b.Loop() {
+				n := 0
+				err := s.Readings(0, 1<<50, func(st Step) error { n += len(st.Readings); return nil })
+				if err != nil || n != all {
+					b.Fatal(n, err)
+				}
+			}
+			b.ReportMetric(float64(all)*float64(b.N)/b.Elapsed().Seconds(), "readings/s")
+		})
+		if folded {
+			b.Run("codec-alone", func(b *testing.B) { benchBlocks(b, s, all) })
+		}
+	}
+}
+
+// benchBlocks decodes the blocks of the second day without asking the disk.
+func benchBlocks(b *testing.B, s *Store, all int) {
+	f, err := s.shelf.acquire(dayName(dayOf(start+120*sensors.Second)), dayLayout(), false)
 	if err != nil {
 		b.Fatal(err)
 	}
-	defer s.Close()
-	w := &Writer{s: s}
-	r := &round{}
-	for i := range steps {
-		step := start + sensors.Instant(60+i)*sensors.Second
-		rs := oneHertz(step, stations, nil)
-		r.items = append(r.items, &item{step: step, hasStep: true, stations: benchIDs(stations), body: appendReadings(nil, step, rs)})
-	}
-	if err := w.commit(r); err != nil {
+	var windows []rawWindow
+	err = f.view(func(tx *bolt.Tx) error {
+		windows, _ = storedWindows(tx, midnight(start+120*sensors.Second), start+86400*sensors.Second)
+		return nil
+	})
+	if err = errors.Join(err, s.shelf.release(f)); err != nil {
 		b.Fatal(err)
 	}
-	w.closeDay()
+	var (
+		sc scratch
+		rs []sensors.Reading
+	)
 	for b.Loop() {
 		n := 0
-		err := s.Readings(0, 1<<50, func(st Step) error { n += len(st.Readings); return nil })
-		if err != nil || n != stations*steps {
-			b.Fatal(n, err)
+		for _, w := range windows {
+			for _, k := range w.blocks {
+				body, err := unseal(k.key, k.value)
+				if err != nil {
+					b.Fatal(err)
+				}
+				c := cursor{b: body}
+				rs = c.block(w.base, 1, rs[:0], &sc)
+				n += len(rs)
+			}
+		}
+		if n != all {
+			b.Fatal(n, all)
 		}
 	}
-	b.ReportMetric(float64(stations*steps)*float64(b.N)/b.Elapsed().Seconds(), "readings/s")
+	b.ReportMetric(float64(all)*float64(b.N)/b.Elapsed().Seconds(), "readings/s")
+}
+
+// BenchmarkFold is what a window of ten minutes of 20 masts costs the
+// committing goroutine, checks included.
+func BenchmarkFold(b *testing.B) {
+	wind, steps := typicalWind(20), []Step{}
+	for i := range 600 {
+		at := midnight(start) + sensors.Instant(i)*sensors.Second
+		steps = append(steps, Step{At: at, Stations: benchIDs(20), Readings: wind.step(at, nil)})
+	}
+	for b.Loop() {
+		if !givesBack(encodeWindow(1, steps), steps, benchIDs(20)) {
+			b.Fatal("not as it was")
+		}
+	}
+	b.ReportMetric(float64(600*20)*float64(b.N)/b.Elapsed().Seconds(), "readings/s")
 }
 
 // BenchmarkIssue is the time from Submit to the release as recorded.

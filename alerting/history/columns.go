@@ -5,6 +5,8 @@ import (
 	"math"
 	"math/bits"
 	"slices"
+
+	"sockline/sensors"
 )
 
 // Readings of one station over some minutes are stored column by column: the
@@ -426,4 +428,5 @@ func (c *cursor) values(n int, s *scratch, put func(i int, v float64)) {
 type scratch struct {
 	ints, more []int64
 	rice       []uint64
+	readings   []sensors.Reading // of a window, station by station
 }

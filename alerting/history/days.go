@@ -107,6 +107,7 @@ type dayReader struct {
 	row, end []byte // key of the next row, and of the first one that is not wanted
 	window   []byte // where the next frame is sought; nil before the first
 	done     bool
+	scratch  scratch
 }
 
 // part is what one transaction gives: rows, then a window with the rows in it.
@@ -231,7 +232,7 @@ func (r *dayReader) show(p part) bool {
 			}
 		}
 		if err = fmt.Errorf("the readings of some minutes from %s: the frame %w", p.window.base, errNewTable); ok {
-			steps, err = decodeWindow(*p.window, ids)
+			steps, err = decodeWindow(*p.window, ids, &r.scratch)
 		}
 	}
 	if err != nil && !r.fn(Step{}, err) {

@@ -121,7 +121,7 @@ func foldRows(tx *bolt.Tx, from, to sensors.Instant) error {
 		return nil // never write over what is damaged
 	}
 	for _, w := range olds {
-		folded, err := decodeWindow(w, tables[w.frame.table])
+		folded, err := decodeWindow(w, tables[w.frame.table], new(scratch))
 		if err != nil {
 			return nil
 		}
@@ -198,7 +198,7 @@ func givesBack(made []keyed, steps []Step, ids []string) bool {
 	if err != nil {
 		return false
 	}
-	got, err := decodeWindow(rawWindow{base: base, frame: f, blocks: made[1:]}, ids)
+	got, err := decodeWindow(rawWindow{base: base, frame: f, blocks: made[1:]}, ids, new(scratch))
 	return err == nil && slices.EqualFunc(got, steps, sameStep)
 }
 

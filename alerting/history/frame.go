@@ -232,12 +232,11 @@ type rawWindow struct {
 
 // decodeWindow gives the steps of a window. A block that is damaged or missing
 // leaves its station out of them; the error names it.
-func decodeWindow(w rawWindow, ids []string) ([]Step, error) {
+func decodeWindow(w rawWindow, ids []string, s *scratch) ([]Step, error) {
 	var (
 		f      = w.frame
 		faults []error
-		s      scratch
-		all    []sensors.Reading
+		all    = s.readings[:0]
 		ends   []int // of each station that could be read, in all
 		blocks = w.blocks
 	)
@@ -250,7 +249,7 @@ func decodeWindow(w rawWindow, ids []string) ([]Step, error) {
 			var body []byte
 			if body, err = unseal(blocks[0].key, blocks[0].value); err == nil {
 				c := cursor{b: body}
-				if all = c.block(w.base, number, all, &s); c.bad || len(c.b) != 0 || number >= len(ids) {
+				if all = c.block(w.base, number, all, s); c.bad || len(c.b) != 0 || number >= len(ids) {
 					err = errBlock
 				}
 			}
@@ -267,6 +266,7 @@ func decodeWindow(w rawWindow, ids []string) ([]Step, error) {
 		}
 		ends = append(ends, len(all))
 	}
+	s.readings = all
 	return mergeStations(w.base, f, ids, all, ends), errors.Join(faults...)
 }
 
