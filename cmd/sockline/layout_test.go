@@ -112,7 +112,7 @@ var importRules = [...]importRule{
 	{"sockline/testdata", []string{"cmd"}, true, "only the demo and simulate carry scenes and airfields"},
 	{"github.com/eclipse/paho.mqtt.golang", []string{"sensors/feed"}, true, "all MQTT sessions live in feed"},
 	{"github.com/mochi-mqtt/server/v2", []string{"sensors/feed"}, true, "the embedded broker lives in feed"},
-	{"go.etcd.io/bbolt", []string{"alerting/history"}, false, "the files of the history have one owner"},
+	{"go.etcd.io/bbolt", []string{"alerting/history", "deploy/storebench"}, false, "the files of the history have one owner; a comparison has its own"},
 	{"github.com/BurntSushi/toml", []string{"config"}, true, "configuration has one reader"},
 	{"go.bug.st/serial", []string{"sensors/mast"}, false, "one package opens serial lines"},
 	{"net/http", []string{"alerting/page", "alerting/publish/webhook", "cmd"}, true, "one package speaks HTTP to those who ask, one to those who are told"},
