@@ -28,7 +28,7 @@ func TestDeadMan(t *testing.T) {
 		{"/masts", `document.querySelectorAll(".mast-card").length === 0`, `document.querySelectorAll(".mast-card").length === 8`},
 	} {
 		t.Run(view.path, func(t *testing.T) {
-			b := open(t, d.url+view.path, screens[0], "503 (Service Unavailable)", "ERR_", "404 (Not Found)")
+			b := open(t, d.url+view.path, screens[0], "503 (Service Unavailable)", "ERR_", "404 (Not Found)", "503 (Service Unavailable)")
 			b.until(60*time.Second, view.back)
 			if view.path == "/" {
 				b.until(60*time.Second, `(`+shownValues+`).includes("kt")`)
@@ -105,7 +105,7 @@ func TestCuts(t *testing.T) {
 		cuts = 1000
 	}
 	s := newStage(t, nil)
-	b := open(t, s.url+"/basis", screens[1], "ERR_", "404 (Not Found)")
+	b := open(t, s.url+"/basis", screens[1], "ERR_", "404 (Not Found)", "503 (Service Unavailable)")
 	build := eval[string](b, `document.documentElement.dataset.build`)
 	eval[bool](b, fmt.Sprintf(`import("/assets/%s/stream.js").then(({Stream}) => {
 		window.had = []; window.resyncs = 0;

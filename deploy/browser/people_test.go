@@ -182,7 +182,7 @@ func TestKeyboard(t *testing.T) {
 	s := newStage(t, nil)
 	for _, v := range views {
 		t.Run(v.name, func(t *testing.T) {
-			b := open(t, s.url+v.path, screens[1], "404 (Not Found)")
+			b := open(t, s.url+v.path, screens[1], "404 (Not Found)", "503 (Service Unavailable)")
 			b.until(20*time.Second, v.ready)
 			want := eval[float64](b, `(window.all = [...document.querySelectorAll("a[href], button, select, input, textarea, [tabindex='0']")].filter((n) => !n.disabled && n.getClientRects().length && getComputedStyle(n).visibility !== "hidden"), window.seen = new Set(), all.length)`)
 			// Date fields hold several stops each.

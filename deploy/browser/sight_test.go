@@ -88,7 +88,7 @@ const gallery = `(async () => {
 // left.
 func TestStatesWithoutColour(t *testing.T) {
 	s := newStage(t, nil)
-	b := open(t, s.url+"/basis", screen{"gallery", 800, 3200}, "404 (Not Found)", "the page has no element")
+	b := open(t, s.url+"/basis", screen{"gallery", 800, 3200}, "404 (Not Found)", "503 (Service Unavailable)", "the page has no element")
 	b.until(10*time.Second, `document.getElementById("status")`)
 	families := [][]string{
 		{"condition-full", "condition-half", "condition-empty", "condition-none"},

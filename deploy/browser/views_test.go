@@ -48,7 +48,7 @@ func TestViews(t *testing.T) {
 	for _, v := range views {
 		for _, size := range screens {
 			t.Run(v.name+"/"+size.name, func(t *testing.T) {
-				b := open(t, s.url+v.path, size, "404 (Not Found)")
+				b := open(t, s.url+v.path, size, "404 (Not Found)", "503 (Service Unavailable)")
 				b.until(20*time.Second, v.ready)
 				lights := []string{"day", "night"}
 				if long() {
