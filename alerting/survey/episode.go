@@ -67,7 +67,9 @@ type ArrivalError struct {
 
 // changeClasses are the lower ends of the classes of the true change for the
 // coverage, kt.
-func changeClasses() [8]float64 { return [...]float64{0, 5, 10, 12, 15, 20, 25, 30} }
+func changeClasses() [changeClassCount]float64 { return [...]float64{0, 5, 10, 12, 15, 20, 25, 30} }
+
+const changeClassCount = 8
 
 func changeClass(kt float64) int {
 	class := 0
@@ -173,7 +175,7 @@ func (p *player) tracks(e *Episode) []track {
 	e.Cases = make([]Case, 2*len(p.grounds))
 	tracks := make([]track, len(e.Cases))
 	for k := range tracks {
-		e.Cases[k] = Case{Path: p.grounds[k/2].path, Gain: k%2 == 1, Steps: make([][3]int, len(changeClasses()))}
+		e.Cases[k] = Case{Path: p.grounds[k/2].path, Gain: k%2 == 1, Steps: make([][3]int, changeClassCount)}
 		tracks[k].Case = &e.Cases[k]
 		tracks[k].sweep.hysteresis = p.network.Settings.Levels.Hysteresis
 		tracks[k].sweep.hold = int(p.network.Settings.Hold / time.Second)

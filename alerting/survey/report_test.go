@@ -27,7 +27,7 @@ func invented(n *Network, p Plan) []Record {
 		}
 		for _, g := range grounds(n) {
 			for _, gain := range []bool{false, true} {
-				c := Case{Path: g.path, Gain: gain, Steps: make([][3]int, len(changeClasses())), Found: make([]uint32, confidenceCount)}
+				c := Case{Path: g.path, Gain: gain, Steps: make([][3]int, changeClassCount), Found: make([]uint32, confidenceCount)}
 				c.Steps[0] = [3]int{900, 700, 100}
 				switch kind {
 				case synthetic.StudyOutflow:
