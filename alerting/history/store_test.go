@@ -251,7 +251,7 @@ func TestJournalKinds(t *testing.T) {
 func TestReadWhileWriting(t *testing.T) {
 	s := mustOpen(t, t.TempDir(), Options{Keep: time.Hour})
 	defer s.Close()
-	w := mustWriter(t, s, WriterOptions{After: tenfold})
+	w := mustWriter(t, s, WriterOptions{After: patient})
 	if _, err := s.Writer(WriterOptions{}); err == nil {
 		t.Error("a second writer")
 	}
