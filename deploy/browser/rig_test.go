@@ -41,6 +41,7 @@ var program = sync.OnceValues(func() (string, error) {
 	if err != nil {
 		return "", err
 	}
+	removeProgram = func() { _ = os.RemoveAll(dir) }
 	path := filepath.Join(dir, "sockline")
 	build := exec.Command("go", "build", "-trimpath", "-o", path, "./cmd/sockline")
 	build.Dir = filepath.Join("..", "..")
@@ -49,6 +50,8 @@ var program = sync.OnceValues(func() (string, error) {
 	}
 	return path, nil
 })
+
+var removeProgram = func() {}
 
 func binary(t *testing.T) string {
 	t.Helper()
@@ -154,6 +157,7 @@ var endChromium = func() {}
 func TestMain(m *testing.M) {
 	code := m.Run()
 	endChromium()
+	removeProgram()
 	os.Exit(code)
 }
 
