@@ -10,7 +10,7 @@ import (
 )
 
 // fewer looks at what one mast fewer would change, for every path that has a
-// level. Its cost is bounded: at most one mast a step, in turn, and one more when
+// level. Its cost is bounded: one mast every few steps, in turn, and one more when
 // beyond-margin is met while a mast stands alone.
 func (e *Engine) fewer(t sensors.Instant, s *averages.Snapshot, p *windfield.Posterior) {
 	raised, beyond := -1, false
@@ -33,12 +33,19 @@ func (e *Engine) fewer(t sensors.Instant, s *averages.Snapshot, p *windfield.Pos
 			}
 		})
 	}
-	turn := p.Live[int(t/sensors.Second)%len(p.Live)]
+	if t%turnEvery != 0 {
+		return
+	}
+	turn := p.Live[int(t/turnEvery)%len(p.Live)]
 	e.withoutMast(s, turn, func(a *hazard.Assessment, without *shear.Stretch) {
 		a.Loss.Fewer = hazard.Fewer{Known: true, Mast: turn, Median: without.Loss.Quantile(0.5)}
 		a.Gain.Fewer = hazard.Fewer{Known: true, Mast: turn, Median: without.Gain.Quantile(0.5)}
 	})
 }
+
+// turnEvery is how often another mast is left out, on the UTC clock: to do so
+// costs as much as dozens of plain steps.
+const turnEvery = 5 * sensors.Second
 
 // standsAlone are the odds, from an even-handed prior, from which beyond-margin
 // must not rest on a mast alone: its neighbours speak against it or at least do

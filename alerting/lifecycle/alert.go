@@ -74,7 +74,7 @@ type Alert struct {
 	PeakAt                        sensors.Instant
 	Used, Missing                 []string // station ids, in configured order
 	// Fewer is what the change would be without one of the masts, by station, of
-	// the last minute: how far the alert hangs on a single one.
+	// the last two minutes: how far the alert hangs on a single one.
 	Fewer    []Fewer
 	Exercise bool
 	Memory   Memory // what the judging of later steps needs besides the above

@@ -249,7 +249,7 @@ func (s *slot) take(T sensors.Instant, c *hazard.Change, o *hazard.Other) {
 }
 
 // fewerFor is how long it counts what the change was without a mast.
-const fewerFor = time.Minute
+const fewerFor = 2 * time.Minute
 
 // fewer notes what the change would be without a mast. The list of an issued
 // alert belongs to whoever was given it: a new one is made at each note.

@@ -93,6 +93,9 @@ func (e *Estimator) entryFor(s *averages.Snapshot) *entry {
 		}
 		e.steps = append(e.steps, uint8(m), noiseStep(base)|mask<<4)
 	}
+	if e.without != noMast {
+		return e.entryWithout(timeStep)
+	}
 	if c, ok := e.cache.entries[string(e.steps)]; ok {
 		e.cache.clock++
 		c.used = e.cache.clock

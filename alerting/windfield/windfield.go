@@ -119,9 +119,12 @@ type Estimator struct {
 	posterior Posterior
 	fewer     Posterior // of Without; made when first asked for
 	without   int       // the mast that is left out
-	times     []float64
-	bases     []float64
-	sorted    []float64
+	// The gains of the last Without, and the masts and noise that they are for.
+	fewerEntry *entry
+	fewerSteps []uint8
+	times      []float64
+	bases      []float64
+	sorted     []float64
 }
 
 // part is one component of the mixture after the step: an ambient state, with
