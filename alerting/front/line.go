@@ -137,10 +137,9 @@ type posterior struct {
 
 // hit is a mast that has been reached: its place in the bank, and its onset.
 type hit struct {
-	place   int
-	t, sd   float64
-	change  quantity.Vector // unit
-	present bool
+	place  int
+	t, sd  float64
+	change quantity.Vector // unit
 }
 
 // weigh fills the posterior from the masts that have been reached and those

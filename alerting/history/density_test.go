@@ -19,7 +19,6 @@ import (
 type walk1 struct {
 	tau, sdSpeed, sdFrom float64
 	lost                 float64
-	jitter               float64 // standard deviation of the times, ms
 	speed, from          []float64
 	rng                  *rand.Rand
 }

@@ -192,8 +192,8 @@ func act[B any](p *Page, role access.Role, do func(r *http.Request, who string, 
 			return
 		}
 		var body B
-		if err := strict(r, &body); err != nil {
-			p.problem(w, http.StatusBadRequest, "bad-body", "What was sent cannot be understood.", err.Error())
+		if why := strict(r, &body); why != "" {
+			p.problem(w, http.StatusBadRequest, "bad-body", "What was sent cannot be understood.", why)
 			return
 		}
 		done, err := do(r, v.Name, body)
@@ -210,10 +210,11 @@ func act[B any](p *Page, role access.Role, do func(r *http.Request, who string, 
 	}
 }
 
-// strict reads a body of JSON and nothing else.
-func strict(r *http.Request, body any) error {
+// strict reads a body of JSON and nothing else. It says in a sentence what is
+// wrong with it, or nothing.
+func strict(r *http.Request, body any) (why string) {
 	if kind, _, err := mime.ParseMediaType(r.Header.Get("Content-Type")); err != nil || kind != "application/json" {
-		return errors.New("Send a JSON object with Content-Type: application/json.")
+		return "Send a JSON object with Content-Type: application/json."
 	}
 	d := json.NewDecoder(io.LimitReader(r.Body, maxBody+1))
 	d.DisallowUnknownFields()
@@ -221,13 +222,13 @@ func strict(r *http.Request, body any) error {
 	var extra json.RawMessage
 	switch {
 	case d.InputOffset() > maxBody:
-		return fmt.Errorf("It is longer than %d bytes.", maxBody)
+		return fmt.Sprintf("It is longer than %d bytes.", maxBody)
 	case err != nil:
-		return fmt.Errorf("It is not the JSON object that is expected here: %s.", strings.TrimPrefix(err.Error(), "json: "))
+		return fmt.Sprintf("It is not the JSON object that is expected here: %s.", strings.TrimPrefix(err.Error(), "json: "))
 	case !errors.Is(d.Decode(&extra), io.EOF):
-		return errors.New("Something follows the JSON object.")
+		return "Something follows the JSON object."
 	}
-	return nil
+	return ""
 }
 
 // refuse answers with why something was not done.
