@@ -161,7 +161,7 @@ func (v *FrontView) arrivals() string {
 		case a.Arrived && a.Mast >= 0:
 			reached = append(reached, a.Place)
 		case !a.Arrived && a.Mast < 0:
-			ahead = append(ahead, fmt.Sprintf("the %s about %s (%s to %s)", a.Place, clock(a.At),
+			ahead = append(ahead, fmt.Sprintf("%s about %s (%s to %s)", ofRunway(a.Place), clock(a.At),
 				a.Earliest.Time().Format("15:04:05"), a.Latest.Time().Format("15:04:05")))
 		}
 	}
@@ -173,6 +173,15 @@ func (v *FrontView) arrivals() string {
 		s += " It has reached " + and(reached) + "."
 	}
 	return s
+}
+
+// ofRunway is a threshold's name in a sentence: "threshold 07" is the threshold
+// of runway 07.
+func ofRunway(place string) string {
+	if designator, ok := strings.CutPrefix(place, "threshold "); ok {
+		return "the threshold of runway " + designator
+	}
+	return place
 }
 
 // VerticalView is what two levels of a column of air show, ready to be told.

@@ -34,8 +34,8 @@ func (v *OutflowView) JSON() []byte {
 	c.fixed("east_m", w.X, 0)
 	c.fixed("north_m", w.Y, 0)
 	o.raw("centre", c.end())
-	o.raw("inner", places(w.Contour(innerShare, corners, nil)))
-	o.raw("outer", places(w.Contour(outerShare, corners, nil)))
+	o.raw("inner", pointsOf(w.Contour(innerShare, corners, nil)))
+	o.raw("outer", pointsOf(w.Contour(outerShare, corners, nil)))
 	o.metres("radius_m", w.Radius)
 	o.metres("radius_low_m", w.RadiusLow)
 	o.metres("radius_high_m", w.RadiusHigh)
@@ -83,21 +83,6 @@ func motion(m outflow.Motion) []byte {
 	}
 	o.knots("spread_kt", m.Spread)
 	return o.end()
-}
-
-func places(ps [][2]float64) []byte {
-	b := []byte{'['}
-	for i, p := range ps {
-		if i > 0 {
-			b = append(b, ',')
-		}
-		b = append(b, '[')
-		b = appendFixed(b, p[0], 0)
-		b = append(b, ',')
-		b = appendFixed(b, p[1], 0)
-		b = append(b, ']')
-	}
-	return append(b, ']')
 }
 
 func trendOf(t outflow.Trend) string {

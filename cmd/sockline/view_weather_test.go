@@ -78,7 +78,7 @@ func TestViewHoldsFrontsAndColumns(t *testing.T) {
 		f.Notice != alerting.Notice || !strings.HasPrefix(f.Text, "EXERCISE: A gust front moves toward ") {
 		t.Errorf("%s", v.Fronts[0])
 	}
-	if f.Arrivals[1].Place != "threshold 25" || f.Arrivals[1].Arrived || !strings.Contains(f.Text, "the threshold 25 about 01:1") {
+	if f.Arrivals[1].Place != "threshold 25" || f.Arrivals[1].Arrived || !strings.Contains(f.Text, "the threshold of runway 25 about 01:1") {
 		t.Errorf("the far threshold: %s", v.Fronts[0])
 	}
 
