@@ -127,7 +127,7 @@ func (p *Page) list(kind Deed, key string, role access.Role) http.HandlerFunc {
 			return
 		}
 		if p.opts.People == nil {
-			p.refuse(w, ErrNotKept)
+			p.refuseToRead(w, ErrNotKept)
 			return
 		}
 		list, err := p.opts.People.List(kind, from, to)
@@ -142,7 +142,7 @@ func (p *Page) list(kind Deed, key string, role access.Role) http.HandlerFunc {
 // about answers with what people did about an event.
 func (p *Page) about(w http.ResponseWriter, r *http.Request) {
 	if p.opts.People == nil {
-		p.refuse(w, ErrNotKept)
+		p.refuseToRead(w, ErrNotKept)
 		return
 	}
 	list, err := p.opts.People.About(r.PathValue("id"))
