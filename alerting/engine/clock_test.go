@@ -105,6 +105,9 @@ func TestStepsOfTheHostClock(t *testing.T) {
 	} {
 		for _, at := range []time.Duration{time.Minute, 8 * time.Minute} {
 			t.Run(fmt.Sprintf("%v after %v", step, at), func(t *testing.T) {
+				if racing && (step != time.Hour || at != time.Minute) {
+					t.Skip("one goroutine: one of these shows the race detector all that there is")
+				}
 				t.Parallel()
 				got, blind := stories(t, a, stamped(t, messages, s.Start, at, step), s.Start, end)
 				if blind > 0 {
