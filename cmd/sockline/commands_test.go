@@ -101,7 +101,7 @@ func TestExit(t *testing.T) {
 		{"try nobody", []string{"try", "--config", skerrymoor, "--station", "far99", "--payload", "x"}, exitUsage, "there are touch07", ""},
 		{"show what", []string{"events", "show", "--config", skerrymoor}, exitUsage, "one event", ""},
 		{"events of nowhere", []string{"events", "list"}, exitUsage, "--config FILE or --history", ""},
-		{"events of no history", []string{"events", "list", "--history", t.TempDir()}, exitFailed, "once it has run", ""},
+		{"events of no history", []string{"events", "list", "--history", t.TempDir()}, exitFailed, "when it first runs", ""},
 	} {
 		t.Run(row.name, func(t *testing.T) {
 			o := call(t, row.args...)
