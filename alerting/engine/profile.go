@@ -82,12 +82,8 @@ func (e *Engine) Forecast(path int, seconds float64) (shear.Forecast, bool) {
 	clear(f.posterior.Mean)
 	for d := range windfield.Draws {
 		row := f.posterior.Draws[d*nt : (d+1)*nt]
-		for k := range 2 {
-			o := e.posterior.Over[2*d+k]
-			if o.Strength <= 0 {
-				continue
-			}
-			then := ahead(&o, e.result.Outflows, d, seconds)
+		if o := &e.posterior.Over[d]; o.Strength > 0 {
+			then := ahead(o, e.result.Outflows, d, seconds)
 			for _, t := range pg.stretch.Points {
 				g := e.ground.targets[t]
 				row[t] += g.Headwind(then.Wind(g.X, g.Y)) - g.Headwind(o.Wind(g.X, g.Y))

@@ -72,7 +72,8 @@ func (e *Estimator) listOutflows() {
 	if p.OutflowShare < doubtful {
 		return
 	}
-	for _, pt := range e.parts {
+	for i := range len(e.parts) + len(e.children) {
+		pt := e.possible(i)
 		if kindOf(pt.class) != OutflowPattern || pt.weight < negligible {
 			continue
 		}
@@ -83,6 +84,14 @@ func (e *Estimator) listOutflows() {
 			p.Outflows = append(p.Outflows, second)
 		}
 	}
+}
+
+// possible is part i of the mixture and the children beside it.
+func (e *Estimator) possible(i int) part {
+	if i < len(e.parts) {
+		return e.parts[i]
+	}
+	return e.children[i-len(e.parts)]
 }
 
 // positiveMean is the mean of N(mean, sd) held above 0.

@@ -56,7 +56,7 @@ type Posterior struct {
 	Alone []float64
 
 	Kinds    [Draws]PatternKind // what lies over the ambient field in each draw
-	Over     []Outflow          // [Draws][2] the outflows in each draw; Strength 0 without one
+	Over     []Outflow          // [Draws] the outflow in each draw; Strength 0 without one
 	Outflows []Outflow          // every outflow that is held possible
 }
 
@@ -97,7 +97,8 @@ type Estimator struct {
 	cache     cache
 	memory    ambientMemory
 	doubts    doubtMemory
-	derived   []derived // outflows made for the step at hand
+	derived   []derived // outflows made for the step at hand ...
+	children  []part    // ... and how likely they are beside the mixture
 	pairing   pairing
 	faultGain []float64 // log of each mast's prior of being wrong over the even-handed one
 
@@ -138,6 +139,7 @@ type part struct {
 // Where the outflows and the faults stand among the classes.
 const (
 	outflowClass = 0
+	frontClass   = 1
 	faultClass   = 2
 	derivedClass = 3 // outflows made for the step at hand: derived.go
 )
@@ -179,7 +181,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.slope = make([]float64, len(targets))
 	e.stateLog = make([]float64, len(e.fields))
 	e.weights = make([]float64, len(prior.Fields))
-	e.parts = make([]part, 0, len(e.fields)*(total+1+mostDerived))
+	e.parts = make([]part, 0, len(e.fields)*(total+1))
 	e.pairing = newPairing(e.outflows.count(), n)
 	e.newDerived()
 	e.times = make([]float64, 0, len(masts))
@@ -268,7 +270,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 			top = max(top, e.stateLog[k]+math.Log(e.weights[k]))
 		}
 	}
-	e.parts, e.derived = e.parts[:0], e.derived[:0]
+	e.parts, e.children, e.derived = e.parts[:0], e.children[:0], e.derived[:0]
 	total := 0.0
 	plain := 1 - e.prior.OutflowShare - e.prior.FrontShare - e.prior.FaultShare
 	for k := range ambient {
@@ -280,15 +282,21 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	var found [len(shares)]float64
 	for k := ambient; k < len(en.states); k++ {
 		e.solve(en, en.states[k])
+		var weights [len(shares)]float64
+		var best [parents]int
 		for c := range e.classes {
 			w := e.weighPatterns(en, k, c, shares[c]/float64(len(e.prior.Disturbed)), top, total)
 			total += w
 			found[c] += w
-			if c == outflowClass && w > worthDeriving*total {
-				w = e.derive(en, k, e.prior.OutflowShare/float64(len(e.prior.Disturbed)), top)
-				total += w
-				found[c] += w
+			weights[c] = w
+			if c == outflowClass {
+				best = e.likeliest()
 			}
+		}
+		// Where a front explains as much, a stretched or second outflow would only
+		// be a way to imitate it.
+		if w := weights[outflowClass]; w > worthDeriving*total && w > weights[frontClass] {
+			e.derive(en, k, best, e.prior.OutflowShare/float64(len(e.prior.Disturbed)), top)
 		}
 	}
 	// A state of the air is judged by what it explains with or without a
@@ -302,6 +310,9 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	}
 	for i := range e.parts {
 		e.parts[i].weight /= total
+	}
+	for i := range e.children {
+		e.children[i].weight /= total
 	}
 	e.posterior.OutflowShare = found[0] / total
 	e.posterior.FrontShare = found[1] / total
@@ -428,9 +439,9 @@ func (e *Estimator) draw(en *entry) {
 			excess = positiveNormal(st.now, st.spread, e.levels[d]) - st.now
 		}
 		p.Kinds[d] = kindOf(pt.class)
-		p.Over[2*d], p.Over[2*d+1] = Outflow{}, Outflow{}
+		p.Over[d] = Outflow{}
 		if p.Kinds[d] == OutflowPattern {
-			p.Over[2*d], p.Over[2*d+1] = e.outflowsOf(pt, st.now+excess, 0)
+			p.Over[d] = e.outflows.templates[pt.pattern].outflow(st.now+excess, pt.weight)
 		}
 		for t := range row {
 			v := e.base[t] + float64(excess*e.slope[t]) + z[t]
@@ -457,19 +468,13 @@ func (e *Estimator) shape(en *entry, s *state, pt part) strength {
 		clear(e.slope)
 		return strength{}
 	}
-	var st strength
-	var line []float64
-	if pt.class == derivedClass {
-		st, line = e.derivedShape(en, s, &e.derived[pt.pattern])
-	} else {
-		var b [dims]float64
-		for d := range dims {
-			e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
-			b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
-		}
-		st = e.strengthOf(s, pt.class, pt.pattern, b)
-		line = e.line(en, s, pt.class, pt.pattern)
+	var b [dims]float64
+	for d := range dims {
+		e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
+		b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
 	}
+	st := e.strengthOf(s, pt.class, pt.pattern, b)
+	line := e.line(en, s, pt.class, pt.pattern)
 	for t := range nt {
 		base, slope := e.plain[t], float64(st.open*line[dims*nt+t])
 		for d := range dims {

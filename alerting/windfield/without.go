@@ -41,6 +41,6 @@ const noMast = -1
 func newPosterior(masts, targets int) Posterior {
 	return Posterior{
 		Doubt: make([]float64, masts), Alone: make([]float64, masts), Mean: make([]float64, targets),
-		Draws: make([]float64, Draws*targets), Over: make([]Outflow, 2*Draws),
+		Draws: make([]float64, Draws*targets), Over: make([]Outflow, Draws),
 	}
 }
