@@ -1,6 +1,8 @@
 package engine
 
 import (
+	"slices"
+
 	"sockline/alerting"
 	"sockline/alerting/hazard"
 	"sockline/alerting/shear"
@@ -13,15 +15,15 @@ import (
 // level. Its cost is bounded: one mast every few steps, in turn, and one more when
 // beyond-margin is met while a mast stands alone.
 func (e *Engine) fewer(t sensors.Instant, s *averages.Snapshot, p *windfield.Posterior) {
-	raised, beyond := -1, false
+	raised, beyond := false, false
 	for i := range e.assessments {
 		a := &e.assessments[i]
 		if a.Loss.Level > alerting.NoLevel || a.Gain.Level > alerting.NoLevel {
-			raised = i
+			raised = true
 		}
 		beyond = beyond || a.Loss.Level == alerting.BeyondMargin
 	}
-	if raised < 0 || len(p.Live) < 2 {
+	if !raised || len(p.Live) < 2 {
 		return
 	}
 	if m := mostAlone(p); beyond && p.Alone[m] >= standsAlone {
@@ -69,16 +71,16 @@ func (e *Engine) withoutMast(s *averages.Snapshot, mast int, tell func(a *hazard
 	if p == nil {
 		return
 	}
-	var measured *shear.Stretch
+	var done []*shear.Stretch
 	for i := range e.assessments {
 		a, pg := &e.assessments[i], &e.ground.paths[i]
 		if a.Loss.Level == alerting.NoLevel && a.Gain.Level == alerting.NoLevel {
 			continue
 		}
 		w := e.ahead.stretch(pg.stretch)
-		if measured != w { // paths that share their ground follow one another or are measured again
+		if !slices.Contains(done, w) { // paths share their ground
 			w.Measure(p)
-			measured = w
+			done = append(done, w)
 		}
 		tell(a, w)
 	}

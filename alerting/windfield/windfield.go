@@ -136,7 +136,7 @@ type part struct {
 	now, sharpness        float64 // today's strength before it is held positive, and 1 / (sqrt(2) its deviation)
 }
 
-// Where the outflows and the faults stand among the classes.
+// Where the outflows, the fronts and the faults stand among the classes.
 const (
 	outflowClass = 0
 	frontClass   = 1
@@ -222,7 +222,13 @@ func reverseBits(d int) int {
 
 // Step is the posterior for a snapshot; nil when no mast is live or the
 // observations cannot be used (never for masts at different places).
-func (e *Estimator) Step(s *averages.Snapshot) *Posterior { return e.step(s) }
+func (e *Estimator) Step(s *averages.Snapshot) *Posterior {
+	p := e.step(s)
+	if p != nil {
+		e.listOutflows()
+	}
+	return p
+}
 
 // step is Step, or Without when a mast is left out.
 func (e *Estimator) step(s *averages.Snapshot) *Posterior {
@@ -233,7 +239,6 @@ func (e *Estimator) step(s *averages.Snapshot) *Posterior {
 	e.observe(s, en)
 	e.weigh(s.At(), en)
 	e.draw(en)
-	e.listOutflows()
 	e.posterior.Live = en.live
 	return &e.posterior
 }
@@ -289,13 +294,13 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 			total += w
 			found[c] += w
 			weights[c] = w
-			if c == outflowClass {
-				best = e.likeliest()
+			if c == outflowClass && w > worthDeriving*total {
+				best = e.likeliest() // the evidence is overwritten by the next class
 			}
 		}
 		// Where a front explains as much, a stretched or second outflow would only
 		// be a way to imitate it.
-		if w := weights[outflowClass]; w > worthDeriving*total && w > weights[frontClass] {
+		if w := weights[outflowClass]; e.without == noMast && w > worthDeriving*total && w > weights[frontClass] {
 			e.derive(en, k, best, e.prior.OutflowShare/float64(len(e.prior.Disturbed)), top)
 		}
 	}
