@@ -138,6 +138,8 @@ func parseFrame(b []byte, base sensors.Instant) (*frame, error) {
 	return f, nil
 }
 
+// parseLate takes late readings only in the order of steps that the frame has,
+// and never a step without any: anything else would be lost when written again.
 func (f *frame) parseLate(c *cursor, base sensors.Instant) {
 	steps := c.uvarint()
 	if steps == 0 || c.bad {
@@ -148,13 +150,17 @@ func (f *frame) parseLate(c *cursor, base sensors.Instant) {
 		reasons = append(reasons, string(c.bytes(c.uvarint())))
 	}
 	f.late = map[int][]LateReading{}
+	later := f.seconds
 	for ; steps > 0 && !c.bad; steps-- {
 		second := c.uvarint()
-		if second > longestFrame {
+		place := slices.Index(later, int(second&math.MaxUint16))
+		if second > longestFrame || place < 0 {
 			c.bad = true
 			return
 		}
+		later = later[place+1:]
 		rs := c.readings(base+sensors.Instant(second)*sensors.Second, nil)
+		c.bad = c.bad || len(rs) == 0
 		late := make([]LateReading, len(rs))
 		for i, r := range rs {
 			reason := c.uvarint()
