@@ -13,6 +13,7 @@ func (e *Engine) assess(s *averages.Snapshot) {
 	e.ground.update(s)
 	posterior := e.field.Step(s)
 	e.posterior = posterior
+	e.lone.measured = e.lone.measured[:0]
 	e.result.OutflowShare, e.result.Doubt = 0, nil
 	e.result.Outflows = e.outflows.Step(s.At(), posterior)
 	exercise := e.settings.Exercise

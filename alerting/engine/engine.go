@@ -62,6 +62,7 @@ type Engine struct {
 	outflows  *outflow.Tracker
 	posterior *windfield.Posterior // of the last step; nil when it saw nothing
 	ahead     forecaster
+	lone      lone
 	ground    *ground
 	fronts    *front.Tracker
 	others    others

@@ -43,21 +43,7 @@ func (e *Engine) Profile(path int, dst []shear.ProfilePoint) []shear.ProfilePoin
 // fewer. Made when first asked for.
 type forecaster struct {
 	posterior windfield.Posterior
-	stretches map[*shear.Stretch]*shear.Stretch
-}
-
-// stretch is a second one over the same ground, to measure another posterior.
-func (f *forecaster) stretch(of *shear.Stretch) *shear.Stretch {
-	if f.stretches == nil {
-		f.stretches = make(map[*shear.Stretch]*shear.Stretch)
-	}
-	s, ok := f.stretches[of]
-	if !ok {
-		s = shear.NewStretch(of.Points)
-		f.stretches[of] = s
-	}
-	copy(s.Observed, of.Observed)
-	return s
+	spares    spares
 }
 
 // Forecast is what a path's greatest changes will be after so many seconds if
@@ -76,7 +62,7 @@ func (e *Engine) Forecast(path int, seconds float64) (shear.Forecast, bool) {
 		f.posterior.Mean = make([]float64, nt)
 		f.posterior.Draws = make([]float64, windfield.Draws*nt)
 	}
-	s := f.stretch(pg.stretch)
+	s := f.spares.of(pg.stretch)
 	f.posterior.Kinds = e.posterior.Kinds
 	copy(f.posterior.Draws, e.posterior.Draws)
 	clear(f.posterior.Mean)

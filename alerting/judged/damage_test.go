@@ -15,7 +15,7 @@ import (
 // twoPaths is a context of two paths over one ground, and rules for it.
 func twoPaths() (Context, hazard.Levels) {
 	l := hazard.Levels{Noticeable: 10 * quantity.Knot, Large: 15 * quantity.Knot, Margin: 17.2 * quantity.Knot, Hysteresis: 2 * quantity.Knot, Confidence: 0.8}
-	return Context{Paths: make([]lifecycle.PathName, 2), Owners: []int{0, 0}, Stations: []string{"a", "b"}, Thresholds: Thresholds(l)}, l
+	return Context{Paths: make([]lifecycle.PathName, 2), Owners: []int{0, 0}, Stations: []string{"a", "b"}, Thresholds: Thresholds(l), Without: true}, l
 }
 
 // filled is a block of steps with losses and gains drawn at random.

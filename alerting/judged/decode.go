@@ -29,16 +29,17 @@ func decodeBlock(c *Context, body []byte) (*block, error) {
 	r.runs(b, func(n int, v uint64) { b.rows[n].ground = int(v) })
 	r.runs(b, func(n int, v uint64) { b.rows[n].exercise = v == 1 })
 	stretches, _ := c.stretches()
-	sides := make([]side, 2*stretches*len(b.rows)) // one piece of memory for all
+	each := c.sides() * stretches
+	sides := make([]side, each*len(b.rows)) // one piece of memory for all
 	places := make([]place, 2*paths*len(b.rows))
 	for n := range b.rows {
-		b.rows[n].sides = sides[n*2*stretches : (n+1)*2*stretches]
+		b.rows[n].sides = sides[n*each : (n+1)*each]
 		b.rows[n].places = places[n*2*paths : (n+1)*2*paths]
 		if b.rows[n].ground >= len(b.grounds) || b.rows[n].offset >= BlockSteps {
 			return nil, errBlock
 		}
 	}
-	for i := range 2 * stretches {
+	for i := range each {
 		r.side(b, i, thresholds)
 	}
 	for i := range 2 * paths {

@@ -21,8 +21,9 @@ const (
 	fileSuffix = ".dat"
 	dayLayout  = "2006-01-02"
 
-	head  = "sockline judged 1\n"
-	magic = "\xe7jb\x01" // no text, and not the start of any column by design of its first byte
+	head  = "sockline judged 2\n"
+	head1 = "sockline judged 1\n" // as long as head
+	magic = "\xe7jb\x01"          // no text, and not the start of any column by design of its first byte
 
 	kindContext = 'C'
 	kindSteps   = 'S'
@@ -176,7 +177,7 @@ func ReadDay(dir, day string, from, to sensors.Instant, fn func(*Step) error) (R
 	if err != nil {
 		return report, fmt.Errorf("read what was judged: %w", err)
 	}
-	if !bytes.HasPrefix(content, []byte(head)) {
+	if !bytes.HasPrefix(content, []byte(head)) && !bytes.HasPrefix(content, []byte(head1)) {
 		if bytes.HasPrefix(content, []byte("sockline judged ")) {
 			return report, fmt.Errorf("%s %w", FileOf(day), ErrNewer)
 		}

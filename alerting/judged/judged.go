@@ -54,6 +54,9 @@ type Context struct {
 	Stations   []string             `json:"stations"`
 	Owners     []int                `json:"owners"`        // for each path, the first one that looks at the same ground
 	Thresholds []float64            `json:"thresholds_ms"` // changes at which the probability is kept, m/s, ascending
+	// Without: the loss without the mast that stands alone is kept, too. A Writer
+	// sees to that; what version 1 wrote is without it.
+	Without bool `json:"without"`
 }
 
 // Thresholds are the whole knots from 5 to 60 and the levels in force with
@@ -87,6 +90,9 @@ func (c Context) encode() ([]byte, error) {
 // Look is what one step found on one path.
 type Look struct {
 	Stretch *shear.Stretch // nil while the path is not usable; valid during the call only
+	// Without is the same ground without the mast that stands alone; nil where no
+	// levels need it.
+	Without *shear.Stretch
 	Found   *hazard.Assessment
 }
 
@@ -167,8 +173,16 @@ type row struct {
 	offset   int // seconds since the start of the block
 	ground   int
 	exercise bool
-	sides    []side  // by stretch (in the order of their owners), loss before gain
+	sides    []side  // by stretch (in the order of their owners): loss, gain, loss without the mast that stands alone
 	places   []place // by path, loss before gain
+}
+
+// sides is how many sides of each stretch are kept: see row.
+func (c *Context) sides() int {
+	if c.Without {
+		return 3
+	}
+	return 2
 }
 
 // stretches counts the different grounds of a context and gives each path the

@@ -21,6 +21,7 @@ type Recorder struct {
 
 // newRecorder begins with a context; keep gets every block that is whole.
 func newRecorder(c Context, keep func(*block)) *Recorder {
+	c.Without = true
 	r := &Recorder{context: &c, keep: keep}
 	r.stretches, r.of = c.stretches()
 	return r
@@ -46,15 +47,19 @@ func (r *Recorder) Take(t sensors.Instant, looks []Look) {
 		n++
 	}
 	row := row{offset: int((t - b.start) / sensors.Second), ground: n,
-		sides: make([]side, 2*r.stretches), places: make([]place, 2*len(looks))}
+		sides: make([]side, r.context.sides()*r.stretches), places: make([]place, 2*len(looks))}
 	for i, l := range looks {
 		row.exercise = row.exercise || l.Found.Exercise
 		if l.Stretch == nil {
 			continue
 		}
 		if r.context.Owners[i] == i {
-			row.sides[2*r.of[i]].take(r.context.Thresholds, &l.Stretch.Loss)
-			row.sides[2*r.of[i]+1].take(r.context.Thresholds, &l.Stretch.Gain)
+			s := row.sides[r.context.sides()*r.of[i]:]
+			s[0].take(r.context.Thresholds, &l.Stretch.Loss)
+			s[1].take(r.context.Thresholds, &l.Stretch.Gain)
+			if l.Without != nil {
+				s[2].take(r.context.Thresholds, &l.Without.Loss)
+			}
 		}
 		row.places[2*i], row.places[2*i+1] = placeOf(&l.Found.Loss), placeOf(&l.Found.Gain)
 		if s, ok := r.steepness(l); ok {

@@ -130,7 +130,7 @@ func (f *field) looks(e *engine.Engine, res *engine.Result, dst []judged.Look) [
 	dst = dst[:0]
 	for i := range res.Assessments {
 		s, _ := e.Stretch(i)
-		dst = append(dst, judged.Look{Stretch: s, Found: &res.Assessments[i]})
+		dst = append(dst, judged.Look{Stretch: s, Without: e.Without(i), Found: &res.Assessments[i]})
 	}
 	return dst
 }

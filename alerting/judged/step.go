@@ -30,7 +30,7 @@ type Distribution struct {
 // measured, or where even the 95 % point lay below 5 kt.
 func (s *Step) Distribution(path int, gain bool) (d Distribution, ok bool) {
 	_, of := s.Context.stretches()
-	i := 2 * of[path]
+	i := s.Context.sides() * of[path]
 	if gain {
 		i++
 	}
@@ -150,10 +150,14 @@ func (j *Judge) Assess(s *Step, dst []hazard.Assessment) []hazard.Assessment {
 		if len(a.Observed) == 0 {
 			continue
 		}
-		j.side(&a.Loss, &s.row.sides[2*j.of[i]], s.row.places[2*i], g.used)
-		j.side(&a.Gain, &s.row.sides[2*j.of[i]+1], s.row.places[2*i+1], g.used)
+		sides := s.row.sides[j.context.sides()*j.of[i]:]
+		j.side(&a.Loss, &sides[0], s.row.places[2*i], g.used)
+		j.side(&a.Gain, &sides[1], s.row.places[2*i+1], g.used)
 		j.steepen(a, s, i)
 		j.levels.Settle(a)
+		if j.context.Without && sides[2].state != notSeen {
+			j.levels.Restrain(a, j.open[alerting.Noticeable].share(sides[2].counts))
+		}
 	}
 	return dst
 }

@@ -134,10 +134,12 @@ func (w *Writer) write(b *block) (size int, err error) {
 	return size, err
 }
 
-// appendTo appends to a file, which gets its first line when it is new. What
-// was written of a part that failed is cut off again, as far as the disk lets.
+// appendTo appends to a file, which gets its first line when it is new, and that
+// of this version when it was begun by an earlier one, whose blocks stay what
+// they are. What was written of a part that failed is cut off again, as far as
+// the disk lets.
 func appendTo(path string, out []byte) (size int, err error) {
-	f, err := os.OpenFile(path, os.O_WRONLY|os.O_CREATE, 0o640)
+	f, err := os.OpenFile(path, os.O_RDWR|os.O_CREATE, 0o640)
 	if err != nil {
 		return 0, err
 	}
@@ -149,6 +151,8 @@ func appendTo(path string, out []byte) (size int, err error) {
 	at := info.Size()
 	if at < int64(len(head)) { // new, or cut short while it was made
 		at, out = 0, append([]byte(head), out...)
+	} else if err = renew(f); err != nil {
+		return 0, err
 	}
 	if _, err = f.WriteAt(out, at); err == nil {
 		err = f.Sync()
@@ -157,4 +161,14 @@ func appendTo(path string, out []byte) (size int, err error) {
 		return 0, errors.Join(err, f.Truncate(at))
 	}
 	return len(out), nil
+}
+
+// renew gives a file of version 1 the first line of this version.
+func renew(f *os.File) error {
+	first := make([]byte, len(head1))
+	if _, err := f.ReadAt(first, 0); err != nil || string(first) != head1 {
+		return err
+	}
+	_, err := f.WriteAt([]byte(head), 0)
+	return err
 }

@@ -79,10 +79,13 @@ func JudgeVariants(ctx context.Context, airfield, dir string, in Levels, from, t
 		if day < judged.DayOf(from) || day > judged.DayOf(to) {
 			continue
 		}
-		unfit := make([]error, len(all))
+		unfit, old := make([]error, len(all)), 0
 		report, err := judged.ReadDay(dir, day, from, to, func(s *judged.Step) error {
 			if steps++; steps%65536 == 0 && ctx.Err() != nil {
 				return errStopped
+			}
+			if !s.Context.Without {
+				old++
 			}
 			for i, r := range all {
 				if unfit[i] == nil {
@@ -104,6 +107,9 @@ func JudgeVariants(ctx context.Context, airfield, dir string, in Levels, from, t
 			}
 		}
 		v.Faults = append(v.Faults, report.Faults...)
+		if old > 0 {
+			v.Faults = append(v.Faults, fmt.Sprintf("%s: %d steps were kept by an earlier version: where a mast stands alone, level 3 may be counted that the analysis would not have told", day, old))
+		}
 	}
 	v.Hours = float64(all[0].Steps) / 3600
 	for i, r := range all {

@@ -44,7 +44,7 @@ func (j *judgements) keep(t sensors.Instant, e *engine.Engine, res *engine.Resul
 	j.looks = j.looks[:0]
 	for i := range res.Assessments {
 		s, _ := e.Stretch(i)
-		j.looks = append(j.looks, judged.Look{Stretch: s, Found: &res.Assessments[i]})
+		j.looks = append(j.looks, judged.Look{Stretch: s, Without: e.Without(i), Found: &res.Assessments[i]})
 	}
 	j.writer.Take(t, j.looks)
 }

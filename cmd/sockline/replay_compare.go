@@ -227,7 +227,7 @@ func (c *comparison) other() ([]review.Life, error) {
 		return dayStart(day) >= c.to || dayStart(day).Add(24*time.Hour) <= c.from
 	})
 	rules := review.Levels{Levels: levels(c.cfg), Hold: c.cfg.Alerts.Hold}
-	rejudger := review.NewRejudger(c.cfg.Airfield.ID, rules, c.fits())
+	rejudger := review.NewRejudger(c.cfg.Airfield.ID, rules, c.fitsExactly())
 	var (
 		lives []review.Life
 		left  []string // days that need the analysis
@@ -387,6 +387,17 @@ func (c *comparison) fits() func(*judged.Context) error {
 			return &unfitError{err.Error()}
 		}
 		return nil
+	}
+}
+
+// fitsExactly is fits for steps that tell all that their levels rest on.
+func (c *comparison) fitsExactly() func(*judged.Context) error {
+	fits := c.fits()
+	return func(k *judged.Context) error {
+		if !k.Without {
+			return &unfitError{"they were kept by an earlier version, without the loss that is left when a mast that stands alone is not believed"}
+		}
+		return fits(k)
 	}
 }
 

@@ -93,7 +93,57 @@ func TestReview(t *testing.T) {
 	dir := kept(t, configuration, twice)
 	t.Run("compare", func(t *testing.T) { compareHistory(t, configuration, dir) })
 	t.Run("usual levels", func(t *testing.T) { usualLevels(t, configuration, dir) })
+	t.Run("storm", reviewStorm)
 	t.Run("event", func(t *testing.T) { reviewEvent(t, dir) }) // last: it adds to the journal
+}
+
+// storm is a mast that fails in a strong wind: what it sees is large, but not
+// beyond-margin, since its neighbours contradict it.
+const storm = `
+airfield   skerrymoor
+start      2026-07-01T14:00:00Z
+length     9 min
+seed       43
+wind       064 deg 36 kt
+turbulence B
+mast       touch25 reads 20 % at 8 min
+`
+
+// reviewStorm holds that a loss which rests on one mast is no more by other
+// levels than the analysis has it, and that what was kept by an earlier version,
+// without what that takes, is analysed anew.
+func reviewStorm(t *testing.T) {
+	dir := kept(t, skerrymoor, storm)
+	source, err := os.ReadFile(skerrymoor)
+	if err != nil {
+		t.Fatal(err)
+	}
+	other := writeFile(t, "other.toml", strings.Replace(string(source), `noticeable_change = "10 kt"`, `noticeable_change = "9 kt"`, 1))
+	fromKept := whatIf(t, "--history", dir, "--config", other)
+	analysed := whatIf(t, "--history", dir, "--config", other, "--analyse")
+	if fromKept.Way != review.Rejudged || analysed.Way != review.Analysed {
+		t.Fatalf("judged: %s, analysed: %s", fromKept.Way, analysed.Way)
+	}
+	if a, b := verdicts(fromKept.Comparison), verdicts(analysed.Comparison); a != b || a == "" {
+		t.Errorf("from what is kept:\n%s\nanalysed:\n%s", a, b)
+	}
+	if r := analysed.Comparison.Recorded; r[2] == 0 || r[3] != 0 {
+		t.Errorf("alerts by their highest level: %v; there are to be large ones, and none beyond the margin", r)
+	}
+	if r := fromKept.Comparison.Other; r[2] == 0 || r[3] != 0 {
+		t.Errorf("by other levels: %v", r)
+	}
+	name := filepath.Join(dir, judged.FileOf("2026-07-01"))
+	old, err := os.ReadFile(filepath.Join("..", "..", "alerting", "judged", "testdata", "version1", judged.FileOf("2026-07-01")))
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := os.WriteFile(name, old, 0o600); err != nil {
+		t.Fatal(err)
+	}
+	if again := whatIf(t, "--history", dir, "--config", other); again.Way != review.Analysed || !strings.Contains(strings.Join(again.Notes, " "), "earlier version") {
+		t.Errorf("steps of version 1 were %s: %v", again.Way, again.Notes)
+	}
 }
 
 // compareHistory holds that the configuration in force gives every issue again and
