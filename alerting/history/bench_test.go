@@ -149,7 +149,7 @@ func benchBlocks(b *testing.B, s *Store, all int) {
 				if err != nil {
 					b.Fatal(err)
 				}
-				c := cursor{b: body}
+				c := cursorAt(body)
 				rs = c.block(w.base, 1, rs[:0], &sc)
 				n += len(rs)
 			}

@@ -7,6 +7,7 @@ import (
 	"math"
 	"slices"
 
+	"sockline/alerting/packed"
 	"sockline/sensors"
 	"sockline/sensors/quantity"
 )
@@ -174,90 +175,57 @@ func setBit(h, bit uint16, on bool) uint16 {
 	return h
 }
 
-// cursor reads a sealed value; the first thing that does not fit makes it bad
-// and every later read a zero.
-type cursor struct {
-	b   []byte
-	bad bool
-}
+// cursor reads a sealed value; what does not fit makes it bad.
+type cursor struct{ packed.Reader }
 
-func (c *cursor) uvarint() uint64 {
-	v, n := binary.Uvarint(c.b)
-	if n <= 0 {
-		c.bad, c.b = true, nil
-		return 0
-	}
-	c.b = c.b[n:]
-	return v
-}
-
-func (c *cursor) varint() int64 {
-	v, n := binary.Varint(c.b)
-	if n <= 0 {
-		c.bad, c.b = true, nil
-		return 0
-	}
-	c.b = c.b[n:]
-	return v
-}
-
-// bytes returns the next n bytes, not copied.
-func (c *cursor) bytes(n uint64) []byte {
-	if n > uint64(len(c.b)) {
-		c.bad, c.b = true, nil
-		return nil
-	}
-	v := c.b[:n]
-	c.b = c.b[n:]
-	return v
-}
+func cursorAt(b []byte) cursor { return cursor{packed.Reader{Left: b}} }
 
 func (c *cursor) value(f form) float64 {
 	if f == formRaw {
-		if b := c.bytes(8); b != nil {
+		if b := c.Bytes(8); b != nil {
 			return math.Float64frombits(binary.LittleEndian.Uint64(b))
 		}
 		return 0
 	}
-	return f.value(c.varint())
+	return f.value(c.Varint())
 }
 
 // readings appends to dst what appendReadings wrote.
 func (c *cursor) readings(step sensors.Instant, dst []sensors.Reading) []sensors.Reading {
-	n := c.uvarint()
-	if n > uint64(len(c.b)) { // a reading takes more than a byte: refuse before allocating
-		c.bad = true
+	n := c.Uvarint()
+	if n > uint64(len(c.Left)) { // a reading takes more than a byte: refuse before allocating
+		c.Bad = true
 		return dst
 	}
 	dst = slices.Grow(dst, int(n))
 	station := -1
-	for n > 0 && !c.bad {
-		length := c.uvarint()
-		headBytes := c.bytes(2)
-		if c.bad || length == 0 || length > n {
-			c.bad = true
+	for n > 0 && !c.Bad {
+		length := c.Uvarint()
+		headBytes := c.Bytes(2)
+		if c.Bad || length == 0 || length > n {
+			c.Bad = true
 			return dst
 		}
 		head := binary.LittleEndian.Uint16(headBytes)
 		if head&^uint16(headKnown) != 0 {
-			c.bad = true
+			c.Bad = true
 			return dst
 		}
 		n -= length
-		for ; length > 0 && !c.bad; length-- {
+		for ; length > 0 && !c.Bad; length-- {
 			if head&headNext != 0 {
 				station++
 			} else {
-				station = int(c.varint())
+				station = int(c.Varint())
 			}
 			r := sensors.Reading{
 				Station:  station,
-				Time:     step - sensors.Instant(c.varint()),
+				Time:     step - sensors.Instant(c.Varint()),
 				HasGust:  head&headHasGust != 0,
 				Exercise: head&headExercise != 0,
 				Retained: head&headRetained != 0,
 			}
-			r.Arrival = r.Time + sensors.Instant(c.varint())
+			r.Arrival = r.Time + sensors.Instant(c.Varint())
 			r.Speed = c.value(form(head & 7))
 			r.From = c.value(form(head >> headFromShift & 7))
 			if head&headGustValue != 0 {
@@ -286,7 +254,7 @@ func (c *cursor) late(step sensors.Instant) []LateReading {
 	rs := c.readings(step, nil)
 	late := make([]LateReading, len(rs))
 	for i, r := range rs {
-		late[i] = LateReading{Reading: r, Reason: string(c.bytes(c.uvarint()))}
+		late[i] = LateReading{Reading: r, Reason: string(c.Bytes(c.Uvarint()))}
 	}
 	return late
 }

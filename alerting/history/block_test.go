@@ -96,10 +96,10 @@ func TestReadingsRoundTrip(t *testing.T) {
 		for i := range rs {
 			rs[i] = anyReading(rng, step)
 		}
-		c := cursor{b: appendReadings(nil, step, rs)}
+		c := cursorAt(appendReadings(nil, step, rs))
 		got := c.readings(step, nil)
-		if c.bad || len(c.b) != 0 || len(got) != len(rs) {
-			t.Fatalf("seed %d round %d: %d readings became %d, bad %v, %d bytes left", seed, round, len(rs), len(got), c.bad, len(c.b))
+		if c.Bad || len(c.Left) != 0 || len(got) != len(rs) {
+			t.Fatalf("seed %d round %d: %d readings became %d, bad %v, %d bytes left", seed, round, len(rs), len(got), c.Bad, len(c.Left))
 		}
 		for i := range rs {
 			if !sameReading(rs[i], got[i]) {
@@ -212,15 +212,15 @@ func FuzzReadings(f *testing.F) {
 	f.Add(appendReadings(nil, start, readingsOf(start, 2)))
 	f.Add([]byte{0xff, 0xff, 0xff, 0xff, 0x0f, 1, 0, 0})
 	f.Fuzz(func(t *testing.T, b []byte) {
-		c := cursor{b: b}
+		c := cursorAt(b)
 		rs := c.readings(start, nil)
-		if c.bad {
+		if c.Bad {
 			return
 		}
 		// What was read can be written and read again, whatever it was.
-		again := cursor{b: appendReadings(nil, start, rs)}
+		again := cursorAt(appendReadings(nil, start, rs))
 		got := again.readings(start, nil)
-		if again.bad || len(got) != len(rs) {
+		if again.Bad || len(got) != len(rs) {
 			t.Fatalf("%d readings became %d", len(rs), len(got))
 		}
 		for i := range rs {

@@ -3,17 +3,16 @@ package history
 import (
 	"encoding/binary"
 	"math"
-	"math/bits"
 	"slices"
 
+	"sockline/alerting/packed"
 	"sockline/sensors"
 )
 
 // Readings of one station over some minutes are stored column by column: the
 // difference from one reading to the next has a small entropy, and Rice's code
-// of it comes within a few percent of that (R. F. Rice, Some Practical
-// Universal Noiseless Coding Techniques, JPL Publication 79-22, 1979; from
-// memory). The parameter k is the best for each column of each block.
+// of it (see packed.Rice) comes within a few percent of that. Its number of
+// low bits is the best for each column of each block.
 
 // The ways to store a column of whole numbers; bits 5-7 of its head.
 const (
@@ -24,130 +23,15 @@ const (
 	columnWrapped         // as columnDelta on a circle of a known circumference
 )
 
-// riceEscape is the length of the unary part that says that the number follows
-// as it is, so that one far value costs 11 bytes and not a page.
-const riceEscape = 24
+// What the head of a column and its numbers leave room for.
+const (
+	mostLow  = 31 // low bits of a code
+	farWidth = 64 // bits of a number that the code is not good for
+)
 
 // maxColumn is how many readings a block may claim to have: more than a
 // station can send at 1 kHz. It bounds what a constant column makes of 2 bytes.
 const maxColumn = 1 << 20
-
-func zigzag(v int64) uint64   { return uint64(v<<1) ^ uint64(v>>63) }
-func unzigzag(u uint64) int64 { return int64(u>>1) ^ -int64(u&1) }
-
-// riceBits is how many bits Rice's code of the numbers takes.
-func riceBits(us []uint64, k int) (n uint64) {
-	for _, u := range us {
-		if q := u >> k; q < riceEscape {
-			n += q + 1 + uint64(k)
-		} else {
-			n += riceEscape + 64
-		}
-	}
-	return n
-}
-
-// bestRice finds the k with the shortest code.
-func bestRice(us []uint64) (k int, size uint64) {
-	var all uint64
-	for _, u := range us {
-		all |= u
-	}
-	size = math.MaxUint64
-	for c := range min(bits.Len64(all), 31) + 1 {
-		if n := riceBits(us, c); n < size {
-			k, size = c, n
-		}
-	}
-	return k, size
-}
-
-// appendRice appends Rice's code of the numbers, the highest bit first, filled
-// up to whole bytes with zeros.
-func appendRice(dst []byte, us []uint64, k int) []byte {
-	var (
-		acc  uint64 // the lowest n bits wait
-		n    int
-		push = func(v uint64, width int) { // width <= 32
-			acc, n = acc<<width|v, n+width
-			for n >= 8 {
-				n -= 8
-				dst = append(dst, byte(acc>>n))
-			}
-		}
-	)
-	for _, u := range us {
-		if q := u >> k; q < riceEscape {
-			push(1<<(q+1)-2, int(q)+1)
-			push(u&(1<<k-1), k)
-			continue
-		}
-		push(1<<riceEscape-1, riceEscape)
-		push(u>>32, 32)
-		push(u&math.MaxUint32, 32)
-	}
-	if n > 0 {
-		push(0, 8-n)
-	}
-	return dst
-}
-
-// rice reads n numbers of Rice's code into dst.
-func (c *cursor) rice(dst []uint64, n, k int) []uint64 {
-	var (
-		b    = c.b
-		at   = 0
-		acc  uint64 // the highest have bits are the next ones
-		have = 0
-	)
-	for range n {
-		if have <= 56 {
-			if at+8 <= len(b) {
-				// The bits below the highest have are the true ones, too: to
-				// put them there once more changes nothing.
-				acc |= binary.BigEndian.Uint64(b[at:]) >> have
-				whole := (64 - have) / 8
-				at, have = at+whole, have+8*whole
-			}
-			for have <= 56 && at < len(b) {
-				acc |= uint64(b[at]) << (56 - have)
-				at, have = at+1, have+8
-			}
-		}
-		q := bits.LeadingZeros64(^acc)
-		switch {
-		case q < riceEscape && q+1+k <= have:
-			acc <<= q + 1
-			dst = append(dst, uint64(q)<<k|acc>>(64-k))
-			acc <<= k
-			have -= q + 1 + k
-		case q >= riceEscape && have >= riceEscape:
-			acc <<= riceEscape
-			have -= riceEscape
-			var u uint64
-			for range 8 {
-				if have < 8 {
-					if at == len(b) {
-						c.bad, c.b = true, nil
-						return dst
-					}
-					acc |= uint64(b[at]) << (56 - have)
-					at++
-					have += 8
-				}
-				u = u<<8 | acc>>56
-				acc <<= 8
-				have -= 8
-			}
-			dst = append(dst, u)
-		default:
-			c.bad, c.b = true, nil
-			return dst
-		}
-	}
-	c.b = b[at-have/8:]
-	return dst
-}
 
 // appendColumn appends numbers in the shortest of the ways. A circumference
 // other than 0 says that they are places on a circle, each less than it.
@@ -171,20 +55,20 @@ func appendColumn(dst []byte, vs []int64, circumference int64) []byte {
 		plain[i] = uint64(v - least) // exact even where the difference overflows: modulo 2^64 both ways
 	}
 	for i := range delta {
-		delta[i] = zigzag(vs[i+1] - vs[i])
+		delta[i] = packed.Zigzag(vs[i+1] - vs[i])
 	}
 	way := columnPlain
-	k, size := bestRice(plain)
-	if kd, n := bestRice(delta); n < size {
-		way, k, size = columnDelta, kd, n
+	code, size := packed.Shortest(plain, mostLow, farWidth)
+	if cd, n := packed.Shortest(delta, mostLow, farWidth); n < size {
+		way, code, size = columnDelta, cd, n
 	}
 	if circumference > 0 {
 		wrapped := make([]uint64, len(delta))
 		for i := range wrapped {
-			wrapped[i] = zigzag(wrap(vs[i+1]-vs[i], circumference))
+			wrapped[i] = packed.Zigzag(wrap(vs[i+1]-vs[i], circumference))
 		}
-		if kw, n := bestRice(wrapped); n < size {
-			way, k, size, delta = columnWrapped, kw, n, wrapped
+		if cw, n := packed.Shortest(wrapped, mostLow, farWidth); n < size {
+			way, code, size, delta = columnWrapped, cw, n, wrapped
 		}
 	}
 	if uint64(runs) < size/16 { // a run takes two bytes or more: only worth a try if they are few
@@ -202,11 +86,11 @@ func appendColumn(dst []byte, vs []int64, circumference int64) []byte {
 			return append(dst, b...)
 		}
 	}
-	head(way, k)
+	head(way, code.Low)
 	if way == columnPlain {
-		return appendRice(binary.AppendVarint(dst, least), plain, k)
+		return code.Append(binary.AppendVarint(dst, least), plain)
 	}
-	return appendRice(binary.AppendVarint(dst, vs[0]), delta, k)
+	return code.Append(binary.AppendVarint(dst, vs[0]), delta)
 }
 
 // wrap is the difference d on a circle, in [-c/2, c/2].
@@ -226,23 +110,23 @@ func (c *cursor) column(dst []int64, n int, circumference int64, scratch *[]uint
 	if n == 0 {
 		return dst
 	}
-	b := c.bytes(1)
-	if c.bad {
+	b := c.Bytes(1)
+	if c.Bad {
 		return dst
 	}
-	way, k := int(b[0]>>5), int(b[0]&31)
+	way, code := int(b[0]>>5), packed.Rice{Low: int(b[0] & mostLow), Far: farWidth}
 	dst = slices.Grow(dst, n)
 	switch way {
 	case columnConstant:
-		v := c.varint()
+		v := c.Varint()
 		for range n {
 			dst = append(dst, v)
 		}
 	case columnRuns:
 		for n > 0 {
-			length, v := c.uvarint(), c.varint()
-			if c.bad || length == 0 || length > uint64(n) {
-				c.bad = true
+			length, v := c.Uvarint(), c.Varint()
+			if c.Bad || length == 0 || length > uint64(n) {
+				c.Bad = true
 				return dst
 			}
 			for range length {
@@ -251,25 +135,25 @@ func (c *cursor) column(dst []int64, n int, circumference int64, scratch *[]uint
 			n -= int(length)
 		}
 	case columnPlain:
-		least := c.varint()
-		*scratch = c.rice((*scratch)[:0], n, k)
+		least := c.Varint()
+		*scratch = c.Rice((*scratch)[:0], n, code)
 		for _, u := range *scratch {
 			dst = append(dst, least+int64(u))
 		}
 	case columnDelta:
-		v := c.varint()
-		*scratch = c.rice((*scratch)[:0], n-1, k)
+		v := c.Varint()
+		*scratch = c.Rice((*scratch)[:0], n-1, code)
 		dst = append(dst, v)
 		for _, u := range *scratch {
-			v += unzigzag(u)
+			v += packed.Unzigzag(u)
 			dst = append(dst, v)
 		}
 	case columnWrapped:
-		v := c.varint()
-		*scratch = c.rice((*scratch)[:0], n-1, k)
+		v := c.Varint()
+		*scratch = c.Rice((*scratch)[:0], n-1, code)
 		dst = append(dst, v)
 		for _, u := range *scratch {
-			v += unzigzag(u)
+			v += packed.Unzigzag(u)
 			if v >= circumference {
 				v -= circumference
 			} else if v < 0 {
@@ -278,7 +162,7 @@ func (c *cursor) column(dst []int64, n int, circumference int64, scratch *[]uint
 			dst = append(dst, v)
 		}
 	default:
-		c.bad = true
+		c.Bad = true
 	}
 	return dst
 }
@@ -379,18 +263,18 @@ func appendValues(dst []byte, vs []float64, round bool) []byte {
 
 // values calls put with each of the n values that appendValues wrote.
 func (c *cursor) values(n int, s *scratch, put func(i int, v float64)) {
-	b := c.bytes(1)
-	if c.bad {
+	b := c.Bytes(1)
+	if c.Bad {
 		return
 	}
 	if b[0]&^(valueExceptions|7) != 0 {
-		c.bad = true
+		c.Bad = true
 		return
 	}
 	f := form(b[0] & 7)
 	if f == formRaw {
-		raw := c.bytes(8 * uint64(n))
-		for i := 0; i < n && !c.bad; i++ {
+		raw := c.Bytes(8 * uint64(n))
+		for i := 0; i < n && !c.Bad; i++ {
 			put(i, math.Float64frombits(binary.LittleEndian.Uint64(raw[8*i:])))
 		}
 		return
@@ -402,18 +286,18 @@ func (c *cursor) values(n int, s *scratch, put func(i int, v float64)) {
 	var exceptions []exception
 	if b[0]&valueExceptions != 0 {
 		at := uint64(0)
-		for k := c.uvarint(); k > 0 && !c.bad; k-- {
-			at += c.uvarint()
-			raw := c.bytes(8)
-			if c.bad || at >= uint64(n) {
-				c.bad = true
+		for k := c.Uvarint(); k > 0 && !c.Bad; k-- {
+			at += c.Uvarint()
+			raw := c.Bytes(8)
+			if c.Bad || at >= uint64(n) {
+				c.Bad = true
 				return
 			}
 			exceptions = append(exceptions, exception{int(at), math.Float64frombits(binary.LittleEndian.Uint64(raw))})
 		}
 	}
 	s.ints = c.column(s.ints[:0], n, f.circumference(), &s.rice)
-	if c.bad {
+	if c.Bad {
 		return
 	}
 	for i, k := range s.ints {

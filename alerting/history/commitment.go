@@ -142,17 +142,17 @@ func draftOf(e Entry) draft {
 
 // openingsOf reads stored openings; false if they are not what was written.
 func openingsOf(b []byte) ([]opening, bool) {
-	c := cursor{b: b}
+	c := cursorAt(b)
 	var all []opening
 	var again []byte
-	for len(c.b) > 0 && !c.bad {
+	for len(c.Left) > 0 && !c.Bad {
 		var o opening
-		copy(o.salt[:], c.bytes(saltSize))
-		o.text = string(c.bytes(c.uvarint()))
+		copy(o.salt[:], c.Bytes(saltSize))
+		o.text = string(c.Bytes(c.Uvarint()))
 		all = append(all, o)
 		again = appendString(append(again, o.salt[:]...), o.text)
 	}
-	return all, !c.bad && bytes.Equal(again, b)
+	return all, !c.Bad && bytes.Equal(again, b)
 }
 
 // reveal puts the words back into a payload. Every commitment must have its

@@ -313,14 +313,14 @@ func decodeStep(r rawStep, tables map[uint64][]string) (Step, error) {
 	if err != nil {
 		return Step{}, fmt.Errorf("step %s %w", at, err)
 	}
-	c := cursor{b: body}
-	ids, ok := tables[c.uvarint()]
+	c := cursorAt(body)
+	ids, ok := tables[c.Uvarint()]
 	if !ok {
 		return Step{}, fmt.Errorf("step %s %w", at, errNewTable)
 	}
-	late := c.uvarint()
+	late := c.Uvarint()
 	st := Step{At: at, Stations: ids, Readings: c.readings(at, nil)}
-	if c.bad || len(c.b) != 0 {
+	if c.Bad || len(c.Left) != 0 {
 		return Step{}, fmt.Errorf("step %s %w", at, errBlock)
 	}
 	if late > 0 {
@@ -328,10 +328,10 @@ func decodeStep(r rawStep, tables map[uint64][]string) (Step, error) {
 		if err != nil {
 			return Step{}, fmt.Errorf("late readings of step %s %w", at, err)
 		}
-		c := cursor{b: body}
-		c.uvarint() // the same list of stations
+		c := cursorAt(body)
+		c.Uvarint() // the same list of stations
 		st.Late = c.late(at)
-		if c.bad || len(c.b) != 0 || uint64(len(st.Late)) != late {
+		if c.Bad || len(c.Left) != 0 || uint64(len(st.Late)) != late {
 			return Step{}, fmt.Errorf("late readings of step %s %w", at, errBlock)
 		}
 	}

@@ -259,6 +259,6 @@ func midnight(at sensors.Instant) sensors.Instant {
 // rowTable is the number of the list that a row refers to; it was unsealed
 // before.
 func rowTable(r rawStep) uint64 {
-	c := cursor{b: r.value[1:]}
-	return c.uvarint()
+	c := cursorAt(r.value[1:])
+	return c.Uvarint()
 }

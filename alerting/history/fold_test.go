@@ -46,14 +46,14 @@ func TestColumnRoundTrip(t *testing.T) {
 			}
 		}
 		b := append(appendColumn(nil, vs, circle), 0xA5)
-		c := cursor{b: b}
+		c := cursorAt(b)
 		got := c.column(nil, n, circle, &s.rice)
-		if c.bad || !slices.Equal(got, vs) || len(c.b) != 1 || c.b[0] != 0xA5 {
-			t.Fatalf("seed %d round %d way %d: %d numbers, bad %v, %d bytes left\n%v\n%v", seed, round, way, n, c.bad, len(c.b), vs, got)
+		if c.Bad || !slices.Equal(got, vs) || len(c.Left) != 1 || c.Left[0] != 0xA5 {
+			t.Fatalf("seed %d round %d way %d: %d numbers, bad %v, %d bytes left\n%v\n%v", seed, round, way, n, c.Bad, len(c.Left), vs, got)
 		}
 		for cut := range min(len(b)-1, 40) { // cut short it is either refused or short of nothing
-			c := cursor{b: b[:cut]}
-			if got := c.column(nil, n, circle, &s.rice); !c.bad && !slices.Equal(got, vs) {
+			c := cursorAt(b[:cut])
+			if got := c.column(nil, n, circle, &s.rice); !c.Bad && !slices.Equal(got, vs) {
 				t.Fatalf("seed %d round %d: cut to %d bytes of %d and not refused", seed, round, cut, len(b))
 			}
 		}
@@ -99,10 +99,10 @@ func TestBlockRoundTrip(t *testing.T) {
 	var s scratch
 	for round := range 500 {
 		rs := stationReadings(rng, start)
-		c := cursor{b: appendBlock(nil, start, rs)}
+		c := cursorAt(appendBlock(nil, start, rs))
 		got := c.block(start, 3, nil, &s)
-		if c.bad || len(c.b) != 0 || !slices.EqualFunc(got, rs, sameBits) {
-			t.Fatalf("seed %d round %d: %d readings became %d, bad %v, %d bytes left", seed, round, len(rs), len(got), c.bad, len(c.b))
+		if c.Bad || len(c.Left) != 0 || !slices.EqualFunc(got, rs, sameBits) {
+			t.Fatalf("seed %d round %d: %d readings became %d, bad %v, %d bytes left", seed, round, len(rs), len(got), c.Bad, len(c.Left))
 		}
 	}
 }
@@ -113,9 +113,9 @@ func FuzzBlock(f *testing.F) {
 		f.Add(appendBlock(nil, start, stationReadings(rng, start)))
 	}
 	f.Fuzz(func(t *testing.T, b []byte) {
-		c, s := cursor{b: b}, scratch{}
+		c, s := cursorAt(b), scratch{}
 		rs := c.block(start, 3, nil, &s)
-		if c.bad {
+		if c.Bad {
 			return
 		}
 		for _, r := range rs {
@@ -123,8 +123,8 @@ func FuzzBlock(f *testing.F) {
 				return // not foldable: never written
 			}
 		}
-		again := cursor{b: appendBlock(nil, start, rs)}
-		if got := again.block(start, 3, nil, &s); again.bad || !slices.EqualFunc(got, rs, sameBits) {
+		again := cursorAt(appendBlock(nil, start, rs))
+		if got := again.block(start, 3, nil, &s); again.Bad || !slices.EqualFunc(got, rs, sameBits) {
 			t.Fatalf("%d readings became %d", len(rs), len(got))
 		}
 	})

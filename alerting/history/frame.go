@@ -102,14 +102,14 @@ func (f *frame) encodeLate(b []byte, base sensors.Instant) []byte {
 }
 
 func parseFrame(b []byte, base sensors.Instant) (*frame, error) {
-	c := cursor{b: b}
-	f := &frame{table: c.uvarint()}
-	n := c.uvarint()
+	c := cursorAt(b)
+	f := &frame{table: c.Uvarint()}
+	n := c.Uvarint()
 	if n == 0 || n > longestFrame {
 		return nil, errBlock
 	}
-	for second := uint64(0); !c.bad; {
-		run := c.uvarint()
+	for second := uint64(0); !c.Bad; {
+		run := c.Uvarint()
 		if run == 0 || uint64(len(f.seconds))+run > n || second+run > longestFrame {
 			return nil, errBlock
 		}
@@ -120,19 +120,19 @@ func parseFrame(b []byte, base sensors.Instant) (*frame, error) {
 		if uint64(len(f.seconds)) == n {
 			break
 		}
-		if second += c.uvarint(); second > longestFrame {
+		if second += c.Uvarint(); second > longestFrame {
 			return nil, errBlock
 		}
 	}
 	before := -1
-	for k := c.uvarint(); k > 0 && !c.bad; k-- {
-		if before += int(c.uvarint()&math.MaxUint16) + 1; before >= math.MaxUint16 {
+	for k := c.Uvarint(); k > 0 && !c.Bad; k-- {
+		if before += int(c.Uvarint()&math.MaxUint16) + 1; before >= math.MaxUint16 {
 			return nil, errBlock
 		}
 		f.stations = append(f.stations, before)
 	}
 	f.parseLate(&c, base)
-	if c.bad || len(c.b) != 0 {
+	if c.Bad || len(c.Left) != 0 {
 		return nil, errBlock
 	}
 	return f, nil
@@ -141,31 +141,31 @@ func parseFrame(b []byte, base sensors.Instant) (*frame, error) {
 // parseLate takes late readings only in the order of steps that the frame has,
 // and never a step without any: anything else would be lost when written again.
 func (f *frame) parseLate(c *cursor, base sensors.Instant) {
-	steps := c.uvarint()
-	if steps == 0 || c.bad {
+	steps := c.Uvarint()
+	if steps == 0 || c.Bad {
 		return
 	}
 	var reasons []string
-	for k := c.uvarint(); k > 0 && !c.bad; k-- {
-		reasons = append(reasons, string(c.bytes(c.uvarint())))
+	for k := c.Uvarint(); k > 0 && !c.Bad; k-- {
+		reasons = append(reasons, string(c.Bytes(c.Uvarint())))
 	}
 	f.late = map[int][]LateReading{}
 	later := f.seconds
-	for ; steps > 0 && !c.bad; steps-- {
-		second := c.uvarint()
+	for ; steps > 0 && !c.Bad; steps-- {
+		second := c.Uvarint()
 		place := slices.Index(later, int(second&math.MaxUint16))
 		if second > longestFrame || place < 0 {
-			c.bad = true
+			c.Bad = true
 			return
 		}
 		later = later[place+1:]
 		rs := c.readings(base+sensors.Instant(second)*sensors.Second, nil)
-		c.bad = c.bad || len(rs) == 0
+		c.Bad = c.Bad || len(rs) == 0
 		late := make([]LateReading, len(rs))
 		for i, r := range rs {
-			reason := c.uvarint()
+			reason := c.Uvarint()
 			if reason >= uint64(len(reasons)) {
-				c.bad = true
+				c.Bad = true
 				return
 			}
 			late[i] = LateReading{Reading: r, Reason: reasons[reason]}
@@ -254,8 +254,8 @@ func decodeWindow(w rawWindow, ids []string, s *scratch) ([]Step, error) {
 		if len(blocks) > 0 && blockNumber(blocks[0]) == number+1 {
 			var body []byte
 			if body, err = unseal(blocks[0].key, blocks[0].value); err == nil {
-				c := cursor{b: body}
-				if all = c.block(w.base, number, all, s); c.bad || len(c.b) != 0 || number >= len(ids) {
+				c := cursorAt(body)
+				if all = c.block(w.base, number, all, s); c.Bad || len(c.Left) != 0 || number >= len(ids) {
 					err = errBlock
 				}
 			}

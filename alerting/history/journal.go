@@ -88,15 +88,15 @@ func (p issuePayload) encode() []byte {
 }
 
 func parseIssue(b []byte) (issuePayload, error) {
-	c := cursor{b: b}
+	c := cursorAt(b)
 	p := issuePayload{
-		id:     string(c.bytes(c.uvarint())),
-		opened: sensors.Instant(c.varint()),
-		closed: sensors.Instant(c.varint()),
-		object: c.bytes(c.uvarint()),
-		alert:  c.bytes(c.uvarint()),
+		id:     string(c.Bytes(c.Uvarint())),
+		opened: sensors.Instant(c.Varint()),
+		closed: sensors.Instant(c.Varint()),
+		object: c.Bytes(c.Uvarint()),
+		alert:  c.Bytes(c.Uvarint()),
 	}
-	if c.bad || len(c.b) != 0 {
+	if c.Bad || len(c.Left) != 0 {
 		return p, damaged("its content is not an issue of an alert")
 	}
 	return p, nil
@@ -137,19 +137,19 @@ func (r eventRow) encode() []byte {
 }
 
 func parseEventRow(b []byte) (eventRow, error) {
-	c := cursor{b: b}
-	r := eventRow{closed: sensors.Instant(c.varint()), last: sensors.Instant(c.varint())}
-	n := c.uvarint()
-	if c.bad || n > uint64(len(c.b)) {
+	c := cursorAt(b)
+	r := eventRow{closed: sensors.Instant(c.Varint()), last: sensors.Instant(c.Varint())}
+	n := c.Uvarint()
+	if c.Bad || n > uint64(len(c.Left)) {
 		return r, errBlock
 	}
 	r.seqs = make([]uint64, 0, n)
 	before := uint64(0)
 	for range n {
-		before += c.uvarint()
+		before += c.Uvarint()
 		r.seqs = append(r.seqs, before)
 	}
-	if c.bad || len(c.b) != 0 {
+	if c.Bad || len(c.Left) != 0 {
 		return r, errBlock
 	}
 	return r, nil

@@ -128,13 +128,13 @@ func parseRecord(key, value []byte) (Record, error) {
 	copy(r.Hash[:], value[end:])
 	r.chained = value[recordHeader:end]
 	if r.version == recordVersion2 {
-		c := cursor{b: r.chained}
-		n := c.uvarint()
+		c := cursorAt(r.chained)
+		n := c.Uvarint()
 		// Only the shortest form of the length: no other bytes may say the same.
-		if c.bad || n > uint64(len(c.b)) || len(r.chained)-len(c.b) != len(binary.AppendUvarint(nil, n)) {
+		if c.Bad || n > uint64(len(c.Left)) || len(r.chained)-len(c.Left) != len(binary.AppendUvarint(nil, n)) {
 			return r, damaged("journal record %d is longer than its value", r.Seq)
 		}
-		r.chained, r.openings = c.b[:n], c.b[n:]
+		r.chained, r.openings = c.Left[:n], c.Left[n:]
 	}
 	var err error
 	if r.Payload, err = reveal(r.Kind, r.chained, r.openings); err != nil {

@@ -131,15 +131,15 @@ func salvageDay(data []byte) salvaged {
 // rowOf tells a step from late readings, which stand under the same key.
 func rowOf(key, body []byte) string {
 	at := keyStep(key)
-	c := cursor{b: body}
-	c.uvarint()
-	c.uvarint()
-	if c.readings(at, nil); !c.bad && len(c.b) == 0 {
+	c := cursorAt(body)
+	c.Uvarint()
+	c.Uvarint()
+	if c.readings(at, nil); !c.Bad && len(c.Left) == 0 {
 		return bucketSteps
 	}
-	c = cursor{b: body}
-	c.uvarint()
-	if c.late(at); !c.bad && len(c.b) == 0 {
+	c = cursorAt(body)
+	c.Uvarint()
+	if c.late(at); !c.Bad && len(c.Left) == 0 {
 		return bucketLate
 	}
 	return ""

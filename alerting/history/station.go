@@ -100,9 +100,9 @@ func appendTimes(dst []byte, ts []int64) []byte {
 // times reads n times into s.more, as what they are before base, and says
 // whether a column of flags is there.
 func (c *cursor) times(n int, s *scratch) (flags bool) {
-	way := c.bytes(1)
-	first := c.varint()
-	if c.bad {
+	way := c.Bytes(1)
+	first := c.Varint()
+	if c.Bad {
 		return false
 	}
 	s.more = append(s.more[:0], first)
@@ -114,7 +114,7 @@ func (c *cursor) times(n int, s *scratch) (flags bool) {
 			s.more = append(s.more, first)
 		}
 	case timesGrid:
-		period, slot := int64(c.uvarint()), int64(0)
+		period, slot := int64(c.Uvarint()), int64(0)
 		s.ints = c.column(s.ints[:0], n-1, 0, &s.rice)
 		for _, d := range s.ints {
 			slot += d
@@ -127,10 +127,10 @@ func (c *cursor) times(n int, s *scratch) (flags bool) {
 			}
 		}
 	default:
-		c.bad = true
+		c.Bad = true
 	}
 	if len(s.more) != n {
-		c.bad = true
+		c.Bad = true
 	}
 	return way[0]&blockFlags != 0
 }
@@ -138,14 +138,14 @@ func (c *cursor) times(n int, s *scratch) (flags bool) {
 // block appends to dst the readings that appendBlock wrote, under the number
 // of their station.
 func (c *cursor) block(base sensors.Instant, station int, dst []sensors.Reading, s *scratch) []sensors.Reading {
-	count := c.uvarint()
-	if c.bad || count == 0 || count > maxColumn {
-		c.bad = true
+	count := c.Uvarint()
+	if c.Bad || count == 0 || count > maxColumn {
+		c.Bad = true
 		return dst
 	}
 	n, from := int(count), len(dst)
 	flags := c.times(n, s)
-	if c.bad {
+	if c.Bad {
 		return dst
 	}
 	dst = slices.Grow(dst, n)[:from+n]
@@ -155,8 +155,8 @@ func (c *cursor) block(base sensors.Instant, station int, dst []sensors.Reading,
 		rs[i] = sensors.Reading{Station: station, Time: at, Arrival: at}
 	}
 	s.ints = c.column(s.ints[:0], n, 0, &s.rice)
-	if c.bad || len(s.ints) != n {
-		c.bad = true
+	if c.Bad || len(s.ints) != n {
+		c.Bad = true
 		return dst[:from]
 	}
 	for i, d := range s.ints {
@@ -171,7 +171,7 @@ func (c *cursor) block(base sensors.Instant, station int, dst []sensors.Reading,
 	if len(gusts) > 0 {
 		c.values(len(gusts), s, func(i int, v float64) { rs[gusts[i]].Gust = v })
 	}
-	if c.bad {
+	if c.Bad {
 		return dst[:from]
 	}
 	return dst
@@ -180,8 +180,8 @@ func (c *cursor) block(base sensors.Instant, station int, dst []sensors.Reading,
 // flags reads the column of flags and gives the readings that have a gust.
 func (c *cursor) flags(rs []sensors.Reading, s *scratch) (gusts []int) {
 	s.more = c.column(s.more[:0], len(rs), 0, &s.rice)
-	if c.bad || len(s.more) != len(rs) {
-		c.bad = true
+	if c.Bad || len(s.more) != len(rs) {
+		c.Bad = true
 		return nil
 	}
 	for i, f := range s.more {

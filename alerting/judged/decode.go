@@ -1,6 +1,7 @@
 package judged
 
 import (
+	"sockline/alerting/packed"
 	"sockline/alerting/windfield"
 	"sockline/sensors"
 )
@@ -17,11 +18,11 @@ const (
 
 // decodeBlock reads a block that was written in this context.
 func decodeBlock(c *Context, body []byte) (*block, error) {
-	r := reader{b: body}
-	b := &block{context: c, start: sensors.Instant(r.varint())}
-	b.rows = make([]row, r.count(BlockSteps))
+	r := reader{Reader: packed.Reader{Left: body}}
+	b := &block{context: c, start: sensors.Instant(r.Varint())}
+	b.rows = make([]row, r.Count(BlockSteps))
 	paths, thresholds := len(c.Paths), len(c.Thresholds)
-	if r.bad || paths > mostPaths || thresholds > mostThresholds || len(c.Owners) != paths {
+	if r.Bad || paths > mostPaths || thresholds > mostThresholds || len(c.Owners) != paths {
 		return nil, errBlock
 	}
 	r.grounds(b, paths)
@@ -46,7 +47,7 @@ func decodeBlock(c *Context, body []byte) (*block, error) {
 		r.places(b, i)
 	}
 	r.steeps(b, paths, thresholds)
-	if r.bad || len(r.b) != 0 {
+	if r.Bad || len(r.Left) != 0 {
 		return nil, errBlock
 	}
 	return b, nil
@@ -55,10 +56,10 @@ func decodeBlock(c *Context, body []byte) (*block, error) {
 // runs reads what appendRuns wrote.
 func (r *reader) runs(b *block, set func(n int, v uint64)) {
 	n := 0
-	for range r.count(BlockSteps) {
-		length, v := r.uvarint(), r.uvarint()
+	for range r.Count(BlockSteps) {
+		length, v := r.Uvarint(), r.Uvarint()
 		if length > uint64(len(b.rows)-n) || v > BlockSteps {
-			r.bad = true
+			r.Bad = true
 			return
 		}
 		for range length {
@@ -66,28 +67,28 @@ func (r *reader) runs(b *block, set func(n int, v uint64)) {
 			n++
 		}
 	}
-	r.bad = r.bad || n != len(b.rows)
+	r.Bad = r.Bad || n != len(b.rows)
 }
 
 func (r *reader) ints(most int) []int {
 	var out []int
-	for range r.count(most) {
-		out = append(out, r.count(most))
+	for range r.Count(most) {
+		out = append(out, r.Count(most))
 	}
 	return out
 }
 
 func (r *reader) grounds(b *block, paths int) {
-	for range r.count(BlockSteps) {
+	for range r.Count(BlockSteps) {
 		g := ground{used: r.ints(mostStations), paths: make([]pathGround, paths)}
 		for i := range g.paths {
 			p := &g.paths[i]
-			p.complete, p.missing = r.byte() == 1, r.ints(mostStations)
-			for range r.count(mostStations) {
-				p.observed = append(p.observed, [2]int32{int32(r.varint()), int32(r.varint())})
+			p.complete, p.missing = r.Byte() == 1, r.ints(mostStations)
+			for range r.Count(mostStations) {
+				p.observed = append(p.observed, [2]int32{int32(r.Varint()), int32(r.Varint())})
 			}
 		}
-		if r.bad {
+		if r.Bad {
 			return
 		}
 		b.grounds = append(b.grounds, g)
@@ -98,7 +99,7 @@ func (r *reader) grounds(b *block, paths int) {
 func (r *reader) side(b *block, i, thresholds int) {
 	fullSteps := 0
 	r.runs(b, func(n int, v uint64) {
-		r.bad = r.bad || v > uint64(full)
+		r.Bad = r.Bad || v > uint64(full)
 		b.rows[n].sides[i].state = uint8(v)
 		if v == uint64(full) {
 			fullSteps++
@@ -106,13 +107,13 @@ func (r *reader) side(b *block, i, thresholds int) {
 	})
 	var levels [points][]int32
 	for p := range levels {
-		levels[p] = r.column(nil, BlockSteps)
-		r.bad = r.bad || len(levels[p]) != fullSteps
+		levels[p] = r.column(BlockSteps)
+		r.Bad = r.Bad || len(levels[p]) != fullSteps
 	}
-	starts, ends := r.column(nil, BlockSteps), r.column(nil, BlockSteps)
-	counts := r.column(nil, BlockSteps*thresholds)
-	if r.bad || len(starts) != fullSteps || len(ends) != fullSteps {
-		r.bad = true
+	starts, ends := r.column(BlockSteps), r.column(BlockSteps)
+	counts := r.column(BlockSteps * thresholds)
+	if r.Bad || len(starts) != fullSteps || len(ends) != fullSteps {
+		r.Bad = true
 		return
 	}
 	memory := make([]uint8, fullSteps*thresholds)
@@ -133,7 +134,7 @@ func (r *reader) side(b *block, i, thresholds int) {
 		}
 		all, some = all+starts[step], some+ends[step]
 		if all < 0 || all > some || int(some) > thresholds || int(some-all) > len(counts) {
-			r.bad = true
+			r.Bad = true
 			return
 		}
 		s.counts = memory[step*thresholds : (step+1)*thresholds]
@@ -151,23 +152,23 @@ func (r *reader) side(b *block, i, thresholds int) {
 		last = s.counts
 		step++
 	}
-	r.bad = r.bad || len(counts) != 0
+	r.Bad = r.Bad || len(counts) != 0
 }
 
 func (r *reader) places(b *block, i int) {
 	at, p := 0, place{}
-	for k := range r.count(BlockSteps) {
-		head := r.uvarint()
+	for k := range r.Count(BlockSteps) {
+		head := r.Uvarint()
 		next := at + int(min(head>>1, BlockSteps))
-		if r.bad || next >= len(b.rows) || k == 0 && next != 0 {
-			r.bad = true
+		if r.Bad || next >= len(b.rows) || k == 0 && next != 0 {
+			r.Bad = true
 			return
 		}
 		for ; k > 0 && at < next; at++ {
 			b.rows[at].places[i] = p
 		}
 		at = next
-		p = place{from: p.from + int32(r.varint()), to: p.to + int32(r.varint()), edge: head&1 == 1}
+		p = place{from: p.from + int32(r.Varint()), to: p.to + int32(r.Varint()), edge: head&1 == 1}
 	}
 	for ; at < len(b.rows); at++ {
 		b.rows[at].places[i] = p
@@ -175,14 +176,14 @@ func (r *reader) places(b *block, i int) {
 }
 
 func (r *reader) steeps(b *block, paths, thresholds int) {
-	for range r.count(BlockSteps * mostPaths) {
-		s := steep{row: r.count(BlockSteps), path: r.count(mostPaths)}
-		if r.bad || s.row >= len(b.rows) || s.path >= paths || len(r.b) < 2*thresholds {
-			r.bad = true
+	for range r.Count(BlockSteps * mostPaths) {
+		s := steep{row: r.Count(BlockSteps), path: r.Count(mostPaths)}
+		if r.Bad || s.row >= len(b.rows) || s.path >= paths || len(r.Left) < 2*thresholds {
+			r.Bad = true
 			return
 		}
-		s.open, s.close = r.b[:thresholds:thresholds], r.b[thresholds:2*thresholds:2*thresholds]
-		r.b = r.b[2*thresholds:]
+		s.open, s.close = r.Left[:thresholds:thresholds], r.Left[thresholds:2*thresholds:2*thresholds]
+		r.Left = r.Left[2*thresholds:]
 		b.steeps = append(b.steeps, s)
 	}
 }

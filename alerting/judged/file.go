@@ -13,6 +13,7 @@ import (
 	"strings"
 	"time"
 
+	"sockline/alerting/packed"
 	"sockline/sensors"
 )
 
@@ -222,8 +223,8 @@ func sourcesOf(all []frame) (sources []source, faults []string) {
 				unknown++
 				continue
 			}
-			r := reader{b: f.body[4:]}
-			s := source{context: c, start: sensors.Instant(r.varint()), body: f.body[4:]}
+			r := packed.Reader{Left: f.body[4:]}
+			s := source{context: c, start: sensors.Instant(r.Varint()), body: f.body[4:]}
 			for i := range sources { // what is written later counts
 				if o := &sources[i]; o.start < s.start && (o.until == 0 || s.start < o.until) {
 					o.until = s.start
