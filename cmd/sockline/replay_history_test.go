@@ -21,6 +21,12 @@ import (
 // be replayed. Skerry Moor's geometry, with the other masts left out.
 func small(tb testing.TB) string {
 	tb.Helper()
+	return writeFile(tb, "small.toml", only(tb, "touch07", "touch25", "final07"))
+}
+
+// only is Skerry Moor's configuration with these masts.
+func only(tb testing.TB, masts ...string) string {
+	tb.Helper()
 	source, err := os.ReadFile(skerrymoor)
 	if err != nil {
 		tb.Fatal(err)
@@ -29,7 +35,7 @@ func small(tb testing.TB) string {
 	kept := parts[:1]
 	for _, part := range parts[1:] {
 		station, rest, _ := strings.Cut(part, "[alerts]")
-		for _, id := range []string{"touch07", "touch25", "final07"} {
+		for _, id := range masts {
 			if strings.Contains(station, `"`+id+`"`) {
 				kept = append(kept, station)
 			}
@@ -38,7 +44,7 @@ func small(tb testing.TB) string {
 			kept[len(kept)-1] += "[alerts]" + rest
 		}
 	}
-	return writeFile(tb, "small.toml", strings.Join(kept, "[[station]]"))
+	return strings.Join(kept, "[[station]]")
 }
 
 // hours has an alert open two hours before another one: just where the silent
@@ -107,6 +113,9 @@ func (r *recorder) closeDue(stamp sensors.Instant) {
 // submit hands a step to the history.
 func (r *recorder) submit(t sensors.Instant, result *engine.Result) {
 	b := history.Batch{Step: t, Stations: r.ids, Readings: result.Readings}
+	for _, table := range result.Tables {
+		b.Entries = append(b.Entries, history.Entry{Kind: history.KindTable, At: table.At, Payload: table.Payload})
+	}
 	for _, late := range result.Refused {
 		b.Late = append(b.Late, history.LateReading{Reading: late.Reading, Reason: string(late.Reason)})
 	}
