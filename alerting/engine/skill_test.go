@@ -14,6 +14,7 @@ import (
 
 	"sockline/alerting"
 	"sockline/alerting/airfield"
+	"sockline/alerting/contingency"
 	"sockline/alerting/engine"
 	"sockline/sensors"
 	"sockline/sensors/quantity"
@@ -182,20 +183,6 @@ func trueLoss(w *synthetic.Weather, p airfield.Path, masts []airfield.Point, sec
 	return loss
 }
 
-// wilson is the score interval of a share at 95 % (E.B. Wilson, "Probable
-// inference, the law of succession, and statistical inference", J. Am. Stat.
-// Assoc. 22, 1927).
-func wilson(hits, n int) (low, high float64) {
-	const z = 1.959964
-	if n == 0 {
-		return 0, 1
-	}
-	share, size := float64(hits)/float64(n), float64(n)
-	centre := (share + z*z/(2*size)) / (1 + z*z/size)
-	half := z / (1 + z*z/size) * math.Sqrt(share*(1-share)/size+z*z/(4*size*size))
-	return centre - half, centre + half
-}
-
 // judgeSkill prints the table and holds it to bounds that leave room for
 // chance and none for a broken analysis.
 func judgeSkill(t *testing.T, all []skillOf, episodes int) {
@@ -212,8 +199,9 @@ func judgeSkill(t *testing.T, all []skillOf, episodes int) {
 				}
 			}
 		}
-		low, high := wilson(found, n)
-		fmt.Fprintf(&b, "true loss %2d to %2d kt: level 2 found %3d of %3d (%.2f, %.2f to %.2f)\n", 5*class, 5*class+5, found, n, float64(found)/float64(max(n, 1)), low, high)
+		share := float64(found) / float64(max(n, 1))
+		low, high := contingency.Wilson(share, float64(n))
+		fmt.Fprintf(&b, "true loss %2d to %2d kt: level 2 found %3d of %3d (%.2f, %.2f to %.2f)\n", 5*class, 5*class+5, found, n, share, low, high)
 		if class >= 5 {
 			strong, strongFound = strong+n, strongFound+found
 		}
@@ -247,7 +235,7 @@ func judgeSkill(t *testing.T, all []skillOf, episodes int) {
 			t.Errorf("the interval holds the truth in %d of %d issues; 90 %% are promised and three quarters are the least borne", inside, issues)
 		}
 	}
-	if _, high := wilson(strongFound, strong); high < 0.9 {
+	if s := contingency.Share(strongFound, strong); s.Of > 0 && *s.High < 0.9 {
 		t.Errorf("level 2 was found in %d of %d losses of 25 kt or more", strongFound, strong)
 	}
 	t.Log("\n" + b.String())

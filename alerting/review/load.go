@@ -117,6 +117,13 @@ func ratio(a, b float64) *float64 {
 	return finite(a / b)
 }
 
+func finite(v float64) *float64 {
+	if math.IsNaN(v) || math.IsInf(v, 0) {
+		return nil
+	}
+	return &v
+}
+
 func times(v *float64, k float64) *float64 {
 	if v == nil {
 		return nil

@@ -9,6 +9,7 @@ import (
 	"time"
 
 	"sockline/alerting"
+	"sockline/alerting/contingency"
 	"sockline/alerting/history"
 	"sockline/alerting/judged"
 	"sockline/sensors"
@@ -63,11 +64,11 @@ type Rate struct {
 
 // Attention is how alerts were answered.
 type Attention struct {
-	Acknowledged Interval `json:"acknowledged"` // of the occurrences
-	MedianS      *float64 `json:"median_s"`     // from the opening to the acknowledgement
-	NinetiethS   *float64 `json:"ninetieth_s"`
-	Shelved      int      `json:"shelved"`
-	Notes        int      `json:"notes"`
+	Acknowledged contingency.Interval `json:"acknowledged"` // of the occurrences
+	MedianS      *float64             `json:"median_s"`     // from the opening to the acknowledgement
+	NinetiethS   *float64             `json:"ninetieth_s"`
+	Shelved      int                  `json:"shelved"`
+	Notes        int                  `json:"notes"`
 }
 
 // Availability is how much of a period a station served.
@@ -271,7 +272,7 @@ func (u *Summary) attention(s *history.Store, lives []Life, o SummaryOptions) {
 			}
 		}
 	}
-	u.Attention.Acknowledged = Wilson(len(first), len(opened))
+	u.Attention.Acknowledged = contingency.Share(len(first), len(opened))
 	times := make([]float64, 0, len(first))
 	for _, v := range first {
 		times = append(times, v)

@@ -10,6 +10,7 @@ import (
 	"time"
 
 	"sockline/alerting"
+	"sockline/alerting/contingency"
 )
 
 //go:embed summary.html
@@ -109,7 +110,7 @@ func percentText(v *float64) string {
 	return fmt.Sprintf("%.1f %%", p)
 }
 
-func shareText(i Interval) string {
+func shareText(i contingency.Interval) string {
 	if i.Value == nil {
 		return "-"
 	}

@@ -6,6 +6,7 @@ import (
 	"time"
 
 	"sockline/alerting"
+	"sockline/alerting/contingency"
 	"sockline/alerting/history"
 	"sockline/sensors"
 	"sockline/sensors/quantity"
@@ -30,88 +31,6 @@ const (
 	FeltNone = "none"
 )
 
-// Interval is a share with its 95 % interval after Wilson; N = 0 says that
-// there is nothing to divide.
-type Interval struct {
-	Value *float64 `json:"value"`
-	Low   *float64 `json:"low"`
-	High  *float64 `json:"high"`
-	Of    int      `json:"of"`
-}
-
-// z95 is the 97.5 % point of the normal distribution.
-const z95 = 1.959963984540054
-
-// Wilson is the share k of n with its 95 % interval: E.B. Wilson, "Probable
-// inference, the law of succession, and statistical inference", Journal of the
-// American Statistical Association 22, 1927, pages 209-212:
-//
-//	(p + z^2/2n -+ z sqrt(p(1-p)/n + z^2/4n^2)) / (1 + z^2/n)
-func Wilson(k, n int) Interval {
-	if n <= 0 {
-		return Interval{}
-	}
-	N, z2 := float64(n), z95*z95
-	p := float64(k) / N
-	middle := p + z2/(2*N)
-	half := z95 * math.Sqrt(p*(1-p)/N+z2/(4*N*N))
-	low, high := max(0, (middle-half)/(1+z2/N)), min(1, (middle+half)/(1+z2/N))
-	return Interval{Value: &p, Low: &low, High: &high, Of: n}
-}
-
-// Contingency counts reports against alerts.
-type Contingency struct {
-	Hits         int `json:"hits"`          // a change was felt, and told
-	FalseAlarms  int `json:"false_alarms"`  // told, and a crew on that path felt none as large
-	Misses       int `json:"misses"`        // felt, and not told
-	CorrectNulls int `json:"correct_nulls"` // neither felt nor told
-}
-
-// Scores are the measures of a contingency table, after D.S. Wilks,
-// Statistical Methods in the Atmospheric Sciences, chapter "Forecast
-// verification". FAR is the share of the alarms that were false, POFD the share
-// of the nulls that were alarmed. nil where there is nothing to divide.
-type Scores struct {
-	POD  Interval `json:"pod"`
-	FAR  Interval `json:"far"`
-	POFD Interval `json:"pofd"`
-	CSI  Interval `json:"csi"`
-	Bias *float64 `json:"bias"`
-	PC   *float64 `json:"pc"`
-	HSS  *float64 `json:"hss"`
-	PSS  *float64 `json:"pss"`
-	ETS  *float64 `json:"ets"`
-	SEDI *float64 `json:"sedi"`
-}
-
-// Scores of the table, with a = hits, b = false alarms, c = misses, d = correct
-// nulls, n all of them.
-func (t Contingency) Scores() Scores {
-	a, b, c, d := float64(t.Hits), float64(t.FalseAlarms), float64(t.Misses), float64(t.CorrectNulls)
-	n := a + b + c + d
-	chance := (a + b) * (a + c) / n // hits by chance
-	H, F := a/(a+c), b/(b+d)
-	s := Scores{
-		POD: Wilson(t.Hits, t.Hits+t.Misses), FAR: Wilson(t.FalseAlarms, t.Hits+t.FalseAlarms),
-		POFD: Wilson(t.FalseAlarms, t.FalseAlarms+t.CorrectNulls), CSI: Wilson(t.Hits, t.Hits+t.FalseAlarms+t.Misses),
-		Bias: finite((a + b) / (a + c)), PC: finite((a + d) / n),
-		HSS: finite(2 * (a*d - b*c) / ((a+c)*(c+d) + (a+b)*(b+d))),
-		PSS: finite(H - F), ETS: finite((a - chance) / (a + b + c - chance)),
-	}
-	if H > 0 && H < 1 && F > 0 && F < 1 {
-		s.SEDI = finite((math.Log(F) - math.Log(H) - math.Log(1-F) + math.Log(1-H)) /
-			(math.Log(F) + math.Log(H) + math.Log(1-F) + math.Log(1-H)))
-	}
-	return s
-}
-
-func finite(v float64) *float64 {
-	if math.IsNaN(v) || math.IsInf(v, 0) {
-		return nil
-	}
-	return &v
-}
-
 // Verification is what pilots' reports say of the alerts.
 type Verification struct {
 	Reports     int            `json:"reports"`
@@ -128,17 +47,17 @@ type Verification struct {
 // LevelScores are those of one level: a change at least as large, against
 // alerts at least as high.
 type LevelScores struct {
-	Level    string      `json:"level"`
-	ChangeKt float64     `json:"change_kt"`
-	Table    Contingency `json:"table"`
-	Scores   Scores      `json:"scores"`
+	Level    string             `json:"level"`
+	ChangeKt float64            `json:"change_kt"`
+	Table    contingency.Table  `json:"table"`
+	Scores   contingency.Scores `json:"scores"`
 }
 
 // PeriodScores are those of a month.
 type PeriodScores struct {
-	Period string      `json:"period"`
-	Table  Contingency `json:"table"`
-	Scores Scores      `json:"scores"`
+	Period string             `json:"period"`
+	Table  contingency.Table  `json:"table"`
+	Scores contingency.Scores `json:"scores"`
 }
 
 // Amounts compares what was felt with what was told, where both have a figure.
@@ -177,8 +96,8 @@ type VerifyOptions struct {
 func Verify(reports []history.PilotReport, alerts []Life, o VerifyOptions) Verification {
 	v := Verification{Reports: len(reports), Alerts: len(alerts), Method: matchMethod, Matches: []Match{}, ByMonth: []PeriodScores{}}
 	verified := map[string]bool{}
-	months := map[string]*Contingency{}
-	var tables [4]Contingency
+	months := map[string]*contingency.Table{}
+	var tables [4]contingency.Table
 	var differences []float64
 	for _, r := range reports {
 		m := Match{Report: r.ID, At: r.At.Time(), Runway: r.Runway, Felt: r.Felt, AmountKt: tenthKt(r.Amount), GoAround: r.GoAround, Alerts: []string{}}
@@ -203,13 +122,14 @@ func Verify(reports []history.PilotReport, alerts []Life, o VerifyOptions) Verif
 		}
 		month := r.At.Time().Format("2006-01")
 		if months[month] == nil {
-			months[month] = &Contingency{}
+			months[month] = &contingency.Table{}
 		}
 		for level := alerting.Noticeable; level <= alerting.BeyondMargin; level++ {
-			outcome := tables[level].count(feltAtLeast(&r, level, o.Changes[level]), highest >= level)
+			felt, told := feltAtLeast(&r, level, o.Changes[level]), highest >= level
+			tables[level].Count(felt, told)
 			if level == alerting.Noticeable {
-				m.Outcome = outcome
-				months[month].count(feltAtLeast(&r, level, o.Changes[level]), highest >= level)
+				m.Outcome = outcomeOf(felt, told)
+				months[month].Count(felt, told)
 			}
 		}
 		v.Matches = append(v.Matches, m)
@@ -225,20 +145,16 @@ func Verify(reports []history.PilotReport, alerts []Life, o VerifyOptions) Verif
 	return v
 }
 
-// count adds one report and gives its outcome.
-func (t *Contingency) count(felt, told bool) string {
+// outcomeOf names what became of one report.
+func outcomeOf(felt, told bool) string {
 	switch {
 	case felt && told:
-		t.Hits++
 		return "hit"
 	case felt:
-		t.Misses++
 		return "miss"
 	case told:
-		t.FalseAlarms++
 		return "false-alarm"
 	}
-	t.CorrectNulls++
 	return "correct-null"
 }
 

@@ -5,6 +5,7 @@ import (
 	"math/rand/v2"
 	"slices"
 
+	"sockline/alerting/contingency"
 	"sockline/sensors/quantity"
 )
 
@@ -38,7 +39,7 @@ func (t *tally) choice(level, c int, confidence float64) Choice {
 	out := Choice{Level: level, Confidence: confidence}
 	var found, falsely []cluster
 	openings, hours := 0, 0.0
-	var s Scores
+	var table contingency.Table
 	for _, e := range t.episodes {
 		var strong, calm cluster
 		for i := range e.Cases {
@@ -46,21 +47,13 @@ func (t *tally) choice(level, c int, confidence float64) Choice {
 			n := openingsAt(k.Cells, c, level)
 			hit := foundAt(k.Found, c, level)
 			if k.Peak >= t.strong() {
-				strong.cases++
-				if hit {
-					strong.hits, s.Hits = strong.hits+1, s.Hits+1
-				} else {
-					s.Misses++
-				}
+				strong.count(hit)
+				table.Count(true, hit)
 			}
 			if windy(e.Kind) {
-				calm.cases++
 				openings += n
-				if n > 0 {
-					calm.hits, s.FalseAlarms = calm.hits+1, s.FalseAlarms+1
-				} else {
-					s.Rest++
-				}
+				calm.count(n > 0)
+				table.Count(false, n > 0)
 			}
 		}
 		if windy(e.Kind) {
@@ -69,7 +62,13 @@ func (t *tally) choice(level, c int, confidence float64) Choice {
 		found, falsely = append(found, strong), append(falsely, calm)
 	}
 	out.Detection, out.False = shareOf(found), shareOf(falsely)
-	out.Success, out.Peirce = s.Success(), s.Peirce()
+	scores := table.Scores()
+	if scores.CSI.Of > 0 {
+		out.Success = *scores.CSI.Value
+	}
+	if scores.PSS != nil {
+		out.Peirce = *scores.PSS
+	}
 	if hours > 0 {
 		out.Per100 = 100 * float64(openings) / hours
 		// The interval of the share of paths, at the openings that one of them has.
@@ -132,10 +131,7 @@ func Compare(first, second *Network, p Plan, a, b []Record) Comparison {
 func clusterOf(e *Episode, belongs func(*Episode, *Case) bool) (c cluster) {
 	for i := range e.Cases {
 		if k := &e.Cases[i]; belongs(e, k) {
-			c.cases++
-			if k.Opened > 0 {
-				c.hits++
-			}
+			c.count(k.Opened > 0)
 		}
 	}
 	return c

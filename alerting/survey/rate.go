@@ -1,9 +1,10 @@
 package survey
 
 import (
-	"math"
 	"math/rand/v2"
 	"slices"
+
+	"sockline/alerting/contingency"
 )
 
 // Share is a share of cases with its 95 % interval.
@@ -15,24 +16,16 @@ type Share struct {
 	High  float64 `json:"high"`
 }
 
-// z95 is the two-sided 95 % point of the normal distribution.
-const z95 = 1.959964
-
-// wilson is the score interval of a share at 95 %: E.B. Wilson, "Probable
-// inference, the law of succession, and statistical inference", J. Am. Stat.
-// Assoc. 22, 1927, 209-212. n may be an effective number. (0, 1) for no cases.
-func wilson(share, n float64) (low, high float64) {
-	if n <= 0 {
-		return 0, 1
-	}
-	centre := (share + z95*z95/(2*n)) / (1 + z95*z95/n)
-	half := z95 / (1 + z95*z95/n) * math.Sqrt(share*(1-share)/n+z95*z95/(4*n*n))
-	return max(centre-half, 0), min(centre+half, 1)
-}
-
 // cluster is the cases of one episode: they share its weather, so they are not
 // as many as they seem.
 type cluster struct{ hits, cases int }
+
+func (c *cluster) count(hit bool) {
+	c.cases++
+	if hit {
+		c.hits++
+	}
+}
 
 // shareOf is the share of all cases with Wilson's interval for the number of
 // cases divided by the design effect of the clusters (L. Kish, "Survey
@@ -65,7 +58,7 @@ func shareOf(clusters []cluster) Share {
 		effect := max(variance/(s.Share*(1-s.Share)/n), 1)
 		effective = n / effect
 	}
-	s.Low, s.High = wilson(s.Share, effective)
+	s.Low, s.High = contingency.Wilson(s.Share, effective)
 	return s
 }
 
@@ -117,36 +110,6 @@ func rateOf(all []exposure, seed uint64) Rate {
 	slices.Sort(rates)
 	r.Low, r.High = rates[bootstraps*25/1000], max(rates[bootstraps*975/1000-1], nothing)
 	return r
-}
-
-// Scores of a two by two table of what was told against what was.
-type Scores struct {
-	Hits, FalseAlarms, Misses, Rest int
-}
-
-// Detection is the probability of detection, a/(a+c).
-func (s Scores) Detection() float64 { return ratio(s.Hits, s.Hits+s.Misses) }
-
-// FalseRatio is the share of what was told that was not, b/(a+b).
-func (s Scores) FalseRatio() float64 { return ratio(s.FalseAlarms, s.Hits+s.FalseAlarms) }
-
-// FalseDetection is the share of what was not that was told, b/(b+d).
-func (s Scores) FalseDetection() float64 { return ratio(s.FalseAlarms, s.FalseAlarms+s.Rest) }
-
-// Success is the critical success index, a/(a+b+c).
-func (s Scores) Success() float64 { return ratio(s.Hits, s.Hits+s.FalseAlarms+s.Misses) }
-
-// Peirce is the difference of Detection and FalseDetection.
-func (s Scores) Peirce() float64 { return s.Detection() - s.FalseDetection() }
-
-// Heidke is the share of correct answers beyond chance.
-func (s Scores) Heidke() float64 {
-	a, b, c, d := float64(s.Hits), float64(s.FalseAlarms), float64(s.Misses), float64(s.Rest)
-	den := (a+c)*(c+d) + (a+b)*(b+d)
-	if den == 0 {
-		return 0
-	}
-	return 2 * (a*d - b*c) / den
 }
 
 func ratio(a, b int) float64 {

@@ -4,40 +4,9 @@ import (
 	"math"
 	"math/rand/v2"
 	"testing"
+
+	"sockline/alerting/contingency"
 )
-
-// Expected: J.P. Finley, "Tornado predictions", Am. Meteor. J. 1, 1884: 28 hits,
-// 72 false alarms, 23 misses, 2680 others, with the scores of D.S. Wilks,
-// "Statistical Methods in the Atmospheric Sciences", chapter on forecast
-// verification; digits computed independently in Python.
-func TestScoresOnFinley(t *testing.T) {
-	s := Scores{Hits: 28, FalseAlarms: 72, Misses: 23, Rest: 2680}
-	near(t, "probability of detection", s.Detection(), 0.5490, 5e-5)
-	near(t, "false alarm ratio", s.FalseRatio(), 0.7200, 5e-5)
-	near(t, "probability of false detection", s.FalseDetection(), 0.02616, 5e-6)
-	near(t, "critical success index", s.Success(), 0.2276, 5e-5)
-	near(t, "Heidke", s.Heidke(), 0.3553, 5e-5)
-	near(t, "Peirce", s.Peirce(), 0.5229, 5e-5)
-	if z := (Scores{}); z.Detection() != 0 || z.Heidke() != 0 {
-		t.Error("an empty table has scores")
-	}
-}
-
-// Expected: R.G. Newcombe, "Two-sided confidence intervals for the single
-// proportion: comparison of seven methods", Statist. Med. 17, 1998, table I,
-// method 3: 81/263, 15/148, 0/20, 1/29.
-func TestWilsonAgainstNewcombe(t *testing.T) {
-	for _, row := range []struct{ hits, n, low, high float64 }{
-		{81, 263, 0.2553, 0.3662}, {15, 148, 0.0624, 0.1605}, {0, 20, 0, 0.1611}, {1, 29, 0.0061, 0.1718},
-	} {
-		low, high := wilson(row.hits/row.n, row.n)
-		near(t, "low", low, row.low, 5e-5)
-		near(t, "high", high, row.high, 5e-5)
-	}
-	if low, high := wilson(0, 0); low != 0 || high != 1 {
-		t.Errorf("nothing met lies between %g and %g", low, high)
-	}
-}
 
 // Independent cases have Wilson's interval; cases that always go together count
 // once.
@@ -52,7 +21,7 @@ func TestShareOfClusters(t *testing.T) {
 		single[i], double[i] = cluster{hit, 1}, cluster{2 * hit, 2}
 	}
 	s, d := shareOf(single), shareOf(double)
-	low, high := wilson(s.Share, 4000)
+	low, high := contingency.Wilson(s.Share, 4000)
 	near(t, "low", s.Low, low, 1e-4)
 	near(t, "high", s.High, high, 1e-4)
 	near(t, "low of pairs", d.Low, s.Low, 1e-4)
@@ -61,7 +30,7 @@ func TestShareOfClusters(t *testing.T) {
 		t.Errorf("%d of %d", d.Hits, d.Cases)
 	}
 	all := shareOf([]cluster{{2, 2}, {2, 2}, {0, 0}})
-	if _, h := wilson(1, 2); all.Share != 1 || all.High != h {
+	if _, h := contingency.Wilson(1, 2); all.Share != 1 || all.High != h {
 		t.Errorf("two episodes that hit twice: %+v", all)
 	}
 	if none := shareOf(nil); none.Cases != 0 || none.High != 1 {

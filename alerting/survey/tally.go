@@ -55,16 +55,7 @@ func Tally(n *Network, p Plan, records []Record, accepted float64) *Findings {
 func (t *tally) share(belongs func(*Episode, *Case) bool) Share {
 	clusters := make([]cluster, 0, len(t.episodes))
 	for _, e := range t.episodes {
-		var c cluster
-		for i := range e.Cases {
-			if k := &e.Cases[i]; belongs(e, k) {
-				c.cases++
-				if k.Opened > 0 {
-					c.hits++
-				}
-			}
-		}
-		clusters = append(clusters, c)
+		clusters = append(clusters, clusterOf(e, belongs))
 	}
 	return shareOf(clusters)
 }

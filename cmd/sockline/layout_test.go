@@ -149,7 +149,7 @@ func TestImports(t *testing.T) {
 // one that comes after it; those of the last row do not import one another.
 var flow = [...][]string{
 	{"sensors/quantity"},
-	{"sensors", "alerting", "alerting/packed"},
+	{"sensors", "alerting", "alerting/packed", "alerting/contingency"},
 	{"sensors/decode", "sensors/synthetic", "sensors/feed"},
 	{"sensors/quality", "sensors/correction", "sensors/mast"},
 	{"sensors/averages"},

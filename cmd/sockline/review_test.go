@@ -11,6 +11,7 @@ import (
 	"time"
 
 	"sockline/alerting"
+	"sockline/alerting/contingency"
 	"sockline/alerting/history"
 	"sockline/alerting/review"
 	"sockline/sensors"
@@ -123,7 +124,7 @@ func summaryOf(t *testing.T, dir string) {
 	if a := u.Attention; a.Acknowledged.Value == nil || a.MedianS == nil || *a.MedianS < 12 || *a.MedianS >= 13 || a.Notes != 1 {
 		t.Errorf("attention: %+v", a)
 	}
-	if v := u.Verified; v.Reports != 1 || v.ByLevel[0].Table != (review.Contingency{Hits: 1}) || v.Unverified != u.Alerts-1 {
+	if v := u.Verified; v.Reports != 1 || v.ByLevel[0].Table != (contingency.Table{Hits: 1}) || v.Unverified != u.Alerts-1 {
 		t.Errorf("verification: %+v", v)
 	}
 	for _, s := range u.Stations {

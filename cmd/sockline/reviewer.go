@@ -94,18 +94,24 @@ const usualSummary = 30 * 24 * time.Hour
 // has a command of its own.
 const longestSummary = 92 * 24 * time.Hour
 
-// Statistics implements page.Review: the figures of a period.
-func (r *reviewer) Statistics(ctx context.Context, from, to sensors.Instant) (json.RawMessage, error) {
+// lastKept is the history and its last step.
+func (r *reviewer) lastKept() (*history.Store, sensors.Instant, error) {
 	store, err := r.archive.reading()
 	if err != nil {
-		return nil, fmt.Errorf("%w: %w", page.ErrNotKept, err)
+		return nil, 0, fmt.Errorf("%w: %w", page.ErrNotKept, err)
 	}
 	last, ok, err := store.LastStep()
+	if err == nil && !ok {
+		err = fmt.Errorf("%w: the history holds no readings", page.ErrNothing)
+	}
+	return store, last, err
+}
+
+// Statistics implements page.Review: the figures of a period.
+func (r *reviewer) Statistics(ctx context.Context, from, to sensors.Instant) (json.RawMessage, error) {
+	store, last, err := r.lastKept()
 	if err != nil {
 		return nil, err
-	}
-	if !ok {
-		return nil, fmt.Errorf("%w: the history holds no readings", page.ErrNothing)
 	}
 	if to == 0 {
 		to = last + sensors.Second
@@ -129,16 +135,9 @@ func (r *reviewer) Statistics(ctx context.Context, from, to sensors.Instant) (js
 // WhatIf implements page.Review: the last month judged by the usual other
 // levels.
 func (r *reviewer) WhatIf(ctx context.Context) (json.RawMessage, error) {
-	store, err := r.archive.reading()
-	if err != nil {
-		return nil, fmt.Errorf("%w: %w", page.ErrNotKept, err)
-	}
-	last, ok, err := store.LastStep()
+	store, last, err := r.lastKept()
 	if err != nil {
 		return nil, err
-	}
-	if !ok {
-		return nil, fmt.Errorf("%w: the history holds no readings", page.ErrNothing)
 	}
 	return otherLevels(ctx, store, r.current(), last)
 }
