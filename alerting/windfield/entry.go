@@ -3,6 +3,7 @@ package windfield
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"gonum.org/v1/gonum/blas"
 	"gonum.org/v1/gonum/blas/blas64"
@@ -27,9 +28,10 @@ type entry struct {
 
 // state holds the gains of one ambient state.
 type state struct {
+	field    int         // which of the fields
 	inverse  []float64   // n x n, K^-1
 	logDet   float64     // of K
-	gain     []float64   // targets x n: posterior mean headwind = gain . y
+	gain     []float64   // targets x n: posterior mean headwind = gain . y; nil until wanted, with the factor
 	factor   []float64   // targets x targets lower factor of the posterior covariance
 	noise    []float64   // draws x targets: fixed draws of the posterior error; nil until wanted
 	patterns []*patterns // by class; nil until wanted
@@ -43,11 +45,10 @@ func (e *Estimator) newEntry(live []int, noise []float64) (*entry, error) {
 		noise: append([]float64(nil), noise...),
 		n:     n,
 	}
-	en.outflows = e.outflows.atLive(live)
-	en.fronts = e.fronts.atLive(live)
+	en.outflows, en.fronts = e.atLive(en.live)
 	en.states = make([]*state, len(e.fields))
-	for k, f := range e.fields {
-		s, err := e.newState(en, f)
+	for k := range e.fields {
+		s, err := e.newState(en, k)
 		if err != nil {
 			return nil, fmt.Errorf("state %d of the air with %d masts: %w", k, len(live), err)
 		}
@@ -63,8 +64,18 @@ func (p *Prior) meanCovariance(dt float64) float64 {
 		float64(p.DriftDeviation*p.DriftDeviation)*math.Exp(-dt/p.DriftTime)
 }
 
-func (e *Estimator) newState(en *entry, f Field) (*state, error) {
+// atLive is the unit winds of all patterns at the live masts; entries with the
+// same live masts as the one before share them.
+func (e *Estimator) atLive(live []int) (outflows, fronts []float64) {
+	if e.shared == nil || !slices.Equal(e.shared.live, live) {
+		e.shared = &entry{live: live, outflows: e.outflows.atLive(live), fronts: e.fronts.atLive(live)}
+	}
+	return e.shared.outflows, e.shared.fronts
+}
+
+func (e *Estimator) newState(en *entry, field int) (*state, error) {
 	n, nl := en.n, len(en.live)
+	f, known := e.fields[field], e.covariances(field)
 	k := make([]float64, n*n)
 	for b := range blocks {
 		for c := range blocks {
@@ -73,7 +84,7 @@ func (e *Estimator) newState(en *entry, f Field) (*state, error) {
 			fade := math.Exp(-dt / f.Time)
 			for i, mi := range en.live {
 				for j, mj := range en.live {
-					ee, eno, nn := covariance(f, e.masts[mi].X-e.masts[mj].X, e.masts[mi].Y-e.masts[mj].Y)
+					ee, eno, nn := known.masts[mi*len(e.masts)+mj].components()
 					r, q := (b*nl+i)*2, (c*nl+j)*2
 					k[r*n+q] = mean + float64(fade*ee)
 					k[r*n+q+1] = float64(fade * eno)
@@ -93,7 +104,7 @@ func (e *Estimator) newState(en *entry, f Field) (*state, error) {
 			}
 		}
 	}
-	s := &state{patterns: make([]*patterns, len(e.classes))}
+	s := &state{field: field, patterns: make([]*patterns, len(e.classes))}
 	tri, ok := lapack64.Potrf(blas64.Symmetric{Uplo: blas.Upper, N: n, Data: k, Stride: n})
 	if !ok {
 		return nil, fmt.Errorf("the covariance of the means is not positive definite")
@@ -108,14 +119,18 @@ func (e *Estimator) newState(en *entry, f Field) (*state, error) {
 		}
 	}
 	s.inverse = k
-	e.addGain(en, s, f)
 	return s, nil
 }
 
-// addGain computes the posterior of the headwind at every target: its gain on
-// the observations and the factor of its covariance.
-func (e *Estimator) addGain(en *entry, s *state, f Field) {
+// addGain computes the posterior of the headwind at every target, its gain on
+// the observations and the factor of its covariance, when the state is first
+// drawn: most states of an entry never are.
+func (e *Estimator) addGain(en *entry, s *state) {
+	if s.gain != nil {
+		return
+	}
 	n, nl, nt := en.n, len(en.live), len(e.targets)
+	f, known := e.fields[s.field], e.covariances(s.field)
 	cross := make([]float64, nt*n)
 	for t, g := range e.targets {
 		for b := range blocks {
@@ -123,7 +138,7 @@ func (e *Estimator) addGain(en *entry, s *state, f Field) {
 			mean := e.prior.meanCovariance(dt)
 			fade := math.Exp(-dt / f.Time)
 			for i, m := range en.live {
-				ee, eno, nn := covariance(f, g.X-e.masts[m].X, g.Y-e.masts[m].Y)
+				ee, eno, nn := known.cross[t*len(e.masts)+m].components()
 				o := t*n + (b*nl+i)*2
 				cross[o] = g.Headwind(mean+float64(fade*ee), float64(fade*eno))
 				cross[o+1] = g.Headwind(float64(fade*eno), mean+float64(fade*nn))
@@ -132,22 +147,13 @@ func (e *Estimator) addGain(en *entry, s *state, f Field) {
 	}
 	s.gain = make([]float64, nt*n)
 	blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(nt, n, cross), mat(n, n, s.inverse), 0, mat(nt, n, s.gain))
-	cov := make([]float64, nt*nt)
-	mean := e.prior.meanCovariance(0)
-	for i, a := range e.targets {
-		for j, b := range e.targets {
-			ee, eno, nn := covariance(f, a.X-b.X, a.Y-b.Y)
-			// Var(-t.(u,v)) with both unit vectors.
-			cov[i*nt+j] = float64(a.East*b.East)*(mean+ee) + float64(a.North*b.North)*(mean+nn) +
-				(float64(a.East*b.North)+float64(a.North*b.East))*eno
-		}
-	}
+	cov := slices.Clone(known.targets)
 	blas64.Gemm(blas.NoTrans, blas.Trans, -1, mat(nt, n, s.gain), mat(nt, n, cross), 1, mat(nt, nt, cov))
 	// Jitter: the posterior covariance is singular to rounding where a target
 	// stands beside a mast.
 	jitter := 1e-6 + 1e-6*float64(f.Deviation*f.Deviation)
 	for tries := 0; ; tries++ {
-		work := append([]float64(nil), cov...)
+		work := slices.Clone(cov)
 		for i := range nt {
 			work[i*nt+i] += jitter
 		}

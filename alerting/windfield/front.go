@@ -2,6 +2,7 @@ package windfield
 
 import (
 	"math"
+	"slices"
 
 	"gonum.org/v1/gonum/blas"
 	"gonum.org/v1/gonum/blas/blas64"
@@ -19,6 +20,7 @@ type frontBank struct {
 	p       Prior
 	ages    [blocks]float64
 	masts   []Mast
+	atMast  []float64 // [front][behind, ahead][block][mast]
 
 	along, left []float64 // scratch of project: blocks x masts
 }
@@ -82,6 +84,16 @@ func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior)
 			}
 		}
 	}
+	b.atMast = make([]float64, 0, len(b.fronts)*2*blocks*len(masts))
+	for _, f := range b.fronts {
+		for _, change := range [...]func(x, y, age float64) float64{f.behind, f.ahead} {
+			for _, age := range ages {
+				for _, m := range masts {
+					b.atMast = append(b.atMast, change(m.X, m.Y, age))
+				}
+			}
+		}
+	}
 	return b
 }
 
@@ -89,15 +101,10 @@ func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior)
 // live mast's block: [front][2][blocks x live]. The wind of the strengths is
 // that times the front's direction, so nothing more need be kept.
 func (b *frontBank) atLive(live []int) []float64 {
-	n := blocks * len(live)
-	out := make([]float64, len(b.fronts)*2*n)
-	for j, f := range b.fronts {
-		share, rate := out[2*j*n:(2*j+1)*n], out[(2*j+1)*n:(2*j+2)*n]
-		for k := range blocks {
-			for i, m := range live {
-				share[k*len(live)+i] = f.behind(b.masts[m].X, b.masts[m].Y, b.ages[k])
-				rate[k*len(live)+i] = f.ahead(b.masts[m].X, b.masts[m].Y, b.ages[k])
-			}
+	out := make([]float64, 0, len(b.fronts)*2*blocks*len(live))
+	for row := range slices.Chunk(b.atMast, len(b.masts)) {
+		for _, m := range live {
+			out = append(out, row[m])
 		}
 	}
 	return out

@@ -95,6 +95,8 @@ type Estimator struct {
 	levels    [Draws]float64 // probability level of each draw's strength
 	scores    [Draws]float64 // the normal score of that level
 	cache     cache
+	known     []*known // by field; nil until wanted
+	shared    *entry   // the masts of the newest entry, and the patterns at them
 	memory    ambientMemory
 	doubts    doubtMemory
 	derived   []derived // outflows made for the step at hand ...
@@ -148,6 +150,7 @@ const (
 func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *Estimator {
 	e := &Estimator{prior: prior, masts: masts, targets: targets, layout: layout}
 	e.fields = slices.Concat(prior.Fields, prior.Disturbed)
+	e.known = make([]*known, len(e.fields))
 	for b := range blocks {
 		e.ages[b] = layout.Age(b)
 	}
@@ -427,6 +430,7 @@ func (e *Estimator) draw(en *entry) {
 		if i != current {
 			if solved != pt.state {
 				solved = pt.state
+				e.addGain(en, s)
 				e.solve(en, s)
 				blas64.Gemv(blas.NoTrans, 1, mat(nt, en.n, s.gain), vec(e.y), 0, vec(e.plain))
 			}
