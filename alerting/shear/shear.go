@@ -82,7 +82,15 @@ type Stretch struct {
 	jointKilometre []float64
 
 	line []float64 // one draw
-	seen []int     // the observed points
+	// What follows from Observed; lookUp fills it.
+	runs []run
+	far  []int // the points with another reachPoints before them, both observed ...
+	km   []int // ... and those with one kilometrePoints before them
+	// first is the target of the first point where the points are targets in a
+	// row, -1 where they are not.
+	first  int
+	turns  []turn
+	sorter sorter
 }
 
 // NewStretch prepares a stretch over targets in the order of flight.
@@ -94,7 +102,9 @@ func NewStretch(points []int) *Stretch {
 	s.Gain = Side{Sorted: draws(), sign: -1, joint: draws()}
 	s.kilometreSorted, s.jointKilometre = draws(), draws()
 	s.line = make([]float64, n)
-	s.seen = make([]int, 0, n)
+	s.runs, s.far, s.km = make([]run, 0, n), make([]int, 0, n), make([]int, 0, n)
+	s.turns = make([]turn, n)
+	s.first = inARow(points)
 	return s
 }
 
@@ -104,33 +114,43 @@ func (s *Stretch) Measure(p *windfield.Posterior) {
 	nt := len(p.Mean)
 	s.lookUp()
 	for d := range windfield.Draws {
-		row := p.Draws[d*nt : (d+1)*nt]
-		for i, t := range s.Points {
-			s.line[i] = row[t]
-		}
-		loss, gain := s.extremes(s.line)
-		kilometre := s.kilometre()
+		line := s.along(p.Draws[d*nt : (d+1)*nt])
+		loss, gain := s.extremes(line)
+		kilometre := s.kilometre(line)
 		s.Loss.Sorted[d], s.Gain.Sorted[d] = loss, gain
 		s.kilometreSorted[d] = kilometre
 		s.Loss.joint[d], s.Gain.joint[d], s.jointKilometre[d] = loss, gain, kilometre
 	}
 	s.Loss.kinds, s.Gain.kinds = &p.Kinds, &p.Kinds
-	slices.Sort(s.Loss.Sorted)
-	slices.Sort(s.Gain.Sorted)
-	slices.Sort(s.kilometreSorted)
+	s.sorter.sort(s.Loss.Sorted)
+	s.sorter.sort(s.Gain.Sorted)
+	s.sorter.sort(s.kilometreSorted)
 	for i, t := range s.Points {
 		s.Mean[i] = p.Mean[t]
 	}
 }
 
-// lookUp lists the observed points.
-func (s *Stretch) lookUp() {
-	s.seen = s.seen[:0]
-	for i, observed := range s.Observed {
-		if observed {
-			s.seen = append(s.seen, i)
+// along is the points of the stretch out of a row of all targets.
+func (s *Stretch) along(row []float64) []float64 {
+	if s.first >= 0 {
+		return row[s.first : s.first+len(s.Points)]
+	}
+	for i, t := range s.Points {
+		s.line[i] = row[t]
+	}
+	return s.line
+}
+
+func inARow(points []int) int {
+	for i, t := range points {
+		if t != points[0]+i {
+			return -1
 		}
 	}
+	if len(points) == 0 {
+		return -1
+	}
+	return points[0]
 }
 
 // KilometreLoss is the median of the greatest loss over 1 km, m/s.
@@ -148,67 +168,6 @@ func (s *Stretch) EitherAtLeast(change, kilometre float64) float64 {
 	return float64(n) / windfield.Draws
 }
 
-// extremes of a line of the stretch: the greatest fall and the greatest rise from an observed
-// point to a later one at most reachPoints on, in one pass that keeps the
-// highest and the lowest of the window behind it. When the point that leaves
-// the window is one of them, the window is searched anew; that is seldom.
-func (s *Stretch) extremes(line []float64) (fall, rise float64) {
-	seen := s.seen
-	if len(seen) == 0 {
-		return 0, 0
-	}
-	head := 0
-	high, low := line[seen[0]], line[seen[0]]
-	for k := 1; k < len(seen); k++ {
-		j := seen[k]
-		for ; seen[head] < j-reachPoints; head++ {
-			if gone := line[seen[head]]; gone == high || gone == low {
-				high, low = span(line, seen[head+1:k])
-			}
-		}
-		v := line[j]
-		if d := high - v; d > fall {
-			fall = d
-		}
-		if d := v - low; d > rise {
-			rise = d
-		}
-		if v > high {
-			high = v
-		}
-		if v < low {
-			low = v
-		}
-	}
-	return fall, rise
-}
-
-// span is the highest and the lowest of line at the points; -Inf and +Inf for
-// none, which no change is measured from.
-func span(line []float64, points []int) (high, low float64) {
-	high, low = math.Inf(-1), math.Inf(1)
-	for _, i := range points {
-		if v := line[i]; v > high {
-			high = v
-		}
-		if v := line[i]; v < low {
-			low = v
-		}
-	}
-	return high, low
-}
-
-// kilometre is the greatest fall over 1 km.
-func (s *Stretch) kilometre() (fall float64) {
-	for j := kilometrePoints; j < len(s.line); j++ {
-		i := j - kilometrePoints
-		if d := s.line[i] - s.line[j]; d > fall && s.Observed[i] && s.Observed[j] {
-			fall = d
-		}
-	}
-	return fall
-}
-
 // Place finds the pair of points between which the mean profile changes most.
 // before holds each point's distance before the threshold of the path that
 // asks, in m. Among changes within 0.05 kt of the greatest, the pair whose far
@@ -222,10 +181,7 @@ func (s *Stretch) Place(side *Side, before []float64) Place {
 	}
 	least := p.Change - tie
 	far, length := math.Inf(1), math.Inf(1)
-	s.pairs(side.sign, func(i, j int, change float64) {
-		if change < least {
-			return
-		}
+	s.pairs(side.sign, least, func(i, j int) {
 		f := max(math.Abs(before[i]), math.Abs(before[j]))
 		l := math.Abs(before[i] - before[j])
 		if f < far || (f == far && l < length) {
@@ -236,15 +192,23 @@ func (s *Stretch) Place(side *Side, before []float64) Place {
 	return p
 }
 
-// pairs calls fn with every pair of observed points at most 4 km apart.
-func (s *Stretch) pairs(sign float64, fn func(i, j int, change float64)) {
-	for i := range s.Mean {
-		if !s.Observed[i] {
+// pairs calls fn with every pair of observed points at most 4 km apart between
+// which the mean profile changes by at least least. Most points are passed over
+// at once: even the other end of the whole profile is too near to them.
+func (s *Stretch) pairs(sign, least float64, fn func(i, j int)) {
+	end := math.Inf(1)
+	for i, v := range s.Mean {
+		if s.Observed[i] {
+			end = min(end, sign*v)
+		}
+	}
+	for i, v := range s.Mean {
+		if !s.Observed[i] || sign*v-end < least {
 			continue
 		}
 		for j := i + 1; j < len(s.Mean) && j <= i+reachPoints; j++ {
-			if s.Observed[j] {
-				fn(i, j, sign*(s.Mean[i]-s.Mean[j]))
+			if s.Observed[j] && sign*(v-s.Mean[j]) >= least {
+				fn(i, j)
 			}
 		}
 	}

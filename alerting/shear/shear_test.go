@@ -44,7 +44,7 @@ func TestExtremesAgainstPlainSearch(t *testing.T) {
 			fall, rise, fallKm := plain(s.line, s.Observed)
 			s.lookUp()
 			gotFall, gotRise := s.extremes(s.line)
-			gotFallKm := s.kilometre()
+			gotFallKm := s.kilometre(s.line)
 			// Differences of the same two numbers: equal to the bit.
 			if gotFall != fall || gotRise != rise {
 				t.Fatalf("%d points, trial %d: fall %g and rise %g, the plain search finds %g and %g", n, trial, gotFall, gotRise, fall, rise)
@@ -323,13 +323,30 @@ func TestMeasureAllocatesNothing(t *testing.T) {
 	}
 }
 
-// One path of 9 km.
+// One path of 9 km: as smooth as the wind field draws it, and, for the worst
+// case, with no two points alike.
 func BenchmarkMeasure(b *testing.B) {
 	const n = 46
-	s := all(NewStretch(upTo(n)))
 	rng := rand.New(rand.NewPCG(7, 8))
-	p := posterior(func(_, _ int) float64 { return rng.NormFloat64() }, n)
-	for b.Loop() {
-		s.Measure(p)
+	for _, row := range []struct {
+		name string
+		draw func(phase [2]float64, i int) float64
+	}{
+		{"smooth", func(phase [2]float64, i int) float64 {
+			return 3*math.Sin(float64(i)/4+phase[0]) + 2*math.Sin(float64(i)/7+phase[1])
+		}},
+		{"rough", func([2]float64, int) float64 { return rng.NormFloat64() }},
+	} {
+		phases := make([][2]float64, windfield.Draws)
+		for d := range phases {
+			phases[d] = [2]float64{rng.Float64() * 7, rng.Float64() * 7}
+		}
+		b.Run(row.name, func(b *testing.B) {
+			s := all(NewStretch(upTo(n)))
+			p := posterior(func(d, i int) float64 { return row.draw(phases[d], i) }, n)
+			for b.Loop() {
+				s.Measure(p)
+			}
+		})
 	}
 }
