@@ -239,6 +239,26 @@ func TestModulesTakeNoMarkup(t *testing.T) {
 	}
 }
 
+// TestOddsAreSaidInOnePlace: a probability gets its words from one function,
+// which holds back at either end.
+func TestOddsAreSaidInOnePlace(t *testing.T) {
+	said := 0
+	for name, a := range (mustGlass(t)).assets {
+		if strings.HasPrefix(name, "uplot") || !strings.HasSuffix(name, ".js") {
+			continue
+		}
+		said += strings.Count(string(a.plain), "odds(")
+		for line := range strings.Lines(string(a.plain)) {
+			if name != "words.js" && (strings.Contains(line, " in 100\"") || strings.Contains(line, "probability") && !strings.Contains(line, "odds(")) {
+				t.Errorf("%s words a probability itself: %s", name, line)
+			}
+		}
+	}
+	if said < 2 {
+		t.Error("no module asks for the odds: this test looks for another name")
+	}
+}
+
 func mustGlass(t *testing.T) *glass {
 	t.Helper()
 	g, err := newGlass()

@@ -10,6 +10,7 @@ import (
 	"sockline/alerting"
 	"sockline/alerting/drift"
 	"sockline/alerting/engine"
+	"sockline/alerting/wording"
 	"sockline/sensors"
 	"sockline/sensors/averages"
 	"sockline/sensors/quality"
@@ -185,8 +186,8 @@ func findings(h *stationHealth) []string {
 		say("Its clock is %.1f s %s; %s.", ahead, side, done)
 	}
 	if h.Neighbours.Doubt >= doubted {
-		say("Its neighbours contradict it at the moment: the wind between the masts is worked out as if it were wrong with a probability of %.0f %%.",
-			100*h.Neighbours.Doubt)
+		say("Its neighbours contradict it at the moment: the wind between the masts is worked out as if the odds that it is wrong were %s.",
+			wording.Odds(h.Neighbours.Doubt))
 	}
 	for _, word := range h.Neighbours.Named {
 		switch t, s := h.Neighbours.TurnedDeg, h.Neighbours.SpeedRatio; word {

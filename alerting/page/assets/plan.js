@@ -6,7 +6,7 @@ import { svg } from "./dom.js";
 import { along, knot, outline, Scale, towards, unobserved } from "./ground.js";
 import { Labels } from "./labels.js";
 import { barb, mastSign } from "./signs.js";
-import { levelNumber, kindWords, knots, stateWords, timeOf } from "./words.js";
+import { levelNumber, kindWords, knots, odds, stateWords, timeOf } from "./words.js";
 
 /** @typedef {import("./ground.js").Place} Place */
 
@@ -280,7 +280,7 @@ export class Plan {
       group.append(svg("path", { class: "arrow", d: `M${x} ${y}L${ex} ${ey}M${ex - ux * 13 - uy * 8} ${ey - uy * 13 + ux * 8}L${ex} ${ey}L${ex - ux * 13 + uy * 8} ${ey - uy * 13 - ux * 8}` }));
     }
     const words = o.extent === "microburst" ? "microburst" : "outflow";
-    this.told.push([x, y, words + (o.probability === undefined ? "" : ", " + Math.round(o.probability * 100) + " in 100")]);
+    this.told.push([x, y, words + (o.probability === undefined ? "" : ", " + odds(o.probability))]);
     return group;
   }
 

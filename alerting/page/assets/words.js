@@ -103,6 +103,18 @@ export function knots(kt) {
   return kt === null || kt === undefined ? "none" : String(Math.round(kt));
 }
 
+/**
+ * A probability. At either end no more is said than a model of the air can
+ * know: see Odds of wording, which says the same.
+ * @param {number | null | undefined} p @returns {string} "80 in 100"
+ */
+export function odds(p) {
+  const of = Math.round((p === null || p === undefined ? NaN : p) * 100);
+  if (Number.isNaN(of)) return "an unknown number in 100";
+  if (of > 95) return "over 95 in 100";
+  return (of < 5 ? "under 5" : String(of)) + " in 100";
+}
+
 /** @param {number} deg @returns {string} 001 to 360 */
 export function bearing(deg) {
   const d = ((Math.round(deg) % 360) + 360) % 360;
