@@ -23,7 +23,9 @@ type entry struct {
 	noise    []float64 // [block][live] error variance of one component, m2/s2
 	outflows []float64 // unit winds of every outflow at the live masts; see outflowBank.atLive
 	fronts   []float64 // the same of every front; see frontBank.atLive
-	states   []*state
+	// The same again, patterns innermost; see the banks' project.
+	outflowColumns, frontColumns []float64
+	states                       []*state
 }
 
 // state holds the gains of one ambient state.
@@ -45,7 +47,7 @@ func (e *Estimator) newEntry(live []int, noise []float64) (*entry, error) {
 		noise: append([]float64(nil), noise...),
 		n:     n,
 	}
-	en.outflows, en.fronts = e.atLive(en.live)
+	e.atLive(en)
 	en.states = make([]*state, len(e.fields))
 	for k := range e.fields {
 		s, err := e.newState(en, k)
@@ -64,13 +66,18 @@ func (p *Prior) meanCovariance(dt float64) float64 {
 		float64(p.DriftDeviation*p.DriftDeviation)*math.Exp(-dt/p.DriftTime)
 }
 
-// atLive is the unit winds of all patterns at the live masts; entries with the
-// same live masts as the one before share them.
-func (e *Estimator) atLive(live []int) (outflows, fronts []float64) {
-	if e.shared == nil || !slices.Equal(e.shared.live, live) {
-		e.shared = &entry{live: live, outflows: e.outflows.atLive(live), fronts: e.fronts.atLive(live)}
+// atLive fills in the unit winds of all patterns at the live masts; entries with
+// the same live masts as the one before share them.
+func (e *Estimator) atLive(en *entry) {
+	old := e.shared
+	if old == nil || !slices.Equal(old.live, en.live) {
+		old = &entry{live: en.live, outflows: e.outflows.atLive(en.live), fronts: e.fronts.atLive(en.live)}
+		old.outflowColumns = transposed(old.outflows, e.outflows.count(), 2*len(en.live))
+		old.frontColumns = e.fronts.columns(old.fronts)
+		e.shared = old
 	}
-	return e.shared.outflows, e.shared.fronts
+	en.outflows, en.outflowColumns = old.outflows, old.outflowColumns
+	en.fronts, en.frontColumns = old.fronts, old.frontColumns
 }
 
 func (e *Estimator) newState(en *entry, field int) (*state, error) {

@@ -134,11 +134,15 @@ func (b *frontBank) headings(fn func(f front, first, last int)) {
 	}
 }
 
-// frontRows is the shares (0) or the rates (1) of a run of fronts at the live masts'
-// blocks.
-func (en *entry) frontRows(which, first, last int) blas64.General {
-	nb := en.n / 2
-	return blas64.General{Rows: last - first, Cols: nb, Stride: 2 * nb, Data: en.fronts[(2*first+which)*nb:]}
+// columns is what atLive gave with the fronts of a heading innermost: for each
+// heading [behind, ahead][blocks x live][front].
+func (b *frontBank) columns(atLive []float64) []float64 {
+	out := make([]float64, 0, len(atLive))
+	b.headings(func(_ front, first, last int) {
+		width := len(atLive) / len(b.fronts)
+		out = append(out, transposed(atLive[first*width:last*width], last-first, width)...)
+	})
+	return out
 }
 
 // project: all fronts of one heading share the components of w along and to
@@ -151,10 +155,11 @@ func (b *frontBank) project(en *entry, w, out []float64) {
 			along[i] = float64(w[2*i]*f.east) + float64(w[2*i+1]*f.north)
 			left[i] = float64(w[2*i+1]*f.east) - float64(w[2*i]*f.north)
 		}
-		shares, rates := en.frontRows(0, first, last), en.frontRows(1, first, last)
-		blas64.Gemv(blas.NoTrans, 1, shares, vec(along), 0, vec(out[first:last]))
-		blas64.Gemv(blas.NoTrans, 1, shares, vec(left), 0, vec(out[n+first:n+last]))
-		blas64.Gemv(blas.NoTrans, 1, rates, vec(along), 0, vec(out[2*n+first:2*n+last]))
+		run := en.frontColumns[2*first*nb : 2*last*nb]
+		shares, rates := run[:len(run)/2], run[len(run)/2:]
+		columns(out[first:last], shares, along)
+		columns(out[n+first:n+last], shares, left)
+		columns(out[2*n+first:2*n+last], rates, along)
 	})
 }
 

@@ -127,7 +127,7 @@ func (b *outflowBank) prior(int) ([6]float64, [dims]float64, float64) { return b
 func (b *outflowBank) project(en *entry, w, out []float64) {
 	n, width := len(b.templates), 2*len(en.live)
 	for d := range blocks {
-		blas64.Gemv(blas.NoTrans, 1, mat(n, width, en.outflows), vec(w[d*width:(d+1)*width]), 0, vec(out[d*n:(d+1)*n]))
+		columns(out[d*n:(d+1)*n], en.outflowColumns, w[d*width:(d+1)*width])
 	}
 }
 
