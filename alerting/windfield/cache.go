@@ -25,10 +25,16 @@ const (
 // timeSteps are the integral times (s) that the masts' median is rounded to.
 var timeSteps = [...]float64{2.5, 4, 6.3, 10, 16}
 
-const cacheSize = 24
+const (
+	cacheSize = 24
+	// mostFewer bounds the entries kept for when a mast is left out: with more
+	// masts than that they would come round too late, and are large.
+	mostFewer = 20
+)
 
 // cache keeps the entries used last.
 type cache struct {
+	size    int
 	entries map[string]*cached
 	clock   uint64
 }
@@ -38,10 +44,31 @@ type cached struct {
 	used  uint64
 }
 
-func newCache() cache { return cache{entries: make(map[string]*cached, cacheSize+1)} }
+func newCache(size int) cache {
+	return cache{size: size, entries: make(map[string]*cached, size+1)}
+}
+
+// fewerSize is how many entries are kept for when one of the masts is left out:
+// each in turn, and some for when the noise has changed.
+func fewerSize(masts int) int {
+	if size := masts + 3; size <= mostFewer {
+		return size
+	}
+	return 1
+}
+
+func (c *cache) get(key []uint8) *entry {
+	kept, ok := c.entries[string(key)]
+	if !ok {
+		return nil
+	}
+	c.clock++
+	kept.used = c.clock
+	return kept.entry
+}
 
 func (c *cache) put(key string, en *entry) {
-	if len(c.entries) >= cacheSize {
+	if len(c.entries) >= c.size {
 		oldest := ""
 		least := uint64(math.MaxUint64)
 		for k, v := range c.entries { // uses are unique: the order of the map does not matter
@@ -93,19 +120,18 @@ func (e *Estimator) entryFor(s *averages.Snapshot) *entry {
 		}
 		e.steps = append(e.steps, uint8(m), noiseStep(base)|mask<<4)
 	}
-	if e.without != noMast {
-		return e.entryWithout(timeStep)
+	kept := &e.cache
+	if e.without != noMast { // apart: the cache is for the steps that decide
+		kept = &e.fewerCache
 	}
-	if c, ok := e.cache.entries[string(e.steps)]; ok {
-		e.cache.clock++
-		c.used = e.cache.clock
-		return c.entry
+	if en := kept.get(e.steps); en != nil {
+		return en
 	}
 	en, err := e.newEntry(e.live, e.blockNoise(timeStep))
 	if err != nil { // two masts in one place and no noise: excluded by the floor of the noise
 		return nil
 	}
-	e.cache.put(string(e.steps), en)
+	kept.put(string(e.steps), en)
 	return en
 }
 

@@ -369,7 +369,7 @@ func BenchmarkStepMiss8(b *testing.B) {
 	e, snapshot := warm(b, 8)
 	b.ReportAllocs()
 	for b.Loop() {
-		e.cache = newCache()
+		e.cache = newCache(cacheSize)
 		e.Step(snapshot)
 	}
 }

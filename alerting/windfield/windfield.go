@@ -81,28 +81,29 @@ func kindOf(class int) PatternKind {
 // Estimator holds the gains and the little state that persists: the evidence
 // for the ambient states over the last minutes. Not safe for concurrent use.
 type Estimator struct {
-	prior     Prior
-	masts     []Mast
-	targets   []Target
-	layout    averages.Layout
-	fields    []Field // the ambient states of the prior, then its disturbed ones
-	ages      [blocks]float64
-	outflows  *outflowBank
-	fronts    *frontBank
-	classes   []class        // outflows, fronts, faults
-	normals   []float64      // [Draws][target] fixed standard normal draws
-	order     [Draws]int     // which stored draw each draw uses
-	levels    [Draws]float64 // probability level of each draw's strength
-	scores    [Draws]float64 // the normal score of that level
-	cache     cache
-	known     []*known // by field; nil until wanted
-	shared    *entry   // the masts of the newest entry, and the patterns at them
-	memory    ambientMemory
-	doubts    doubtMemory
-	derived   []derived // outflows made for the step at hand ...
-	children  []part    // ... and how likely they are beside the mixture
-	pairing   pairing
-	faultGain []float64 // log of each mast's prior of being wrong over the even-handed one
+	prior      Prior
+	masts      []Mast
+	targets    []Target
+	layout     averages.Layout
+	fields     []Field // the ambient states of the prior, then its disturbed ones
+	ages       [blocks]float64
+	outflows   *outflowBank
+	fronts     *frontBank
+	classes    []class        // outflows, fronts, faults
+	normals    []float64      // [Draws][target] fixed standard normal draws
+	order      [Draws]int     // which stored draw each draw uses
+	levels     [Draws]float64 // probability level of each draw's strength
+	scores     [Draws]float64 // the normal score of that level
+	cache      cache
+	fewerCache cache    // of Without
+	known      []*known // by field; nil until wanted
+	shared     *entry   // the masts of the newest entry, and the patterns at them
+	memory     ambientMemory
+	doubts     doubtMemory
+	derived    []derived // outflows made for the step at hand ...
+	children   []part    // ... and how likely they are beside the mixture
+	pairing    pairing
+	faultGain  []float64 // log of each mast's prior of being wrong over the even-handed one
 
 	// Scratch and result, sized once.
 	live      []int
@@ -122,12 +123,9 @@ type Estimator struct {
 	posterior Posterior
 	fewer     Posterior // of Without; made when first asked for
 	without   int       // the mast that is left out
-	// The gains of the last Without, and the masts and noise that they are for.
-	fewerEntry *entry
-	fewerSteps []uint8
-	times      []float64
-	bases      []float64
-	sorted     []float64
+	times     []float64
+	bases     []float64
+	sorted    []float64
 }
 
 // part is one component of the mixture after the step: an ambient state, with
@@ -168,7 +166,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 		most, total = max(most, c.count()), total+c.count()
 		e.b = append(e.b, make([]float64, dims*c.count()))
 	}
-	e.cache = newCache()
+	e.cache, e.fewerCache = newCache(cacheSize), newCache(fewerSize(len(masts)))
 	e.memory = newAmbientMemory(len(prior.Fields))
 	e.doubts = newDoubtMemory(len(masts))
 	e.faultGain = make([]float64, len(masts))

@@ -21,20 +21,6 @@ func (e *Estimator) Without(s *averages.Snapshot, mast int) *Posterior {
 	return &e.fewer
 }
 
-// entryWithout finds or makes the gains for the masts and noise in steps. Only
-// the last is kept: the cache is for the steps that decide.
-func (e *Estimator) entryWithout(timeStep int) *entry {
-	if e.fewerEntry != nil && string(e.fewerSteps) == string(e.steps) {
-		return e.fewerEntry
-	}
-	en, err := e.newEntry(e.live, e.blockNoise(timeStep))
-	if err != nil {
-		return nil
-	}
-	e.fewerEntry, e.fewerSteps = en, append(e.fewerSteps[:0], e.steps...)
-	return en
-}
-
 // noMast is no mast left out.
 const noMast = -1
 
