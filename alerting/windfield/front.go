@@ -21,6 +21,9 @@ type frontBank struct {
 	ages    [blocks]float64
 	masts   []Mast
 	atMast  []float64 // [front][behind, ahead][block][mast]
+	// atTarget is, for each front that was ever drawn, [strength][target] headwind
+	// of unit strength now.
+	atTarget [][]float64
 
 	along, left []float64 // scratch of project: blocks x masts
 }
@@ -84,6 +87,7 @@ func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior)
 			}
 		}
 	}
+	b.atTarget = make([][]float64, len(b.fronts))
 	b.atMast = make([]float64, 0, len(b.fronts)*2*blocks*len(masts))
 	for _, f := range b.fronts {
 		for _, change := range [...]func(x, y, age float64) float64{f.behind, f.ahead} {
@@ -221,9 +225,16 @@ func (b *frontBank) column(en *entry, j, d int, dst []float64) {
 }
 
 func (b *frontBank) now(j, d int, dst []float64) {
-	for t, g := range b.targets {
-		dst[t] = g.Headwind(b.fronts[j].wind(d, g.X, g.Y, 0))
+	nt := len(b.targets)
+	if b.atTarget[j] == nil {
+		b.atTarget[j] = make([]float64, 0, dims*nt)
+		for d := range dims {
+			for _, g := range b.targets {
+				b.atTarget[j] = append(b.atTarget[j], g.Headwind(b.fronts[j].wind(d, g.X, g.Y, 0)))
+			}
+		}
 	}
+	copy(dst, b.atTarget[j][d*nt:(d+1)*nt])
 }
 
 // innovation: a front's change is as good as steady over the blocks.

@@ -53,6 +53,40 @@ type patterns struct {
 	today     []float64 // [pattern][dims] P q: mean of today's strength on b
 	sharpness []float64 // 1 / (sqrt(2) its standard deviation)
 	lines     [][]float64
+
+	greatest float64 // of logOdds
+	// The observations at which all patterns were last weighed, w = K^-1 y of
+	// them, and the greatest b' P b then.
+	seen, solved []float64
+	fit          float64
+}
+
+// most is a bound of the evidence of every pattern for the observations y with
+// w = K^-1 y. A pattern explains no more than there is, b' P b <= y' K^-1 y; and
+// b' P b is the square of a length that a change of y by d moves by at most the
+// root of d' K^-1 d, so that what was weighed a moment ago bounds it too.
+func (p *patterns) most(y, w []float64) float64 {
+	all, moved := 0.0, 0.0
+	for i, v := range y {
+		all += float64(v * w[i])
+		if len(p.seen) > 0 {
+			moved += float64((v - p.seen[i]) * (w[i] - p.solved[i]))
+		}
+	}
+	fit := all
+	if len(p.seen) > 0 {
+		far := math.Sqrt(p.fit) + math.Sqrt(max(moved, 0))
+		fit = min(fit, float64(far*far))
+	}
+	return fit/2*(1+roundings) + p.greatest
+}
+
+// roundings is more than what rounding can do to a bound, as a share of it.
+const roundings = 1e-6
+
+// remember keeps what all patterns were weighed by.
+func (p *patterns) remember(y, w []float64, fit float64) {
+	p.seen, p.solved, p.fit = append(p.seen[:0], y...), append(p.solved[:0], w...), fit
 }
 
 // strengthNow is the posterior mean of today's strength of pattern j before it
@@ -73,6 +107,7 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 		precision: make([]float64, n*6), logOdds: make([]float64, n),
 		today: make([]float64, n*dims), sharpness: make([]float64, n), lines: make([][]float64, n),
 	}
+	p.greatest = math.Inf(-1)
 	m := make([]float64, n*6)
 	c.gram(en, s, m)
 	for j := range n {
@@ -85,6 +120,7 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 		prec, logDet := invert3(sum)
 		copy(p.precision[j*6:], prec[:])
 		p.logOdds[j] = -(logDet + logDetC) / 2 // |I + C M| = |C| |C^-1 + M|
+		p.greatest = max(p.greatest, p.logOdds[j])
 		today := mul3(prec, q)
 		copy(p.today[j*dims:], today[:])
 		v := rest

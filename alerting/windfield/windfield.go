@@ -369,26 +369,33 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 	if n == 0 {
 		return 0
 	}
-	e.classes[c].project(en, e.w, b)
-	evidence := e.evidence[:n]
-	best := math.Inf(-1)
-	for j := range evidence {
-		b0, b1, b2 := b[j], b[n+j], b[2*n+j]
-		q := p.precision[j*6 : j*6+6 : j*6+6]
-		v := float64(q[0]*float64(b0*b0)) + float64(q[3]*float64(b1*b1)) + float64(q[5]*float64(b2*b2)) +
-			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
-		evidence[j] = v/2 + p.logOdds[j]
-		if c == faultClass {
-			evidence[j] += e.faultGain[j%len(e.faultGain)]
-		}
-		best = max(best, evidence[j])
-	}
 	scale := math.Log(share/float64(n)) + (e.stateLog[k] - top)
 	// The factor for a positive strength is at most 2.
 	least := math.Log(negligible*total) - scale - math.Ln2
 	if c == faultClass {
 		least = math.Inf(-1) // few, and what their neighbours say of each is told
 	}
+	// Nobody may look at the evidence of a class that is passed over: it is that
+	// of another state.
+	if c != faultClass && p.most(e.y, e.w) < least {
+		return 0
+	}
+	e.classes[c].project(en, e.w, b)
+	evidence := e.evidence[:n]
+	best, fit := math.Inf(-1), 0.0
+	for j := range evidence {
+		b0, b1, b2 := b[j], b[n+j], b[2*n+j]
+		q := p.precision[j*6 : j*6+6 : j*6+6]
+		v := float64(q[0]*float64(b0*b0)) + float64(q[3]*float64(b1*b1)) + float64(q[5]*float64(b2*b2)) +
+			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
+		fit = max(fit, v)
+		evidence[j] = v/2 + p.logOdds[j]
+		if c == faultClass {
+			evidence[j] += e.faultGain[j%len(e.faultGain)]
+		}
+		best = max(best, evidence[j])
+	}
+	p.remember(e.y, e.w, fit)
 	if best < least {
 		return 0
 	}
@@ -405,90 +412,4 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 		e.parts = append(e.parts, part{state: k, class: c, pattern: j, weight: weight, now: now, sharpness: p.sharpness[j]})
 	}
 	return sum
-}
-
-// draw fills the posterior: each draw takes the part that its place in the
-// cumulative weights falls on, that part's mean, and a stored draw of its
-// error.
-func (e *Estimator) draw(en *entry) {
-	nt := len(e.targets)
-	p := &e.posterior
-	clear(p.Mean)
-	cum, i := e.parts[0].weight, 0
-	current, solved := -1, -1
-	var st strength
-	for d := range Draws {
-		u := (float64(d) + 0.5) / Draws
-		for u > cum && i < len(e.parts)-1 {
-			i++
-			cum += e.parts[i].weight
-		}
-		pt := e.parts[i]
-		s := en.states[pt.state]
-		if i != current {
-			if solved != pt.state {
-				solved = pt.state
-				e.addGain(en, s)
-				e.solve(en, s)
-				blas64.Gemv(blas.NoTrans, 1, mat(nt, en.n, s.gain), vec(e.y), 0, vec(e.plain))
-			}
-			st = e.shape(en, s, pt)
-			current = i
-		}
-		row := p.Draws[d*nt : (d+1)*nt]
-		z := e.draws(s)[e.order[d]*nt : (e.order[d]+1)*nt]
-		excess := 0.0
-		switch {
-		case pt.class < 0 || pt.class == faultClass: // nothing depends on the strength
-		case st.now > certain*st.spread: // positive without being held so
-			excess = st.spread * e.scores[d]
-		default:
-			excess = positiveNormal(st.now, st.spread, e.levels[d]) - st.now
-		}
-		p.Kinds[d] = kindOf(pt.class)
-		p.Over[d] = Outflow{}
-		if p.Kinds[d] == OutflowPattern {
-			p.Over[d] = e.outflows.templates[pt.pattern].outflow(st.now+excess, pt.weight)
-		}
-		for t := range row {
-			v := e.base[t] + float64(excess*e.slope[t]) + z[t]
-			row[t] = v
-			p.Mean[t] += v
-		}
-	}
-	for t := range p.Mean {
-		p.Mean[t] /= Draws
-	}
-}
-
-// certain: a strength so many deviations above zero is positive in all but one
-// of 30,000 cases.
-const certain = 4
-
-// shape fills base (posterior mean headwind) and slope (what one more m/s of
-// the pattern's strength adds) for a part, and gives that strength. w and plain
-// are those of the part's state.
-func (e *Estimator) shape(en *entry, s *state, pt part) strength {
-	nt := len(e.targets)
-	if pt.class < 0 {
-		copy(e.base, e.plain)
-		clear(e.slope)
-		return strength{}
-	}
-	var b [dims]float64
-	for d := range dims {
-		e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
-		b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
-	}
-	st := e.strengthOf(s, pt.class, pt.pattern, b)
-	line := e.line(en, s, pt.class, pt.pattern)
-	for t := range nt {
-		base, slope := e.plain[t], float64(st.open*line[dims*nt+t])
-		for d := range dims {
-			base += float64(st.mean[d] * line[d*nt+t])
-			slope += float64(st.share[d] * line[d*nt+t])
-		}
-		e.base[t], e.slope[t] = base, slope
-	}
-	return st
 }

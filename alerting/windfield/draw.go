@@ -1,0 +1,91 @@
+package windfield
+
+import (
+	"gonum.org/v1/gonum/blas"
+	"gonum.org/v1/gonum/blas/blas64"
+)
+
+// draw fills the posterior: each draw takes the part that its place in the
+// cumulative weights falls on, that part's mean, and a stored draw of its
+// error.
+func (e *Estimator) draw(en *entry) {
+	nt := len(e.targets)
+	p := &e.posterior
+	clear(p.Mean)
+	cum, i := e.parts[0].weight, 0
+	current, solved := -1, -1
+	var st strength
+	for d := range Draws {
+		u := (float64(d) + 0.5) / Draws
+		for u > cum && i < len(e.parts)-1 {
+			i++
+			cum += e.parts[i].weight
+		}
+		pt := e.parts[i]
+		s := en.states[pt.state]
+		if i != current {
+			if solved != pt.state {
+				solved = pt.state
+				e.addGain(en, s)
+				e.solve(en, s)
+				blas64.Gemv(blas.NoTrans, 1, mat(nt, en.n, s.gain), vec(e.y), 0, vec(e.plain))
+			}
+			st = e.shape(en, s, pt)
+			current = i
+		}
+		row := p.Draws[d*nt : (d+1)*nt]
+		z := e.draws(s)[e.order[d]*nt : (e.order[d]+1)*nt]
+		excess := 0.0
+		switch {
+		case pt.class < 0 || pt.class == faultClass: // nothing depends on the strength
+		case st.now > certain*st.spread: // positive without being held so
+			excess = st.spread * e.scores[d]
+		default:
+			excess = positiveNormal(st.now, st.spread, e.levels[d]) - st.now
+		}
+		p.Kinds[d] = kindOf(pt.class)
+		p.Over[d] = Outflow{}
+		if p.Kinds[d] == OutflowPattern {
+			p.Over[d] = e.outflows.templates[pt.pattern].outflow(st.now+excess, pt.weight)
+		}
+		base, slope, mean := e.base[:nt], e.slope[:nt], p.Mean[:nt]
+		for t := range row {
+			v := base[t] + float64(excess*slope[t]) + z[t]
+			row[t] = v
+			mean[t] += v
+		}
+	}
+	for t := range p.Mean {
+		p.Mean[t] /= Draws
+	}
+}
+
+// certain: a strength so many deviations above zero is positive in all but one
+// of 30,000 cases.
+const certain = 4
+
+// shape fills base (posterior mean headwind) and slope (what one more m/s of
+// the pattern's strength adds) for a part, and gives that strength. w and plain
+// are those of the part's state.
+func (e *Estimator) shape(en *entry, s *state, pt part) strength {
+	nt := len(e.targets)
+	if pt.class < 0 {
+		copy(e.base, e.plain)
+		clear(e.slope)
+		return strength{}
+	}
+	var b [dims]float64
+	for d := range dims {
+		e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
+		b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
+	}
+	st := e.strengthOf(s, pt.class, pt.pattern, b)
+	line := e.line(en, s, pt.class, pt.pattern)
+	l0, l1, l2, innovation := line[:nt], line[nt:2*nt], line[2*nt:3*nt], line[3*nt:4*nt]
+	base, slope, plain := e.base[:nt], e.slope[:nt], e.plain[:nt]
+	for t, u := range innovation {
+		base[t] = plain[t] + float64(st.mean[0]*l0[t]) + float64(st.mean[1]*l1[t]) + float64(st.mean[2]*l2[t])
+		slope[t] = float64(st.open*u) + float64(st.share[0]*l0[t]) + float64(st.share[1]*l1[t]) + float64(st.share[2]*l2[t])
+	}
+	return st
+}
