@@ -9,22 +9,36 @@ func columns(out, a, w []float64) {
 	if len(a) != len(w)*len(out) {
 		panic("windfield: columns of another matrix")
 	}
-	done := columnsFast(out, a, w)
-	slowColumns(out, a, w, done)
+	if !columnsFast(out, a, w) {
+		slowColumns(out, a, w)
+	}
 }
 
-// slowColumns does the columns from first on.
-func slowColumns(out, a, w []float64, first int) {
-	if first == len(out) {
-		return
-	}
-	rest := out[first:]
-	clear(rest)
+func slowColumns(out, a, w []float64) {
+	clear(out)
 	for i, x := range w {
-		row := a[i*len(out)+first : (i+1)*len(out)]
-		for j := range rest {
-			rest[j] += float64(row[j] * x)
+		row := a[i*len(out) : (i+1)*len(out)]
+		for j := range out {
+			out[j] += float64(row[j] * x)
 		}
+	}
+}
+
+// product fills out, [rows][cols], with the matrix product of a, [rows][inner],
+// and b, [inner][cols].
+func product(out, a, b []float64, rows int) {
+	cols, inner := len(out)/rows, len(a)/rows
+	for r := range rows {
+		columns(out[r*cols:(r+1)*cols], b, a[r*inner:(r+1)*inner])
+	}
+}
+
+// addProducts adds to each of out the product of what stands at its place in a
+// and b.
+func addProducts(out, a, b []float64) {
+	a, b = a[:len(out)], b[:len(out)]
+	for j := range out {
+		out[j] += float64(a[j] * b[j])
 	}
 }
 

@@ -8,13 +8,19 @@ import "golang.org/x/sys/cpu"
 //go:noescape
 func columnsAVX2(out *float64, n int, a *float64, stride int, w *float64, rows int)
 
-// columnsFast does the first columns where the processor can do several at once,
-// and tells how many.
-func columnsFast(out, a, w []float64) int {
-	n := len(out) &^ 3
-	if n == 0 || len(w) == 0 || !cpu.X86.HasAVX2 {
-		return 0
+// columnsFast tells whether the processor can do several columns at once, and has
+// done them: whole vectors, the last of which may begin within the one before.
+func columnsFast(out, a, w []float64) bool {
+	n := len(out)
+	if n < vector || len(w) == 0 || !cpu.X86.HasAVX2 {
+		return false
 	}
-	columnsAVX2(&out[0], n, &a[0], len(out), &w[0], len(w))
-	return n
+	columnsAVX2(&out[0], n, &a[0], n, &w[0], len(w))
+	if n%vector != 0 {
+		columnsAVX2(&out[n-vector], vector, &a[n-vector], n, &w[0], len(w))
+	}
+	return true
 }
+
+// vector is how many numbers one register holds.
+const vector = 4

@@ -3,4 +3,4 @@
 package windfield
 
 // columnsFast is for processors whose vectors are not used.
-func columnsFast(_, _, _ []float64) int { return 0 }
+func columnsFast(_, _, _ []float64) bool { return false }

@@ -28,7 +28,7 @@ func TestColumns(t *testing.T) {
 		for cols := range 70 {
 			a, w := randomColumns(rows, cols)
 			want := make([]float64, cols)
-			slowColumns(want, a, w, 0)
+			slowColumns(want, a, w)
 			space := slices.Repeat([]float64{7}, cols+8)
 			columns(space[4:cols+4:cols+4], a, w)
 			if !slices.Equal(space[4:cols+4], want) {
@@ -50,7 +50,7 @@ func BenchmarkColumns(b *testing.B) {
 		across, out := transposed(a, rows, cols), make([]float64, cols)
 		for name, sum := range map[string]func(){
 			"columns":          func() { columns(out, a, w) },
-			"plain":            func() { slowColumns(out, a, w, 0) },
+			"plain":            func() { slowColumns(out, a, w) },
 			"gonum-transposed": func() { blas64.Gemv(blas.Trans, 1, mat(rows, cols, a), vec(w), 0, vec(out)) },
 			"gonum":            func() { blas64.Gemv(blas.NoTrans, 1, mat(cols, rows, across), vec(w), 0, vec(out)) },
 		} {

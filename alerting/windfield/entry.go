@@ -153,9 +153,13 @@ func (e *Estimator) addGain(en *entry, s *state) {
 		}
 	}
 	s.gain = make([]float64, nt*n)
-	blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(nt, n, cross), mat(n, n, s.inverse), 0, mat(nt, n, s.gain))
+	product(s.gain, cross, s.inverse, nt)
 	cov := slices.Clone(known.targets)
-	blas64.Gemm(blas.NoTrans, blas.Trans, -1, mat(nt, n, s.gain), mat(nt, n, cross), 1, mat(nt, nt, cov))
+	explained := make([]float64, nt*nt)
+	product(explained, s.gain, transposed(cross, nt, n), nt)
+	for i, v := range explained {
+		cov[i] -= v
+	}
 	// Jitter: the posterior covariance is singular to rounding where a target
 	// stands beside a mast.
 	jitter := 1e-6 + 1e-6*float64(f.Deviation*f.Deviation)
@@ -178,10 +182,11 @@ func (e *Estimator) draws(s *state) []float64 {
 	if s.noise == nil {
 		nt := len(e.targets)
 		s.noise = make([]float64, Draws*nt)
-		copy(s.noise, e.normals)
-		tri := blas64.Triangular{Uplo: blas.Lower, Diag: blas.NonUnit, N: nt, Data: s.factor, Stride: nt}
-		// noise = normals . factor^T
-		blas64.Trmm(blas.Right, blas.Trans, 1, tri, mat(Draws, nt, s.noise))
+		across := transposed(s.factor, nt, nt)
+		for i := range nt { // below its diagonal it is no part of the factor
+			clear(across[i*nt : i*nt+i])
+		}
+		product(s.noise, e.normals, across, Draws)
 	}
 	return s.noise
 }

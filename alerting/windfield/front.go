@@ -3,9 +3,6 @@ package windfield
 import (
 	"math"
 	"slices"
-
-	"gonum.org/v1/gonum/blas"
-	"gonum.org/v1/gonum/blas/blas64"
 )
 
 // frontBank is every gust front that is tried: straight lines of a few
@@ -171,29 +168,42 @@ func (b *frontBank) project(en *entry, w, out []float64) {
 // one number a mast and block.
 func (b *frontBank) gram(en *entry, s *state, m []float64) {
 	nb := en.n / 2
-	axes := make([]float64, nb*3*nb) // [i][along, across, left][j]
-	product := make([]float64, 2*len(b.fronts)*3*nb)
+	axes := make([]float64, 3*nb*nb)
+	var sums [6][]float64
+	for i := range sums {
+		sums[i] = make([]float64, len(b.fronts))
+	}
+	space := make([]float64, len(b.fronts))
 	b.headings(func(f front, first, last int) {
 		turn(en, s, f, axes)
-		// Shares and rates lie in turn in the same rows.
-		rows := mat(2*(last-first), nb, en.fronts[2*first*nb:2*last*nb])
-		out := mat(rows.Rows, 3*nb, product[:rows.Rows*3*nb])
-		blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, rows, mat(nb, 3*nb, axes), 0, out)
-		// dot is row . axes . row', the axis being 0 along, 1 across, 2 left.
-		dot := func(row, axis, with int) float64 {
-			return blas64.Dot(vec(out.Data[(row*3+axis)*nb:(row*3+axis+1)*nb]), vec(rows.Data[with*nb:(with+1)*nb]))
-		}
-		for j := range last - first {
-			share, rate := 2*j, 2*j+1
-			g := m[(first+j)*6 : (first+j)*6+6]
-			g[0], g[1], g[2] = dot(share, 0, share), dot(share, 1, share), dot(share, 0, rate)
-			g[3], g[4], g[5] = dot(share, 2, share), dot(rate, 1, share), dot(rate, 0, rate)
+		run := en.frontColumns[2*first*nb : 2*last*nb]
+		shares, rates := run[:len(run)/2], run[len(run)/2:]
+		count := last - first
+		times := space[:count]
+		for i := range nb {
+			along, across, left := axes[i*nb:(i+1)*nb], axes[(nb+i)*nb:(nb+i+1)*nb], axes[(2*nb+i)*nb:(2*nb+i+1)*nb]
+			share, rate := shares[i*count:(i+1)*count], rates[i*count:(i+1)*count]
+			add := func(k int, rows, axis, with []float64) {
+				columns(times, rows, axis)
+				addProducts(sums[k][first:last], times, with)
+			}
+			add(0, shares, along, share)
+			addProducts(sums[2][first:last], times, rate)
+			add(1, shares, across, share)
+			add(3, shares, left, share)
+			add(4, rates, across, share)
+			add(5, rates, along, rate)
 		}
 	})
+	for k, sum := range sums {
+		for j, v := range sum {
+			m[j*6+k] = v
+		}
+	}
 }
 
 // turn fills axes with K^-1 between the components along and along a heading,
-// along and left of it, and left and left.
+// along and left of it, and left and left: [along, across, left][j][i].
 func turn(en *entry, s *state, f front, axes []float64) {
 	nb := en.n / 2
 	ee, eno, nn := float64(f.east*f.east), float64(f.east*f.north), float64(f.north*f.north)
@@ -201,10 +211,10 @@ func turn(en *entry, s *state, f front, axes []float64) {
 		for j := range nb {
 			k00, k01 := s.inverse[2*i*en.n+2*j], s.inverse[2*i*en.n+2*j+1]
 			k10, k11 := s.inverse[(2*i+1)*en.n+2*j], s.inverse[(2*i+1)*en.n+2*j+1]
-			o := i*3*nb + j
+			o := j*nb + i
 			axes[o] = float64(ee*k00) + float64(eno*(k01+k10)) + float64(nn*k11)
-			axes[o+nb] = float64(ee*k01) - float64(nn*k10) + float64(eno*(k11-k00))
-			axes[o+2*nb] = float64(nn*k00) - float64(eno*(k01+k10)) + float64(ee*k11)
+			axes[nb*nb+o] = float64(ee*k01) - float64(nn*k10) + float64(eno*(k11-k00))
+			axes[2*nb*nb+o] = float64(nn*k00) - float64(eno*(k01+k10)) + float64(ee*k11)
 		}
 	}
 }

@@ -2,9 +2,6 @@ package windfield
 
 import (
 	"math"
-
-	"gonum.org/v1/gonum/blas"
-	"gonum.org/v1/gonum/blas/blas64"
 )
 
 // outflowBank is every outflow that is tried: centres on a square grid around
@@ -132,15 +129,19 @@ func (b *outflowBank) project(en *entry, w, out []float64) {
 }
 
 func (b *outflowBank) gram(en *entry, s *state, m []float64) {
-	n, w := len(b.templates), 2*len(en.live)
-	tmp := make([]float64, n*w)
+	n, width := len(b.templates), 2*len(en.live)
+	times, sum, weights := make([]float64, n), make([]float64, n), make([]float64, width)
 	k := 0
 	for r := range blocks {
 		for c := r; c < blocks; c++ {
-			sub := blas64.General{Rows: w, Cols: w, Stride: en.n, Data: s.inverse[r*w*en.n+c*w:]}
-			blas64.Gemm(blas.NoTrans, blas.NoTrans, 1, mat(n, w, en.outflows), sub, 0, mat(n, w, tmp))
-			for j := range n {
-				m[j*6+k] = blas64.Dot(vec(tmp[j*w:(j+1)*w]), vec(en.outflows[j*w:(j+1)*w]))
+			clear(sum)
+			for i := range width {
+				copy(weights, s.inverse[(c*width+i)*en.n+r*width:])
+				columns(times, en.outflowColumns, weights)
+				addProducts(sum, times, en.outflowColumns[i*n:(i+1)*n])
+			}
+			for j, v := range sum {
+				m[j*6+k] = v
 			}
 			k++
 		}
