@@ -14,6 +14,7 @@ import (
 	"path"
 	"strconv"
 	"strings"
+	"sync"
 
 	"sockline/alerting"
 	"sockline/alerting/page/access"
@@ -35,8 +36,9 @@ const contentSecurityPolicy = "default-src 'none'; script-src 'self'; style-src 
 
 // asset is one file that a browser gets beside the pages.
 type asset struct {
-	contentType   string
-	plain, packed []byte
+	contentType string
+	plain       []byte
+	packed      func() ([]byte, error) // by gzip, when it is first asked for
 }
 
 // glass is everything a browser gets: templates, and the files they name.
@@ -61,7 +63,7 @@ func assetType(name string) (string, error) {
 	return "", fmt.Errorf("the file %s of the page is of no kind that is served", name)
 }
 
-// newGlass reads and packs the files once: a request costs a lookup.
+// newGlass reads the files once: a request costs a lookup.
 func newGlass() (*glass, error) {
 	g := &glass{pages: make(map[string]*template.Template), assets: make(map[string]asset)}
 	entries, err := fs.ReadDir(assetFiles, "assets")
@@ -78,18 +80,7 @@ func newGlass() (*glass, error) {
 		if err != nil {
 			return nil, err
 		}
-		var packed bytes.Buffer
-		w, err := gzip.NewWriterLevel(&packed, gzip.BestCompression)
-		if err != nil {
-			return nil, fmt.Errorf("pack the files of the page: %w", err)
-		}
-		if _, err := w.Write(plain); err != nil {
-			return nil, fmt.Errorf("pack the files of the page: %w", err)
-		}
-		if err := w.Close(); err != nil {
-			return nil, fmt.Errorf("pack the files of the page: %w", err)
-		}
-		g.assets[e.Name()] = asset{kind, plain, packed.Bytes()}
+		g.assets[e.Name()] = asset{kind, plain, sync.OnceValues(func() ([]byte, error) { return pack(plain) })}
 		fmt.Fprintf(sum, "%s %d\n", e.Name(), len(plain))
 		sum.Write(plain)
 	}
@@ -102,6 +93,21 @@ func newGlass() (*glass, error) {
 		g.pages[name] = t
 	}
 	return g, nil
+}
+
+func pack(plain []byte) ([]byte, error) {
+	var packed bytes.Buffer
+	w, err := gzip.NewWriterLevel(&packed, gzip.BestCompression)
+	if err != nil {
+		return nil, fmt.Errorf("pack the files of the page: %w", err)
+	}
+	if _, err := w.Write(plain); err != nil {
+		return nil, fmt.Errorf("pack the files of the page: %w", err)
+	}
+	if err := w.Close(); err != nil {
+		return nil, fmt.Errorf("pack the files of the page: %w", err)
+	}
+	return packed.Bytes(), nil
 }
 
 // frontRoutes is every address that a person visits, and what those name.
@@ -130,8 +136,10 @@ func (p *Page) frontAsset(w http.ResponseWriter, r *http.Request) {
 	h.Set("Vary", "Accept-Encoding")
 	body := a.plain
 	if strings.Contains(r.Header.Get("Accept-Encoding"), "gzip") {
-		h.Set("Content-Encoding", "gzip")
-		body = a.packed
+		if packed, err := a.packed(); err == nil { // else as it is: longer, and no less right
+			h.Set("Content-Encoding", "gzip")
+			body = packed
+		}
 	}
 	h.Set("Content-Length", strconv.Itoa(len(body)))
 	if r.Method == http.MethodHead {

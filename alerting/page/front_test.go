@@ -274,7 +274,11 @@ func TestWeight(t *testing.T) {
 	p, _ := serve(t, sample(0), nil)
 	total := 0
 	for _, a := range p.glass.assets {
-		total += len(a.packed)
+		packed, err := a.packed()
+		if err != nil {
+			t.Fatal(err)
+		}
+		total += len(packed)
 	}
 	for _, address := range views {
 		total += len(text(t, get(p, address)))
