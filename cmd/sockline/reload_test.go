@@ -274,17 +274,11 @@ func TestReplayOverAChangedStart(t *testing.T) {
 func TestStartAfterAMastWasMoved(t *testing.T) {
 	path := writeFile(t, "site.toml", string(loadSkerryMoor(t).Source))
 	before := mustLoad(t, path)
-	capture := filepath.Join(t.TempDir(), "capture.jsonl")
-	succeed(t, "simulate", "--config", path, "--scene", writeFile(t, "test.scene", strings.Replace(steady, "6 h", "90 s", 1)), "--out", capture)
-	messages, end := readCapture(t, capture)
+	messages, end := messagesOf(t, path, strings.Replace(steady, "6 h", "90 s", 1))
 	dir := t.TempDir()
 	r := newRecorder(t, before, dir)
 	r.writer.Record(history.Entry{Kind: history.KindConfiguration, At: messages[0].Received.FloorSecond(), Payload: before.Source})
-	for _, m := range messages {
-		r.receive(m)
-	}
-	r.closeDue(end)
-	r.close()
+	r.play(messages, end)
 	amend(t, path, "54.003174, -19.993126", "54.003184, -19.993126")
 	after := mustLoad(t, path)
 

@@ -15,7 +15,6 @@ import (
 	"sockline/alerting/page"
 	"sockline/alerting/review"
 	"sockline/config"
-	"sockline/sensors"
 )
 
 // twice is an outflow of two strengths within a quarter of an hour, the second
@@ -31,52 +30,6 @@ eddies     0.4 m/s length 1000 m time 300 s
 outflow    at 1000 m before 07 strength 26 kt radius 900 m starts 60 s grows 1 min holds 1 min fades 1 min
 outflow    at 800 m before 07 strength 10 kt radius 900 m starts 390 s grows 1 min holds 90 s fades 1 min
 `
-
-// kept is a history with all that a daemon leaves of a scene: what is in force,
-// the readings, the issues, and what was judged.
-func kept(tb testing.TB, configuration, scene string) (dir string) {
-	tb.Helper()
-	cfg, err := config.Load(configuration)
-	if err != nil {
-		tb.Fatal(err)
-	}
-	capture := filepath.Join(tb.TempDir(), "capture.jsonl")
-	succeed(tb, "simulate", "--config", configuration, "--scene", writeFile(tb, "test.scene", scene), "--out", capture)
-	messages, end := readCapture(tb, capture)
-	dir = tb.TempDir()
-	r := newRecorder(tb, cfg, dir)
-	first := messages[0].Received
-	r.writer.Record(history.Entry{Kind: history.KindSoftware, At: first, Payload: []byte(softwareText())})
-	r.writer.Record(history.Entry{Kind: history.KindConfiguration, At: first, Payload: cfg.Source})
-	r.writer.Record(history.Entry{Kind: history.KindStart, At: first})
-	w := judged.NewWriter(dir, judgedContext(cfg, r.engine), func(err error) { tb.Error(err) })
-	j := &judgements{writer: w}
-	for _, m := range messages {
-		r.closeJudged(m.Received, j)
-		if _, _, err := r.engine.Receive(m); err != nil {
-			tb.Fatal(err)
-		}
-	}
-	r.closeJudged(end, j)
-	if err := w.Close(tb.Context()); err != nil {
-		tb.Fatal(err)
-	}
-	r.close()
-	return dir
-}
-
-// closeJudged is closeDue with what was judged.
-func (r *recorder) closeJudged(stamp sensors.Instant, j *judgements) {
-	for {
-		t, due := r.engine.Due(stamp)
-		if !due {
-			return
-		}
-		result := r.engine.Step(t)
-		j.keep(t, r.engine, result)
-		r.submit(t, result)
-	}
-}
 
 func whatIf(t *testing.T, args ...string) (w review.WhatIf) {
 	t.Helper()

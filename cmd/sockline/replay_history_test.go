@@ -1,51 +1,12 @@
 package main
 
 import (
-	"os"
-	"path/filepath"
 	"strings"
 	"testing"
 	"time"
 
-	"github.com/rs/zerolog"
-
-	"sockline/alerting/engine"
-	"sockline/alerting/history"
-	"sockline/alerting/lifecycle"
-	"sockline/alerting/wording"
-	"sockline/config"
 	"sockline/sensors"
 )
-
-// small is three masts along one runway: little to compute, so that hours can
-// be replayed. Skerry Moor's geometry, with the other masts left out.
-func small(tb testing.TB) string {
-	tb.Helper()
-	return writeFile(tb, "small.toml", only(tb, "touch07", "touch25", "final07"))
-}
-
-// only is Skerry Moor's configuration with these masts.
-func only(tb testing.TB, masts ...string) string {
-	tb.Helper()
-	source, err := os.ReadFile(skerrymoor)
-	if err != nil {
-		tb.Fatal(err)
-	}
-	parts := strings.Split(string(source), "[[station]]")
-	kept := parts[:1]
-	for _, part := range parts[1:] {
-		station, rest, _ := strings.Cut(part, "[alerts]")
-		for _, id := range masts {
-			if strings.Contains(station, `"`+id+`"`) {
-				kept = append(kept, station)
-			}
-		}
-		if rest != "" {
-			kept[len(kept)-1] += "[alerts]" + rest
-		}
-	}
-	return strings.Join(kept, "[[station]]")
-}
 
 // hours has an alert open two hours before another one: just where the silent
 // part of a replay of the second begins. The broker is lost in between, which
@@ -63,119 +24,6 @@ outflow    at 800 m before 07 strength 26 kt radius 900 m starts 127 min grows 1
 mast final07 dies from 9 min until 12 min
 broker     lost from 14 min to 122 min
 `
-
-// recorder does what the daemon does with the history: each step with its
-// readings, those that came late, and the issues.
-type recorder struct {
-	tb      testing.TB
-	cfg     *config.Config
-	engine  *engine.Engine
-	store   *history.Store
-	writer  *history.Writer
-	ids     []string
-	held    []lifecycle.Transition // of a start, to go out with the first step
-	printed strings.Builder        // every issue
-}
-
-func newRecorder(tb testing.TB, cfg *config.Config, dir string) *recorder {
-	tb.Helper()
-	r := &recorder{tb: tb, cfg: cfg}
-	var err error
-	if r.engine, err = engine.New(engineSettings(cfg, true)); err != nil {
-		tb.Fatal(err)
-	}
-	if r.store, err = history.Open(dir, history.Options{}); err != nil {
-		tb.Fatal(err)
-	}
-	if r.writer, err = r.store.Writer(history.WriterOptions{}); err != nil {
-		tb.Fatal(err)
-	}
-	for _, s := range cfg.Stations {
-		r.ids = append(r.ids, s.ID)
-	}
-	return r
-}
-
-// receive takes a message, after the steps that are due before it.
-func (r *recorder) receive(m sensors.Message) {
-	r.closeDue(m.Received)
-	if _, _, err := r.engine.Receive(m); err != nil {
-		r.tb.Fatal(err)
-	}
-}
-
-func (r *recorder) closeDue(stamp sensors.Instant) {
-	for t, due := r.engine.Due(stamp); due; t, due = r.engine.Due(stamp) {
-		r.submit(t, r.engine.Step(t))
-	}
-}
-
-// submit hands a step to the history.
-func (r *recorder) submit(t sensors.Instant, result *engine.Result) {
-	b := history.Batch{Step: t, Stations: r.ids, Readings: result.Readings}
-	for _, table := range result.Tables {
-		b.Entries = append(b.Entries, history.Entry{Kind: history.KindTable, At: table.At, Payload: table.Payload})
-	}
-	for _, late := range result.Refused {
-		b.Late = append(b.Late, history.LateReading{Reading: late.Reading, Reason: string(late.Reason)})
-	}
-	transitions := append(r.held, result.Transitions...)
-	r.held = nil
-	for _, tr := range transitions {
-		object := wording.Of(tr, wordingContext(r.cfg, true)).WithRecorded(true).JSON()
-		r.printed.Write(append(object, '\n'))
-		b.Issues = append(b.Issues, history.Issue{Alert: tr.Alert, Object: object})
-	}
-	r.writer.Submit(b)
-}
-
-func (r *recorder) close() {
-	if err := r.writer.Close(r.tb.Context()); err != nil {
-		r.tb.Fatal(err)
-	}
-	if err := r.store.Close(); err != nil {
-		r.tb.Fatal(err)
-	}
-}
-
-// restart is what a new daemon does at a moment, in the place of one that has
-// ended.
-func (r *recorder) restart(dir string, now sensors.Instant) {
-	r.tb.Helper()
-	r.close()
-	next := newRecorder(r.tb, r.cfg, dir)
-	l, err := newLoop(r.cfg, true, zerolog.Nop())
-	if err != nil {
-		r.tb.Fatal(err)
-	}
-	if err := l.restore(next.store, now); err != nil {
-		r.tb.Fatal(err)
-	}
-	next.engine, next.held = l.engine, l.held
-	next.writer.Record(history.Entry{Kind: history.KindStart, At: now})
-	r.engine, r.store, r.writer, r.held = next.engine, next.store, next.writer, next.held
-}
-
-// recorded runs a scene into a new history; it gives the directory and every
-// issue.
-func recorded(tb testing.TB, configuration, scene string) (dir, printed string) {
-	tb.Helper()
-	cfg, err := config.Load(configuration)
-	if err != nil {
-		tb.Fatal(err)
-	}
-	capture := filepath.Join(tb.TempDir(), "capture.jsonl")
-	succeed(tb, "simulate", "--config", configuration, "--scene", writeFile(tb, "test.scene", scene), "--out", capture)
-	messages, end := readCapture(tb, capture)
-	dir = tb.TempDir()
-	r := newRecorder(tb, cfg, dir)
-	for _, m := range messages {
-		r.receive(m)
-	}
-	r.closeDue(end)
-	r.close()
-	return dir, r.printed.String()
-}
 
 // TestReplayHistory holds that a history gives again, byte for byte, what was
 // issued when it was written: as a whole, and from moments in its midst, one
@@ -232,19 +80,19 @@ turbulence C
 outflow    at 2000 m before 07 strength 26 kt radius 900 m starts 60 s grows 20 s holds 70 s fades 20 s
 outflow    at 2000 m before 07 strength 26 kt radius 900 m starts 860 s grows 20 s holds 50 s fades 20 s
 `
-	capture := simulated(t, scene)
-	messages, end := readCapture(t, capture)
+	messages, end := messagesOf(t, skerrymoor, scene)
 	cfg := loadSkerryMoor(t)
 	start := sensors.At(time.Date(2026, 7, 1, 14, 0, 0, 0, time.UTC))
 	for _, row := range []struct {
 		name     string
 		down, up time.Duration // since the start of the scene
+		end      time.Duration // the same way: of the first alert, or of both
 		because  string        // of a closing that must be there
 	}{
-		{"within a second", 120200 * time.Millisecond, 120700 * time.Millisecond, "below-level"},
-		{"3 s", 120200 * time.Millisecond, 123400 * time.Millisecond, "below-level"},
-		{"20 s", 120200 * time.Millisecond, 140700 * time.Millisecond, "below-level"},
-		{"11 min", 120200 * time.Millisecond, 790 * time.Second, "expired-while-down"},
+		{"within a second", 120200 * time.Millisecond, 120700 * time.Millisecond, 5 * time.Minute, "below-level"},
+		{"3 s", 120200 * time.Millisecond, 123400 * time.Millisecond, 5 * time.Minute, "below-level"},
+		{"20 s", 120200 * time.Millisecond, 140700 * time.Millisecond, 16 * time.Minute, "below-level"},
+		{"11 min", 120200 * time.Millisecond, 790 * time.Second, 16 * time.Minute, "expired-while-down"},
 	} {
 		t.Run(row.name, func(t *testing.T) {
 			dir := t.TempDir()
@@ -255,12 +103,11 @@ outflow    at 2000 m before 07 strength 26 kt radius 900 m starts 860 s grows 20
 					r.restart(dir, up)
 					restarted = true
 				}
-				if m.Received < down || restarted {
+				if (m.Received < down || restarted) && m.Received < start.Add(row.end) {
 					r.receive(m)
 				}
 			}
-			r.closeDue(end)
-			r.close()
+			r.play(nil, min(end, start.Add(row.end)))
 			printed := r.printed.String()
 			if !strings.Contains(printed, `"closed_because":"`+row.because+`"`) {
 				t.Errorf("nothing closed as %s: the test does not show what it should", row.because)

@@ -58,8 +58,7 @@ func recordedSiting(tb testing.TB, cfg *config.Config, messages []sensors.Messag
 		}
 		r.receive(m)
 	}
-	r.closeDue(end)
-	r.close()
+	r.play(nil, end)
 	return dir, r.printed.String()
 }
 
@@ -77,9 +76,7 @@ func TestReplayHistoryWithSiting(t *testing.T) {
 		t.Fatal("siting is not removed")
 	}
 	off := writeFile(t, "off.toml", source)
-	capture := t.TempDir() + "/capture.jsonl"
-	succeed(t, "simulate", "--config", on, "--scene", writeFile(t, "test.scene", overMidnight), "--out", capture)
-	messages, end := readCapture(t, capture)
+	messages, end := messagesOf(t, on, overMidnight)
 	midnight := time.Date(2026, 7, 11, 0, 0, 0, 0, time.UTC)
 	dir, printed := recordedSiting(t, cfg, messages, end, 0)
 
