@@ -4,7 +4,7 @@
 // each threshold and each mast. Next: hazard, by way of engine.
 //
 // Each mast is watched by itself for a sudden change (onset.go). Changes that
-// agree are put together into a track (track.go), whose line is what the times
+// agree are put together (group.go) into a track (track.go), whose line is what the times
 // of the changes, their direction, and the masts that have not been reached
 // make likely (line.go); a plane fit by least squares (plane.go) tests whether
 // one line explains the times at all. A slow turn of the wind, which has no

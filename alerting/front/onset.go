@@ -31,7 +31,7 @@ const (
 // b = h + 1.166 (D. Siegmund, Sequential Analysis, 1985): 938 ticks in one
 // direction, an hour and a half. leastShift makes k larger: in air of class B
 // (IEC 61400-1) a mast goes off by chance, in all eight directions together, 2
-// times in 60 hours at 3 m/s, 8 times at 10 and 19 times at 15 m/s
+// times in 60 hours at 3 m/s, 8 times at 10 and 20 times at 15 m/s
 // (TestChanceAlarms). No front is told of one mast alone.
 const (
 	cusumLeastK = 0.5
@@ -43,9 +43,11 @@ const (
 
 // Of an onset that has been found.
 const (
-	settles   = 150.0 // s after the middle of the change its fit is renewed
-	refractor = 240.0 // s after an alarm of which nothing counts toward another at the mast
-	judged    = 60.0  // s after the alarm a change below leastChange is dropped
+	settles = 150.0 // s after the middle of the change its fit is renewed
+	// renewed is how many ticks behind a change the new wind needs to be measured
+	// against; until then nothing counts toward another alarm at the mast.
+	renewed = 12
+	judged  = 60.0 // s after the alarm a change below leastChange is dropped
 	// leastChange is what the wind must change at a mast to count, m/s, and
 	// leastRatio the same in standard deviations of the ticks before.
 	leastChange = 3.0
@@ -74,6 +76,12 @@ type onset struct {
 	before, after quantity.Vector
 	noise         float64 // long-run deviation of a tick, m/s
 	settled       bool
+	since         sensors.Instant // when the change before it at the mast was over; 0: none was
+}
+
+// over is when a change has come to its end.
+func (o *onset) over() sensors.Instant {
+	return o.alarm + sensors.Instant((o.at+o.lasts/2)*1000)
 }
 
 // from is the middle of the change in s after an instant.
@@ -86,7 +94,9 @@ func (o *onset) change() quantity.Vector {
 // watch is the memory of one mast.
 type watch struct {
 	ticks [ring]tick
-	alarm sensors.Instant // the last one, 0 if none counts any more
+	// over is when the last change that was found ended: what came before is
+	// another wind. 0: none was.
+	over sensors.Instant
 }
 
 // clockwork is how time is cut into ticks.
@@ -135,12 +145,18 @@ func (w *watch) take(c clockwork, t sensors.Instant, m *averages.Mast) {
 }
 
 // base is the mean of the ticks some minutes before t, and the variance of one
-// component about it; false if fewer than half of them are there.
+// component about it; false if fewer than half of them are there. Behind a change
+// only what came after it counts.
 func (w *watch) base(c clockwork, t sensors.Instant) (mean quantity.Vector, spread float64, ok bool) {
 	first, n := c.count(baseFrom), c.count(baseSpan)
+	least := (n + 1) / 2
 	got := 0
 	squares := 0.0
 	for i := first; i < first+n; i++ {
+		if w.over != 0 && t-sensors.Instant(i+1)*c.width < w.over {
+			least = min(least, renewed)
+			break
+		}
 		k := w.at(c, t, i)
 		if k == nil {
 			continue
@@ -150,7 +166,7 @@ func (w *watch) base(c clockwork, t sensors.Instant) (mean quantity.Vector, spre
 		mean.North += k.v.North
 		squares += float64(k.v.East*k.v.East) + float64(k.v.North*k.v.North)
 	}
-	if 2*got < n || got < 3 {
+	if got < max(least, 3) {
 		return quantity.Vector{}, 0, false
 	}
 	g := float64(got)
@@ -162,11 +178,11 @@ func (w *watch) base(c clockwork, t sensors.Instant) (mean quantity.Vector, spre
 
 // test is the sequential test at t, over all directions: whether it gives an
 // alarm, and after how many ticks before t its sum began. After an alarm it
-// begins anew once the new wind has become the mean that is measured against.
+// begins anew once there is enough of the new wind to be measured against.
 func (w *watch) test(c clockwork, t sensors.Instant) (began int, alarm bool) {
 	n := c.count(cusumSpan)
-	if w.alarm != 0 {
-		since := t.Sub(w.alarm).Seconds() - refractor
+	if w.over != 0 {
+		since := t.Sub(w.over).Seconds() - baseFrom
 		if since <= 0 {
 			return 0, false
 		}
@@ -215,7 +231,7 @@ func lengthOf(i int, w float64) float64 {
 func (f *fitter) settle(w *watch, c clockwork, t sensors.Instant, o *onset, first, last float64) {
 	width := float64(c.w)
 	now := t.Sub(o.alarm).Seconds()
-	f.gather(w, c, t, c.count(now-first+180))
+	f.gather(w, c, t, c.count(now-first+180), o.since)
 	f.variance = float64(o.noise * o.noise)
 	var sum, sumT, sumTT, sumL float64
 	var before, after quantity.Vector
@@ -273,10 +289,14 @@ type fitter struct {
 	e, en    float64 // their sums
 }
 
-// gather copies the last ticks of a mast, newest first.
-func (f *fitter) gather(w *watch, c clockwork, t sensors.Instant, back int) {
+// gather copies the last ticks of a mast, newest first, that begin at since or
+// later.
+func (f *fitter) gather(w *watch, c clockwork, t sensors.Instant, back int, since sensors.Instant) {
 	f.n, f.squares, f.e, f.en = 0, 0, 0, 0
 	for i := range min(back, ring-1) {
+		if t-sensors.Instant(i+1)*c.width < since {
+			break
+		}
 		k := w.at(c, t, i)
 		if k == nil {
 			continue

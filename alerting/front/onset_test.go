@@ -110,7 +110,7 @@ func TestChanceAlarms(t *testing.T) {
 			k = w.ticks[clock.slot(at)].k
 			if _, alarm := w.test(clock, at); alarm {
 				alarms++
-				w.alarm = at
+				w.over = at
 			}
 		}
 		rate := float64(alarms) / hours

@@ -128,6 +128,7 @@ const reportSeed = 7_000_000
 type study struct {
 	wanted, said, within int
 	possible             int // arrivals before which two masts have been passed for twenty seconds, a minute ahead
+	three, saidThree     int // the same of three masts: these can be told; and of how many something was said
 	errors               []float64
 	speed, heading       []float64 // errors two minutes after the passage: part, degrees
 }
@@ -165,19 +166,25 @@ func (st *study) passage(t *testing.T, r *rig, seed uint64) {
 			}
 			st.wanted++
 			passed := 0
-			for _, before := range truth[len(r.places):] {
-				if before <= at-80 && before >= 240 {
+			for j, before := range truth[len(r.places):] {
+				if !r.masts[j].Aloft && before <= at-80 && before >= 240 {
 					passed++
 				}
 			}
 			if passed >= 2 {
 				st.possible++
 			}
+			if passed >= 3 {
+				st.three++
+			}
 			if moving < 0 || fronts[moving].Arrivals[i].Arrived && i >= len(r.places) {
 				continue
 			}
 			a := &fronts[moving].Arrivals[i]
 			st.said++
+			if passed >= 3 {
+				st.saidThree++
+			}
 			st.errors = append(st.errors, math.Abs(a.At.Sub(s.Start).Seconds()-at))
 			if a.Earliest.Sub(s.Start).Seconds() <= at && at <= a.Latest.Sub(s.Start).Seconds() {
 				st.within++
@@ -206,11 +213,12 @@ func TestArrivals(t *testing.T) {
 		}
 		median := quantile(st.errors, 0.5)
 		share := float64(st.within) / float64(max(st.said, 1))
-		t.Logf("%s, %d episodes: said of %d of %d arrivals (%d with two masts passed by then), error median %.1f s, 90 %% %.1f s; the interval of 90 %% holds %.2f; speed off by %.0f %%, heading by %.1f degrees in the median",
-			name, n, st.said, st.wanted, st.possible, median, quantile(st.errors, 0.9), share, 100*quantile(st.speed, 0.5), quantile(st.heading, 0.5))
-		// One mast alone tells of no line.
-		if st.said < st.possible/2 {
-			t.Errorf("%s: a minute ahead %d of %d arrivals are told that could be", name, st.said, st.possible)
+		t.Logf("%s, %d episodes: said of %d of %d arrivals (%d with two masts passed by then; with three %d of %d), error median %.1f s, 90 %% %.1f s; the interval of 90 %% holds %.2f; speed off by %.0f %%, heading by %.1f degrees in the median",
+			name, n, st.said, st.wanted, st.possible, st.saidThree, st.three, median, quantile(st.errors, 0.9), share, 100*quantile(st.speed, 0.5), quantile(st.heading, 0.5))
+		// One mast alone tells of no line. The first masts of a network are reached
+		// before any line is known, which is the limit of what can be told.
+		if 10*st.saidThree < 7*st.three {
+			t.Errorf("%s: a minute ahead %d of %d arrivals are told that could be", name, st.saidThree, st.three)
 		}
 		if median > 20 {
 			t.Errorf("%s: the median error of the arrival is %.1f s", name, median)

@@ -61,13 +61,14 @@ func (t *Tracker) weigh(tr *track, now sensors.Instant) {
 }
 
 // opposed tells whether half of the masts of a track, or more, changed at the
-// time at which another mast changed the other way: air that flows apart, or
-// falls back, is no front.
+// time at which another mast changed the other way: air that flows apart is no
+// front. Where the front has gone by already, the wind behind it falling back is
+// no sign of that, nor is a gust of a fraction of its change anywhere.
 func (t *Tracker) opposed(tr *track) bool {
 	count := 0
 	for k := range tr.hits {
 		for i := range t.tracks {
-			if other := &t.tracks[i]; other != tr && other.against(&tr.hits[k]) {
+			if other := &t.tracks[i]; other != tr && other.against(&tr.hits[k], tr) {
 				count++
 				break
 			}
@@ -76,13 +77,25 @@ func (t *Tracker) opposed(tr *track) bool {
 	return 2*count >= len(tr.hits)
 }
 
-// against tells whether a track holds a change opposite to one at another
-// mast, at about its time.
-func (tr *track) against(o *onset) bool {
+// against tells whether a track holds a change opposite to one of by at another
+// mast, at about its time, that did not come behind by itself.
+func (tr *track) against(o *onset, by *track) bool {
 	for k := range tr.hits {
 		h := &tr.hits[k]
-		if h.mast != o.mast && math.Abs(h.from(o.alarm)-o.at) < opposedTime && angle(h.change(), o.change()) > opposedAngle {
-			return true
+		if h.mast != o.mast && math.Abs(h.from(o.alarm)-o.at) < opposedTime && angle(h.change(), o.change()) > opposedAngle && !by.passed(h) {
+			if there, here := h.change(), o.change(); there.Speed() >= opposedPart*here.Speed() {
+				return true
+			}
+		}
+	}
+	return false
+}
+
+// passed tells whether a track reached the mast of a slow change before it.
+func (tr *track) passed(h *onset) bool {
+	for k := range tr.hits {
+		if o := &tr.hits[k]; o.mast == h.mast {
+			return h.lasts > sharp/2 && o.from(h.alarm) < h.at
 		}
 	}
 	return false
