@@ -380,9 +380,9 @@ func (p *posterior) unreached(b *bank, line int, waiting []int, now float64) flo
 	c, h, s := line/(headings*speeds), line/speeds%headings, line%speeds
 	row := b.row(c, h)
 	like := 1.0
+	sd := math.Sqrt(p.spread[line] + lineRough*lineRough + spreadSeen*spreadSeen)
 	for _, place := range waiting {
 		due := p.t0[line] + row[place]/b.speed[s] + seenAfter
-		sd := math.Sqrt(p.spread[line] + lineRough*lineRough + spreadSeen*spreadSeen)
 		// The logistic curve stands for the normal one (within 0.01).
 		like *= missed + (1-missed)/(1+math.Exp(-1.702*(due-now)/sd))
 	}

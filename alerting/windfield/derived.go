@@ -220,7 +220,7 @@ func (e *Estimator) partnersOf(en *entry, s *state, first int) (found [partners]
 		pr.owner, pr.first = s, first
 		for d := range dims {
 			e.outflows.column(en, first, d, e.column[:en.n])
-			multiply(en, s, e.column[:en.n], pr.solved[:en.n])
+			multiply(s, e.column[:en.n], pr.solved[:en.n])
 			e.outflows.project(en, pr.solved[:en.n], pr.cross[d])
 		}
 	}
@@ -229,10 +229,12 @@ func (e *Estimator) partnersOf(en *entry, s *state, first int) (found [partners]
 	p1 := [6]float64(p.precision[first*6 : first*6+6])
 	mean1 := mul3(p1, [3]float64{b[first], b[n+first], b[2*n+first]})
 	at := e.outflows.templates[first]
+	least := max(nearestPartner, at.radius)
+	least2 := float64(least * least)
 	for j := range n {
 		t := &e.outflows.templates[j]
-		gap := math.Hypot(t.x-at.x, t.y-at.y)
-		if gap < max(nearestPartner, at.radius) || gap > farthestPartner {
+		gap2 := float64((t.x-at.x)*(t.x-at.x)) + float64((t.y-at.y)*(t.y-at.y))
+		if gap2 < least2 || gap2 > farthestPartner*farthestPartner {
 			continue
 		}
 		m, ok := e.second(p, p1, mean1, j)
@@ -255,7 +257,7 @@ func (e *Estimator) partnersOf(en *entry, s *state, first int) (found [partners]
 func (e *Estimator) second(p *patterns, p1 [6]float64, mean1 [3]float64, j int) (partner, bool) {
 	n := e.outflows.count()
 	b, cross := e.b[outflowClass], &e.pairing.cross
-	inv, _ := invert3([6]float64(p.precision[j*6 : j*6+6])) // C^-1 + M2
+	inv := [6]float64(p.inverse[j*6 : j*6+6]) // C^-1 + M2
 	var rest [3]float64
 	var x, xp [3][3]float64 // X and X P
 	for r := range dims {
@@ -272,12 +274,12 @@ func (e *Estimator) second(p *patterns, p1 [6]float64, mean1 [3]float64, j int) 
 			at++
 		}
 	}
-	p2, logDet := invert3(inv)
-	if math.IsNaN(logDet) {
+	p2, det := inverse3(inv)
+	if !(det > 0) { // the one as good as repeats the other
 		return partner{}, false
 	}
 	mean2 := mul3(p2, rest)
-	evidence, now1, now2 := -logDet/2, 0.0, 0.0
+	evidence, now1, now2 := 0.0, 0.0, 0.0
 	for r := range dims {
 		evidence += float64(rest[r]*mean2[r]) / 2
 		now2 += float64(e.outflows.q[r] * mean2[r])
@@ -291,5 +293,5 @@ func (e *Estimator) second(p *patterns, p1 [6]float64, mean1 [3]float64, j int) 
 	if now1 < leastTwin || now2 < leastTwin || ratio < leastRatio || ratio > 1/leastRatio {
 		return partner{}, false
 	}
-	return partner{j: j, ratio: ratio, evidence: evidence}, true
+	return partner{j: j, ratio: ratio, evidence: evidence - math.Log(det)/2}, true
 }

@@ -1,7 +1,6 @@
 package windfield
 
 import (
-	"gonum.org/v1/gonum/blas"
 	"gonum.org/v1/gonum/blas/blas64"
 )
 
@@ -28,7 +27,7 @@ func (e *Estimator) draw(en *entry) {
 				solved = pt.state
 				e.addGain(en, s)
 				e.solve(en, s)
-				blas64.Gemv(blas.NoTrans, 1, mat(nt, en.n, s.gain), vec(e.y), 0, vec(e.plain))
+				columns(e.plain, s.gain, e.y)
 			}
 			st = e.shape(en, s, pt)
 			current = i

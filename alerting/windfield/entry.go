@@ -33,7 +33,7 @@ type state struct {
 	field    int         // which of the fields
 	inverse  []float64   // n x n, K^-1
 	logDet   float64     // of K
-	gain     []float64   // targets x n: posterior mean headwind = gain . y; nil until wanted, with the factor
+	gain     []float64   // n x targets: posterior mean headwind = y . gain; nil until wanted, with the factor
 	factor   []float64   // targets x targets lower factor of the posterior covariance
 	noise    []float64   // draws x targets: fixed draws of the posterior error; nil until wanted
 	patterns []*patterns // by class; nil until wanted
@@ -152,11 +152,12 @@ func (e *Estimator) addGain(en *entry, s *state) {
 			}
 		}
 	}
-	s.gain = make([]float64, nt*n)
-	product(s.gain, cross, s.inverse, nt)
+	gain := make([]float64, nt*n)
+	product(gain, cross, s.inverse, nt)
+	s.gain = transposed(gain, nt, n)
 	cov := slices.Clone(known.targets)
 	explained := make([]float64, nt*nt)
-	product(explained, s.gain, transposed(cross, nt, n), nt)
+	product(explained, gain, transposed(cross, nt, n), nt)
 	for i, v := range explained {
 		cov[i] -= v
 	}

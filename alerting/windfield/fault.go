@@ -63,10 +63,10 @@ func (b *faultBank) gram(en *entry, s *state, m []float64) {
 		}
 		b.column(en, j, 0, east)
 		b.column(en, j, 1, north)
-		multiply(en, s, east, solved)
+		multiply(s, east, solved)
 		m[j*6] = blas64.Dot(vec(solved), vec(east))
 		m[j*6+1] = blas64.Dot(vec(solved), vec(north))
-		multiply(en, s, north, solved)
+		multiply(s, north, solved)
 		m[j*6+3] = blas64.Dot(vec(solved), vec(north))
 	}
 }

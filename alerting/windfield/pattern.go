@@ -1,11 +1,6 @@
 package windfield
 
-import (
-	"math"
-
-	"gonum.org/v1/gonum/blas"
-	"gonum.org/v1/gonum/blas/blas64"
-)
+import "math"
 
 // A pattern is a wind of known shape and unknown strength that may lie over
 // the ambient field: an outflow (outflow.go) or a gust front (front.go). Its
@@ -48,7 +43,8 @@ type class interface {
 // patterns holds, for one class and one ambient state, what the evidence and
 // the effect of every pattern need.
 type patterns struct {
-	precision []float64 // [pattern][6] P, packed
+	precision []float64 // [pattern][6] P, packed ...
+	inverse   []float64 // ... and P^-1
 	logOdds   []float64 // -1/2 log |I + C M|
 	today     []float64 // [pattern][dims] P q: mean of today's strength on b
 	sharpness []float64 // 1 / (sqrt(2) its standard deviation)
@@ -104,7 +100,7 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 	c := e.classes[k]
 	n := c.count()
 	p := &patterns{
-		precision: make([]float64, n*6), logOdds: make([]float64, n),
+		precision: make([]float64, n*6), inverse: make([]float64, n*6), logOdds: make([]float64, n),
 		today: make([]float64, n*dims), sharpness: make([]float64, n), lines: make([][]float64, n),
 	}
 	p.greatest = math.Inf(-1)
@@ -119,6 +115,7 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 		}
 		prec, logDet := invert3(sum)
 		copy(p.precision[j*6:], prec[:])
+		copy(p.inverse[j*6:], sum[:])
 		p.logOdds[j] = -(logDet + logDetC) / 2 // |I + C M| = |C| |C^-1 + M|
 		p.greatest = max(p.greatest, p.logOdds[j])
 		today := mul3(prec, q)
@@ -143,16 +140,33 @@ func (e *Estimator) line(en *entry, s *state, k, j int) []float64 {
 	}
 	nt := len(e.targets)
 	out := make([]float64, (dims+1)*nt)
-	column := make([]float64, en.n)
+	column, effect := make([]float64, en.n), make([]float64, nt)
 	for d := range dims {
 		dst := out[d*nt : (d+1)*nt]
 		e.classes[k].now(j, d, dst)
 		e.classes[k].column(en, j, d, column)
-		blas64.Gemv(blas.NoTrans, -1, mat(nt, en.n, s.gain), vec(column), 1, vec(dst))
+		first, end := inhabited(column)
+		columns(effect, s.gain[first*nt:end*nt], column[first:end])
+		for t, v := range effect {
+			dst[t] -= v
+		}
 	}
 	e.classes[k].innovation(j, out[dims*nt:])
 	p.lines[j] = out
 	return out
+}
+
+// inhabited is the least stretch of a column that holds all that is not zero:
+// an outflow's strength stands in one block only.
+func inhabited(column []float64) (first, end int) {
+	end = len(column)
+	for end > 0 && column[end-1] == 0 {
+		end--
+	}
+	for first < end && column[first] == 0 {
+		first++
+	}
+	return first, end
 }
 
 // strength is the posterior of one pattern's strength.
@@ -191,17 +205,23 @@ func strengthFrom(p [6]float64, q [dims]float64, rest float64, b [dims]float64) 
 // invert3 inverts a symmetric positive definite 3x3 matrix packed as
 // (00, 01, 02, 11, 12, 22) and gives the logarithm of its determinant.
 func invert3(a [6]float64) (inv [6]float64, logDet float64) {
+	inv, det := inverse3(a)
+	return inv, math.Log(det)
+}
+
+// inverse3 is invert3 with the determinant itself.
+func inverse3(a [6]float64) (inv [6]float64, det float64) {
 	c00 := float64(a[3]*a[5]) - float64(a[4]*a[4])
 	c01 := float64(a[2]*a[4]) - float64(a[1]*a[5])
 	c02 := float64(a[1]*a[4]) - float64(a[2]*a[3])
-	det := float64(a[0]*c00) + float64(a[1]*c01) + float64(a[2]*c02)
+	det = float64(a[0]*c00) + float64(a[1]*c01) + float64(a[2]*c02)
 	inv = [6]float64{
 		c00 / det, c01 / det, c02 / det,
 		(float64(a[0]*a[5]) - float64(a[2]*a[2])) / det,
 		(float64(a[1]*a[2]) - float64(a[0]*a[4])) / det,
 		(float64(a[0]*a[3]) - float64(a[1]*a[1])) / det,
 	}
-	return inv, math.Log(det)
+	return inv, det
 }
 
 // mul3 is a packed symmetric 3x3 matrix times a vector.

@@ -16,7 +16,6 @@ import (
 	"math/rand/v2"
 	"slices"
 
-	"gonum.org/v1/gonum/blas"
 	"gonum.org/v1/gonum/blas/blas64"
 
 	"sockline/sensors"
@@ -343,12 +342,10 @@ func (e *Estimator) doubt() {
 }
 
 // solve fills w = K^-1 y of a state.
-func (e *Estimator) solve(en *entry, s *state) { multiply(en, s, e.y, e.w) }
+func (e *Estimator) solve(en *entry, s *state) { multiply(s, e.y, e.w) }
 
-// multiply fills out with K^-1 x.
-func multiply(en *entry, s *state, x, out []float64) {
-	blas64.Gemv(blas.NoTrans, 1, mat(en.n, en.n, s.inverse), vec(x), 0, vec(out))
-}
+// multiply fills out with K^-1 x; K^-1 is its own transpose.
+func multiply(s *state, x, out []float64) { columns(out, s.inverse, x) }
 
 // A pattern is left out when its share of the whole mixture is below
 // negligible (a few thousand of them together then hold less than one draw),
