@@ -116,7 +116,8 @@ func TestMedianMicroburst(t *testing.T) {
 	}
 }
 
-// Motion, growth and arrival follow the outflow.
+// Motion, growth and arrival follow the outflow; how well, TestMotionOverSeeds
+// measures.
 func TestMotion(t *testing.T) {
 	s := newSite(t)
 	s.run(300)

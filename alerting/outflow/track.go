@@ -116,13 +116,22 @@ func (k *track) slope(t sensors.Instant, value, variance *[slots]float64, likely
 const (
 	lookAhead = 300
 	lookEvery = 5
+	// behind is how long ago an outflow that moves was where it is found, s: the
+	// field rests on means. Measured over outflows of 2 to 11 m/s, two to four
+	// minutes after their begin: 6 to 19 s. It makes arrivals 9 s late in the
+	// median, not 20 (TestMotionOverSeeds, 96 outflows).
+	behind = 13.0
 )
 
 // reaches lists the paths that the ring of greatest wind lies on or comes to.
 func reaches(paths []Path, o *Outflow, dst []Reach) []Reach {
 	for i, p := range paths {
 		for s := 0.0; s <= lookAhead; s += lookEvery {
-			if p.distance(o.X+float64(s*o.Motion.East), o.Y+float64(s*o.Motion.North)) <= o.Radius {
+			since := s
+			if o.Motion.Known {
+				since += behind
+			}
+			if p.distance(o.X+float64(since*o.Motion.East), o.Y+float64(since*o.Motion.North)) <= o.Radius {
 				dst = append(dst, Reach{Path: i, Seconds: s})
 				break
 			}

@@ -1,0 +1,6 @@
+//go:build race
+
+package outflow
+
+// racing: the race detector makes a step some ten times slower.
+const racing = true
