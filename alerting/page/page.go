@@ -14,6 +14,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	stdlog "log"
 	"net"
 	"net/http"
 	"time"
@@ -192,6 +193,7 @@ func (p *Page) Serve(ctx context.Context, l net.Listener) error {
 		MaxHeaderBytes:    headerBytes,
 		ConnContext:       smallBuffer,
 		TLSConfig:         p.opts.TLS,
+		ErrorLog:          stdlog.New(p.opts.Log, "", 0), // its own goes to standard error, and waits for it
 	}
 	ended := make(chan error, 1)
 	go func() {

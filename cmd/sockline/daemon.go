@@ -46,6 +46,7 @@ type daemonOptions struct {
 	capture  string // file for the messages; empty for none
 	clock    arrivalClock
 	log      zerolog.Logger
+	lines    *logQueue // that log writes to; nil for none
 	notify   *notifier
 	instance string        // what it calls itself; empty: made up
 	listen   time.Duration // for another instance, 0 for the usual
@@ -137,6 +138,7 @@ func (d *daemon) prepare() (err error) {
 		output: d.output.sink.State, open: d.board.openCount, offset: d.opts.clock.Offset,
 	})
 	d.tell.measure(d.metrics.registry)
+	d.opts.lines.measure(d.metrics.registry)
 	d.loop.archive, d.loop.metrics, d.loop.show, d.loop.control = d.archive, d.metrics, d.show, d.opts.control
 	d.loop.changed = d.follow
 	d.keepJudgements()

@@ -67,7 +67,10 @@ func runMast(ctx context.Context, p *program, f *mastFlags) error {
 		return err
 	}
 	defer queue.Close()
-	log := zerolog.New(zerolog.ConsoleWriter{Out: p.stderr, NoColor: true, TimeFormat: time.RFC3339}).With().Timestamp().Str("station", f.station).Logger()
+	// A mast that nobody looks at measures on, like the daemon.
+	lines := newLogQueue(p.stderr)
+	defer lines.flush(logPatience)
+	log := zerolog.New(zerolog.ConsoleWriter{Out: lines, NoColor: true, TimeFormat: time.RFC3339}).With().Timestamp().Str("station", f.station).Logger()
 	clock := feed.NewClock()
 	since := clock.Now()
 	agent, err := mast.New(mast.Options{

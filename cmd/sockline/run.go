@@ -3,7 +3,10 @@ package main
 import (
 	"context"
 	"flag"
+	"io"
 	"os"
+	"os/signal"
+	"syscall"
 
 	"github.com/rs/zerolog"
 
@@ -35,11 +38,18 @@ func runDaemon(ctx context.Context, p *program, path, capture string, exercise b
 		return err
 	}
 	defer notify.close()
-	log := zerolog.New(p.stderr).Level(zerolog.InfoLevel).With().Timestamp().Logger()
+	signal.Ignore(syscall.SIGPIPE) // a reader of the log that goes away takes the log with it, and no more
+	lines := newLogQueue(p.stderr)
+	defer func() {
+		if !lines.flush(logPatience) {
+			p.stderr = io.Discard // the end, too, waits for no reader
+		}
+	}()
+	log := zerolog.New(lines).Level(zerolog.InfoLevel).With().Timestamp().Logger()
 	hups, deaf := hangups()
 	defer deaf()
 	d, err := newDaemon(cfg, daemonOptions{
-		exercise: exercise, capture: capture, clock: feed.NewClock(), log: log, notify: notify,
+		exercise: exercise, capture: capture, clock: feed.NewClock(), log: log, lines: lines, notify: notify,
 	})
 	if err != nil {
 		return err
