@@ -74,7 +74,7 @@ func (p *patterns) most(y, w []float64) float64 {
 		far := math.Sqrt(p.fit) + math.Sqrt(max(moved, 0))
 		fit = min(fit, float64(far*far))
 	}
-	return fit/2*(1+roundings) + p.greatest
+	return float64(fit/2*(1+roundings)) + p.greatest
 }
 
 // roundings is more than what rounding can do to a bound, as a share of it.
@@ -140,7 +140,7 @@ func (e *Estimator) line(en *entry, s *state, k, j int) []float64 {
 	}
 	nt := len(e.targets)
 	out := make([]float64, (dims+1)*nt)
-	column, effect := make([]float64, en.n), make([]float64, nt)
+	column, effect := e.column[:en.n], e.effect
 	for d := range dims {
 		dst := out[d*nt : (d+1)*nt]
 		e.classes[k].now(j, d, dst)

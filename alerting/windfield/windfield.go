@@ -113,6 +113,7 @@ type Estimator struct {
 	b         [][]float64 // [class][strength][pattern]
 	evidence  []float64   // per pattern of one class and state
 	column    []float64
+	effect    []float64
 	plain     []float64 // posterior mean headwind of a state without a pattern
 	base      []float64
 	slope     []float64
@@ -177,6 +178,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.evidence = make([]float64, most)
 	e.column = make([]float64, n)
 	e.plain = make([]float64, len(targets))
+	e.effect = make([]float64, len(targets))
 	e.base = make([]float64, len(targets))
 	e.slope = make([]float64, len(targets))
 	e.stateLog = make([]float64, len(e.fields))
