@@ -1,6 +1,7 @@
 package engine_test
 
 import (
+	"fmt"
 	"strings"
 	"syscall"
 	"testing"
@@ -10,19 +11,61 @@ import (
 	"sockline/sensors"
 )
 
-// weathers of the benchmark, over Skerry Moor: 8 masts at 1 Hz and 4 paths.
-var weathers = []struct{ name, source string }{
-	{"calm", `wind 250 deg 7 kt
+// weathers of the benchmark, over Skerry Moor, 8 masts at 1 Hz and 4 paths, and
+// over the same with a second runway and 40 masts.
+var weathers = []struct {
+	name   string
+	large  bool
+	source string
+}{
+	{"calm", false, `wind 250 deg 7 kt
 turbulence C`},
-	{"fresh", `wind 240 deg 16 kt
+	{"fresh", false, `wind 240 deg 16 kt
 turbulence C
 eddies 0.5 m/s length 1000 m time 300 s`},
-	{"gusty", `wind 240 deg 25 kt
+	{"gusty", false, `wind 240 deg 25 kt
 turbulence B`},
-	{"outflow", `wind 240 deg 8 kt
+	{"outflow", false, `wind 240 deg 8 kt
 turbulence C
 eddies 0.4 m/s length 1000 m time 300 s
 outflow at 2000 m before 07 offset 100 m strength 18 kt radius 900 m starts 13 min grows 4 min holds 12 min fades 4 min moves toward 070 deg 1 m/s`},
+	{"40-calm", true, `wind 250 deg 7 kt
+turbulence C`},
+	{"40-fresh", true, `wind 240 deg 16 kt
+turbulence C
+eddies 0.5 m/s length 1000 m time 300 s`},
+}
+
+// large is Skerry Moor with a second runway, so that there are 8 paths, and 32
+// more masts in four rows.
+func large(b *testing.B) *aerodrome {
+	const broker = "[broker]\n"
+	more := strings.Builder{}
+	more.WriteString(`[[runway]]
+width = "18 m"
+  [[runway.end]]
+  designator = "16"
+  threshold  = [54.0055, -20.0030]
+  elevation  = "41 m"
+  [[runway.end]]
+  designator = "34"
+  threshold  = [53.9955, -19.9970]
+  elevation  = "43 m"
+`)
+	for row := range 4 {
+		for k := range 8 {
+			id := fmt.Sprintf("more%d%d", row, k)
+			fmt.Fprintf(&more, `[[station]]
+id       = %q
+position = [%.6f, %.6f]
+height   = "10 m"
+topic    = "airfield/skerrymoor/station/%s/wind"
+format   = "senml+json"
+interval = "1 s"
+`, id, 53.9801+0.0131*float64(row), -20.0353+0.0103*float64(k), id)
+		}
+	}
+	return skerry(b, broker, more.String()+broker)
 }
 
 // BenchmarkStep is one step of the whole chain with everything on, over
@@ -31,9 +74,14 @@ outflow at 2000 m before 07 offset 100 m strength 18 kt radius 900 m starts 13 m
 // and taking in the second's messages, cpu-us/second its processor time, which a
 // busy machine disturbs less; worst-us is the longest step.
 func BenchmarkStep(b *testing.B) {
+	small := skerry(b)
+	large := large(b)
 	for _, w := range weathers {
 		b.Run(w.name, func(b *testing.B) {
-			a := loadAerodrome(b, "skerrymoor", sensors.At(time.Date(2026, 7, 1, 0, 0, 0, 0, time.UTC)))
+			a := small
+			if w.large {
+				a = large
+			}
 			source := strings.Join([]string{
 				"title bench", "airfield skerrymoor", "start 2026-07-01T19:00:00Z", "length 30 min", "seed 7300001", w.source,
 			}, "\n")
