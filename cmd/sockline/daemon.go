@@ -314,9 +314,26 @@ func (d *daemon) startLoop(ctx context.Context) error {
 	d.teardown.add("the evaluation", func(ctx context.Context) error {
 		s.Tick() // closes what is due now
 		close(stop)
-		return ended(ctx, done)
+		return d.endLoop(ctx, done)
 	})
 	d.teardown.add("the subscription", func(ctx context.Context) error { return within(ctx, s.Close) })
+	return nil
+}
+
+// endLoop waits for the evaluation to take what is left in its queue, but no
+// longer than leaves time for what was decided to get to the disk and out. When
+// it returns without an error nothing uses what the loop owns any more.
+func (d *daemon) endLoop(ctx context.Context, done <-chan struct{}) error {
+	half, cancel := context.WithTimeout(ctx, stopWithin/2)
+	defer cancel()
+	if ended(half, done) == nil {
+		return nil
+	}
+	close(d.loop.abandon)
+	if err := ended(ctx, done); err != nil {
+		return err
+	}
+	d.log.Warn().Int("messages", len(d.loop.messages)).Msg("not all messages that had come were evaluated before the stop")
 	return nil
 }
 

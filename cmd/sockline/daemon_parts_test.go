@@ -299,6 +299,41 @@ func TestRestoreIsExact(t *testing.T) {
 	}
 }
 
+// TestAbandonedQueue: an evaluation that is behind, and is told to leave it at
+// that, does so at once, whether steps or messages wait; and it does not say
+// that it took what it left.
+func TestAbandonedQueue(t *testing.T) {
+	l := mustLoop(t, loadSkerryMoor(t), true)
+	stepped := 0
+	l.show = func(*report) {
+		if stepped++; stepped == 3 {
+			close(l.abandon)
+		}
+	}
+	l.archive = newArchive(t.TempDir(), history.Options{}, func(wording.Notice) {})
+	l.metrics = newMetrics(l.cfg, sources{})
+	const day = 86400 * sensors.Second
+	queue := make(chan sensors.Message, 100)
+	for i := range sensors.Instant(cap(queue)) {
+		queue <- sensors.Message{Received: 1_000_000*sensors.Second + i*day} // each makes a day of steps due
+	}
+	l.messages = queue
+	stop, done := make(chan struct{}), make(chan struct{})
+	close(stop)
+	go func() { defer close(done); l.run(stop) }()
+	select {
+	case <-done:
+	case <-time.NewTimer(patience).C:
+		t.Fatal("it goes on")
+	}
+	if stepped != 3 || len(queue) < 90 {
+		t.Errorf("%d steps; %d messages are left of %d", stepped, len(queue), cap(queue))
+	}
+	if want := 1_000_000 * sensors.Second; l.last != want {
+		t.Errorf("the last message taken is of %v, not %v", l.last, want)
+	}
+}
+
 func mustLoop(tb testing.TB, cfg *config.Config, exercise bool) *loop {
 	tb.Helper()
 	l, err := newLoop(cfg, exercise, zerolog.Nop())

@@ -40,6 +40,7 @@ type loop struct {
 	show     func(*report)
 	changes  chan change
 	changed  func(before, now *config.Config)
+	abandon  chan struct{} // closed: leave the queue as it is
 
 	held    []lifecycle.Transition // of the start or a change, to go out with the next step
 	entries []history.Entry        // for the journal, with the next step
@@ -55,7 +56,7 @@ func newLoop(cfg *config.Config, exercise bool, log zerolog.Logger) (*loop, erro
 	l := &loop{
 		cfg: cfg, engine: e, words: wordingContext(cfg, exercise), reporter: newReporter(cfg, exercise),
 		exercise: exercise, log: log, patience: newThrottle(time.Minute),
-		changes: make(chan change),
+		changes: make(chan change), abandon: make(chan struct{}),
 	}
 	for _, s := range cfg.Stations {
 		l.ids = append(l.ids, s.ID)
@@ -63,7 +64,8 @@ func newLoop(cfg *config.Config, exercise bool, log zerolog.Logger) (*loop, erro
 	return l, nil
 }
 
-// run takes from the queue until stop is closed, and then what is left in it.
+// run takes from the queue until stop is closed, and then what is left in it,
+// unless abandon is closed, too.
 func (l *loop) run(stop <-chan struct{}) {
 	for {
 		select {
@@ -74,6 +76,8 @@ func (l *loop) run(stop <-chan struct{}) {
 		case <-stop:
 			for {
 				select {
+				case <-l.abandon:
+					return
 				case m := <-l.messages:
 					l.take(m)
 				default:
@@ -84,12 +88,24 @@ func (l *loop) run(stop <-chan struct{}) {
 	}
 }
 
+func (l *loop) abandoned() bool {
+	select {
+	case <-l.abandon:
+		return true
+	default:
+		return false
+	}
+}
+
 // take closes the steps that are due before a message, then receives it.
 func (l *loop) take(m sensors.Message) {
 	for {
 		t, due := l.engine.Due(m.Received)
 		if !due {
 			break
+		}
+		if l.abandoned() { // many may be due
+			return
 		}
 		l.step(t)
 	}
