@@ -6,6 +6,7 @@ import (
 	"go/ast"
 	"os"
 	"path/filepath"
+	"regexp"
 	"strings"
 	"testing"
 )
@@ -147,4 +148,59 @@ func TestDeveloperManualNamesEveryPackage(t *testing.T) {
 			t.Errorf("DEVELOPERS.md names the package %s, which does not exist", p)
 		}
 	}
+}
+
+// TestWhatIsSkippedIsRunElsewhere: a test that skips itself, or a part, under
+// the race detector is named in deploy/check, which runs it without.
+func TestWhatIsSkippedIsRunElsewhere(t *testing.T) {
+	check := deployed(t, "check")
+	_, files := module(t)
+	found := 0
+	for _, f := range files {
+		for _, d := range f.syntax.Decls {
+			fn, ok := d.(*ast.FuncDecl)
+			if !ok || !f.test || !strings.HasPrefix(fn.Name.Name, "Test") || !skipsUnderRace(fn) {
+				continue
+			}
+			found++
+			if !regexp.MustCompile(`-run='\^\([A-Za-z0-9|]*\b` + fn.Name.Name + `\b`).MatchString(check) {
+				t.Errorf("%s: %s skips itself under the race detector, and deploy/check does not run it without: add it to \"what the race detector is spared\"", f.name, fn.Name.Name)
+			}
+		}
+	}
+	if found < 10 {
+		t.Errorf("only %d tests skip themselves: this one looks for something else", found)
+	}
+}
+
+// skipsUnderRace finds "if racing ... { t.Skip(...) }".
+func skipsUnderRace(fn *ast.FuncDecl) (skips bool) {
+	ast.Inspect(fn, func(n ast.Node) bool {
+		branch, ok := n.(*ast.IfStmt)
+		if !ok {
+			return true
+		}
+		racing := false
+		ast.Inspect(branch.Cond, func(n ast.Node) bool {
+			if id, ok := n.(*ast.Ident); ok && id.Name == "racing" {
+				racing = true
+			}
+			return true
+		})
+		for _, s := range branch.Body.List {
+			e, ok := s.(*ast.ExprStmt)
+			if !ok || !racing {
+				continue
+			}
+			call, ok := e.X.(*ast.CallExpr)
+			if !ok {
+				continue
+			}
+			if sel, ok := call.Fun.(*ast.SelectorExpr); ok && sel.Sel.Name == "Skip" {
+				skips = true
+			}
+		}
+		return true
+	})
+	return skips
 }

@@ -17,6 +17,10 @@ import (
 	"sockline/sensors"
 )
 
+// checkedApart says why a test is left out: it plays much in one goroutine,
+// and deploy/check runs it where that is ten times as quick.
+const checkedApart = "the check runs it without the race detector"
+
 // small is three masts along one runway: little to compute, so that hours can
 // be replayed. Skerry Moor's geometry, with the other masts left out.
 func small(tb testing.TB) string {

@@ -67,7 +67,7 @@ func recordedSiting(tb testing.TB, cfg *config.Config, messages []sensors.Messag
 // for byte what was issued: whole, from its midst, and over a restart.
 func TestReplayHistoryWithSiting(t *testing.T) {
 	if racing {
-		t.Skip("one goroutine, and the check runs it without the race detector")
+		t.Skip(checkedApart)
 	}
 	source := only(t, "touch07", "touch25", "final07", "far07")
 	on := writeFile(t, "on.toml", source+"\n[analysis]\nsiting = \"remove\"\n")

@@ -4,7 +4,6 @@ import (
 	"encoding/json"
 	"fmt"
 	"math/rand/v2"
-	"os"
 	"path/filepath"
 	"runtime"
 	"slices"
@@ -107,9 +106,9 @@ func TestReplayIsTheSame(t *testing.T) {
 		t.Fatal("no alert: there is nothing to compare")
 	}
 	defer runtime.GOMAXPROCS(runtime.GOMAXPROCS(0))
-	runs := 8
-	if os.Getenv("SOCKLINE_LONG") != "" {
-		runs = 20
+	runs := 20
+	if racing {
+		runs = 4
 	}
 	for run := range runs {
 		runtime.GOMAXPROCS(1 + run%2)
@@ -167,6 +166,9 @@ func between(tb testing.TB, text string, from, to time.Time) string {
 // TestReplayFromTheMiddle holds that a part of a capture gives what the whole
 // of it gives at these times.
 func TestReplayFromTheMiddle(t *testing.T) {
+	if racing {
+		t.Skip(checkedApart)
+	}
 	capture := simulated(t, short)
 	whole := replayed(t, capture).stdout
 	start := time.Date(2026, 7, 1, 14, 0, 0, 0, time.UTC)
@@ -196,6 +198,9 @@ func TestReplayFromTheMiddle(t *testing.T) {
 // them, of which six are left out: the second part gives what it gives alone,
 // and nothing but closings happens between the two.
 func TestReplayOverSilence(t *testing.T) {
+	if racing {
+		t.Skip(checkedApart)
+	}
 	first, _ := readCapture(t, simulated(t, strings.Replace(short, "length     5 min", "length     100 s", 1)))
 	secondPath := simulated(t, strings.Replace(short, "T14:", "T23:", 1))
 	second, end := readCapture(t, secondPath)

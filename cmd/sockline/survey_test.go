@@ -91,7 +91,7 @@ func TestSurveyOfSites(t *testing.T) {
 // from there to the very report of one that was not.
 func TestSurveyGoesOn(t *testing.T) {
 	if racing {
-		t.Skip("the workers are raced in the package of the survey")
+		t.Skip(checkedApart)
 	}
 	dir := t.TempDir()
 	args := func(name string) []string {
