@@ -17,8 +17,11 @@ const (
 	leastGain = -1.0
 	// moveGain is how much more a change must add elsewhere to be moved there.
 	moveGain = 1.5
+	// A change that adds more than settledGain to its track stays there: to weigh
+	// it elsewhere takes a millisecond each time.
+	settledGain = 2.0
 	// mostMoves bounds how many changes are moved in one step.
-	mostMoves = 3
+	mostMoves = 2
 	// nowhere is where a change is left out of all tracks.
 	nowhere = -1
 )
@@ -111,6 +114,9 @@ func (t *Tracker) bestMove() (from, hit, to int) {
 		for k := range tr.hits {
 			o := &tr.hits[k]
 			own := whole[i] - t.evidence(tr, k, nil)
+			if own > settledGain {
+				continue
+			}
 			if alone := -own; len(tr.hits) > 2 && len(t.tracks) < mostTracks && alone > best {
 				best, from, hit, to = alone, i, k, nowhere
 			}

@@ -18,7 +18,7 @@ const (
 
 	leastMasts = 2   // that a front must have reached
 	confident  = 0.5 // below this it is not told ...
-	surely     = 0.9 // ... and this is asked of a slow change, which eddies make, too
+	surely     = 0.9 // ... and this is asked of a slow change, which eddies and outflows make, too
 	priorFront = 0.2 // probability that two changes within ten minutes are one line
 	// Changes so near in time (s) and so far from each other in direction
 	// (degrees) are two sides of one outflow. In 200 episodes without a front 6
@@ -29,6 +29,7 @@ const (
 	opposedPart  = 0.4 // of the change, that the other side must be at least
 
 	edgeShare   = 0.5 // more, and it is the edge of an outflow
+	edge        = 60  // s: a change that lasts no longer is an edge
 	sharp       = 150 // s: a change that lasts longer is a slow shift, no gust front
 	leastTurned = 1.5 // m/s of wind below which a direction is not turned
 )

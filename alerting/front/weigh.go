@@ -42,10 +42,8 @@ func (t *Tracker) weigh(tr *track, now sensors.Instant) {
 			f.Apparent = 1 / slow
 		}
 	}
-	least := confident
-	if f.Kind == WindShift {
-		least = surely
-	}
+	// From an edge to a slow change it is asked of more and more.
+	least := confident + float64((surely-confident)*min(max((f.Lasts-edge)/(sharp-edge), 0), 1))
 	if before {
 		least /= 2 // what has been told is not taken back for little
 	}
