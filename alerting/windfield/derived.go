@@ -33,10 +33,9 @@ const (
 	// to matter (a mild stretch passes for a disturbed field over a round outflow),
 	// and one in twenty has a second beside it. The ratio of a pair is fitted, not
 	// averaged over, and pays for that with one half.
-	roundShare = 0.8
-	axisShare  = 0.2 / axes
-	largeShare = 0.1
-	pairShare  = 0.05 * 0.5
+	axisShare  = 0.25 / axes
+	largeShare = 0.12
+	pairShare  = 0.06 * 0.5
 	// A partner lies farther away than one radius of the other, and near
 	// enough to be of the same storm, m.
 	nearestPartner  = 1200
@@ -80,6 +79,7 @@ func (e *Estimator) derive(en *entry, k int, best [parents]int, share, top float
 			break
 		}
 		parent := e.outflows.templates[j]
+		scale := scale + e.trail.odds[j]
 		for a := range axes {
 			// None is narrower than the narrowest of the bank: a single mast could
 			// hold it.
@@ -107,7 +107,7 @@ func (e *Estimator) derive(en *entry, k int, best [parents]int, share, top float
 			if ratio > 1 { // the prior of the strength is that of the stronger
 				first, second, ratio = second, first, 1/ratio
 			}
-			e.child(en, s, k, first, second, ratio, scale+math.Log(pairShare/float64(e.outflows.count())))
+			e.child(en, s, k, first, second, ratio, scale+e.trail.odds[best[0]]+math.Log(pairShare/float64(e.outflows.count())))
 		}
 	}
 }

@@ -22,6 +22,9 @@ func (e *Estimator) Follow(before *Estimator, as []int) *Estimator {
 		copy(e.memory.log, before.memory.log)
 	}
 	e.doubts = before.doubts.follow(as)
+	if slices.Equal(e.outflows.templates, before.outflows.templates) {
+		e.trail.follow(&before.trail)
+	}
 	return e
 }
 

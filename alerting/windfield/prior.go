@@ -27,6 +27,9 @@ type Prior struct {
 	OutflowShare    float64
 	OutflowStrength float64 // scale of its greatest wind at mast height (half-normal), m/s
 	OutflowTime     float64 // correlation time of its strength, s
+	OutflowLife     float64 // how long one is believed to go on, s
+	OutflowDrift    float64 // how fast it moves, as a share of the mean wind ...
+	OutflowStray    float64 // ... and how far off that may be, one component, m/s
 	OutflowRadii    []float64
 	OutflowSpacing  float64 // between template centres, m
 	OutflowMargin   float64 // how far from a mast a centre may lie, m
@@ -34,6 +37,7 @@ type Prior struct {
 	FrontShare    float64   // prior probability that a gust front is passing
 	FrontStrength float64   // scale of the change of wind along its motion (half-normal), m/s
 	FrontAcross   float64   // standard deviation of the change across it, m/s
+	FrontLife     float64   // how long one takes over the masts, s
 	FrontHeadings int       // number of headings tried
 	FrontSpeeds   []float64 // m/s
 	FrontSpacing  float64   // between the places tried, m
@@ -43,6 +47,7 @@ type Prior struct {
 	FaultShareLater float64 // ... and once it has stood alone for a quarter of an hour
 	FaultDeviation  float64 // standard deviation of its error, one component, m/s
 
+	TrailTemper     float64 // what the last minutes said of outflows and fronts counts so much: eddies outlive a stride
 	LeastStateShare float64 // no ambient state is ever believed less than this before a step
 }
 
@@ -62,15 +67,19 @@ func DefaultPrior() Prior {
 		DriftDeviation:  2,
 		DriftTime:       300,
 		Instrument:      0.25,
-		OutflowShare:    0.25,
+		OutflowShare:    0.2,
 		OutflowStrength: 7,
 		OutflowTime:     90,
+		OutflowLife:     600,
+		OutflowDrift:    0.75,
+		OutflowStray:    3.5,
 		OutflowRadii:    []float64{500, 850, 1400},
 		OutflowSpacing:  500,
 		OutflowMargin:   1600,
 		FrontShare:      0.1,
 		FrontStrength:   10,
 		FrontAcross:     4,
+		FrontLife:       300,
 		FrontHeadings:   12,
 		FrontSpeeds:     []float64{6, 13},
 		FrontSpacing:    400,
@@ -78,6 +87,7 @@ func DefaultPrior() Prior {
 		FaultShare:      0.0001,
 		FaultShareLater: 0.03,
 		FaultDeviation:  8,
+		TrailTemper:     0.4,
 		LeastStateShare: 0.01,
 	}
 }

@@ -18,7 +18,6 @@ import (
 
 	"gonum.org/v1/gonum/blas/blas64"
 
-	"sockline/sensors"
 	"sockline/sensors/averages"
 )
 
@@ -99,6 +98,7 @@ type Estimator struct {
 	shared     *entry   // the masts of the newest entry, and the patterns at them
 	memory     ambientMemory
 	doubts     doubtMemory
+	trail      trail
 	derived    []derived // outflows made for the step at hand ...
 	children   []part    // ... and how likely they are beside the mixture
 	pairing    pairing
@@ -169,6 +169,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.cache, e.fewerCache = newCache(cacheSize), newCache(fewerSize(len(masts)))
 	e.memory = newAmbientMemory(len(prior.Fields))
 	e.doubts = newDoubtMemory(len(masts))
+	e.trail = newTrail(e.outflows.templates, layout, prior)
 	e.faultGain = make([]float64, len(masts))
 	e.noise = make([]float64, 0, blocks*blocks*len(masts))
 	e.live = make([]int, 0, len(masts))
@@ -239,7 +240,7 @@ func (e *Estimator) step(s *averages.Snapshot) *Posterior {
 		return nil
 	}
 	e.observe(s, en)
-	e.weigh(s.At(), en)
+	e.weigh(s, en)
 	e.draw(en)
 	e.posterior.Live = en.live
 	return &e.posterior
@@ -265,7 +266,8 @@ func (e *Estimator) observe(s *averages.Snapshot, en *entry) {
 
 // weigh fills parts with every component whose weight matters, in a fixed
 // order, and normalises.
-func (e *Estimator) weigh(t sensors.Instant, en *entry) {
+func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
+	t := snapshot.At()
 	ambient := len(e.prior.Fields)
 	e.memory.shares(t, e.prior.LeastStateShare, e.weights)
 	e.faultGains(t)
@@ -279,23 +281,32 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	}
 	e.parts, e.children, e.derived = e.parts[:0], e.children[:0], e.derived[:0]
 	total := 0.0
-	plain := 1 - e.prior.OutflowShare - e.prior.FrontShare - e.prior.FaultShare
+	e.trail.recall(t)
+	keep := e.without == noMast && e.trail.wanted(t)
+	if keep {
+		clear(e.trail.sum)
+	}
+	plain := (1 - e.trail.share - e.trail.front) * (1 - e.prior.FaultShare)
 	for k := range ambient {
 		w := plain * e.weights[k] * math.Exp(e.stateLog[k]-top)
 		e.parts = append(e.parts, part{state: k, class: -1, weight: w})
 		total += w
 	}
-	shares := [...]float64{e.prior.OutflowShare * roundShare, e.prior.FrontShare, evenHanded}
+	undisturbed := total
+	shares := [...]float64{e.trail.share, e.trail.front, evenHanded}
 	var found [len(shares)]float64
 	for k := ambient; k < len(en.states); k++ {
 		e.solve(en, en.states[k])
 		var weights [len(shares)]float64
 		var best [parents]int
 		for c := range e.classes {
-			w := e.weighPatterns(en, k, c, shares[c]/float64(len(e.prior.Disturbed)), top, total)
+			w := e.weighPatterns(en, k, c, shares[c]/float64(len(e.prior.Disturbed)), top, total, keep)
 			total += w
 			found[c] += w
 			weights[c] = w
+			if c == outflowClass && keep {
+				e.keepTrail(en, k, top)
+			}
 			if c == outflowClass && w > worthDeriving*total {
 				best = e.likeliest() // the evidence is overwritten by the next class
 			}
@@ -303,7 +314,7 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 		// Where a front explains as much, a stretched or second outflow would only
 		// be a way to imitate it.
 		if w := weights[outflowClass]; e.without == noMast && w > worthDeriving*total && w > weights[frontClass] {
-			e.derive(en, k, best, e.prior.OutflowShare/float64(len(e.prior.Disturbed)), top)
+			e.derive(en, k, best, e.trail.share/float64(len(e.prior.Disturbed)), top)
 		}
 	}
 	// A state of the air is judged by what it explains with or without a
@@ -314,6 +325,10 @@ func (e *Estimator) weigh(t sensors.Instant, en *entry) {
 	}
 	if e.without == noMast {
 		e.memory.remember(t, e.stateLog[:ambient])
+	}
+	if keep {
+		none := (undisturbed + found[faultClass]) / (1 - e.trail.share - e.trail.front)
+		e.trail.remember(t, none, found[frontClass]/e.trail.front, snapshot, en.live)
 	}
 	for i := range e.parts {
 		e.parts[i].weight /= total
@@ -361,7 +376,7 @@ const (
 // weighPatterns appends the patterns of class c that matter on top of state k
 // and gives their summed weight. w holds K^-1 y; share is the prior of the
 // class on this state, total the weight found so far.
-func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64) float64 {
+func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64, keep bool) float64 {
 	s := en.states[k]
 	p := e.patternsFor(en, s, c)
 	n, b := e.classes[c].count(), e.b[c]
@@ -376,7 +391,11 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 	}
 	// Nobody may look at the evidence of a class that is passed over: it is that
 	// of another state.
-	if c != faultClass && p.most(e.y, e.w) < least {
+	above := 0.0
+	if c == outflowClass {
+		above = e.trail.most
+	}
+	if c != faultClass && !keep && p.most(e.y, e.w)+above < least {
 		return 0
 	}
 	e.classes[c].project(en, e.w, b)
@@ -389,8 +408,11 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
 		fit = max(fit, v)
 		evidence[j] = v/2 + p.logOdds[j]
-		if c == faultClass {
+		switch c {
+		case faultClass:
 			evidence[j] += e.faultGain[j%len(e.faultGain)]
+		case outflowClass:
+			evidence[j] += e.trail.odds[j]
 		}
 		best = max(best, evidence[j])
 	}
