@@ -97,6 +97,13 @@ func reviewStorm(t *testing.T) {
 	if again := whatIf(t, "--history", dir, "--config", other); again.Way != review.Analysed || !strings.Contains(strings.Join(again.Notes, " "), "earlier version") {
 		t.Errorf("steps of version 1 were %s: %v", again.Way, again.Notes)
 	}
+	// A month judged by the usual levels is not analysed: it says what it lacks.
+	cfg := mustLoad(t, skerrymoor)
+	from := sensors.At(time.Date(2026, 7, 1, 0, 0, 0, 0, time.UTC))
+	v, err := review.JudgeVariants(t.Context(), "skerrymoor", dir, review.Levels{Levels: levels(cfg), Hold: cfg.Alerts.Hold}, from, from.Add(24*time.Hour), nil)
+	if err != nil || v.Hours == 0 || !strings.Contains(strings.Join(v.Faults, " "), "earlier version") {
+		t.Errorf("a month with steps of version 1: %v %+v", err, v)
+	}
 }
 
 // compareHistory holds that the configuration in force gives every issue again and
