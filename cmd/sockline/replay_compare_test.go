@@ -15,6 +15,7 @@ import (
 	"sockline/alerting/page"
 	"sockline/alerting/review"
 	"sockline/config"
+	"sockline/sensors"
 )
 
 // twice is an outflow of two strengths within a quarter of an hour, the second
