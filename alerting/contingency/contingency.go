@@ -32,7 +32,7 @@ func Wilson(share, n float64) (low, high float64) {
 	}
 	z2 := z95 * z95
 	middle := share + z2/(2*n)
-	half := z95 * math.Sqrt(share*(1-share)/n+z2/(4*n*n))
+	half := float64(z95 * math.Sqrt(float64(share*(1-share))/n+z2/(4*n*n)))
 	return max(0, (middle-half)/(1+z2/n)), min(1, (middle+half)/(1+z2/n))
 }
 

@@ -27,6 +27,23 @@ func detectionChart(f *Findings) template.HTML {
 	return picture(a.end())
 }
 
+// reliabilityChart is how often a loss reached the level, by the probability that
+// was told of it: on the diagonal what is told can be taken at its word.
+func reliabilityChart(f *Findings) template.HTML {
+	a := newAxes(fmt.Sprintf("How often there was a loss of %.0f kt or more, by the probability told of it", f.Large), "told probability, in 100", "share of the steps", 0, 100, 0, 1)
+	a.yTicks(0.2, "%.1f")
+	for k := 0.0; k <= 100; k += 20 {
+		a.xTick(k, fmt.Sprintf("%.0f", k))
+	}
+	a.line(a.x(0), a.y(0), a.x(100), a.y(1), stroke(ink, 1))
+	for _, c := range f.Sure {
+		if c.Cases > 0 {
+			a.interval(a.x((c.From+c.To)/2), c.Share.Share, c.Low, c.High, blue, "circle", c.class()+" in 100: "+c.words())
+		}
+	}
+	return picture(a.end())
+}
+
 // placeChart is what is found against where the outflow stood.
 func placeChart(classes []ClassShare, name string) template.HTML {
 	a := newAxes("Share of strong losses that are found, by place", name, "share found", 0, float64(len(classes)), 0, 1)

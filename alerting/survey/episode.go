@@ -43,11 +43,16 @@ type Case struct {
 	// Steps counts the steps by the class of the true change: all of them, those
 	// whose interval holds it, those whose interval lies above it.
 	Steps [][3]int `json:"steps"`
-	Found []uint32 `json:"found"`           // by confidence, a bit for each level tried
-	Cells []Cell   `json:"cells,omitempty"` // false openings of the levels tried
-	First []int    `json:"first,omitempty"` // of the test that knows size and place: first second at each limit, 0 never
-	Top   float64  `json:"top_z,omitempty"` // its greatest z
-	Knows bool     `json:"knows,omitempty"` // it could be made
+	// Told counts the same by the class of the median that was told, and Sure, by
+	// tenths of the probability told of the level, the steps and those in which the
+	// true change reached it.
+	Told  [][3]int                 `json:"told"`
+	Sure  [probabilityCount][2]int `json:"sure"`
+	Found []uint32                 `json:"found"`           // by confidence, a bit for each level tried
+	Cells []Cell                   `json:"cells,omitempty"` // false openings of the levels tried
+	First []int                    `json:"first,omitempty"` // of the test that knows size and place: first second at each limit, 0 never
+	Top   float64                  `json:"top_z,omitempty"` // its greatest z
+	Knows bool                     `json:"knows,omitempty"` // it could be made
 }
 
 // CentreError is how far the centre told of an outflow lay from the true one at
@@ -70,6 +75,9 @@ type ArrivalError struct {
 func changeClasses() [changeClassCount]float64 { return [...]float64{0, 5, 10, 12, 15, 20, 25, 30} }
 
 const changeClassCount = 8
+
+// probabilityCount is how many classes of probability there are, alike wide.
+const probabilityCount = 10
 
 func changeClass(kt float64) int {
 	class := 0
@@ -175,7 +183,7 @@ func (p *player) tracks(e *Episode) []track {
 	e.Cases = make([]Case, 2*len(p.grounds))
 	tracks := make([]track, len(e.Cases))
 	for k := range tracks {
-		e.Cases[k] = Case{Path: p.grounds[k/2].path, Gain: k%2 == 1, Steps: make([][3]int, changeClassCount)}
+		e.Cases[k] = Case{Path: p.grounds[k/2].path, Gain: k%2 == 1, Steps: make([][3]int, changeClassCount), Told: make([][3]int, changeClassCount)}
 		tracks[k].Case = &e.Cases[k]
 		tracks[k].sweep.hysteresis = p.network.Settings.Levels.Hysteresis
 		tracks[k].sweep.hold = int(p.network.Settings.Hold / time.Second)
@@ -253,11 +261,11 @@ func (t *track) see(r *run, found *engine.Result, second int, c change, large fl
 	case !there && was < alerting.Large:
 		t.False++
 	}
-	t.cover(r, found, second, now, there)
+	t.cover(r, found, second, now, large, there)
 }
 
 // cover counts whether the interval holds the truth, and tries other levels.
-func (t *track) cover(r *run, found *engine.Result, second int, now float64, there bool) {
+func (t *track) cover(r *run, found *engine.Result, second int, now, large float64, there bool) {
 	stretch, _ := r.engine.Stretch(t.Path)
 	if stretch == nil {
 		return
@@ -266,13 +274,19 @@ func (t *track) cover(r *run, found *engine.Result, second int, now float64, the
 	if t.Gain {
 		c, side = &found.Assessments[t.Path].Gain, &stretch.Gain
 	}
-	n := &t.Steps[changeClass(quantity.Knots(now))]
-	n[0]++
-	switch {
-	case now < c.Low:
-		n[2]++
-	case now <= c.High:
-		n[1]++
+	for _, n := range [...]*[3]int{&t.Steps[changeClass(quantity.Knots(now))], &t.Told[changeClass(quantity.Knots(c.Median))]} {
+		n[0]++
+		switch {
+		case now < c.Low:
+			n[2]++
+		case now <= c.High:
+			n[1]++
+		}
+	}
+	sure := &t.Sure[min(int(probabilityCount*side.AtLeast(large)), probabilityCount-1)]
+	sure[0]++
+	if now >= large {
+		sure[1]++
 	}
 	t.sweep.step(second, side, there)
 }

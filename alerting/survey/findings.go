@@ -37,7 +37,9 @@ type Findings struct {
 
 	False    []WindRate   `json:"false_openings"`
 	Faults   Rate         `json:"false_openings_with_a_fault"`
-	Coverage []Coverage   `json:"coverage"`
+	Coverage []Coverage   `json:"coverage"`      // by the true loss
+	Told     []Coverage   `json:"coverage_told"` // by the median that was told
+	Sure     []ClassShare `json:"reliability"`   // steps that reached the level, by the probability told of it, in 100
 	Centre   Off          `json:"centre"`
 	Arrival  Off          `json:"front_arrival"`
 	Sweep    []Choice     `json:"choices"`

@@ -44,7 +44,7 @@ func (r *Report) functions() template.FuncMap {
 		"blindMap":  func(x Result, kt float64) template.HTML { return blindMap(&x.Layout, x.Findings, kt) },
 		"siteMap":   func(x Result) template.HTML { return siteMap(&x.Layout, x.Design) },
 		"plainMap":  func(x Result) template.HTML { return plainMap(&x.Layout) },
-		"detection": detectionChart, "falsely": falseChart, "choices": choiceChart, "spread": spreadChart, "worth": worthChart,
+		"detection": detectionChart, "reliability": reliabilityChart, "falsely": falseChart, "choices": choiceChart, "spread": spreadChart, "worth": worthChart,
 		"along": func(f *Findings) template.HTML {
 			return placeChart(f.Along, "where the outflow stood, m before the threshold (negative: beyond it)")
 		},

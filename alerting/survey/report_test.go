@@ -29,6 +29,8 @@ func invented(n *Network, p Plan) []Record {
 			for _, gain := range []bool{false, true} {
 				c := Case{Path: g.path, Gain: gain, Steps: make([][3]int, changeClassCount), Found: make([]uint32, confidenceCount)}
 				c.Steps[0] = [3]int{900, 700, 100}
+				c.Told = [][3]int{{}, {60, 30, 20}}
+				c.Sure[8] = [2]int{10, 9}
 				switch kind {
 				case synthetic.StudyOutflow:
 					c.Peak, c.PeakAll = float64(12+i%30), float64(14+i%30)
@@ -109,6 +111,12 @@ func TestTallySumsUp(t *testing.T) {
 		t.Errorf("%d false openings, want 40", events)
 	}
 	near(t, "coverage", f.Coverage[0].Inside, 700.0/900, 1e-12)
+	near(t, "coverage by what was told", f.Told[1].Inside, 0.5, 1e-12)
+	near(t, "coverage by what was told, below", f.Told[1].Below, 1.0/6, 1e-12)
+	near(t, "reliability", f.Sure[8].Share.Share, 0.9, 1e-12)
+	if c := f.Sure[8]; c.From != 80 || c.To != 90 || f.Sure[7].Cases != 0 {
+		t.Errorf("reliability: %+v", f.Sure)
+	}
 	if f.Arrival.Cases != 80 || f.Arrival.Told != 40 || f.Arrival.Median != 4 {
 		t.Errorf("arrivals %+v", f.Arrival)
 	}

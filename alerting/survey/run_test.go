@@ -159,7 +159,13 @@ func TestEpisodeWithAStrongOutflow(t *testing.T) {
 			t.Fatal(err)
 		}
 		for _, c := range e.Cases {
-			steps := 0
+			steps, told, sure := 0, 0, 0
+			for _, s := range c.Told {
+				told += s[0]
+			}
+			for _, s := range c.Sure {
+				sure += s[0]
+			}
 			for _, s := range c.Steps {
 				steps += s[0]
 				if s[1]+s[2] > s[0] {
@@ -168,6 +174,9 @@ func TestEpisodeWithAStrongOutflow(t *testing.T) {
 			}
 			if steps != int((synthetic.StudyLength - synthetic.StudyWarmUp).Seconds()) {
 				t.Errorf("episode %d: %d steps count", i, steps)
+			}
+			if told != steps || sure != steps {
+				t.Errorf("episode %d: %d steps by the true loss, %d by what was told, %d by how sure", i, steps, told, sure)
 			}
 			if c.Peak > c.PeakAll+0.01 {
 				t.Errorf("episode %d: %g kt on observed ground and %g kt on the whole path", i, c.Peak, c.PeakAll)

@@ -242,13 +242,33 @@ func (t *tally) rate(belongs func(*Episode) bool, counts func(*Case) bool) Rate 
 	return rateOf(all, t.plan.Seed)
 }
 
-// cover sums up how often the interval held the truth, for losses.
+// cover sums up how far what was told of losses could be relied on.
 func (t *tally) cover(f *Findings) {
+	f.Coverage = t.coverage(func(c *Case) [][3]int { return c.Steps })
+	f.Told = t.coverage(func(c *Case) [][3]int { return c.Told })
+	const width = 100 / probabilityCount
+	for k := range probabilityCount {
+		clusters := make([]cluster, 0, len(t.episodes))
+		for _, e := range t.episodes {
+			var c cluster
+			for i := range e.Cases {
+				if n := e.Cases[i].Sure[k]; !e.Cases[i].Gain {
+					c.cases, c.hits = c.cases+n[0], c.hits+n[1]
+				}
+			}
+			clusters = append(clusters, c)
+		}
+		f.Sure = append(f.Sure, ClassShare{From: float64(k * width), To: float64((k + 1) * width), Share: shareOf(clusters)})
+	}
+}
+
+// coverage sums up the counts of the losses that of gives.
+func (t *tally) coverage(of func(*Case) [][3]int) (all []Coverage) {
 	classes := changeClasses()
 	var sums [len(classes)][3]int
 	for _, e := range t.episodes {
 		for i := range e.Cases {
-			for k, n := range e.Cases[i].Steps {
+			for k, n := range of(&e.Cases[i]) {
 				if !e.Cases[i].Gain && k < len(sums) {
 					for j := range n {
 						sums[k][j] += n[j]
@@ -262,8 +282,9 @@ func (t *tally) cover(f *Findings) {
 		if k+1 < len(classes) {
 			c.To = classes[k+1]
 		}
-		f.Coverage = append(f.Coverage, c)
+		all = append(all, c)
 	}
+	return all
 }
 
 // estimates sums up the errors of outflow centres and front arrivals.

@@ -155,15 +155,26 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 		fmt.Fprintf(b, "  %2.0f to %2.0f kt, %-15s %s\n", quantity.Knots(w.From), quantity.Knots(w.To), with, w.Both.words())
 	}
 	fmt.Fprintf(b, "  with a broken instrument      %s\n", f.Faults.words())
-	b.WriteString("\nThe 5-95 % interval holds the true loss\n")
-	for _, c := range f.Coverage {
+	fmt.Fprintf(b, "\nTold probability of a loss of %.0f kt or more, and how often there was one\n", f.Large)
+	for _, c := range f.Sure {
+		if c.Cases > 0 {
+			fmt.Fprintf(b, "  %2.0f to %3.0f in 100  %s steps\n", c.From, c.To, c.words())
+		}
+	}
+	coverageText(b, "where the median told was", f.Told)
+	coverageText(b, "where the true loss was", f.Coverage)
+	f.estimatesText(b)
+	f.choicesText(b, accepted)
+}
+
+func coverageText(b *strings.Builder, where string, classes []Coverage) {
+	fmt.Fprintf(b, "\nThe 5-95 %% interval holds the true loss, %s\n", where)
+	for _, c := range classes {
 		if c.Steps > 0 {
 			fmt.Fprintf(b, "  %-12s kt  in %4.1f %% of %d steps; lies above it in %4.1f %%, below it in %4.1f %%\n",
 				ClassShare{From: c.From, To: c.To}.class(), 100*c.Inside, c.Steps, 100*c.Above, 100*c.Below)
 		}
 	}
-	f.estimatesText(b)
-	f.choicesText(b, accepted)
 }
 
 func (d Delay) words() string {
