@@ -99,7 +99,8 @@ func demo(ctx context.Context, p *program, o demoOptions) (err error) {
 	defer stop()
 	ended := make(chan error, 1)
 	go func() { ended <- d.Run(run) }()
-	weather := &demoWeather{daemon: d, scene: scene, specs: specs, control: control, speed: o.speed, closed: closed}
+	weather := &demoWeather{daemon: d, scene: scene, specs: specs, control: control, speed: o.speed, closed: closed,
+		heard: func() bool { return d.inputState().Subscribed }}
 	failed := weather.play(run)
 	stop()
 	err = errors.Join(failed, <-ended)
@@ -173,10 +174,21 @@ type demoWeather struct {
 	speed   float64
 	closed  <-chan sensors.Instant // the last closed step
 
-	link  *feed.Publisher
-	begun time.Time
-	step  sensors.Instant
+	link   *feed.Publisher
+	heard  func() bool // whether the daemon hears what is published
+	begun  time.Time
+	step   sensors.Instant
+	marker []byte // the end of a second that was said last
 }
+
+// How often a message that could not be sent is tried again, and the end of a
+// second said again that no step follows: a process that was stopped for some
+// seconds, as a laptop is that sleeps, has lost its connections and what was on
+// them, and they come again by themselves.
+const (
+	publishAgain = 50 * time.Millisecond
+	markAgain    = 2 * time.Second
+)
 
 // play publishes until the scene or ctx ends; the end of ctx is no error.
 func (w *demoWeather) play(ctx context.Context) (err error) {
@@ -238,21 +250,31 @@ func (w *demoWeather) connect(ctx context.Context) error {
 }
 
 // publish sends one message and waits for the broker to take it, so that the
-// order on the way is that of the calls.
+// order on the way is that of the calls. What cannot be sent now is sent later:
+// a second is not over before its end is said, so that the story runs late, and
+// misses nothing.
 func (w *demoWeather) publish(ctx context.Context, topic string, payload []byte) error {
-	if err := ctx.Err(); err != nil {
-		return err
+	for {
+		if err := ctx.Err(); err != nil {
+			return err
+		}
+		if w.heard() && w.link.Publish(topic, payload, 1, false) == nil {
+			return nil
+		}
+		again := time.NewTimer(publishAgain)
+		select {
+		case <-ctx.Done():
+		case <-again.C:
+		}
+		again.Stop()
 	}
-	if err := w.link.Publish(topic, payload, 1, false); err != nil {
-		return fmt.Errorf("publish the weather of the demo: %w", err)
-	}
-	return nil
 }
 
 // endSecond says that everything up to t has been sent, then waits until the
 // wall clock gets there, and until the daemon is not too far behind.
 func (w *demoWeather) endSecond(ctx context.Context, t sensors.Instant) error {
-	if err := w.publish(ctx, w.control, t.Time().AppendFormat(nil, time.RFC3339)); err != nil {
+	w.marker = t.Time().AppendFormat(nil, time.RFC3339)
+	if err := w.publish(ctx, w.control, w.marker); err != nil {
 		return err
 	}
 	since := time.Duration(float64(t.Sub(w.scene.Start)) / w.speed)
@@ -268,11 +290,20 @@ func (w *demoWeather) endSecond(ctx context.Context, t sensors.Instant) error {
 
 // awaitStep waits until the step t has closed.
 func (w *demoWeather) awaitStep(ctx context.Context, t sensors.Instant) error {
+	again := time.NewTicker(markAgain)
+	defer again.Stop()
 	for w.step < t {
 		select {
 		case <-ctx.Done():
 			return ctx.Err()
 		case w.step = <-w.closed:
+		case <-again.C:
+			if w.marker == nil {
+				continue
+			}
+			if err := w.publish(ctx, w.control, w.marker); err != nil {
+				return err
+			}
 		}
 	}
 	return nil

@@ -5,14 +5,21 @@ import (
 	"io"
 	"net"
 	"os"
+	"os/exec"
 	"path/filepath"
+	"strconv"
 	"strings"
+	"syscall"
 	"testing"
 	"testing/synctest"
 	"time"
 
+	"github.com/rs/zerolog"
+
 	"sockline/alerting"
 	"sockline/sensors"
+	"sockline/sensors/feed"
+	"sockline/sensors/feed/brokertest"
 )
 
 const demoGolden = "testdata/demo.txt"
@@ -49,6 +56,55 @@ func TestDemoStory(t *testing.T) {
 		if !strings.Contains(o, `"missing":[]`) {
 			t.Errorf("a mast was missing in %s", o)
 		}
+	}
+}
+
+// TestDemoOutlivesAPause stops the demo's process for longer than its
+// connections bear, and lets it go on: it runs late, and tells the whole story.
+func TestDemoOutlivesAPause(t *testing.T) {
+	if racing {
+		t.Skip(checkedApart)
+	}
+	pause := 6 * time.Second
+	if os.Getenv("SOCKLINE_LONG") != "" {
+		pause = 12 * time.Second
+	}
+	self, err := os.Executable()
+	if err != nil {
+		t.Fatal(err)
+	}
+	var stdout, stderr console
+	c := exec.Command(self)
+	c.Env = append(os.Environ(), childCommand+"=demo --speed 60", "TMPDIR="+t.TempDir())
+	c.Stdout, c.Stderr = &stdout, &stderr
+	if err := c.Start(); err != nil {
+		t.Fatal(err)
+	}
+	t.Cleanup(func() { _ = c.Process.Kill() })
+	ended := make(chan error, 1)
+	go func() { ended <- c.Wait() }()
+	until(t, "the story to be under way", func() bool { return strings.Contains(stdout.String(), "\n14:0") })
+	for _, s := range []struct {
+		signal syscall.Signal
+		after  time.Duration
+	}{{syscall.SIGSTOP, pause}, {syscall.SIGCONT, 2 * time.Minute}} {
+		if err := c.Process.Signal(s.signal); err != nil {
+			t.Fatal(err)
+		}
+		late := time.NewTimer(s.after)
+		defer late.Stop()
+		select {
+		case err := <-ended:
+			if err != nil {
+				t.Fatalf("it ends with %v: %s", err, stderr.String())
+			}
+		case <-late.C:
+		}
+	}
+	if story := stdout.String(); !strings.HasSuffix(strings.Join(strings.Fields(story), " "), alerting.Notice) {
+		t.Errorf("the story has no end: %s\n%s", story, stderr.String())
+	} else {
+		checkStory(t, story)
 	}
 }
 
@@ -179,6 +235,62 @@ func TestDemoPace(t *testing.T) {
 			t.Error("a step that never closes is not waited for")
 		}
 	})
+}
+
+// TestDemoOverCuts breaks the connection of the generator off again and again:
+// everything gets there, in its order but for copies, and the end of a second
+// that was lost is said again.
+func TestDemoOverCuts(t *testing.T) {
+	broker := brokertest.Start(t)
+	relay := brokertest.StartRelay(t, strings.TrimPrefix(broker.URL(), "mqtt://"))
+	link, err := feed.NewPublisher(t.Context(), feed.PublisherOptions{Broker: feed.Broker{URL: relay.URL()}, ClientID: "weather", Log: zerolog.Nop()})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer link.Close()
+	hears, err := feed.Subscribe(t.Context(), feed.SubscribeOptions{
+		Broker: feed.Broker{URL: broker.URL()}, ClientID: "daemon", Topics: []string{"weather", "end"}, Clock: feed.NewClock(), Log: zerolog.Nop(),
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer hears.Close()
+	closed := make(chan sensors.Instant, 1)
+	w := &demoWeather{link: link, control: "end", closed: closed, heard: func() bool { return hears.State().Subscribed }}
+	const messages = 40
+	for i := range messages {
+		if i%16 == 4 {
+			relay.Cut() // before the connection is up the first time, too
+		}
+		if err := w.publish(t.Context(), "weather", []byte(strconv.Itoa(i))); err != nil {
+			t.Fatal(err)
+		}
+	}
+	next := 0
+	for next < messages {
+		select {
+		case m := <-hears.Messages():
+			if n, err := strconv.Atoi(string(m.Payload)); m.Topic == "weather" && (err != nil || n > next) {
+				t.Fatalf("after %d comes %s", next-1, m.Payload)
+			} else if n == next {
+				next++
+			}
+		case <-time.NewTimer(patience).C:
+			t.Fatalf("%d of %d came", next, messages)
+		}
+	}
+	w.marker = []byte("14:00")
+	go func() {
+		for m := range hears.Messages() {
+			if m.Topic == "end" {
+				latest(closed, 1000)
+				return
+			}
+		}
+	}()
+	if err := w.awaitStep(t.Context(), 1000); err != nil {
+		t.Fatal(err)
+	}
 }
 
 // failing is a terminal that has gone.
