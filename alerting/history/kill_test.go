@@ -216,7 +216,9 @@ func TestKill(t *testing.T) {
 	rng := rand.New(rand.NewPCG(seed, 0))
 	dir := t.TempDir()
 	l := &ledger{recorded: map[sensors.Instant]bool{}}
-	for cycle := range cycles {
+	// A slow machine gets little done before it is killed: it is killed oftener.
+	wanted, cycle := 2*cycles, 0
+	for ; cycle < cycles || len(l.recorded) < wanted && cycle < 5*cycles; cycle++ {
 		l.ready = make(chan struct{})
 		cmd := child(dir, 0)
 		cmd.Env = append(cmd.Env, "HISTORY_TEST_WINDOW=20") // folds come with every commit
@@ -242,15 +244,16 @@ func TestKill(t *testing.T) {
 			t.Fatal(err)
 		}
 		_ = cmd.Wait() // "signal: killed"
-		l.check(t, dir, cycle%10 == 0 || cycle == cycles-1)
+		l.check(t, dir, cycle%10 == 0)
 		if t.Failed() {
 			t.Fatalf("seed %d, cycle %d", seed, cycle)
 		}
 	}
-	if len(l.recorded) < 2*cycles {
-		t.Errorf("only %d issues were recorded in %d cycles: the test shows little", len(l.recorded), cycles)
+	l.check(t, dir, true)
+	if len(l.recorded) < wanted {
+		t.Errorf("only %d issues were recorded in %d cycles: the test shows little", len(l.recorded), cycle)
 	}
-	t.Logf("%d cycles, %d issues recorded, %d released unrecorded", cycles, len(l.recorded), l.unrecorded)
+	t.Logf("%d cycles, %d issues recorded, %d released unrecorded", cycle, len(l.recorded), l.unrecorded)
 }
 
 // TestFailingSync makes the n-th call that reaches the disk fail, n = 1, 2, 3
