@@ -13,9 +13,9 @@ import (
 // forgotten. The belief before a step is that of a hidden Markov chain
 // (L.R. Rabiner, "A tutorial on hidden Markov models and selected applications in
 // speech recognition", Proc. IEEE 77, 1989, the forward recursion; from memory)
-// whose states are the templates and none, in strides as long as the blocks
-// reach back: no mean counts twice. An outflow moves with the wind and fades
-// within minutes, now and then a new one comes. The chain is begun afresh from a
+// whose states are the templates, a front and neither, in strides as long as the
+// blocks reach back: no mean counts twice. An outflow moves with the wind and fades
+// within minutes, a front passes, and now and then a new one of either comes. The chain is begun afresh from a
 // finite ring on a UTC grid, so that what is believed now depends on nothing
 // older and is the same in every replay.
 type trail struct {
@@ -195,7 +195,7 @@ func (t *trail) move(wind [2]float64) {
 				w := kernel[r*width+c] / sum
 				dst := t.moved[to*t.each : (to+1)*t.each]
 				for k, b := range own {
-					dst[k] += w * (float64((1-sizeChange)*b) + float64(sizeChange*mean))
+					dst[k] += float64(w * (float64((1-sizeChange)*b) + float64(sizeChange*mean)))
 				}
 			}
 		}
@@ -242,6 +242,6 @@ func (e *Estimator) keepTrail(en *entry, k int, top float64) {
 	scale := e.stateLog[k] - top - math.Log(float64(len(e.prior.Disturbed)))
 	for j := range n {
 		now := p.strengthNow(j, b[j], b[n+j], b[2*n+j])
-		e.trail.sum[j] += math.Exp(e.evidence[j]-e.trail.odds[j]+scale) * math.Erfc(-now*p.sharpness[j])
+		e.trail.sum[j] += float64(math.Exp(e.evidence[j]-e.trail.odds[j]+scale) * math.Erfc(-now*p.sharpness[j]))
 	}
 }
