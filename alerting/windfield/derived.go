@@ -29,10 +29,10 @@ const (
 	// peak to peak: the published bound of a microburst is 4 km.
 	enlarge  = 1.6
 	partners = 2
-	// How the prior of a place is shared: one in five counts as stretched enough
-	// to matter (a mild stretch passes for a disturbed field over a round outflow),
-	// and one in twenty has a second beside it. The ratio of a pair is fitted, not
-	// averaged over, and pays for that with one half.
+	// How likely the children of a place are, as shares of its round outflows: one
+	// in four is stretched enough to matter (a mild stretch passes for a disturbed
+	// field over a round outflow), and one in sixteen has a second beside it. The
+	// ratio of a pair is fitted, not averaged over, and pays for that with one half.
 	axisShare  = 0.25 / axes
 	largeShare = 0.12
 	pairShare  = 0.06 * 0.5
