@@ -42,6 +42,7 @@ func (t *tally) choice(level, c int, confidence float64) Choice {
 	var table contingency.Table
 	for _, e := range t.episodes {
 		var strong, calm cluster
+		counts := windy(e.Kind) && e.Fault == ""
 		for i := range e.Cases {
 			k := &e.Cases[i]
 			n := openingsAt(k.Cells, c, level)
@@ -50,13 +51,13 @@ func (t *tally) choice(level, c int, confidence float64) Choice {
 				strong.count(hit)
 				table.Count(true, hit)
 			}
-			if windy(e.Kind) {
+			if counts {
 				openings += n
 				calm.count(n > 0)
 				table.Count(false, n > 0)
 			}
 		}
-		if windy(e.Kind) {
+		if counts {
 			hours += e.Hours * float64(len(e.Cases)) / 2
 		}
 		found, falsely = append(found, strong), append(falsely, calm)

@@ -35,11 +35,13 @@ type Findings struct {
 	Same      Delay `json:"delay_of_the_same"` // of the episodes of Reference
 	Reference Delay `json:"delay_of_the_reference"`
 
-	False    []WindRate   `json:"false_openings"`
-	Faults   Rate         `json:"false_openings_with_a_fault"`
-	Coverage []Coverage   `json:"coverage"`      // by the true loss
-	Told     []Coverage   `json:"coverage_told"` // by the median that was told
-	Sure     []ClassShare `json:"reliability"`   // steps that reached the level, by the probability told of it, in 100
+	False    []WindRate   `json:"false_openings"` // with all instruments sound
+	Faults   []FaultRate  `json:"false_openings_by_fault"`
+	Windy    Rate         `json:"false_openings_in_all"` // sound or not
+	Coverage []Coverage   `json:"coverage"`              // by the true loss
+	Told     []Coverage   `json:"coverage_told"`         // by the median that was told
+	Sure     []ClassShare `json:"reliability"`           // steps that reached the level, by the probability told of it, in 100; instruments sound ...
+	Unsure   []ClassShare `json:"reliability_with_a_fault"`
 	Centre   Off          `json:"centre"`
 	Arrival  Off          `json:"front_arrival"`
 	Sweep    []Choice     `json:"choices"`
@@ -78,6 +80,12 @@ type WindRate struct {
 	Loss   Rate    `json:"loss"`
 	Gain   Rate    `json:"gain"`
 	Both   Rate    `json:"both"`
+}
+
+// FaultRate is the false openings in any wind with one instrument broken.
+type FaultRate struct {
+	Fault synthetic.FaultKind `json:"fault"`
+	Rate
 }
 
 // Coverage is how often the 5-95 % interval holds the true change.

@@ -52,6 +52,7 @@ func (r *Report) functions() template.FuncMap {
 		"lines":   func(f *Findings) string { return strings.Join(f.ConfigurationLines(r.Accepted), "\n") },
 		"list":    func(names []string) string { return strings.Join(names, ", ") },
 		"share":   func(s Share) string { return s.words() },
+		"fault":   func(r FaultRate) string { return r.what() },
 		"rate":    func(r Rate) string { return r.words() },
 		"delay":   func(d Delay) string { return d.words() },
 		"class":   func(c Coverage) string { return ClassShare{From: c.From, To: c.To}.class() },

@@ -22,7 +22,7 @@ func invented(n *Network, p Plan) []Record {
 		if kind == synthetic.StudyEddying {
 			e.Eddies = 1
 		}
-		if i%10 == 3 {
+		if i%10 == 9 {
 			e.Fault = "stuck"
 		}
 		for _, g := range grounds(n) {
@@ -42,7 +42,7 @@ func invented(n *Network, p Plan) []Record {
 						c.Opened, c.Found[3] = 440, 1<<levelCount-1
 					}
 				case synthetic.StudySteady, synthetic.StudyEddying:
-					if i%20 == 3 && !gain {
+					if (i%20 == 3 || i%20 == 19) && !gain {
 						c.False, c.Cells = 1, []Cell{{Confidence: 3, Level: 15, Openings: 1}}
 					}
 				case synthetic.StudyFront:
@@ -106,9 +106,22 @@ func TestTallySumsUp(t *testing.T) {
 	for _, w := range f.False {
 		hours, events = hours+w.Both.Hours, events+w.Both.Events
 	}
-	near(t, "path-hours", hours, 200*2*0.25, 1e-9)
+	// One in ten is windy with a stuck mast, and counts apart.
+	near(t, "path-hours", hours, 160*2*0.25, 1e-9)
 	if events != 40 { // i%20 == 3 is windy with eddies: 20 of 400, two grounds
 		t.Errorf("%d false openings, want 40", events)
+	}
+	for _, r := range f.Faults {
+		want := Rate{}
+		if r.Fault == synthetic.FaultStuck {
+			want.Events, want.Hours = 40, 40*2*0.25
+		}
+		if r.Events != want.Events || r.Hours != want.Hours {
+			t.Errorf("%s: %d in %g h, want %d in %g", r.Fault, r.Events, r.Hours, want.Events, want.Hours)
+		}
+	}
+	if f.Windy.Events != 80 || f.Windy.Hours != 100 {
+		t.Errorf("in all: %+v", f.Windy)
 	}
 	near(t, "coverage", f.Coverage[0].Inside, 700.0/900, 1e-12)
 	near(t, "coverage by what was told", f.Told[1].Inside, 0.5, 1e-12)
@@ -129,7 +142,7 @@ func TestTallySumsUp(t *testing.T) {
 	if force == nil || force.Level != 15 || force.Confidence != 0.8 || force.False.Hits != 40 {
 		t.Fatalf("in force: %+v", force)
 	}
-	near(t, "false openings in force", force.Per100, 40, 1e-9)
+	near(t, "false openings in force", force.Per100, 50, 1e-9)
 	if f.Chosen == nil || f.Chosen.Level == 15 || f.Chosen.Confidence != 0.8 {
 		t.Errorf("chosen: %+v", f.Chosen)
 	}

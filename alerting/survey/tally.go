@@ -212,7 +212,7 @@ func (t *tally) falsely(f *Findings) {
 				w.To = 15.5 // 30 kt
 			}
 			belongs := func(e *Episode) bool {
-				return windy(e.Kind) && (e.Eddies > 0) == eddies && e.Wind >= w.From && e.Wind < w.To
+				return windy(e.Kind) && e.Fault == "" && (e.Eddies > 0) == eddies && e.Wind >= w.From && e.Wind < w.To
 			}
 			w.Loss = t.rate(belongs, func(c *Case) bool { return !c.Gain })
 			w.Gain = t.rate(belongs, func(c *Case) bool { return c.Gain })
@@ -220,7 +220,12 @@ func (t *tally) falsely(f *Findings) {
 			f.False = append(f.False, w)
 		}
 	}
-	f.Faults = t.rate(func(e *Episode) bool { return windy(e.Kind) && e.Fault != "" }, func(*Case) bool { return true })
+	every := func(*Case) bool { return true }
+	for _, kind := range synthetic.StudyFaults() {
+		r := t.rate(func(e *Episode) bool { return windy(e.Kind) && e.Fault == string(kind) }, every)
+		f.Faults = append(f.Faults, FaultRate{Fault: kind, Rate: r})
+	}
+	f.Windy = t.rate(func(e *Episode) bool { return windy(e.Kind) }, every)
 }
 
 // rate counts openings on some cases of some episodes over their path-hours: a
@@ -246,10 +251,19 @@ func (t *tally) rate(belongs func(*Episode) bool, counts func(*Case) bool) Rate 
 func (t *tally) cover(f *Findings) {
 	f.Coverage = t.coverage(func(c *Case) [][3]int { return c.Steps })
 	f.Told = t.coverage(func(c *Case) [][3]int { return c.Told })
+	f.Sure, f.Unsure = t.reliability(false), t.reliability(true)
+}
+
+// reliability is how often a loss reached the level, by the probability told of
+// it, in the episodes with or without a fault.
+func (t *tally) reliability(fault bool) (all []ClassShare) {
 	const width = 100 / probabilityCount
 	for k := range probabilityCount {
 		clusters := make([]cluster, 0, len(t.episodes))
 		for _, e := range t.episodes {
+			if (e.Fault != "") != fault {
+				continue
+			}
 			var c cluster
 			for i := range e.Cases {
 				if n := e.Cases[i].Sure[k]; !e.Cases[i].Gain {
@@ -258,8 +272,9 @@ func (t *tally) cover(f *Findings) {
 			}
 			clusters = append(clusters, c)
 		}
-		f.Sure = append(f.Sure, ClassShare{From: float64(k * width), To: float64((k + 1) * width), Share: shareOf(clusters)})
+		all = append(all, ClassShare{From: float64(k * width), To: float64((k + 1) * width), Share: shareOf(clusters)})
 	}
+	return all
 }
 
 // coverage sums up the counts of the losses that of gives.

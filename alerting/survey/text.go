@@ -6,6 +6,7 @@ import (
 	"strings"
 
 	"sockline/sensors/quantity"
+	"sockline/sensors/synthetic"
 )
 
 // WriteText prints the report for a terminal.
@@ -115,6 +116,23 @@ func (r Rate) words() string {
 	return fmt.Sprintf("%.2f (%.2f to %.2f), %d in %.0f", r.Per100, r.Low, r.High, r.Events, r.Hours)
 }
 
+// what is broken, in words.
+func (r FaultRate) what() string {
+	switch r.Fault {
+	case synthetic.FaultDead:
+		return "silent"
+	case synthetic.FaultStuck:
+		return "stuck"
+	case synthetic.FaultTurned:
+		return "turned by 20 to 90 degrees"
+	case synthetic.FaultFactor:
+		return "reads 0.3 to 0.8 of the wind"
+	case synthetic.FaultSpikes:
+		return "has spikes"
+	}
+	return "loses 30 to 90 % of its data"
+}
+
 // class of a share, as in "20 to 25".
 func (c ClassShare) class() string {
 	if c.To == 0 && c.From > 0 {
@@ -146,7 +164,7 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 	fmt.Fprintf(b, "\nDelay from %.0f kt to level 2: %s\n", f.Large, f.Delay.words())
 	fmt.Fprintf(b, "  outflows, all masts sound: %s\n  a test that knows size and place, opening falsely as often (z %.2f): %s\n",
 		f.Same.words(), f.Reference.Limit, f.Reference.words())
-	b.WriteString("\nFalse openings of level 2 or more in 100 path-hours of windy weather (a loss or a gain)\n")
+	b.WriteString("\nFalse openings of level 2 or more in 100 path-hours of windy weather, all instruments sound (a loss or a gain)\n")
 	for _, w := range f.False {
 		with := "without eddies"
 		if w.Eddies {
@@ -154,11 +172,17 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 		}
 		fmt.Fprintf(b, "  %2.0f to %2.0f kt, %-15s %s\n", quantity.Knots(w.From), quantity.Knots(w.To), with, w.Both.words())
 	}
-	fmt.Fprintf(b, "  with a broken instrument      %s\n", f.Faults.words())
-	fmt.Fprintf(b, "\nTold probability of a loss of %.0f kt or more, and how often there was one\n", f.Large)
-	for _, c := range f.Sure {
-		if c.Cases > 0 {
-			fmt.Fprintf(b, "  %2.0f to %3.0f in 100  %s steps\n", c.From, c.To, c.words())
+	b.WriteString("... in any wind, with one instrument broken\n")
+	for _, r := range f.Faults {
+		if r.Hours > 0 {
+			fmt.Fprintf(b, "  %-29s %s\n", r.what(), r.words())
+		}
+	}
+	fmt.Fprintf(b, "... in all, a tenth of it with a broken instrument: %s\n", f.Windy.words())
+	fmt.Fprintf(b, "\nTold probability of a loss of %.0f kt or more, and how often there was one\n  (all instruments sound; one broken)\n", f.Large)
+	for k, c := range f.Sure {
+		if u := f.Unsure[k]; c.Cases+u.Cases > 0 {
+			fmt.Fprintf(b, "  %2.0f to %3.0f in 100  %s steps; %s\n", c.From, c.To, c.words(), u.words())
 		}
 	}
 	coverageText(b, "where the median told was", f.Told)

@@ -28,6 +28,11 @@ func StudyKinds() []StudyKind {
 	return []StudyKind{StudyOutflow, StudyFront, StudySteady, StudyEddying}
 }
 
+// StudyFaults lists what may be broken in a study.
+func StudyFaults() []FaultKind {
+	return []FaultKind{FaultDead, FaultStuck, FaultTurned, FaultFactor, FaultSpikes, FaultDrops}
+}
+
 // Study says what to draw.
 type Study struct {
 	// Seed is that of episode 0; episode i has Seed + i.
@@ -167,7 +172,7 @@ func (s Study) faults(seed uint64) []Fault {
 	}
 	f := Fault{
 		Mast: s.Masts[int(place*float64(len(s.Masts)))],
-		Kind: [...]FaultKind{FaultDead, FaultStuck, FaultTurned, FaultFactor, FaultSpikes, FaultDrops}[rng.IntN(6)],
+		Kind: StudyFaults()[rng.IntN(6)],
 		Span: Span{From: between(0, 600), To: math.Inf(1)},
 	}
 	sign := float64(1 - 2*rng.IntN(2))
