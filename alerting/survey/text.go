@@ -232,7 +232,7 @@ func (o Off) text(b *strings.Builder, what, unit string) {
 
 // choicesText shows some of the choices: all of them are in the JSON.
 func (f *Findings) choicesText(b *strings.Builder, accepted float64) {
-	fmt.Fprintf(b, "\nOther choices: changes of %.0f kt or more found, and false openings in 100 path-hours\n", f.Large*4/3)
+	fmt.Fprintf(b, "\nOther choices: changes of %.0f kt or more found, and false openings in 100 path-hours with sound instruments\n", f.Large*4/3)
 	for _, c := range f.Sweep {
 		even := (c.Level%2 == 0 || c.InForce) && (c.Confidence == 0.6 || c.Confidence == 0.8 || c.Confidence == 0.9)
 		if !even && !c.InForce || c.Level > 20 {
