@@ -102,6 +102,7 @@ func TestPeople(t *testing.T) {
 			t.Errorf("somebody who has logged out is offered %.0f deeds", n)
 		}
 	})
+	t.Run("officer", func(t *testing.T) { officerDeeds(t, b, d.url) })
 }
 
 // acknowledge presses Tab until the button has the focus, and Enter: one
