@@ -131,5 +131,7 @@ func (r *reference) look(s *averages.Snapshot, t, unit, level float64) (z float6
 	}
 	strength := blas64.Dot(blas64.Vector{N: r.n, Inc: 1, Data: r.y}, w) / information
 	unit /= share
-	return (strength - level/unit) * math.Sqrt(information), true
+	z = (strength - level/unit) * math.Sqrt(information)
+	// A path that the outflow hardly touches tells nothing of its strength.
+	return z, !math.IsInf(z, 0)
 }

@@ -4,6 +4,7 @@ import (
 	"context"
 	"encoding/json"
 	"errors"
+	"math"
 	"slices"
 	"strings"
 	"testing"
@@ -137,6 +138,37 @@ func TestBadPlansAndNetworks(t *testing.T) {
 	}
 	if err := Comparable(network(t, "skerrymoor"), strip(0, 1, 2)); err != nil {
 		t.Errorf("the same airfield with fewer masts: %v", err)
+	}
+}
+
+// Far from a compact outflow hardly any wind is left of it: what the test that
+// knows it makes of that is no number, and must not come into a record.
+func TestReferenceFarFromItsOutflow(t *testing.T) {
+	n := network(t, "pellmark")
+	p := newPlayer(n, Plan{Seed: 1000, Episodes: 1})
+	scene := synthetic.Still(7, synthetic.ModelHolmesOliver, 300, 200, 8, 900)
+	run, err := p.begin(scene)
+	if err != nil {
+		t.Fatal(err)
+	}
+	r := newReference(n, scene, scene.Outflows[0])
+	seen := false
+	for {
+		found, second, more := run.next()
+		if !more {
+			break
+		}
+		if second < 400 {
+			continue
+		}
+		if z, ok := r.look(found.Snapshot, float64(second), 5e-324, n.Settings.Levels.Large); ok {
+			t.Fatalf("after %d s a loss of next to nothing gives z %g", second, z)
+		}
+		z, ok := r.look(found.Snapshot, float64(second), 1, n.Settings.Levels.Large)
+		seen = seen || ok && !math.IsNaN(z)
+	}
+	if !seen {
+		t.Error("the test never had a number at all")
 	}
 }
 
