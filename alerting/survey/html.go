@@ -122,7 +122,10 @@ func (f *Findings) summary() []string {
 		events, hours = events+w.Both.Events, hours+w.Both.Hours
 	}
 	if hours > 0 {
-		out = append(out, fmt.Sprintf("In windy weather up to 30 kt level 2 opens falsely %.2f times in 100 hours of one path (%d times in %.0f hours).", 100*float64(events)/hours, events, hours))
+		out = append(out, fmt.Sprintf("In windy weather up to 30 kt, with all instruments sound, level 2 opens falsely %.2f times in 100 hours of one path (%d times in %.0f hours).", 100*float64(events)/hours, events, hours))
+	}
+	if events, hours := f.Windy.Events-events, f.Windy.Hours-hours; hours > 0.01 {
+		out = append(out, fmt.Sprintf("With one instrument broken it is %.2f (%d in %.0f).", 100*float64(events)/hours, events, hours))
 	}
 	if g := f.Ground; g != nil {
 		for _, c := range g.Counts {
