@@ -51,8 +51,8 @@ func shareOf(clusters []cluster) Share {
 	if s.Hits > 0 && s.Hits < s.Cases && used > 1 {
 		sum := 0.0
 		for _, c := range clusters {
-			d := float64(c.hits) - s.Share*float64(c.cases)
-			sum += d * d
+			d := float64(c.hits) - float64(s.Share*float64(c.cases))
+			sum += float64(d * d)
 		}
 		variance := sum / (n * n) * float64(used) / float64(used-1)
 		effect := max(variance/(s.Share*(1-s.Share)/n), 1)
