@@ -15,25 +15,30 @@ type Reader struct {
 // fail marks the reader as bad.
 func (r *Reader) fail() { r.Bad, r.Left = true, nil }
 
+// skip passes over the n bytes of a number; none or fewer: there was no number.
+func (r *Reader) skip(n int) {
+	if n <= 0 {
+		r.fail()
+		return
+	}
+	r.Left = r.Left[n:]
+}
+
 // Uvarint reads what binary.AppendUvarint wrote.
 func (r *Reader) Uvarint() uint64 {
 	v, n := binary.Uvarint(r.Left)
-	if n <= 0 {
-		r.fail()
+	if r.skip(n); r.Bad {
 		return 0
 	}
-	r.Left = r.Left[n:]
 	return v
 }
 
 // Varint reads what binary.AppendVarint wrote.
 func (r *Reader) Varint() int64 {
 	v, n := binary.Varint(r.Left)
-	if n <= 0 {
-		r.fail()
+	if r.skip(n); r.Bad {
 		return 0
 	}
-	r.Left = r.Left[n:]
 	return v
 }
 

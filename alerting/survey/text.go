@@ -129,8 +129,11 @@ func (r FaultRate) what() string {
 		return "reads 0.3 to 0.8 of the wind"
 	case synthetic.FaultSpikes:
 		return "has spikes"
+	case synthetic.FaultDrops:
+		return "loses 30 to 90 % of its data"
+	case synthetic.FaultClock, synthetic.FaultLate: // not in a study
 	}
-	return "loses 30 to 90 % of its data"
+	return string(r.Fault)
 }
 
 // class of a share, as in "20 to 25".

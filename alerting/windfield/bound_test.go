@@ -23,7 +23,7 @@ func TestBoundOfTheEvidence(t *testing.T) {
 		en := e.entryFor(snapshot)
 		e.observe(snapshot, en)
 		for _, state := range en.states {
-			e.solve(en, state)
+			e.solve(state)
 			for c := range faultClass {
 				p, n, b := e.patternsFor(en, state, c), e.classes[c].count(), e.b[c]
 				bound, known := p.most(e.y, e.w), len(p.seen) > 0

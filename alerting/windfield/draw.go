@@ -26,7 +26,7 @@ func (e *Estimator) draw(en *entry) {
 			if solved != pt.state {
 				solved = pt.state
 				e.addGain(en, s)
-				e.solve(en, s)
+				e.solve(s)
 				columns(e.plain, s.gain, e.y)
 			}
 			st = e.shape(en, s, pt)

@@ -127,11 +127,19 @@ func TestTrailIsFinite(t *testing.T) {
 			t.Fatalf("template %d: begun earlier %v, later %v", j, long.odds[j], short.odds[j])
 		}
 	}
-	was := long.share
+	// The same to one second before, and nothing at all where the other has been
+	// told of an outflow that is beyond doubt.
 	long.say(now, templates, 0, 1e6, 1e6, [2]float64{})
-	long.recall(now + long.stride - 1)
-	if long.share != was && long.newest >= now {
-		t.Errorf("what was seen less than a stride ago counts: %v, before %v", long.share, was)
+	soon := now + long.stride - sensors.Second
+	long.recall(soon)
+	short.recall(soon)
+	if long.share != short.share || long.front != short.front {
+		t.Errorf("what was seen less than a stride ago counts: %v and %v, without it %v and %v", long.share, long.front, short.share, short.front)
+	}
+	long.recall(now + long.stride)
+	short.recall(now + long.stride)
+	if long.share == short.share {
+		t.Error("what was seen a stride ago does not count")
 	}
 }
 

@@ -273,7 +273,7 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 	e.faultGains(t)
 	top := math.Inf(-1)
 	for k, s := range en.states {
-		e.solve(en, s)
+		e.solve(s)
 		e.stateLog[k] = -(blas64.Dot(vec(e.y), vec(e.w)) + s.logDet) / 2
 		if k < ambient {
 			top = max(top, e.stateLog[k]+math.Log(e.weights[k]))
@@ -296,7 +296,7 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 	shares := [...]float64{e.trail.share, e.trail.front, evenHanded}
 	var found [len(shares)]float64
 	for k := ambient; k < len(en.states); k++ {
-		e.solve(en, en.states[k])
+		e.solve(en.states[k])
 		var weights [len(shares)]float64
 		var best [parents]int
 		for c := range e.classes {
@@ -359,7 +359,7 @@ func (e *Estimator) doubt() {
 }
 
 // solve fills w = K^-1 y of a state.
-func (e *Estimator) solve(en *entry, s *state) { multiply(s, e.y, e.w) }
+func (e *Estimator) solve(s *state) { multiply(s, e.y, e.w) }
 
 // multiply fills out with K^-1 x; K^-1 is its own transpose.
 func multiply(s *state, x, out []float64) { columns(out, s.inverse, x) }

@@ -3,7 +3,6 @@ package main
 import (
 	"context"
 	"fmt"
-	"os"
 	"runtime"
 	"slices"
 	"sync"
@@ -20,8 +19,8 @@ import (
 )
 
 // One station sends 10,000 messages a second over a real broker. Every reading
-// of the others is received and kept, half of them and more within the second
-// that a step waits, and memory stays as it is.
+// of the others is received and kept, within the second that a step waits, and
+// memory stays as it is.
 func TestFloodOverBroker(t *testing.T) {
 	b := brokertest.Start(t, "max_queued_messages 100000")
 	cfg := mustLoad(t, site(t, b.URL(), t.TempDir()))
@@ -30,8 +29,8 @@ func TestFloodOverBroker(t *testing.T) {
 		slices.Sort(delays)
 		p50, p99 := delays[len(delays)/2], delays[len(delays)*99/100]
 		t.Logf("flood of %5d a second: the others' delay %v in the middle, %v at the 99th percentile; %d refused, heap %+d KiB", rate, p50, p99, refused, grown>>10)
-		// The last hundredth is that of a machine that does nothing else.
-		if p50 > time.Second || os.Getenv("SOCKLINE_LONG") != "" && p99 > time.Second {
+		// With the race detector, other packages have the processor as well.
+		if p50 > time.Second || !racing && p99 > time.Second {
 			t.Errorf("flood of %d: half of the readings of the others took over %v, one in a hundred over %v", rate, p50, p99)
 		}
 		if grown > 32<<20 {
