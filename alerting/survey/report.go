@@ -85,7 +85,7 @@ func LayoutOf(n *Network) Layout {
 
 // Finish fills in what every report says of itself.
 func (r *Report) Finish() {
-	r.Format, r.Exercise, r.Notice = 1, true, alerting.Notice
+	r.Format, r.Exercise, r.Notice = 2, true, alerting.Notice
 	r.Caveats = r.caveats()
 }
 

@@ -246,7 +246,7 @@ func TestTextAndJSON(t *testing.T) {
 	if err := json.Unmarshal(b.Bytes(), &back); err != nil {
 		t.Fatal(err)
 	}
-	if back.Format != 1 || !back.Exercise || back.Notice != alerting.Notice || len(back.Results) != 2 || back.Results[0].Findings.Ground == nil {
+	if back.Format != 2 || !back.Exercise || back.Notice != alerting.Notice || len(back.Results) != 2 || back.Results[0].Findings.Ground == nil {
 		t.Errorf("read back: format %d, exercise %v, %d networks", back.Format, back.Exercise, len(back.Results))
 	}
 }

@@ -181,7 +181,7 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 			fmt.Fprintf(b, "  %-29s %s\n", r.what(), r.words())
 		}
 	}
-	fmt.Fprintf(b, "... in all, a tenth of it with a broken instrument: %s\n", f.Windy.words())
+	fmt.Fprintf(b, "... in all, sound or not: %s\n", f.Windy.words())
 	fmt.Fprintf(b, "\nTold probability of a loss of %.0f kt or more, and how often there was one\n  (all instruments sound; one broken)\n", f.Large)
 	for k, c := range f.Sure {
 		if u := f.Unsure[k]; c.Cases+u.Cases > 0 {
