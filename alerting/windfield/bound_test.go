@@ -31,7 +31,7 @@ func TestBoundOfTheEvidence(t *testing.T) {
 				best, fit := math.Inf(-1), 0.0
 				for j := range n {
 					b3 := [3]float64{b[j], b[n+j], b[2*n+j]}
-					mean := mul3([6]float64(p.precision[j*6:j*6+6]), b3)
+					mean := mul3(packed(p.precision, n, j), b3)
 					v := b3[0]*mean[0] + b3[1]*mean[1] + b3[2]*mean[2]
 					best, fit = max(best, v/2+p.logOdds[j]), max(fit, v)
 				}

@@ -41,6 +41,29 @@ func TestColumns(t *testing.T) {
 	}
 }
 
+// Several sums over the same columns are those of one after the other, to the
+// bit, and nothing between their rows is written.
+func TestColumnsOf(t *testing.T) {
+	for sides := 1; sides < 8; sides++ {
+		for rows := range 12 {
+			for cols := range 40 {
+				a, _ := randomColumns(rows, cols)
+				w, _ := randomColumns(sides, rows)
+				const gap = 3
+				space := slices.Repeat([]float64{7}, sides*(cols+gap))
+				want := slices.Clone(space)
+				for side := range sides {
+					slowColumns(want[side*(cols+gap):][:cols], a, w[side*rows:(side+1)*rows])
+				}
+				columnsOf(space, cols+gap, a, w, cols, sides)
+				if !slices.Equal(space, want) {
+					t.Fatalf("%d sides of %d x %d: %v, want %v", sides, rows, cols, space, want)
+				}
+			}
+		}
+	}
+}
+
 // BenchmarkColumns sets the sums beside those of gonum, of both layouts: for the
 // outflows at eight masts, and for the fronts of one heading at their blocks.
 func BenchmarkColumns(b *testing.B) {

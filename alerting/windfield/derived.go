@@ -226,7 +226,7 @@ func (e *Estimator) partnersOf(en *entry, s *state, first int) (found [partners]
 	}
 	p := s.patterns[outflowClass]
 	b := e.b[outflowClass]
-	p1 := [6]float64(p.precision[first*6 : first*6+6])
+	p1 := packed(p.precision, n, first)
 	mean1 := mul3(p1, [3]float64{b[first], b[n+first], b[2*n+first]})
 	at := e.outflows.templates[first]
 	least := max(nearestPartner, at.radius)

@@ -26,7 +26,7 @@ func (e *Estimator) draw(en *entry) {
 			if solved != pt.state {
 				solved = pt.state
 				e.addGain(en, s)
-				e.solve(s)
+				e.use(s)
 				columns(e.plain, s.gain, e.y)
 			}
 			st = e.shape(en, s, pt)
@@ -47,12 +47,7 @@ func (e *Estimator) draw(en *entry) {
 		if p.Kinds[d] == OutflowPattern {
 			p.Over[d] = e.outflows.templates[pt.pattern].outflow(st.now+excess, pt.weight)
 		}
-		base, slope, mean := e.base[:nt], e.slope[:nt], p.Mean[:nt]
-		for t := range row {
-			v := base[t] + float64(excess*slope[t]) + z[t]
-			row[t] = v
-			mean[t] += v
-		}
+		drawn(row, p.Mean, e.base, e.slope, z, excess)
 	}
 	for t := range p.Mean {
 		p.Mean[t] /= Draws

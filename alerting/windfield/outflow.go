@@ -123,9 +123,7 @@ func (b *outflowBank) prior(int) ([6]float64, [dims]float64, float64) { return b
 // project: the wind of each strength stands in its own block only.
 func (b *outflowBank) project(en *entry, w, out []float64) {
 	n, width := len(b.templates), 2*len(en.live)
-	for d := range blocks {
-		columns(out[d*n:(d+1)*n], en.outflowColumns, w[d*width:(d+1)*width])
-	}
+	columnsOf(out, n, en.outflowColumns, w[:blocks*width], n, blocks)
 }
 
 func (b *outflowBank) gram(en *entry, s *state, m []float64) {

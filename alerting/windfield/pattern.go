@@ -43,8 +43,8 @@ type class interface {
 // patterns holds, for one class and one ambient state, what the evidence and
 // the effect of every pattern need.
 type patterns struct {
-	precision []float64 // [pattern][6] P, packed ...
-	inverse   []float64 // ... and P^-1
+	precision []float64 // [6][pattern] P, packed: see explain
+	inverse   []float64 // [pattern][6] P^-1
 	logOdds   []float64 // -1/2 log |I + C M|
 	today     []float64 // [pattern][dims] P q: mean of today's strength on b
 	sharpness []float64 // 1 / (sqrt(2) its standard deviation)
@@ -114,7 +114,9 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 			sum[i] = inv[i] + m[j*6+i]
 		}
 		prec, logDet := invert3(sum)
-		copy(p.precision[j*6:], prec[:])
+		for i, v := range prec {
+			p.precision[i*n+j] = v
+		}
 		copy(p.inverse[j*6:], sum[:])
 		p.logOdds[j] = -(logDet + logDetC) / 2 // |I + C M| = |C| |C^-1 + M|
 		p.greatest = max(p.greatest, p.logOdds[j])
@@ -180,7 +182,7 @@ type strength struct {
 
 func (e *Estimator) strengthOf(s *state, k, j int, b [dims]float64) strength {
 	_, q, rest := e.classes[k].prior(j)
-	return strengthFrom([6]float64(s.patterns[k].precision[j*6:j*6+6]), q, rest, b)
+	return strengthFrom(packed(s.patterns[k].precision, e.classes[k].count(), j), q, rest, b)
 }
 
 // strengthFrom is the posterior of the strengths with the covariance p, given

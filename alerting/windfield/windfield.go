@@ -102,16 +102,20 @@ type Estimator struct {
 	derived    []derived // outflows made for the step at hand ...
 	children   []part    // ... and how likely they are beside the mixture
 	pairing    pairing
-	faultGain  []float64 // log of each mast's prior of being wrong over the even-handed one
+	faultGain  []float64 // log of each mast's prior of being wrong over the even-handed one ...
+	faultOdds  []float64 // ... and the same by pattern
 
 	// Scratch and result, sized once.
 	live      []int
 	steps     []uint8
 	noise     []float64
 	y         []float64
-	w         []float64
+	solved    [][]float64 // [state] K^-1 y of the step
+	w         []float64   // that of the state at hand
 	b         [][]float64 // [class][strength][pattern]
 	evidence  []float64   // per pattern of one class and state
+	strong    []int       // the patterns among them that may count ...
+	evident   []float64   // ... and their weights
 	column    []float64
 	effect    []float64
 	plain     []float64 // posterior mean headwind of a state without a pattern
@@ -171,12 +175,16 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.doubts = newDoubtMemory(len(masts))
 	e.trail = newTrail(e.outflows.templates, layout, prior)
 	e.faultGain = make([]float64, len(masts))
+	e.faultOdds = make([]float64, e.classes[faultClass].count())
 	e.noise = make([]float64, 0, blocks*blocks*len(masts))
 	e.live = make([]int, 0, len(masts))
 	e.steps = make([]uint8, 0, 2*len(masts)+1)
 	e.y = make([]float64, n)
-	e.w = make([]float64, n)
+	for range e.fields {
+		e.solved = append(e.solved, make([]float64, n))
+	}
 	e.evidence = make([]float64, most)
+	e.strong, e.evident = make([]int, most), make([]float64, most)
 	e.column = make([]float64, n)
 	e.plain = make([]float64, len(targets))
 	e.effect = make([]float64, len(targets))
@@ -249,7 +257,6 @@ func (e *Estimator) step(s *averages.Snapshot) *Posterior {
 // observe fills y: block-major, east and north of each live mast.
 func (e *Estimator) observe(s *averages.Snapshot, en *entry) {
 	e.y = e.y[:en.n]
-	e.w = e.w[:en.n]
 	nl := len(en.live)
 	for i, m := range en.live {
 		mast := s.Mast(m)
@@ -296,7 +303,7 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 	shares := [...]float64{e.trail.share, e.trail.front, evenHanded}
 	var found [len(shares)]float64
 	for k := ambient; k < len(en.states); k++ {
-		e.solve(en.states[k])
+		e.use(en.states[k])
 		var weights [len(shares)]float64
 		var best [parents]int
 		for c := range e.classes {
@@ -359,7 +366,13 @@ func (e *Estimator) doubt() {
 }
 
 // solve fills w = K^-1 y of a state.
-func (e *Estimator) solve(s *state) { multiply(s, e.y, e.w) }
+func (e *Estimator) solve(s *state) {
+	e.use(s)
+	multiply(s, e.y, e.w)
+}
+
+// use takes up w of a state again that was solved in this step.
+func (e *Estimator) use(s *state) { e.w = e.solved[s.field][:len(e.y)] }
 
 // multiply fills out with K^-1 x; K^-1 is its own transpose.
 func multiply(s *state, x, out []float64) { columns(out, s.inverse, x) }
@@ -400,37 +413,56 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 	}
 	e.classes[c].project(en, e.w, b)
 	evidence := e.evidence[:n]
-	best, fit := math.Inf(-1), 0.0
-	for j := range evidence {
-		b0, b1, b2 := b[j], b[n+j], b[2*n+j]
-		q := p.precision[j*6 : j*6+6 : j*6+6]
-		v := float64(q[0]*float64(b0*b0)) + float64(q[3]*float64(b1*b1)) + float64(q[5]*float64(b2*b2)) +
-			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
-		fit = max(fit, v)
-		evidence[j] = v/2 + p.logOdds[j]
-		switch c {
-		case faultClass:
-			evidence[j] += e.faultGain[j%len(e.faultGain)]
-		case outflowClass:
-			evidence[j] += e.trail.odds[j]
+	var extra []float64
+	switch c {
+	case faultClass:
+		extra = e.faultOdds
+		for j := range extra {
+			extra[j] = e.faultGain[j%len(e.faultGain)]
 		}
-		best = max(best, evidence[j])
+	case outflowClass:
+		extra = e.trail.odds
 	}
+	fit, best := explain(evidence, b, p.precision, p.logOdds, extra)
 	p.remember(e.y, e.w, fit)
 	if best < least {
 		return 0
 	}
-	least = max(least, best-hopeless)
+	return e.count(p, k, c, max(least, best-hopeless), scale)
+}
+
+// count appends the patterns of class c on state k whose evidence is at least
+// least, and gives their summed weight. b and evidence are those of the class.
+func (e *Estimator) count(p *patterns, k, c int, least, scale float64) float64 {
+	n, b := e.classes[c].count(), e.b[c]
+	// Which of them it is cannot be foretold: to write all down and to go on only
+	// after those that count is quicker than to branch.
+	strong, found := e.strong[:n], 0
+	for j, l := range e.evidence[:n] {
+		strong[found] = j
+		found += counts(l, least)
+	}
+	strong = strong[:found]
+	weights := e.evident[:found]
+	for i, j := range strong {
+		weights[i] = e.evidence[j] + scale
+	}
+	exponentials(weights)
 	sum := 0.0
-	for j, l := range evidence {
-		if l < least {
-			continue
-		}
+	for i, j := range strong {
 		now := p.strengthNow(j, b[j], b[n+j], b[2*n+j])
 		// A positive strength puts twice its posterior probability on the evidence.
-		weight := math.Exp(l+scale) * math.Erfc(-now*p.sharpness[j])
+		weight := weights[i] * math.Erfc(-now*p.sharpness[j])
 		sum += weight
 		e.parts = append(e.parts, part{state: k, class: c, pattern: j, weight: weight, now: now, sharpness: p.sharpness[j]})
 	}
 	return sum
+}
+
+// counts is 1 where l is at least least, otherwise 0.
+func counts(l, least float64) int {
+	if l >= least {
+		return 1
+	}
+	return 0
 }
