@@ -24,6 +24,8 @@ const (
 	kilometrePoints = int(1000 / Spacing)
 	// slopeLength is 1000 ft, over which the greatest slope is stated, m.
 	slopeLength = 304.8
+	// atOnce is how many draws are measured at a time where the processor can.
+	atOnce = 4
 	// tie: pairs of the mean profile whose changes differ by less are equal:
 	// 0.05 kt in m/s.
 	tie = 0.05 * 1852.0 / 3600.0
@@ -90,6 +92,7 @@ type Stretch struct {
 	// row, -1 where they are not.
 	first  int
 	turns  []turn
+	space  []float64 // scratch of measureFast
 	sorter sorter
 }
 
@@ -104,6 +107,7 @@ func NewStretch(points []int) *Stretch {
 	s.line = make([]float64, n)
 	s.runs, s.far, s.km = make([]run, 0, n), make([]int, 0, n), make([]int, 0, n)
 	s.turns = make([]turn, n)
+	s.space = make([]float64, atOnce*(n+2*reachPoints))
 	s.first = inARow(points)
 	return s
 }
@@ -113,20 +117,28 @@ func NewStretch(points []int) *Stretch {
 func (s *Stretch) Measure(p *windfield.Posterior) {
 	nt := len(p.Mean)
 	s.lookUp()
-	for d := range windfield.Draws {
-		line := s.along(p.Draws[d*nt : (d+1)*nt])
-		loss, gain := s.extremes(line)
-		kilometre := s.kilometre(line)
-		s.Loss.Sorted[d], s.Gain.Sorted[d] = loss, gain
-		s.kilometreSorted[d] = kilometre
-		s.Loss.joint[d], s.Gain.joint[d], s.jointKilometre[d] = loss, gain, kilometre
+	if !s.measureFast(p.Draws, nt) {
+		s.measureEach(p.Draws, nt)
 	}
+	copy(s.Loss.Sorted, s.Loss.joint)
+	copy(s.Gain.Sorted, s.Gain.joint)
+	copy(s.kilometreSorted, s.jointKilometre)
 	s.Loss.kinds, s.Gain.kinds = &p.Kinds, &p.Kinds
 	s.sorter.sort(s.Loss.Sorted)
 	s.sorter.sort(s.Gain.Sorted)
 	s.sorter.sort(s.kilometreSorted)
 	for i, t := range s.Points {
 		s.Mean[i] = p.Mean[t]
+	}
+}
+
+// measureEach fills what every draw holds, one after the other. The bits are those
+// of measureFast.
+func (s *Stretch) measureEach(draws []float64, targets int) {
+	for d := range windfield.Draws {
+		line := s.along(draws[d*targets : (d+1)*targets])
+		s.Loss.joint[d], s.Gain.joint[d] = s.extremes(line)
+		s.jointKilometre[d] = s.kilometre(line)
 	}
 }
 

@@ -56,6 +56,51 @@ func TestExtremesAgainstPlainSearch(t *testing.T) {
 	}
 }
 
+// Several draws at a time give the bits of one after the other, on lines of every
+// length with the ends not observed, with steps, level ground and zeros of both
+// signs; a gap within goes the slow way.
+func TestMeasureSeveralDraws(t *testing.T) {
+	rng := rand.New(rand.NewPCG(11, 12))
+	fast := 0
+	for n := 2; n <= 3*reachPoints+7; n++ {
+		for trial := range 12 {
+			const before, after = 3, 2
+			s := all(NewStretch(upTo(n)))
+			for i := range s.Points {
+				s.Points[i] += before
+			}
+			s.first = before
+			for i := range rng.IntN(n) * (trial % 3) / 3 {
+				s.Observed[i] = false
+			}
+			s.Observed[n-1] = trial%4 != 1
+			if trial == 11 {
+				s.Observed[n/2] = false
+			}
+			p := posterior(func(_, i int) float64 {
+				if trial%5 == 0 {
+					return []float64{0, math.Copysign(0, -1), 1, -1}[rng.IntN(4)]
+				}
+				return rng.NormFloat64()*4 + 3*math.Sin(float64(i)/3)
+			}, before+n+after)
+			s.Measure(p)
+			loss, gain, kilometre := slices.Clone(s.Loss.joint), slices.Clone(s.Gain.joint), slices.Clone(s.jointKilometre)
+			if s.measureFast(p.Draws, len(p.Mean)) {
+				fast++
+			}
+			s.measureEach(p.Draws, len(p.Mean))
+			for d := range windfield.Draws {
+				for _, pair := range [][2]float64{{loss[d], s.Loss.joint[d]}, {gain[d], s.Gain.joint[d]}, {kilometre[d], s.jointKilometre[d]}} {
+					if bits(pair[0]) != bits(pair[1]) {
+						t.Fatalf("%d points, trial %d, draw %d: %g, one by one %g", n, trial, d, pair[0], pair[1])
+					}
+				}
+			}
+		}
+	}
+	t.Logf("%d cases went the fast way", fast)
+}
+
 // What cannot be seen cannot be part of a change, however large it would be.
 func TestUnobservedPointsDoNotCount(t *testing.T) {
 	s := NewStretch(make([]int, 12))
