@@ -56,7 +56,7 @@ func product(out, a, b []float64, rows int) {
 // and b.
 func addProducts(out, a, b []float64) {
 	a, b = a[:len(out)], b[:len(out)]
-	for j := range out {
+	for j := addProductsFast(out, a, b); j < len(out); j++ {
 		out[j] += float64(a[j] * b[j])
 	}
 }

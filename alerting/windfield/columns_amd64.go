@@ -30,6 +30,12 @@ func explainAVX2(out *float64, n int, b, precision *float64, stride int, odds, e
 //go:noescape
 func drawnAVX2(row, mean *float64, n int, base, slope, noise *float64, excess float64)
 
+// addProductsAVX2 is addProducts for the first n, n being rounded down to a
+// multiple of four.
+//
+//go:noescape
+func addProductsAVX2(out *float64, n int, a, b *float64)
+
 // exponentialsAVX2 replaces n numbers of at most mildExponent by their
 // exponentials, n being rounded down to a multiple of four.
 //
@@ -90,6 +96,16 @@ func drawnFast(row, mean, base, slope, noise []float64, excess float64) int {
 		return 0
 	}
 	drawnAVX2(&row[0], &mean[0], n, &base[0], &slope[0], &noise[0], excess)
+	return n
+}
+
+// addProductsFast does the first of addProducts, and tells how many.
+func addProductsFast(out, a, b []float64) int {
+	n := len(out) / vector * vector
+	if n == 0 || !cpu.X86.HasAVX2 {
+		return 0
+	}
+	addProductsAVX2(&out[0], n, &a[0], &b[0])
 	return n
 }
 

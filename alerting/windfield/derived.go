@@ -169,7 +169,7 @@ func (e *Estimator) child(en *entry, s *state, k int, form, twin template, ratio
 	}
 	sharpness := 1 / math.Sqrt(2*v)
 	weight := math.Exp(evidence-(logDet+logDetC)/2+scale) * math.Erfc(-now*sharpness)
-	e.children = append(e.children, part{state: k, class: derivedClass, pattern: n, weight: weight, now: now, sharpness: sharpness})
+	e.children = append(e.children, part{state: int16(k), class: derivedClass, pattern: int32(n), weight: weight, now: now, sharpness: sharpness})
 }
 
 // wind of unit strength at a place.

@@ -12,7 +12,7 @@ func (e *Estimator) draw(en *entry) {
 	p := &e.posterior
 	clear(p.Mean)
 	cum, i := e.parts[0].weight, 0
-	current, solved := -1, -1
+	current, solved := -1, int16(-1)
 	var st strength
 	for d := range Draws {
 		u := (float64(d) + 0.5) / Draws
@@ -70,11 +70,11 @@ func (e *Estimator) shape(en *entry, s *state, pt part) strength {
 	}
 	var b [dims]float64
 	for d := range dims {
-		e.classes[pt.class].column(en, pt.pattern, d, e.column[:en.n])
+		e.classes[pt.class].column(en, int(pt.pattern), d, e.column[:en.n])
 		b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
 	}
-	st := e.strengthOf(s, pt.class, pt.pattern, b)
-	line := e.line(en, s, pt.class, pt.pattern)
+	st := e.strengthOf(s, int(pt.class), int(pt.pattern), b)
+	line := e.line(en, s, int(pt.class), int(pt.pattern))
 	l0, l1, l2, innovation := line[:nt], line[nt:2*nt], line[2*nt:3*nt], line[3*nt:4*nt]
 	base, slope, plain := e.base[:nt], e.slope[:nt], e.plain[:nt]
 	for t, u := range innovation {

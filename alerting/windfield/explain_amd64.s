@@ -209,6 +209,29 @@ drawn:
 	VZEROUPPER
 	RET
 
+// func addProductsAVX2(out *float64, n int, a, b *float64)
+TEXT ·addProductsAVX2(SB), NOSPLIT, $0-32
+	MOVQ out+0(FP), DI
+	MOVQ n+8(FP), CX
+	MOVQ a+16(FP), SI
+	MOVQ b+24(FP), DX
+	XORQ AX, AX
+
+place:
+	CMPQ CX, $4
+	JLT  added
+	VMOVUPD (SI)(AX*1), Y0
+	VMULPD (DX)(AX*1), Y0, Y0
+	VADDPD (DI)(AX*1), Y0, Y0
+	VMOVUPD Y0, (DI)(AX*1)
+	ADDQ $32, AX
+	SUBQ $4, CX
+	JMP  place
+
+added:
+	VZEROUPPER
+	RET
+
 DATA exponent<>+0(SB)/8, $1.4426950408889634073599246810018920 // 1/ln 2
 DATA exponent<>+8(SB)/8, $0.69314718055966295651160180568695068359375 // upper half of ln 2
 DATA exponent<>+16(SB)/8, $0.28235290563031577122588448175013436025525412068e-12 // lower half

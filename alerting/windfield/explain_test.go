@@ -35,7 +35,7 @@ func TestExplain(t *testing.T) {
 	}
 }
 
-// A draw has the bits of the plain sums, and nothing beside it is written.
+// A draw and added products have the bits of the plain sums, and nothing beside it is written.
 func TestDrawn(t *testing.T) {
 	for n := range 40 {
 		rng := rand.New(rand.NewPCG(uint64(n), 2))
@@ -51,9 +51,14 @@ func TestDrawn(t *testing.T) {
 			wantRow[i] = base[i] + float64(excess*slope[i]) + noise[i]
 			wantMean[i] += wantRow[i]
 		}
+		wantNoise := slices.Clone(noise)
+		for i := range n {
+			wantNoise[i] += float64(base[i] * slope[i])
+		}
 		drawn(row[:n], mean, base, slope, noise, excess)
-		if !same(row, wantRow) || !same(mean, wantMean) {
-			t.Fatalf("%d targets: %v and %v, want %v and %v", n, row, mean, wantRow, wantMean)
+		addProducts(noise[:n], base, slope)
+		if !same(row, wantRow) || !same(mean, wantMean) || !same(noise, wantNoise) {
+			t.Fatalf("%d targets: %v, %v and %v, want %v, %v and %v", n, row, mean, noise, wantRow, wantMean, wantNoise)
 		}
 	}
 }

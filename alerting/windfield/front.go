@@ -173,26 +173,25 @@ func (b *frontBank) gram(en *entry, s *state, m []float64) {
 	for i := range sums {
 		sums[i] = make([]float64, len(b.fronts))
 	}
-	space := make([]float64, len(b.fronts))
+	space := make([]float64, dims*len(b.fronts))
 	b.headings(func(f front, first, last int) {
 		turn(en, s, f, axes)
 		run := en.frontColumns[2*first*nb : 2*last*nb]
 		shares, rates := run[:len(run)/2], run[len(run)/2:]
 		count := last - first
-		times := space[:count]
+		times := space[:dims*count]
+		along, across, left := times[:count], times[count:2*count], times[2*count:]
 		for i := range nb {
-			along, across, left := axes[i*nb:(i+1)*nb], axes[(nb+i)*nb:(nb+i+1)*nb], axes[(2*nb+i)*nb:(2*nb+i+1)*nb]
 			share, rate := shares[i*count:(i+1)*count], rates[i*count:(i+1)*count]
-			add := func(k int, rows, axis, with []float64) {
-				columns(times, rows, axis)
-				addProducts(sums[k][first:last], times, with)
-			}
-			add(0, shares, along, share)
-			addProducts(sums[2][first:last], times, rate)
-			add(1, shares, across, share)
-			add(3, shares, left, share)
-			add(4, rates, across, share)
-			add(5, rates, along, rate)
+			axis := axes[dims*i*nb : dims*(i+1)*nb]
+			columnsOf(times, count, shares, axis, count, dims)
+			addProducts(sums[0][first:last], along, share)
+			addProducts(sums[2][first:last], along, rate)
+			addProducts(sums[1][first:last], across, share)
+			addProducts(sums[3][first:last], left, share)
+			columnsOf(times, count, rates, axis[:2*nb], count, 2)
+			addProducts(sums[4][first:last], across, share)
+			addProducts(sums[5][first:last], along, rate)
 		}
 	})
 	for k, sum := range sums {
@@ -203,7 +202,7 @@ func (b *frontBank) gram(en *entry, s *state, m []float64) {
 }
 
 // turn fills axes with K^-1 between the components along and along a heading,
-// along and left of it, and left and left: [along, across, left][j][i].
+// along and left of it, and left and left: [j][along, across, left][i].
 func turn(en *entry, s *state, f front, axes []float64) {
 	nb := en.n / 2
 	ee, eno, nn := float64(f.east*f.east), float64(f.east*f.north), float64(f.north*f.north)
@@ -211,10 +210,10 @@ func turn(en *entry, s *state, f front, axes []float64) {
 		for j := range nb {
 			k00, k01 := s.inverse[2*i*en.n+2*j], s.inverse[2*i*en.n+2*j+1]
 			k10, k11 := s.inverse[(2*i+1)*en.n+2*j], s.inverse[(2*i+1)*en.n+2*j+1]
-			o := j*nb + i
+			o := dims*j*nb + i
 			axes[o] = float64(ee*k00) + float64(eno*(k01+k10)) + float64(nn*k11)
-			axes[nb*nb+o] = float64(ee*k01) - float64(nn*k10) + float64(eno*(k11-k00))
-			axes[2*nb*nb+o] = float64(nn*k00) - float64(eno*(k01+k10)) + float64(ee*k11)
+			axes[nb+o] = float64(ee*k01) - float64(nn*k10) + float64(eno*(k11-k00))
+			axes[2*nb+o] = float64(nn*k00) - float64(eno*(k01+k10)) + float64(ee*k11)
 		}
 	}
 }

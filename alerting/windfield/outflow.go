@@ -128,20 +128,24 @@ func (b *outflowBank) project(en *entry, w, out []float64) {
 
 func (b *outflowBank) gram(en *entry, s *state, m []float64) {
 	n, width := len(b.templates), 2*len(en.live)
-	times, sum, weights := make([]float64, n), make([]float64, n), make([]float64, width)
-	k := 0
-	for r := range blocks {
-		for c := r; c < blocks; c++ {
-			clear(sum)
-			for i := range width {
-				copy(weights, s.inverse[(c*width+i)*en.n+r*width:])
-				columns(times, en.outflowColumns, weights)
-				addProducts(sum, times, en.outflowColumns[i*n:(i+1)*n])
+	const pairs = 6 // of blocks
+	times, sums, weights := make([]float64, pairs*n), make([]float64, pairs*n), make([]float64, pairs*width)
+	for i := range width {
+		k := 0
+		for r := range blocks {
+			for c := r; c < blocks; c++ {
+				copy(weights[k*width:(k+1)*width], s.inverse[(c*width+i)*en.n+r*width:])
+				k++
 			}
-			for j, v := range sum {
-				m[j*6+k] = v
-			}
-			k++
+		}
+		columnsOf(times, n, en.outflowColumns, weights, n, pairs)
+		for k := range pairs {
+			addProducts(sums[k*n:(k+1)*n], times[k*n:(k+1)*n], en.outflowColumns[i*n:(i+1)*n])
+		}
+	}
+	for k := range pairs {
+		for j, v := range sums[k*n : (k+1)*n] {
+			m[j*6+k] = v
 		}
 	}
 }

@@ -25,7 +25,7 @@ const dims = 3
 type class interface {
 	count() int
 	// prior gives C (packed), q, and the variance of today's strength that A
-	// leaves open, for pattern j.
+	// leaves open, for pattern j; they are the same for all of a class.
 	prior(j int) (c [6]float64, q [dims]float64, rest float64)
 	// project fills b[d*count+j] with Phi_d' w for every pattern.
 	project(en *entry, w, b []float64)
@@ -106,9 +106,9 @@ func (e *Estimator) patternsFor(en *entry, s *state, k int) *patterns {
 	p.greatest = math.Inf(-1)
 	m := make([]float64, n*6)
 	c.gram(en, s, m)
+	cov, q, rest := c.prior(0)
+	inv, logDetC := invert3(cov)
 	for j := range n {
-		cov, q, rest := c.prior(j)
-		inv, logDetC := invert3(cov)
 		var sum [6]float64
 		for i := range sum {
 			sum[i] = inv[i] + m[j*6+i]

@@ -39,7 +39,8 @@ type trail struct {
 	odds   []float64 // by template: log of its share over an equal one
 	most   float64   // of odds
 
-	belief, moved []float64 // scratch
+	belief, moved []float64 // scratch ...
+	factors       []float64 // ... and one more
 	sum           []float64 // of the evidence of this step
 }
 
@@ -62,7 +63,8 @@ const (
 func newTrail(templates []template, layout averages.Layout, p Prior) trail {
 	n := len(templates)
 	t := trail{prior: p, templates: n, each: 2 * len(p.OutflowRadii), log: make([]float32, trailSlots*n),
-		odds: make([]float64, n), belief: make([]float64, n), moved: make([]float64, n), sum: make([]float64, n)}
+		odds: make([]float64, n), belief: make([]float64, n), moved: make([]float64, n), factors: make([]float64, n),
+		sum: make([]float64, n)}
 	reach := sensors.Instant(layout.Total()) * sensors.Second
 	t.stride = (reach + trailEvery - 1) / trailEvery * trailEvery
 	t.links = min(trailLinks, max(1, int((trailSlots-1)*trailEvery/t.stride)))
@@ -113,7 +115,11 @@ func (t *trail) recall(now sensors.Instant) {
 			front *= math.Exp(p.TrailTemper * t.fronts[slot])
 			total := none + front
 			for j, l := range t.log[slot*t.templates : (slot+1)*t.templates] {
-				t.belief[j] *= math.Exp(p.TrailTemper * float64(l))
+				t.factors[j] = p.TrailTemper * float64(l)
+			}
+			exponentials(t.factors)
+			for j, f := range t.factors {
+				t.belief[j] *= f
 				total += t.belief[j]
 			}
 			none, front = none/total, front/total
@@ -171,12 +177,19 @@ func (t *trail) move(wind [2]float64) {
 			sum += kernel[r*width+c]
 		}
 	}
+	for i := range kernel {
+		kernel[i] /= sum
+	}
 	rows := len(t.at) / t.columns
 	for i, from := range t.cells {
 		own := t.belief[i*t.each : (i+1)*t.each]
 		mean := 0.0
 		for _, b := range own {
 			mean += b / float64(t.each)
+		}
+		mixed := t.factors[:t.each]
+		for k, b := range own {
+			mixed[k] = float64((1-sizeChange)*b) + float64(sizeChange*mean)
 		}
 		for r := range width {
 			y := from.row + row + r - trailRadius
@@ -192,10 +205,10 @@ func (t *trail) move(wind [2]float64) {
 				if to < 0 {
 					continue
 				}
-				w := kernel[r*width+c] / sum
+				w := kernel[r*width+c]
 				dst := t.moved[to*t.each : (to+1)*t.each]
-				for k, b := range own {
-					dst[k] += float64(w * (float64((1-sizeChange)*b) + float64(sizeChange*mean)))
+				for k, m := range mixed {
+					dst[k] += float64(w * m)
 				}
 			}
 		}

@@ -69,7 +69,7 @@ const (
 	FaultPattern
 )
 
-func kindOf(class int) PatternKind {
+func kindOf(class int16) PatternKind {
 	if class == derivedClass {
 		return OutflowPattern
 	}
@@ -123,6 +123,7 @@ type Estimator struct {
 	slope     []float64
 	stateLog  []float64
 	parts     []part
+	faulty    []span // of parts: the faults on each state
 	weights   []float64
 	posterior Posterior
 	fewer     Posterior // of Without; made when first asked for
@@ -135,10 +136,14 @@ type Estimator struct {
 // part is one component of the mixture after the step: an ambient state, with
 // or without a pattern over it.
 type part struct {
-	state, class, pattern int // class -1: none
-	weight                float64
-	now, sharpness        float64 // today's strength before it is held positive, and 1 / (sqrt(2) its deviation)
+	state, class   int16 // class -1: none
+	pattern        int32
+	weight         float64
+	now, sharpness float64 // today's strength before it is held positive, and 1 / (sqrt(2) its deviation)
 }
+
+// span of parts from first up to end.
+type span struct{ first, end int }
 
 // Where the outflows, the fronts and the faults stand among the classes.
 const (
@@ -192,7 +197,7 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.slope = make([]float64, len(targets))
 	e.stateLog = make([]float64, len(e.fields))
 	e.weights = make([]float64, len(prior.Fields))
-	e.parts = make([]part, 0, len(e.fields)*(total+1))
+	e.parts, e.faulty = make([]part, 0, len(e.fields)*(total+1)), make([]span, 0, len(prior.Disturbed))
 	e.pairing = newPairing(e.outflows.count(), n)
 	e.newDerived()
 	e.times = make([]float64, 0, len(masts))
@@ -286,7 +291,7 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 			top = max(top, e.stateLog[k]+math.Log(e.weights[k]))
 		}
 	}
-	e.parts, e.children, e.derived = e.parts[:0], e.children[:0], e.derived[:0]
+	e.parts, e.faulty, e.children, e.derived = e.parts[:0], e.faulty[:0], e.children[:0], e.derived[:0]
 	total := 0.0
 	e.trail.recall(t)
 	keep := e.without == noMast && e.trail.wanted(t)
@@ -296,7 +301,7 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 	plain := (1 - e.trail.share - e.trail.front) * (1 - e.prior.FaultShare)
 	for k := range ambient {
 		w := plain * e.weights[k] * math.Exp(e.stateLog[k]-top)
-		e.parts = append(e.parts, part{state: k, class: -1, weight: w})
+		e.parts = append(e.parts, part{state: int16(k), class: -1, weight: w})
 		total += w
 	}
 	undisturbed := total
@@ -307,10 +312,14 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 		var weights [len(shares)]float64
 		var best [parents]int
 		for c := range e.classes {
+			first := len(e.parts)
 			w := e.weighPatterns(en, k, c, shares[c]/float64(len(e.prior.Disturbed)), top, total, keep)
 			total += w
 			found[c] += w
 			weights[c] = w
+			if c == faultClass {
+				e.faulty = append(e.faulty, span{first, len(e.parts)})
+			}
 			if c == outflowClass && keep {
 				e.keepTrail(en, k, top)
 			}
@@ -355,9 +364,9 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 func (e *Estimator) doubt() {
 	p := &e.posterior
 	clear(p.Doubt)
-	for _, pt := range e.parts {
-		if pt.class == faultClass {
-			p.Doubt[pt.pattern%len(p.Doubt)] += pt.weight
+	for _, f := range e.faulty {
+		for _, pt := range e.parts[f.first:f.end] {
+			p.Doubt[int(pt.pattern)%len(p.Doubt)] += pt.weight
 		}
 	}
 	for i, d := range p.Doubt {
@@ -454,7 +463,7 @@ func (e *Estimator) count(p *patterns, k, c int, least, scale float64) float64 {
 		// A positive strength puts twice its posterior probability on the evidence.
 		weight := weights[i] * math.Erfc(-now*p.sharpness[j])
 		sum += weight
-		e.parts = append(e.parts, part{state: k, class: c, pattern: j, weight: weight, now: now, sharpness: p.sharpness[j]})
+		e.parts = append(e.parts, part{state: int16(k), class: int16(c), pattern: int32(j), weight: weight, now: now, sharpness: p.sharpness[j]})
 	}
 	return sum
 }
