@@ -85,6 +85,7 @@ type bank struct {
 	places   int
 	distance []float64 // [curve][heading][place]
 	speed    [speeds]float64
+	slow     [speeds]float64 // 1 / speed
 	east     [headings]float64
 	north    [headings]float64
 	curved   [curves]float64 // log prior
@@ -98,6 +99,7 @@ func newBank(x, y []float64, middleX, middleY float64) *bank {
 	}
 	for s := range speeds {
 		b.speed[s] = speedOf(s)
+		b.slow[s] = 1 / b.speed[s]
 	}
 	for h := range headings {
 		b.east[h], b.north[h] = sincos(headingOf(h))
@@ -133,6 +135,12 @@ type posterior struct {
 	odds    float64        // log of how much better lines explain the times than chance
 	outflow float64        // share of what is no front: edges of outflows, and changes everywhere at once
 	atOnce  float64        // scratch: log of prior times likelihood of the latter
+
+	// Scratch of one row, by speed: the sum of squares that the times leave, and the
+	// product of their variances and the sum of their inverses, some of which may
+	// stand as a logarithm apart.
+	ssr, product, logs [speeds]float64
+	flat               []float64
 }
 
 // hit is a mast that has been reached: its place in the bank, and its onset.
@@ -225,32 +233,17 @@ func (p *posterior) times(b *bank, hits []hit, behind, change quantity.Vector) {
 			if c >= fronts {
 				turned = b.roundAgreement(hits, c, h)
 			}
-			for s := range speeds {
-				slow := 1 / b.speed[s]
-				var w, wt, wtt float64
-				product, logs := 1.0, 0.0
-				for k := range hits {
-					q := &hits[k]
-					away := row[q.place] * slow
-					rough := lineStrays * (away - float64(row[hits[0].place]*slow))
-					v := float64(q.sd*q.sd) + lineRough*lineRough + float64(rough*rough)
-					r := q.t - away
-					iv := 1 / v
-					w += iv
-					wt += float64(r * iv)
-					wtt += float64(float64(r*r) * iv)
-					if product *= v; product > 1e200 { // one logarithm for all
-						logs, product = logs+math.Log(product), 1
-					}
+			if !p.timesFast(i, b, hits, row) {
+				for s := range speeds {
+					p.timesOf(i+s, s, b.slow[s], hits, row)
 				}
-				mean := wt / w
-				ssr := max(wtt-float64(wt*mean), 0)
-				p.t0[i], p.spread[i] = mean, 1/w
+			}
+			for s := range speeds {
 				// The integral over t0 of the normal densities; a line that cannot
 				// come within reach of the best is spared its logarithm.
-				like := b.curved[c] + prior[h][s] + turned + chance - (ssr+constant)/2
+				like := b.curved[c] + prior[h][s] + turned + chance - (p.ssr[s]+constant)/2
 				if p.weight[i] = math.Inf(-1); like-least/2 > best-hopeless {
-					p.weight[i] = like - (logs+math.Log(product*w))/2
+					p.weight[i] = like - (p.logs[s]+math.Log(p.product[s]))/2
 					best = max(best, p.weight[i])
 				}
 				i++
@@ -258,6 +251,33 @@ func (p *posterior) times(b *bank, hits []hit, behind, change quantity.Vector) {
 		}
 	}
 }
+
+// timesOf fills what the times of the hits leave of one line of a row, whose speed
+// is 1/slow.
+func (p *posterior) timesOf(line, s int, slow float64, hits []hit, row []float64) {
+	var w, wt, wtt float64
+	product, logs := 1.0, 0.0
+	for k := range hits {
+		q := &hits[k]
+		away := row[q.place] * slow
+		rough := lineStrays * (away - float64(row[hits[0].place]*slow))
+		v := float64(q.sd*q.sd) + lineRough*lineRough + float64(rough*rough)
+		r := q.t - away
+		iv := 1 / v
+		w += iv
+		wt += float64(r * iv)
+		wtt += float64(float64(r*r) * iv)
+		if product *= v; product > tooGreat { // one logarithm for all
+			logs, product = logs+math.Log(product), 1
+		}
+	}
+	mean := wt / w
+	p.t0[line], p.spread[line] = mean, 1/w
+	p.ssr[s], p.product[s], p.logs[s] = max(wtt-float64(wt*mean), 0), product*w, logs
+}
+
+// tooGreat: a product so large is not multiplied further.
+const tooGreat = 1e200
 
 // hopeless is the logarithm of how much less likely than the best a line may be
 // and still count.
@@ -384,10 +404,19 @@ func (p *posterior) unreached(b *bank, line int, waiting []int, now float64) flo
 	for _, place := range waiting {
 		due := p.t0[line] + row[place]/b.speed[s] + seenAfter
 		// The logistic curve stands for the normal one (within 0.01).
-		like *= missed + (1-missed)/(1+math.Exp(-1.702*(due-now)/sd))
+		switch x := -1.702 * (due - now) / sd; {
+		case x < -saturated:
+		case x > saturated:
+			like *= missed
+		default:
+			like *= missed + (1-missed)/(1+math.Exp(x))
+		}
 	}
 	return like
 }
+
+// saturated: beyond it either way the logistic curve is 0 or 1 to the last bit.
+const saturated = 45
 
 // each calls see with every line of a front that has a weight, in order.
 func (p *posterior) each(b *bank, see func(line, curve, heading int, speed, weight float64)) {

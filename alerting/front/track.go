@@ -80,7 +80,7 @@ func New(masts []Mast, places []Place, layout averages.Layout) *Tracker {
 		masts: masts, places: places,
 		clock:   clockwork{w: w, width: sensors.Instant(w) * sensors.Second},
 		watches: make([]watch, len(masts)), live: make([]bool, len(masts)),
-		post: &posterior{}, turn: newTurning(),
+		post: &posterior{flat: make([]float64, 0, 3*len(masts))}, turn: newTurning(),
 		hits: make([]hit, 0, len(masts)), waiting: make([]int, 0, len(masts)), passes: make([]Passage, 0, len(masts)),
 	}
 	var x, y []float64

@@ -312,14 +312,10 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 		var weights [len(shares)]float64
 		var best [parents]int
 		for c := range e.classes {
-			first := len(e.parts)
 			w := e.weighPatterns(en, k, c, shares[c]/float64(len(e.prior.Disturbed)), top, total, keep)
 			total += w
 			found[c] += w
 			weights[c] = w
-			if c == faultClass {
-				e.faulty = append(e.faulty, span{first, len(e.parts)})
-			}
 			if c == outflowClass && keep {
 				e.keepTrail(en, k, top)
 			}
@@ -457,13 +453,16 @@ func (e *Estimator) count(p *patterns, k, c int, least, scale float64) float64 {
 		weights[i] = e.evidence[j] + scale
 	}
 	exponentials(weights)
-	sum := 0.0
+	sum, first := 0.0, len(e.parts)
 	for i, j := range strong {
 		now := p.strengthNow(j, b[j], b[n+j], b[2*n+j])
 		// A positive strength puts twice its posterior probability on the evidence.
 		weight := weights[i] * math.Erfc(-now*p.sharpness[j])
 		sum += weight
 		e.parts = append(e.parts, part{state: int16(k), class: int16(c), pattern: int32(j), weight: weight, now: now, sharpness: p.sharpness[j]})
+	}
+	if c == faultClass {
+		e.faulty = append(e.faulty, span{first, len(e.parts)})
 	}
 	return sum
 }
