@@ -11,7 +11,7 @@ func columnsFast3(_ []float64, _ int, _, _ []float64, _ int) bool { return false
 func explainFast(_, _, _, _, _ []float64) (fit, best float64, done bool) {
 	return 0, 0, false
 }
-func addProductsFast(_, _, _ []float64) int { return 0 }
+func addProductsFast(_, _, _ []float64) int            { return 0 }
 func drawnFast(_, _, _, _, _ []float64, _ float64) int { return 0 }
 
 func exponentials(x []float64) {

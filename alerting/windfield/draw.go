@@ -14,6 +14,7 @@ func (e *Estimator) draw(en *entry) {
 	cum, i := e.parts[0].weight, 0
 	current, solved := -1, int16(-1)
 	var st strength
+	var below float64 // how likely the strength is below zero; -1: not yet asked
 	for d := range Draws {
 		u := (float64(d) + 0.5) / Draws
 		for u > cum && i < len(e.parts)-1 {
@@ -30,6 +31,7 @@ func (e *Estimator) draw(en *entry) {
 				columns(e.plain, s.gain, e.y)
 			}
 			st = e.shape(en, s, pt)
+			below = -1
 			current = i
 		}
 		row := p.Draws[d*nt : (d+1)*nt]
@@ -40,7 +42,10 @@ func (e *Estimator) draw(en *entry) {
 		case st.now > certain*st.spread: // positive without being held so
 			excess = st.spread * e.scores[d]
 		default:
-			excess = positiveNormal(st.now, st.spread, e.levels[d]) - st.now
+			if below < 0 {
+				below = belowZero(st.now, st.spread)
+			}
+			excess = positiveNormal(st.now, st.spread, below, e.levels[d]) - st.now
 		}
 		p.Kinds[d] = kindOf(pt.class)
 		p.Over[d] = Outflow{}

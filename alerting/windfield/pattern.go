@@ -235,10 +235,12 @@ func mul3(a [6]float64, x [3]float64) [3]float64 {
 	}
 }
 
+// belowZero is the probability of N(mean, sd) below 0.
+func belowZero(mean, sd float64) float64 { return math.Erfc(mean/(sd*math.Sqrt2)) / 2 }
+
 // positiveNormal is the point of N(mean, sd) held above 0 with the probability
-// u below it.
-func positiveNormal(mean, sd, u float64) float64 {
-	below := math.Erfc(mean/(sd*math.Sqrt2)) / 2
+// u below it; below is belowZero of the same.
+func positiveNormal(mean, sd, below, u float64) float64 {
 	p := below + float64(u*(1-below))
 	p = min(max(p, 1e-12), 1-1e-12)
 	return math.Max(mean+float64(sd*math.Sqrt2)*math.Erfinv(2*p-1), 0)
