@@ -31,11 +31,14 @@ func (t *Tracker) weigh(tr *track, now sensors.Instant) {
 	if len(tr.hits) < leastMasts || f.Change.Speed() < leastChange {
 		return
 	}
+	plane, solved := Fit(t.passes)
+	if solved && plane.scattered() || t.opposed(tr) {
+		return // whatever the lines say, which takes long to find out
+	}
 	p := t.post
 	p.weigh(t.bank, t.hits, t.waiting, tr.after, f.Change, now.Sub(f.First).Seconds())
 	odds := p.odds + math.Log(priorFront/(1-priorFront))
 	f.Confidence = 1 / (1 + math.Exp(-odds))
-	plane, solved := Fit(t.passes)
 	f.Aligned, f.Apparent = plane.aligned(), 0
 	if f.Aligned {
 		if slow := math.Abs(plane.apparent(t.passes)); slow > 1/(10*fastest) {
@@ -47,7 +50,7 @@ func (t *Tracker) weigh(tr *track, now sensors.Instant) {
 	if before {
 		least /= 2 // what has been told is not taken back for little
 	}
-	if p.outflow > edgeShare || solved && plane.scattered() || f.Confidence < least || t.opposed(tr) {
+	if p.outflow > edgeShare || f.Confidence < least {
 		return
 	}
 	tr.told = true
