@@ -98,7 +98,7 @@ func (e *Estimator) derive(en *entry, k int, best [parents]int, share, top float
 		}
 	}
 	if best[0] >= 0 {
-		for _, m := range e.partnersOf(en, s, best[0]) {
+		for _, m := range e.partnersOf(en, k, best[0]) {
 			if m.j < 0 {
 				break
 			}
@@ -181,117 +181,4 @@ func (d *derived) wind(x, y float64) (east, north float64) {
 		north += float64(d.ratio * n)
 	}
 	return east, north
-}
-
-// pairing is the scratch of the search for a second outflow.
-type pairing struct {
-	solved []float64       // K^-1 Phi of the first, one strength
-	cross  [dims][]float64 // [strength of the first][strength of the second][template]
-	owner  *state          // whose cross is held ...
-	first  int             // ... and of which template
-}
-
-func newPairing(templates, observations int) pairing {
-	p := pairing{solved: make([]float64, observations)}
-	for d := range dims {
-		p.cross[d] = make([]float64, dims*templates)
-	}
-	return p
-}
-
-// partner is a second outflow beside a first.
-type partner struct {
-	j        int     // -1: none
-	ratio    float64 // its strength over that of the first
-	evidence float64
-}
-
-// partnersOf searches the bank for the second outflow that best explains what
-// the first leaves: given the first (covariance P, b), the second sees
-// b2 - X P b and C^-1 + M2 - X P X' with X = Phi2' K^-1 Phi1, which is the exact
-// joint posterior of both.
-func (e *Estimator) partnersOf(en *entry, s *state, first int) (found [partners]partner) {
-	for i := range found {
-		found[i].j = -1
-	}
-	n := e.outflows.count()
-	pr := &e.pairing
-	if pr.owner != s || pr.first != first {
-		pr.owner, pr.first = s, first
-		for d := range dims {
-			e.outflows.column(en, first, d, e.column[:en.n])
-			multiply(s, e.column[:en.n], pr.solved[:en.n])
-			e.outflows.project(en, pr.solved[:en.n], pr.cross[d])
-		}
-	}
-	p := s.patterns[outflowClass]
-	b := e.b[outflowClass]
-	p1 := packed(p.precision, n, first)
-	mean1 := mul3(p1, [3]float64{b[first], b[n+first], b[2*n+first]})
-	at := e.outflows.templates[first]
-	least := max(nearestPartner, at.radius)
-	least2 := float64(least * least)
-	for j := range n {
-		t := &e.outflows.templates[j]
-		gap2 := float64((t.x-at.x)*(t.x-at.x)) + float64((t.y-at.y)*(t.y-at.y))
-		if gap2 < least2 || gap2 > farthestPartner*farthestPartner {
-			continue
-		}
-		m, ok := e.second(p, p1, mean1, j)
-		if !ok {
-			continue
-		}
-		for i := range found {
-			if found[i].j < 0 || m.evidence > found[i].evidence {
-				copy(found[i+1:], found[i:partners-1])
-				found[i] = m
-				break
-			}
-		}
-	}
-	return found
-}
-
-// second is template j as the second outflow; false where both are not
-// outflows that count.
-func (e *Estimator) second(p *patterns, p1 [6]float64, mean1 [3]float64, j int) (partner, bool) {
-	n := e.outflows.count()
-	b, cross := e.b[outflowClass], &e.pairing.cross
-	inv := [6]float64(p.inverse[j*6 : j*6+6]) // C^-1 + M2
-	var rest [3]float64
-	var x, xp [3][3]float64 // X and X P
-	for r := range dims {
-		for d := range dims {
-			x[r][d] = cross[d][r*n+j]
-		}
-		xp[r] = mul3(p1, x[r])
-		rest[r] = b[r*n+j] - float64(x[r][0]*mean1[0]) - float64(x[r][1]*mean1[1]) - float64(x[r][2]*mean1[2])
-	}
-	at := 0
-	for r := range dims {
-		for c := r; c < dims; c++ {
-			inv[at] -= float64(xp[r][0]*x[c][0]) + float64(xp[r][1]*x[c][1]) + float64(xp[r][2]*x[c][2])
-			at++
-		}
-	}
-	p2, det := inverse3(inv)
-	if !(det > 0) { // the one as good as repeats the other
-		return partner{}, false
-	}
-	mean2 := mul3(p2, rest)
-	evidence, now1, now2 := 0.0, 0.0, 0.0
-	for r := range dims {
-		evidence += float64(rest[r]*mean2[r]) / 2
-		now2 += float64(e.outflows.q[r] * mean2[r])
-		back := mean1[r]
-		for d := range dims {
-			back -= float64(xp[d][r] * mean2[d])
-		}
-		now1 += float64(e.outflows.q[r] * back)
-	}
-	ratio := now2 / now1
-	if now1 < leastTwin || now2 < leastTwin || ratio < leastRatio || ratio > 1/leastRatio {
-		return partner{}, false
-	}
-	return partner{j: j, ratio: ratio, evidence: evidence - math.Log(det)/2}, true
 }

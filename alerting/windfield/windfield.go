@@ -101,7 +101,7 @@ type Estimator struct {
 	trail      trail
 	derived    []derived // outflows made for the step at hand ...
 	children   []part    // ... and how likely they are beside the mixture
-	pairing    pairing
+	pairings   []pairing // by disturbed state
 	faultGain  []float64 // log of each mast's prior of being wrong over the even-handed one ...
 	faultOdds  []float64 // ... and the same by pattern
 
@@ -198,7 +198,9 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.stateLog = make([]float64, len(e.fields))
 	e.weights = make([]float64, len(prior.Fields))
 	e.parts, e.faulty = make([]part, 0, len(e.fields)*(total+1)), make([]span, 0, len(prior.Disturbed))
-	e.pairing = newPairing(e.outflows.count(), n)
+	for range prior.Disturbed {
+		e.pairings = append(e.pairings, newPairing(e.outflows.count(), n))
+	}
 	e.newDerived()
 	e.times = make([]float64, 0, len(masts))
 	e.bases = make([]float64, 0, len(masts))
