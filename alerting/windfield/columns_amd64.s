@@ -2,8 +2,9 @@
 
 // func columnsAVX2(out *float64, n int, a *float64, stride int, w *float64, rows int)
 //
-// Sixteen columns at a time, and the rest by fours: the sums stay in registers
-// while the rows go by. A product is rounded before it is added (no fused
+// Sixteen columns at a time, and of the rest as many as there are: the sums stay in
+// registers while the rows go by, and each must wait for its last addition, so that
+// fewer sums take as long. A product is rounded before it is added (no fused
 // multiplication), in the order of the rows, as the Go code has it.
 TEXT ·columnsAVX2(SB), NOSPLIT, $0-48
 	MOVQ out+0(FP), DI
@@ -16,7 +17,7 @@ TEXT ·columnsAVX2(SB), NOSPLIT, $0-48
 
 sixteen:
 	CMPQ CX, $16
-	JLT  four
+	JLT  twelve
 	VXORPD Y0, Y0, Y0
 	VXORPD Y1, Y1, Y1
 	VXORPD Y2, Y2, Y2
@@ -47,6 +48,60 @@ row16:
 	ADDQ $128, SI
 	SUBQ $16, CX
 	JMP  sixteen
+
+twelve:
+	CMPQ CX, $12
+	JLT  eight
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	MOVQ SI, R9
+	MOVQ BX, R10
+	MOVQ R8, R11
+
+row12:
+	VBROADCASTSD (R10), Y4
+	VMULPD (R9), Y4, Y5
+	VMULPD 32(R9), Y4, Y6
+	VMULPD 64(R9), Y4, Y7
+	VADDPD Y5, Y0, Y0
+	VADDPD Y6, Y1, Y1
+	VADDPD Y7, Y2, Y2
+	ADDQ DX, R9
+	ADDQ $8, R10
+	DECQ R11
+	JNZ  row12
+	VMOVUPD Y0, (DI)
+	VMOVUPD Y1, 32(DI)
+	VMOVUPD Y2, 64(DI)
+	ADDQ $96, DI
+	ADDQ $96, SI
+	SUBQ $12, CX
+
+eight:
+	CMPQ CX, $8
+	JLT  four
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	MOVQ SI, R9
+	MOVQ BX, R10
+	MOVQ R8, R11
+
+row8:
+	VBROADCASTSD (R10), Y4
+	VMULPD (R9), Y4, Y5
+	VMULPD 32(R9), Y4, Y6
+	VADDPD Y5, Y0, Y0
+	VADDPD Y6, Y1, Y1
+	ADDQ DX, R9
+	ADDQ $8, R10
+	DECQ R11
+	JNZ  row8
+	VMOVUPD Y0, (DI)
+	VMOVUPD Y1, 32(DI)
+	ADDQ $64, DI
+	ADDQ $64, SI
+	SUBQ $8, CX
 
 four:
 	CMPQ CX, $4

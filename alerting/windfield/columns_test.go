@@ -85,3 +85,14 @@ func BenchmarkColumns(b *testing.B) {
 		}
 	}
 }
+
+// BenchmarkColumnsOf is that for three sides.
+func BenchmarkColumnsOf(b *testing.B) {
+	const rows, cols = 16, 704
+	a, _ := randomColumns(rows, cols)
+	w, _ := randomColumns(3, rows)
+	out := make([]float64, 3*cols)
+	for b.Loop() {
+		columnsOf(out, cols, a, w, cols, 3)
+	}
+}
