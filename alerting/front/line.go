@@ -259,8 +259,8 @@ func (p *posterior) timesOf(line, s int, slow float64, hits []hit, row []float64
 	product, logs := 1.0, 0.0
 	for k := range hits {
 		q := &hits[k]
-		away := row[q.place] * slow
-		rough := lineStrays * (away - float64(row[hits[0].place]*slow))
+		away := float64(row[q.place] * slow)
+		rough := float64(lineStrays * (away - float64(row[hits[0].place]*slow)))
 		v := float64(q.sd*q.sd) + lineRough*lineRough + float64(rough*rough)
 		r := q.t - away
 		iv := 1 / v
