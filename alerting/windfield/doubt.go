@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"sockline/sensors"
+	"sockline/sensors/averages"
 )
 
 // doubtMemory holds for how much of the last twenty minutes each mast's
@@ -64,13 +65,24 @@ func (d *doubtMemory) slots(t sensors.Instant, mast int) int {
 // alone against its neighbours.
 const evenHanded = 0.005
 
-// faultGains fills, for step t, the logarithm of each mast's prior of being
-// wrong over the even-handed one.
-func (e *Estimator) faultGains(t sensors.Instant) {
+// strokeLasts is how long a stroke of an instrument speaks against its mast. Then its
+// neighbours have.
+const strokeLasts = ambientSlots * ambientEvery
+
+// faultGains fills the logarithm of each mast's prior of being wrong over the
+// even-handed one: by what was remembered of it, and by that and its last stroke.
+func (e *Estimator) faultGains(s *averages.Snapshot) {
 	low := math.Log(e.prior.FaultShare / evenHanded)
 	high := math.Log(e.prior.FaultShareLater / evenHanded)
+	struck := math.Log(e.prior.StrokeOdds * float64(len(e.masts)) / evenHanded)
 	for i := range e.faultGain {
-		share := float64(e.doubts.slots(t, i)-doubtFrom) / (doubtTo - doubtFrom)
-		e.faultGain[i] = low + float64((high-low)*min(max(share, 0), 1))
+		share := float64(e.doubts.slots(s.At(), i)-doubtFrom) / (doubtTo - doubtFrom)
+		e.remembered[i] = low + float64((high-low)*min(max(share, 0), 1))
+		e.faultGain[i] = e.remembered[i]
+		e.struck[i] = averages.Stroke{}
+		if k := s.Mast(i).Stroke; k.At > 0 && s.At()-k.At < strokeLasts {
+			e.struck[i] = k
+			e.faultGain[i] = struck
+		}
 	}
 }

@@ -79,6 +79,13 @@ func (e *Estimator) shape(en *entry, s *state, pt part) strength {
 		b[d] = blas64.Dot(vec(e.column[:en.n]), vec(e.w))
 	}
 	st := e.strengthOf(s, int(pt.class), int(pt.pattern), b)
+	if pt.class == faultClass {
+		if struck, ok := e.strokeError(en, int(pt.pattern)); ok {
+			m := e.anyError().information(s.patterns[faultClass], int(pt.pattern))
+			mean, _ := struck.posterior(m, [2]float64{b[0], b[1]})
+			st.mean = [dims]float64{mean[0], mean[1], 0}
+		}
+	}
 	line := e.line(en, s, int(pt.class), int(pt.pattern))
 	l0, l1, l2, innovation := line[:nt], line[nt:2*nt], line[2*nt:3*nt], line[3*nt:4*nt]
 	base, slope, plain := e.base[:nt], e.slope[:nt], e.plain[:nt]

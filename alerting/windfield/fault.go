@@ -20,8 +20,8 @@ type faultBank struct {
 
 func (b *faultBank) count() int { return blocks * b.masts }
 
-// newest is how many of the newest blocks pattern j holds wrong.
-func (b *faultBank) newest(j int) int { return blocks - j/b.masts }
+// newest is how many of the newest blocks pattern j of the faults holds wrong.
+func newest(j, masts int) int { return blocks - j/masts }
 
 // prior: two strengths, east and north, in every block alike. No sign is
 // required: q is zero, and the positive "today's strength" a dummy.
@@ -45,7 +45,7 @@ func (b *faultBank) project(en *entry, w, out []float64) {
 	n := b.count()
 	for i, m := range en.live {
 		for j := m; j < n; j += b.masts {
-			for k := range b.newest(j) {
+			for k := range newest(j, b.masts) {
 				o := (k*len(en.live) + i) * 2
 				out[j] += w[o]
 				out[n+j] += w[o+1]
@@ -77,7 +77,7 @@ func (b *faultBank) column(en *entry, j, d int, dst []float64) {
 	if i < 0 || d == 2 {
 		return
 	}
-	for k := range b.newest(j) {
+	for k := range newest(j, b.masts) {
 		dst[(k*len(en.live)+i)*2+d] = 1
 	}
 }

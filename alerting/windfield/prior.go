@@ -46,6 +46,9 @@ type Prior struct {
 	FaultShare      float64 // prior probability that one of the masts is wrong ...
 	FaultShareLater float64 // ... and once it has stood alone for a quarter of an hour
 	FaultDeviation  float64 // standard deviation of its error, one component, m/s
+	// StrokeOdds is how much likelier a mast whose instrument changed at one stroke is
+	// wrong by it than that the air did that.
+	StrokeOdds float64
 
 	TrailTemper     float64 // what the last minutes said of outflows and fronts counts so much: eddies outlive a stride
 	LeastStateShare float64 // no ambient state is ever believed less than this before a step
@@ -91,6 +94,7 @@ func DefaultPrior() Prior {
 		FaultShare:      0.0001,
 		FaultShareLater: 0.03,
 		FaultDeviation:  8,
+		StrokeOdds:      0.3,
 		TrailTemper:     0.4,
 		LeastStateShare: 0.01,
 	}

@@ -99,11 +99,13 @@ type Estimator struct {
 	memory     ambientMemory
 	doubts     doubtMemory
 	trail      trail
-	derived    []derived // outflows made for the step at hand ...
-	children   []part    // ... and how likely they are beside the mixture
-	pairings   []pairing // by disturbed state
-	faultGain  []float64 // log of each mast's prior of being wrong over the even-handed one ...
-	faultOdds  []float64 // ... and the same by pattern
+	derived    []derived         // outflows made for the step at hand ...
+	children   []part            // ... and how likely they are beside the mixture
+	pairings   []pairing         // by disturbed state
+	faultGain  []float64         // log of each mast's prior of being wrong over the even-handed one ...
+	remembered []float64         // ... by what was remembered of it alone ...
+	faultOdds  []float64         // ... and the same by pattern
+	struck     []averages.Stroke // the stroke of each mast that still counts
 
 	// Scratch and result, sized once.
 	live      []int
@@ -179,7 +181,8 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.memory = newAmbientMemory(len(prior.Fields))
 	e.doubts = newDoubtMemory(len(masts))
 	e.trail = newTrail(e.outflows.templates, layout, prior)
-	e.faultGain = make([]float64, len(masts))
+	e.faultGain, e.remembered = make([]float64, len(masts)), make([]float64, len(masts))
+	e.struck = make([]averages.Stroke, len(masts))
 	e.faultOdds = make([]float64, e.classes[faultClass].count())
 	e.noise = make([]float64, 0, blocks*blocks*len(masts))
 	e.live = make([]int, 0, len(masts))
@@ -284,7 +287,7 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 	t := snapshot.At()
 	ambient := len(e.prior.Fields)
 	e.memory.shares(t, e.prior.LeastStateShare, e.weights)
-	e.faultGains(t)
+	e.faultGains(snapshot)
 	top := math.Inf(-1)
 	for k, s := range en.states {
 		e.solve(s)
@@ -368,7 +371,7 @@ func (e *Estimator) doubt() {
 		}
 	}
 	for i, d := range p.Doubt {
-		p.Alone[i] = d / math.Max(1-d, 1e-12) * math.Exp(-e.faultGain[i])
+		p.Alone[i] = d / math.Max(1-d, 1e-12) * math.Exp(-e.remembered[i])
 	}
 }
 
@@ -425,7 +428,7 @@ func (e *Estimator) weighPatterns(en *entry, k, c int, share, top, total float64
 	case faultClass:
 		extra = e.faultOdds
 		for j := range extra {
-			extra[j] = e.faultGain[j%len(e.faultGain)]
+			extra[j] = e.faultGain[j%len(e.faultGain)] + e.strokeGain(en, p, j)
 		}
 	case outflowClass:
 		extra = e.trail.odds

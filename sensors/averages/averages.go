@@ -76,6 +76,8 @@ type Mast struct {
 	Late     bool            // it is live or starting, and its newest reading is overdue
 
 	Turbulence Turbulence // from the ten minutes before the blocks
+
+	Stroke Stroke // the last one of its instrument, however long ago
 }
 
 // Snapshot is the state of every mast at one step. It is made only by
@@ -134,6 +136,9 @@ type bin struct {
 	high, low   float64         // greatest and smallest reading, m/s
 	n           int
 	exercise    bool
+
+	air      quantity.Vector // sum of the readings that the analysis believes, m/s
+	believed int             // how many those are
 }
 
 type mast struct {
@@ -142,9 +147,12 @@ type mast struct {
 	corrector  *correction.Corrector
 	staleAfter time.Duration
 	last       sensors.Instant
+	held       []sample // that stand out
 	bins       [memory]bin
 	siting     Siting
 	turbulence Turbulence
+	changes    [memory]change // over strokeAcross seconds, by the second at their end
+	stroke     Stroke         // the last
 }
 
 // Recorder keeps the bins of every mast. Not safe for concurrent use.
@@ -163,13 +171,15 @@ func NewRecorder(stations []sensors.Station, layout Layout) *Recorder {
 		r.masts[i].station = &stations[i]
 		r.masts[i].staleAfter = s.StaleAfter
 		r.masts[i].corrector = correction.New(s)
+		r.masts[i].held = make([]sample, 0, mostHeld)
 	}
 	r.snapshot.masts = make([]Mast, len(stations))
 	return r
 }
 
 // Add records a reading that quality did not reject. Readings come in event
-// order within a step.
+// order within a step. People's averages hold it at once; the analysis waits for what
+// the next reading tells of one that stands out, and leaves spikes out.
 func (r *Recorder) Add(c quality.Checked) {
 	if !c.Usable() {
 		return
@@ -177,9 +187,36 @@ func (r *Recorder) Add(c quality.Checked) {
 	rd := c.Reading()
 	m := &r.masts[rd.Station]
 	m.last = max(m.last, rd.Time)
+	if c.Spikes() {
+		m.held = m.held[:0]
+	}
+	if !c.Waits() {
+		for _, h := range m.held {
+			m.believe(h)
+		}
+		m.held = m.held[:0]
+	}
 	if _, under := m.station.UnderMaintenance(rd.Time); under {
 		return // a vane that is turned by hand tells no wind
 	}
+	if s := m.add(rd); c.Waits() {
+		m.held = append(m.held, s)
+	} else {
+		m.believe(s)
+	}
+}
+
+// mostHeld is how many readings wait at a time as a rule: as many as a spike lasts.
+const mostHeld = 2
+
+// sample is the wind of a reading, as corrected.
+type sample struct {
+	second sensors.Instant // that it belongs to
+	v      quantity.Vector // m/s
+}
+
+// add puts a reading into its bin, for people's averages.
+func (m *mast) add(rd sensors.Reading) sample {
 	second := rd.Time.CeilSecond()
 	b := &m.bins[slot(second)]
 	if b.second != second {
@@ -200,6 +237,16 @@ func (r *Recorder) Add(c quality.Checked) {
 	}
 	b.n++
 	b.exercise = b.exercise || rd.Exercise
+	return sample{second: second, v: v}
+}
+
+// believe puts a sample into the wind that the analysis works on.
+func (m *mast) believe(s sample) {
+	if b := &m.bins[slot(s.second)]; b.second == s.second {
+		b.air.East += s.v.East
+		b.air.North += s.v.North
+		b.believed++
+	}
 }
 
 // slot is the place of a second in the ring.
@@ -214,6 +261,16 @@ func (m *mast) at(s sensors.Instant) *bin {
 	return b
 }
 
+// wind is the mean wind that the analysis believes of the second that ends at s.
+func (m *mast) wind(s sensors.Instant) (v quantity.Vector, ok bool) {
+	b := &m.bins[slot(s)]
+	if b.second != s || b.believed == 0 {
+		return v, false
+	}
+	n := float64(b.believed)
+	return quantity.Vector{East: b.air.East / n, North: b.air.North / n}, true
+}
+
 // Snapshot is what is known at step t. The result is overwritten by the next
 // call.
 func (r *Recorder) Snapshot(t sensors.Instant) *Snapshot {
@@ -226,13 +283,16 @@ func (r *Recorder) Snapshot(t sensors.Instant) *Snapshot {
 			// cache) changes seldom and depends on nothing but the bins.
 			m.turbulence = m.estimateTurbulence(t, r.layout)
 		}
+		if m.interval == 1 {
+			m.seeStroke(t)
+		}
 		r.fill(&r.snapshot.masts[i], m, t)
 	}
 	return &r.snapshot
 }
 
 func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
-	*out = Mast{Last: m.last, Turbulence: m.turbulence}
+	*out = Mast{Last: m.last, Turbulence: m.turbulence, Stroke: m.stroke}
 	age := t.Sub(m.last)
 	_, under := m.station.UnderMaintenance(t)
 	switch {
@@ -257,18 +317,20 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 	for b, seconds := range r.layout.Seconds {
 		blk := &out.Blocks[b]
 		n := 0
-		for k := range seconds {
-			bn := m.at(end - sensors.Instant(k)*sensors.Second)
-			if bn == nil {
+		first, last := m.unbroken(b, end, seconds)
+		for k := first; k < last; k++ {
+			second := end - sensors.Instant(k)*sensors.Second
+			v, ok := m.wind(second)
+			if !ok {
 				continue
 			}
-			blk.East += bn.east / float64(bn.n)
-			blk.North += bn.north / float64(bn.n)
-			out.Exercise = out.Exercise || bn.exercise
+			blk.East += v.East
+			blk.North += v.North
+			out.Exercise = out.Exercise || m.bins[slot(second)].exercise
 			n++
 		}
 		end -= sensors.Instant(seconds) * sensors.Second
-		expected := max(seconds/m.interval, 1)
+		expected := max((last-first)/m.interval, 1)
 		if n > 0 {
 			blk.East /= float64(n)
 			blk.North /= float64(n)

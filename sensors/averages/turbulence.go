@@ -88,13 +88,14 @@ func (m *mast) estimateTurbulence(t sensors.Instant, layout Layout) Turbulence {
 	count := 0
 	speed := 0.0
 	for k := range n {
-		b := m.at(end - sensors.Instant(n-1-k)*sensors.Second)
-		if b == nil {
+		second := end - sensors.Instant(n-1-k)*sensors.Second
+		v, ok := m.wind(second)
+		if !ok {
 			continue
 		}
-		east[k] = b.east / float64(b.n)
-		north[k] = b.north / float64(b.n)
+		east[k], north[k] = v.East, v.North
 		have[k] = true
+		b := m.at(second)
 		speed += b.speed / float64(b.n)
 		count++
 	}
@@ -182,22 +183,22 @@ func (m *mast) coarseTurbulence(t sensors.Instant, layout Layout) Turbulence {
 	var sum, speed float64
 	var pairs, n int
 	var apart [coarseGap + 1]int // pairs by their distance, s
-	var before *bin
+	var before sample
 	for k := turbulenceSpan - 1; k >= 0; k-- {
-		b := m.at(end - sensors.Instant(k)*sensors.Second)
-		if b == nil {
+		second := end - sensors.Instant(k)*sensors.Second
+		v, ok := m.wind(second)
+		if !ok {
 			continue
 		}
-		n++
+		b := m.at(second)
 		speed += b.speed / float64(b.n)
-		if before != nil && b.second-before.second <= coarseGap*sensors.Second {
-			apart[(b.second-before.second)/sensors.Second]++
-			de := b.east/float64(b.n) - before.east/float64(before.n)
-			dn := b.north/float64(b.n) - before.north/float64(before.n)
+		if n++; n > 1 && second-before.second <= coarseGap*sensors.Second {
+			apart[(second-before.second)/sensors.Second]++
+			de, dn := v.East-before.v.East, v.North-before.v.North
 			sum += (float64(de*de) + float64(dn*dn)) / 2
 			pairs++
 		}
-		before = b
+		before = sample{second, v}
 	}
 	if n*m.interval < turbulenceLeast || pairs < 10 {
 		return Turbulence{}

@@ -91,8 +91,8 @@ func (c *Checker) Station() sensors.Station { return c.station }
 // Check judges the next reading. A reading outside the range or from an
 // instrument that is stuck is rejected; a jump of the speed, a gust below
 // the speed or a vane that goes about in a calm makes it suspect, which is only
-// said. That the reading before was a spike is noted with the one after it, when
-// it has long been used: what is sudden is never taken away.
+// said. A reading that stands out waits for the next one: only what comes after
+// tells a spike from an onset, and what is sudden and stays is never taken away.
 func (c *Checker) Check(r sensors.Reading) Checked {
 	var flags Flags
 	if !inRange(r) {
@@ -117,9 +117,11 @@ func (c *Checker) Check(r sensors.Reading) Checked {
 		checked.verdict = Suspect
 	}
 	if checked.Usable() {
-		if c.recent.spike(r) {
+		spikes, waits := c.recent.take(r)
+		if spikes {
 			checked.flags |= FlagSpike
 		}
+		checked.waits = waits
 		c.hasPrevious, c.previous, c.speed = true, r.Time, r.Speed
 	}
 	return checked

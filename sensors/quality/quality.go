@@ -1,6 +1,7 @@
 // Package quality takes readings and says of each whether it may be used:
 // accepted, suspect or rejected, and why. It deletes nothing, and it never
-// rejects a wind for being sudden, because a microburst is.
+// rejects a wind for being sudden, because a microburst is. What stands out for
+// one or two readings and is gone again is a spike, and no wind.
 //
 // There are two parts. Arrival needs no memory: it looks at the stamps and
 // marks of one reading. A Checker holds the little memory of one station and
@@ -23,6 +24,7 @@ type Checked struct {
 	reading sensors.Reading
 	verdict Verdict
 	flags   Flags
+	waits   bool
 }
 
 // Reading is the reading as it was decoded.
@@ -33,6 +35,14 @@ func (c Checked) Verdict() Verdict { return c.verdict }
 
 // Flags is everything that was found, also where it did not decide.
 func (c Checked) Flags() Flags { return c.flags }
+
+// Spikes reports whether the readings before this one that wait were spikes.
+// They are to be left out; without it, they were wind.
+func (c Checked) Spikes() bool { return c.flags&FlagSpike != 0 }
+
+// Waits reports whether the reading stands out so far that what it is worth
+// shows with the next one that does not wait, which comes within a second or two.
+func (c Checked) Waits() bool { return c.waits }
 
 // Usable reports whether the reading may enter an average.
 func (c Checked) Usable() bool { return c.verdict == Accepted || c.verdict == Suspect }

@@ -16,7 +16,7 @@ const (
 	Stuck          Reason = "stuck"            // speed and direction stand still
 	StuckVane      Reason = "stuck-vane"       // the direction stands still while the speed varies
 	GustBelowSpeed Reason = "gust-below-speed" // the gust is smaller than the speed
-	Spike          Reason = "spike"            // the reading before this one stood out on one side of both its neighbours
+	Spike          Reason = "spike"            // the one or two readings before this one stood out on one side of both their neighbours
 	CalmTurning    Reason = "calm-but-turning" // the speed is nothing while the direction goes about
 )
 

@@ -11,6 +11,9 @@ const (
 	// spikeMemory is how many readings before a spike its measure is taken from.
 	spikeMemory = 32
 	spikeLeast  = 16
+	// spikeLongest is how many readings in a row may be one spike. An onset waits for
+	// so many readings before it is believed.
+	spikeLongest = 2
 	// spikeGap is how far apart readings may be that are compared: at longer
 	// intervals one speed says little of the next, and every third would be a
 	// spike.
@@ -30,48 +33,86 @@ const (
 	calmSpread = 90.0              // degrees
 )
 
-// recent is the last usable readings, the newest last.
+// recent is the last usable readings but the spikes, the newest last, and those
+// after them that stand out, of which the next one tells whether they are spikes.
 type recent struct {
-	speeds [spikeMemory]float64
-	times  [spikeMemory]sensors.Instant
-	n      int
+	speeds  [spikeMemory]float64
+	n       int
+	last    sensors.Instant // of the newest reading, whether it stands out or not
+	waiting [spikeLongest]float64
+	waits   int // how many stand out
 }
 
-// spike takes in a usable reading and says whether the one before it was a
-// spike: a single reading that stands out on one side of both its neighbours.
-// An onset is none, because the wind stays; that is why it takes the reading
-// after it, and why nothing can be done about a spike but to say so.
-func (s *recent) spike(r sensors.Reading) bool {
-	found := false
-	if s.n > spikeLeast {
-		x1, x0 := s.speeds[s.n-1], s.speeds[s.n-2]
-		before, after := x1-x0, x1-r.Speed
-		near := r.Time.Sub(s.times[s.n-1]) <= spikeGap && s.times[s.n-1].Sub(s.times[s.n-2]) <= spikeGap
-		found = near && before*after > 0 && math.Min(math.Abs(before), math.Abs(after)) > spikeFactor/2*s.deviation()
+// take takes in a usable reading and says whether the ones before it that stood
+// out were spikes: one or two readings on one side of both their neighbours. An
+// onset is none, because the wind stays. It also says whether the reading itself
+// stands out: then it waits for the next, for no longer than spikeGap a reading.
+func (s *recent) take(r sensors.Reading) (spikes, waits bool) {
+	gap := r.Time.Sub(s.last)
+	s.last = r.Time
+	if gap > spikeGap || s.n < spikeLeast {
+		s.release()
+		if gap > stepGap {
+			s.n = 0 // what it did a while ago is no measure any more
+		}
+		s.keep(r.Speed)
+		return false, false
 	}
-	if s.n > 0 && r.Time.Sub(s.times[s.n-1]) > stepGap {
-		s.n = 0 // what it did a while ago is no measure any more
+	out := r.Speed - s.speeds[s.n-1]
+	limit := spikeFactor / 2 * s.deviation()
+	if s.waits > 0 {
+		least, side := math.Inf(1), math.Copysign(1, s.waiting[0]-s.speeds[s.n-1])
+		for _, v := range s.waiting[:s.waits] {
+			least = math.Min(least, side*(v-r.Speed))
+		}
+		switch {
+		case least > limit:
+			spikes = true
+			s.waits = 0
+		case side*out > limit && s.waits < spikeLongest:
+			// It stands out as they do, and tells nothing of them.
+		default:
+			s.release()
+			s.keep(r.Speed)
+			return false, false
+		}
 	}
+	if math.Abs(out) <= limit {
+		s.keep(r.Speed)
+		return spikes, false
+	}
+	s.waiting[s.waits] = r.Speed
+	s.waits++
+	return spikes, true
+}
+
+// release takes what stood out for wind.
+func (s *recent) release() {
+	for _, v := range s.waiting[:s.waits] {
+		s.keep(v)
+	}
+	s.waits = 0
+}
+
+func (s *recent) keep(speed float64) {
 	if s.n == spikeMemory {
 		copy(s.speeds[:], s.speeds[1:])
-		copy(s.times[:], s.times[1:])
 		s.n--
 	}
-	s.speeds[s.n], s.times[s.n] = r.Speed, r.Time
+	s.speeds[s.n] = speed
 	s.n++
-	return found
 }
 
-// deviation is the standard deviation of the readings before the newest, m/s,
-// and no less than spikeFloor.
+// deviation is the standard deviation of the readings kept, m/s, and no less than
+// spikeFloor.
 func (s *recent) deviation() float64 {
 	sum, squares := 0.0, 0.0
-	k := float64(s.n - 1)
-	for _, v := range s.speeds[:s.n-1] {
+	k := float64(s.n)
+	for _, v := range s.speeds[:s.n] {
 		sum += v
 	}
 	mean := sum / k
-	for _, v := range s.speeds[:s.n-1] {
+	for _, v := range s.speeds[:s.n] {
 		squares += float64((v - mean) * (v - mean))
 	}
 	return math.Max(math.Sqrt(squares/k), spikeFloor)

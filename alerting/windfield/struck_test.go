@@ -1,0 +1,174 @@
+package windfield
+
+import (
+	"math"
+	"math/rand/v2"
+	"testing"
+
+	gonum "gonum.org/v1/gonum/mat"
+
+	"sockline/sensors"
+)
+
+// logDensity is that of N(mean, k) at y, by gonum's Cholesky factors, without what
+// depends on the dimension alone.
+func logDensity(t *testing.T, y, mean []float64, k *gonum.SymDense) float64 {
+	t.Helper()
+	var c gonum.Cholesky
+	if !c.Factorize(k) {
+		t.Fatal("not positive definite")
+	}
+	d := gonum.NewVecDense(len(y), nil)
+	for i := range y {
+		d.SetVec(i, y[i]-mean[i])
+	}
+	x := gonum.NewVecDense(len(y), nil)
+	if err := c.SolveVecTo(x, d); err != nil {
+		t.Fatal(err)
+	}
+	return -(gonum.Dot(d, x) + c.LogDet()) / 2
+}
+
+// What is believed of an error of known mean follows from the densities with and
+// without it, and the error itself from the regression on what was observed.
+func TestMistakeAgainstDensities(t *testing.T) {
+	rng := rand.New(rand.NewPCG(5, 8))
+	const n = 8
+	for range 20 {
+		random := func(rows, cols int) *gonum.Dense {
+			m := gonum.NewDense(rows, cols, nil)
+			for i := range rows {
+				for j := range cols {
+					m.Set(i, j, rng.NormFloat64())
+				}
+			}
+			return m
+		}
+		root, phi := random(n, n), random(n, 2)
+		k := gonum.NewSymDense(n, nil)
+		k.SymOuterK(1, root)
+		for i := range n {
+			k.SetSym(i, i, k.At(i, i)+0.3)
+		}
+		wrong := mistake{mean: [2]float64{3 * rng.NormFloat64(), 3 * rng.NormFloat64()}, variance: 0.5 + 4*rng.Float64()}
+		y := gonum.NewVecDense(n, nil)
+		for i := range n {
+			y.SetVec(i, 3*rng.NormFloat64())
+		}
+		// The dense way: the error adds its mean and covariance to the observations.
+		with := gonum.NewSymDense(n, nil)
+		with.SymOuterK(wrong.variance, phi)
+		with.AddSym(with, k)
+		shift := gonum.NewVecDense(n, nil)
+		shift.MulVec(phi, gonum.NewVecDense(2, wrong.mean[:]))
+		want := logDensity(t, y.RawVector().Data, shift.RawVector().Data, with) - logDensity(t, y.RawVector().Data, make([]float64, n), k)
+		var solved, m gonum.Dense
+		if err := solved.Solve(k, phi); err != nil {
+			t.Fatal(err)
+		}
+		m.Mul(phi.T(), &solved)
+		var b gonum.VecDense
+		b.MulVec(solved.T(), y)
+		information, seen := [3]float64{m.At(0, 0), m.At(0, 1), m.At(1, 1)}, [2]float64{b.AtVec(0), b.AtVec(1)}
+		if got := wrong.evidence(information, seen); math.Abs(got-want) > 1e-8*(1+math.Abs(want)) {
+			t.Errorf("evidence %g, by the densities %g", got, want)
+		}
+		rest := gonum.NewVecDense(n, nil)
+		rest.SubVec(y, shift)
+		x := gonum.NewVecDense(n, nil)
+		if err := x.SolveVec(with, rest); err != nil {
+			t.Fatal(err)
+		}
+		var gain gonum.VecDense
+		gain.MulVec(phi.T(), x)
+		got, _ := wrong.posterior(information, seen)
+		for d := range got {
+			if want := wrong.mean[d] + wrong.variance*gain.AtVec(d); math.Abs(got[d]-want) > 1e-8*(1+math.Abs(want)) {
+				t.Errorf("error %d: %g, by regression %g", d, got[d], want)
+			}
+		}
+	}
+}
+
+// strokeSite is what the step after so many seconds makes of eight masts in a wind
+// of 12 m/s with turbulence of a fixed pattern. Mast 3 tells a wind that is turned
+// (radians) and made weaker as by says.
+func strokeSite(t *testing.T, last int, by func(k int) (turn, ratio float64)) *Posterior {
+	t.Helper()
+	masts, targets := field(8)
+	s := newSite(t, len(masts))
+	e := New(masts, targets, s.layout, DefaultPrior())
+	var p *Posterior
+	for k := 1; k <= last; k++ {
+		s.report(k, func(i int) (u, v float64) {
+			a, b := math.Sincos(float64(k)*0.7 + float64(i)*2.1)
+			u, v = 12+0.8*a, 0.7*b
+			if i == 3 {
+				turn, ratio := by(k)
+				sin, cos := math.Sincos(turn)
+				u, v = ratio*(u*cos-v*sin), ratio*(u*sin+v*cos)
+			}
+			return u, v
+		})
+		if snapshot := s.recorder.Snapshot(epoch + sensors.Instant(k)*sensors.Second); k%10 == 0 {
+			p = e.Step(snapshot)
+		}
+	}
+	return p
+}
+
+// A vane that slips, or cups that lose speed, from one second to the next are
+// disbelieved at once where the neighbours speak against them.
+func TestStrokeIsNoOutflow(t *testing.T) {
+	const begin = 600
+	for name, stroke := range map[string][2]float64{
+		"a vane slips":     {80 * math.Pi / 180, 1},
+		"cups lose an arm": {0, 0.3},
+	} {
+		for _, after := range []int{10, 20, 60, 300} {
+			p := strokeSite(t, begin+after, func(k int) (turn, ratio float64) {
+				if k > begin {
+					return stroke[0], stroke[1]
+				}
+				return 0, 1
+			})
+			if p.Doubt[3] < 0.9 || p.OutflowShare > 0.1 || p.Alone[3] < 1 {
+				t.Errorf("%s, %d s later: doubted with %.3f, odds that it stands alone %.3g, an outflow with %.2f",
+					name, after, p.Doubt[3], p.Alone[3], p.OutflowShare)
+			}
+		}
+	}
+}
+
+// A stroke that the neighbours know as well is wind, and the mast is believed.
+func TestStrokeOfAllIsWind(t *testing.T) {
+	masts, targets := field(8)
+	s := newSite(t, len(masts))
+	e := New(masts, targets, s.layout, DefaultPrior())
+	for k := 1; k <= 700; k++ {
+		s.report(k, func(i int) (u, v float64) {
+			a, b := math.Sincos(float64(k)*0.7 + float64(i)*2.1)
+			u, v = 9+0.8*a, 0.7*b
+			if k > 600 {
+				u, v = -v, u
+			}
+			return u, v
+		})
+		snapshot := s.recorder.Snapshot(epoch + sensors.Instant(k)*sensors.Second)
+		if k%10 != 0 {
+			continue
+		}
+		p := e.Step(snapshot)
+		if k <= 600 {
+			continue
+		}
+		for i := range masts {
+			if snapshot.Mast(i).Stroke.At == 0 {
+				t.Fatalf("mast %d at %d s: no stroke was seen", i, k)
+			}
+			if k > 640 && p.Doubt[i] > 0.1 {
+				t.Errorf("mast %d at %d s: doubted with %.3f", i, k, p.Doubt[i])
+			}
+		}
+	}
+}
