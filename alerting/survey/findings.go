@@ -11,6 +11,7 @@ type Findings struct {
 	Grounds    int     `json:"grounds"` // paths with ground of their own
 	Seed       uint64  `json:"seed"`
 	Tuning     bool    `json:"tuning_seeds"` // nothing from them may be reported
+	WindyOnly  bool    `json:"windy_only"`   // false openings are all that can be found
 	Planned    int     `json:"episodes_planned"`
 	Episodes   int     `json:"episodes"`
 	Faulty     int     `json:"episodes_with_a_fault"`
@@ -35,7 +36,8 @@ type Findings struct {
 	Same      Delay `json:"delay_of_the_same"` // of the episodes of Reference
 	Reference Delay `json:"delay_of_the_reference"`
 
-	False    []WindRate   `json:"false_openings"` // with all instruments sound
+	False    []WindRate   `json:"false_openings"`         // with all instruments sound
+	ByWind   []WindRate   `json:"false_openings_by_wind"` // the same, with eddies and without
 	Faults   []FaultRate  `json:"false_openings_by_fault"`
 	Windy    Rate         `json:"false_openings_in_all"` // sound or not
 	Coverage []Coverage   `json:"coverage"`              // by the true loss

@@ -109,7 +109,7 @@ func (r *Report) caveats() []string {
 			c = append([]string{fmt.Sprintf("Partial result for %s: the survey was interrupted after %d of %d episodes. Rare things are not in it yet.", f.Network, f.Episodes, f.Planned)}, c...)
 		}
 		if f.Tuning {
-			c = append([]string{fmt.Sprintf("The seed %d lies below %d: these are episodes to tune on. Do not report figures from them.", f.Seed, ReportingSeed)}, c...)
+			c = append([]string{fmt.Sprintf("The seeds from %d on are not all between %d and %d: among these episodes are some to tune on. Do not report figures from them.", f.Seed, ReportingSeed, TuningSeed-1)}, c...)
 		}
 		if f.Episodes < fewEpisodes {
 			c = append([]string{fmt.Sprintf("Only %d episodes were played over %s: the intervals are wide. 2000 or more are usual.", f.Episodes, f.Network)}, c...)

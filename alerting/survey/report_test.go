@@ -3,6 +3,7 @@ package survey
 import (
 	"bytes"
 	"encoding/json"
+	"math"
 	"regexp"
 	"strings"
 	"testing"
@@ -110,6 +111,14 @@ func TestTallySumsUp(t *testing.T) {
 	near(t, "path-hours", hours, 160*2*0.25, 1e-9)
 	if events != 40 { // i%20 == 3 is windy with eddies: 20 of 400, two grounds
 		t.Errorf("%d false openings, want 40", events)
+	}
+	either := 0
+	for _, w := range f.ByWind {
+		either += w.Both.Events
+		hours -= w.Both.Hours
+	}
+	if either != events || math.Abs(hours) > 1e-9 {
+		t.Errorf("by wind alone: %d false openings, %g h fewer", either, hours)
 	}
 	for _, r := range f.Faults {
 		want := Rate{}

@@ -264,3 +264,52 @@ func TestSweepFollowsTheRule(t *testing.T) {
 		t.Errorf("cells %v", cells)
 	}
 }
+
+// A survey of windy weather plays nothing else, and its report has nothing of what
+// was not there to be found.
+func TestWindySurvey(t *testing.T) {
+	n, p := network(t, "pellmark"), Plan{Seed: ReportingSeed + 20, Episodes: 4, Windy: true, brief: 270 * time.Second}
+	f := Tally(n, p, played(t, n, p, 2, nothingDone), 0.5)
+	kinds := map[synthetic.StudyKind]int{}
+	for i := range p.Episodes {
+		kinds[n.study(p).Kind(i)]++
+	}
+	if kinds[synthetic.StudySteady] != 2 || kinds[synthetic.StudyEddying] != 2 {
+		t.Errorf("it plays %v", kinds)
+	}
+	if !f.WindyOnly || f.Tuning || f.Windy.Hours == 0 {
+		t.Errorf("windy alone %v, tuning %v, %g path-hours", f.WindyOnly, f.Tuning, f.Windy.Hours)
+	}
+	design, err := DesignOf(n, nil, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	report := &Report{Results: []Result{{Layout: LayoutOf(n), Design: design, Findings: f}}}
+	report.Finish()
+	var page, lines strings.Builder
+	if err := errors.Join(report.WriteHTML(&page), report.WriteText(&lines)); err != nil {
+		t.Fatal(err)
+	}
+	for _, b := range []string{page.String(), lines.String()} {
+		if !strings.Contains(b, "False openings") || strings.Contains(b, "Delay from") || strings.Contains(b, "How soon") || strings.Contains(b, "Other ") {
+			t.Error("the report is not of false openings alone")
+		}
+	}
+}
+
+// Episodes before and after the reporting seeds are for tuning, and those that
+// straddle either end.
+func TestTuningSeeds(t *testing.T) {
+	for _, c := range []struct {
+		seed     uint64
+		episodes int
+		tuning   bool
+	}{
+		{ReportingSeed, 2000, false}, {ReportingSeed - 1, 2, true}, {TuningSeed - 2000, 2000, false},
+		{TuningSeed - 2000, 2001, true}, {TuningSeed, 1, true}, {7, 1, true},
+	} {
+		if p := (Plan{Seed: c.seed, Episodes: c.episodes}); p.tuning() != c.tuning {
+			t.Errorf("%d episodes from %d on: tuning %v", c.episodes, c.seed, p.tuning())
+		}
+	}
+}

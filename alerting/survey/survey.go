@@ -28,15 +28,20 @@ type Network struct {
 	Specs    []synthetic.StationSpec // in the order of Settings.Stations
 }
 
-// ReportingSeed is the first seed that results may be reported from: nothing
-// was tuned on it nor on any after it. Below it lie the seeds to tune on.
-const ReportingSeed = 5_000_000
+// ReportingSeed is the first seed that results may be reported from, TuningSeed the
+// first one after it of which that is not so: nothing was tuned on those between, all
+// others are to tune on.
+const (
+	ReportingSeed = 5_000_000
+	TuningSeed    = 6_000_000
+)
 
 // Plan is how large a survey is.
 type Plan struct {
 	Seed     uint64            `json:"seed"`
 	Episodes int               `json:"episodes"`
 	Profile  synthetic.Profile `json:"profile,omitempty"`
+	Windy    bool              `json:"windy,omitempty"` // windy weather alone
 	// GroundStep is the distance between the places on which an outflow is put
 	// to look for blind ground, m; 0: none.
 	GroundStep float64 `json:"ground_step_m"`
@@ -50,6 +55,11 @@ const MostEpisodes = 5_000_000
 // leastMasts is how many masts a field of the wind needs before anything but
 // "not observed" can be expected of it.
 const leastMasts = 3
+
+// tuning tells whether any episode is one to tune on.
+func (p Plan) tuning() bool {
+	return p.Seed < ReportingSeed || p.Seed+uint64(p.Episodes) > TuningSeed
+}
 
 // Check names what makes a survey of this network and plan senseless.
 func (p Plan) Check(n *Network) error {
@@ -161,7 +171,7 @@ func countOf(n int, one, many string) string {
 
 // study is what is drawn over this network's airfield.
 func (n *Network) study(p Plan) synthetic.Study {
-	s := synthetic.Study{Seed: p.Seed, Profile: p.Profile, Lines: lines(n.Settings.Airfield)}
+	s := synthetic.Study{Seed: p.Seed, Profile: p.Profile, Windy: p.Windy, Lines: lines(n.Settings.Airfield)}
 	for _, st := range n.Settings.Stations {
 		s.Masts = append(s.Masts, st.ID)
 	}

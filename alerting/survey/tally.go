@@ -33,7 +33,7 @@ func Tally(n *Network, p Plan, records []Record, accepted float64) *Findings {
 	slices.SortFunc(t.places, func(a, b Place) int { return a.Index - b.Index })
 	f := &Findings{
 		Network: n.Name, Airfield: n.Settings.Airfield.ID, Masts: len(n.Specs), Grounds: len(grounds(n)),
-		Seed: p.Seed, Tuning: p.Seed < ReportingSeed, Planned: p.Episodes, Episodes: len(t.episodes),
+		Seed: p.Seed, Tuning: p.tuning(), WindyOnly: p.Windy, Planned: p.Episodes, Episodes: len(t.episodes),
 		Partial: len(records) < p.Tasks(n), Large: round(t.large, 10), Confidence: n.Settings.Levels.Confidence,
 	}
 	for _, e := range t.episodes {
@@ -206,26 +206,33 @@ func (t *tally) limit() float64 {
 // falsely counts the openings of level 2 or more while the true change was small.
 func (t *tally) falsely(f *Findings) {
 	for _, eddies := range []bool{false, true} {
-		for from := 0.0; from < 15; from += 5 {
-			w := WindRate{From: from, To: from + 5, Eddies: eddies}
-			if w.To == 15 {
-				w.To = 15.5 // 30 kt
-			}
-			belongs := func(e *Episode) bool {
-				return windy(e.Kind) && e.Fault == "" && (e.Eddies > 0) == eddies && e.Wind >= w.From && e.Wind < w.To
-			}
-			w.Loss = t.rate(belongs, func(c *Case) bool { return !c.Gain })
-			w.Gain = t.rate(belongs, func(c *Case) bool { return c.Gain })
-			w.Both = t.rate(belongs, func(*Case) bool { return true })
-			f.False = append(f.False, w)
-		}
+		f.False = append(f.False, t.byWind(eddies, func(e *Episode) bool { return (e.Eddies > 0) == eddies })...)
 	}
+	f.ByWind = t.byWind(true, func(*Episode) bool { return true })
 	every := func(*Case) bool { return true }
 	for _, kind := range synthetic.StudyFaults() {
 		r := t.rate(func(e *Episode) bool { return windy(e.Kind) && e.Fault == string(kind) }, every)
 		f.Faults = append(f.Faults, FaultRate{Fault: kind, Rate: r})
 	}
 	f.Windy = t.rate(func(e *Episode) bool { return windy(e.Kind) }, every)
+}
+
+// byWind counts them by the mean wind, where all instruments are sound.
+func (t *tally) byWind(eddies bool, counts func(*Episode) bool) (all []WindRate) {
+	for from := 0.0; from < 15; from += 5 {
+		w := WindRate{From: from, To: from + 5, Eddies: eddies}
+		if w.To == 15 {
+			w.To = 15.5 // 30 kt
+		}
+		belongs := func(e *Episode) bool {
+			return windy(e.Kind) && e.Fault == "" && counts(e) && e.Wind >= w.From && e.Wind < w.To
+		}
+		w.Loss = t.rate(belongs, func(c *Case) bool { return !c.Gain })
+		w.Gain = t.rate(belongs, func(c *Case) bool { return c.Gain })
+		w.Both = t.rate(belongs, func(*Case) bool { return true })
+		all = append(all, w)
+	}
+	return all
 }
 
 // rate counts openings on some cases of some episodes over their path-hours: a

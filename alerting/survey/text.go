@@ -149,7 +149,20 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 	if f.Partial {
 		fmt.Fprintf(b, " PARTIAL: %d were asked for.", f.Planned)
 	}
-	b.WriteString("\n\nLosses of headwind on observed ground: level 2 or more found\n")
+	b.WriteString("\n")
+	if !f.WindyOnly {
+		f.detectionText(b)
+	}
+	f.falselyText(b)
+	if !f.WindyOnly {
+		f.relianceText(b)
+		f.estimatesText(b)
+		f.choicesText(b, accepted)
+	}
+}
+
+func (f *Findings) detectionText(b *strings.Builder) {
+	b.WriteString("\nLosses of headwind on observed ground: level 2 or more found\n")
 	for _, c := range f.Detection {
 		fmt.Fprintf(b, "  %-12s kt  %s\n", c.class(), c.words())
 	}
@@ -167,6 +180,9 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 	fmt.Fprintf(b, "\nDelay from %.0f kt to level 2: %s\n", f.Large, f.Delay.words())
 	fmt.Fprintf(b, "  outflows, all masts sound: %s\n  a test that knows size and place, opening falsely as often (z %.2f): %s\n",
 		f.Same.words(), f.Reference.Limit, f.Reference.words())
+}
+
+func (f *Findings) falselyText(b *strings.Builder) {
 	b.WriteString("\nFalse openings of level 2 or more in 100 path-hours of windy weather, all instruments sound (a loss or a gain)\n")
 	for _, w := range f.False {
 		with := "without eddies"
@@ -175,6 +191,9 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 		}
 		fmt.Fprintf(b, "  %2.0f to %2.0f kt, %-15s %s\n", quantity.Knots(w.From), quantity.Knots(w.To), with, w.Both.words())
 	}
+	for _, w := range f.ByWind {
+		fmt.Fprintf(b, "  %2.0f to %2.0f kt, %-15s %s\n", quantity.Knots(w.From), quantity.Knots(w.To), "either", w.Both.words())
+	}
 	b.WriteString("... in any wind, with one instrument broken\n")
 	for _, r := range f.Faults {
 		if r.Hours > 0 {
@@ -182,6 +201,9 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 		}
 	}
 	fmt.Fprintf(b, "... in all, sound or not: %s\n", f.Windy.words())
+}
+
+func (f *Findings) relianceText(b *strings.Builder) {
 	fmt.Fprintf(b, "\nTold probability of a loss of %.0f kt or more, and how often there was one\n  (all instruments sound; one broken)\n", f.Large)
 	for k, c := range f.Sure {
 		if u := f.Unsure[k]; c.Cases+u.Cases > 0 {
@@ -190,8 +212,6 @@ func (f *Findings) text(b *strings.Builder, accepted float64) {
 	}
 	coverageText(b, "where the median told was", f.Told)
 	coverageText(b, "where the true loss was", f.Coverage)
-	f.estimatesText(b)
-	f.choicesText(b, accepted)
 }
 
 func coverageText(b *strings.Builder, where string, classes []Coverage) {

@@ -24,10 +24,11 @@ func surveyCommand() command {
 			o := surveyOptions{}
 			cfg := configFlag(fs)
 			fs.IntVar(&o.plan.Episodes, "episodes", 2000, "`NUMBER` of drawn episodes of 20 minutes; with 0 only what follows at once from where the masts stand")
-			fs.Uint64Var(&o.plan.Seed, "seed", survey.ReportingSeed, "`NUMBER` of the first episode; the ones below the default are for tuning, and the report says so")
+			fs.Uint64Var(&o.plan.Seed, "seed", survey.ReportingSeed, "`NUMBER` of the first episode; those from 5000000 to 5999999 were not tuned on; of others the report says so")
 			fs.IntVar(&o.jobs, "jobs", runtime.GOMAXPROCS(0), "`NUMBER` of episodes played at a time; the result does not depend on it")
 			fs.Float64Var(&o.plan.GroundStep, "ground-step", 500, "distance in `METRES` of the places tried for blind ground, 100 to 2000; 0 to leave that out")
 			fs.StringVar((*string)(&o.plan.Profile), "profile", "", "`NAME` of what an outflow leaves at mast height: oseguera-bowles, vicroy or wall-jet; a spread between them unless given")
+			fs.BoolVar(&o.plan.Windy, "windy", false, "windy weather alone, to find out how often alerts open falsely")
 			fs.StringVar(&o.compare, "compare", "", "configuration `FILE` of another network for the same runways, to meet the same weather")
 			fs.StringVar(&o.dir, "out", "", "`DIRECTORY` for survey.html, survey.json and what an interrupted survey goes on from")
 			fs.StringVar(&o.report, "report", "", "`FILE` for the report as one HTML page; an interrupted survey goes on from what lies beside it")
@@ -74,7 +75,7 @@ func (o *surveyOptions) check() error {
 	default:
 		return usagef("--profile %q: choose %s, %s or %s", o.plan.Profile, synthetic.ProfileOsegueraBowles, synthetic.ProfileVicroy, synthetic.ProfileWallJet)
 	}
-	if o.plan.Episodes == 0 {
+	if o.plan.Episodes == 0 || o.plan.Windy {
 		o.plan.GroundStep = 0
 	}
 	return nil

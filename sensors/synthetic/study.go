@@ -41,6 +41,8 @@ type Study struct {
 	Lines []Line
 	// Masts are the ids of those that may fail.
 	Masts []string
+	// Windy leaves out outflows and gust fronts: what opens then opens falsely.
+	Windy bool
 	// Profile brings the strength of an outflow from the height of its greatest
 	// wind down to 10 m. "" draws the share that a mast sees between that of a
 	// deep smooth ground layer and that of a wall jet.
@@ -58,8 +60,12 @@ const (
 )
 
 // studyMix is the kind of each of twenty successive episodes: 40 % outflows, 10 %
-// gust fronts, 25 % each of windy weather without and with eddies.
-const studyMix = "OWOEFOWEOWOEFOWEOWOE"
+// gust fronts, 25 % each of windy weather without and with eddies. windyMix is the
+// windy weather alone.
+const (
+	studyMix = "OWOEFOWEOWOEFOWEOWOE"
+	windyMix = "WE"
+)
 
 // mostWind is the greatest mean wind of a study: 30 kt, in m/s.
 const mostWind = 30 * 1852.0 / 3600.0
@@ -69,7 +75,11 @@ const faultShare = 0.1
 
 // Kind is the kind of episode i.
 func (s Study) Kind(i int) StudyKind {
-	switch studyMix[i%len(studyMix)] {
+	mix := studyMix
+	if s.Windy {
+		mix = windyMix
+	}
+	switch mix[i%len(mix)] {
 	case 'O':
 		return StudyOutflow
 	case 'F':
