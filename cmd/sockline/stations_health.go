@@ -39,6 +39,8 @@ type stationHealth struct {
 	ValidUntil  string             `json:"valid_until"`
 	Exercise    bool               `json:"exercise"`
 	Notice      string             `json:"notice"`
+
+	stroke averages.Stroke // of its instrument, if it is recent
 }
 
 // clockObject is what is known of the clock of a mast.
@@ -121,6 +123,9 @@ func (r *reporter) station(i int, e *engine.Engine, res *engine.Result) stationH
 	if res.Doubt != nil {
 		h.Neighbours.Doubt = decimals(res.Doubt[i], 2)
 	}
+	if res.At.Sub(m.Stroke.At) < strokeTold {
+		h.stroke = m.Stroke
+	}
 	h.Findings = findings(&h)
 	return h
 }
@@ -167,6 +172,27 @@ func neighboursOf(f drift.Finding) neighbourObject {
 // doubted is the probability of being wrong from which on it is told.
 const doubted = 0.5
 
+// strokeTold is how long a stroke of an instrument is told of.
+const strokeTold = time.Hour
+
+// strokeWords tells of a stroke that the neighbours did not follow; empty where there
+// was none.
+func strokeWords(s averages.Stroke) string {
+	switch {
+	case s.At == 0:
+		return ""
+	case s.Turn != 0:
+		side := "clockwise"
+		if s.Turn > 0 { // from east to north
+			side = "anticlockwise"
+		}
+		return fmt.Sprintf("From one second to the next, at %s, its direction turned %s by about %.0f degrees, as a vane does that slips: look at its clamp.",
+			seconds(s.At), side, math.Abs(s.Turn)*180/math.Pi)
+	}
+	return fmt.Sprintf("From one second to the next, at %s, its speed fell to about %.0f %%, as of cups that are damaged or held: look at them.",
+		seconds(s.At), 100*s.Ratio)
+}
+
 // findings are the sentences for a technician.
 func findings(h *stationHealth) []string {
 	out := []string{}
@@ -188,6 +214,9 @@ func findings(h *stationHealth) []string {
 	if h.Neighbours.Doubt >= doubted {
 		say("Its neighbours contradict it at the moment: the wind between the masts is worked out as if the odds that it is wrong were %s.",
 			wording.Odds(h.Neighbours.Doubt))
+		if s := strokeWords(h.stroke); s != "" {
+			out = append(out, s)
+		}
 	}
 	for _, word := range h.Neighbours.Named {
 		switch t, s := h.Neighbours.TurnedDeg, h.Neighbours.SpeedRatio; word {

@@ -154,6 +154,9 @@ func TestBlocksOfOneState(t *testing.T) {
 		if m.Stroke.At != epoch+at*sensors.Second && m.Stroke.At != epoch+(at-1)*sensors.Second {
 			t.Fatalf("at %d s: a stroke at %v", k, m.Stroke.At)
 		}
+		if turn := m.Stroke.Turn * 180 / math.Pi; math.Abs(turn-70) > 3 || m.Stroke.Ratio != 1 {
+			t.Fatalf("at %d s: from west to south-south-west is a turn of %.0f degrees from east to north, and %g of the speed", k, turn, m.Stroke.Ratio)
+		}
 		if m.State != Live {
 			t.Fatalf("at %d s: the mast is %s", k, m.State)
 		}
