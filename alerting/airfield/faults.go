@@ -144,7 +144,7 @@ func (fs *Faults) runway(spec Spec, field string, r RunwaySpec) {
 	}
 	magnetic := quantity.NormalizeDegrees(bearing - variation)
 	for k, num := range []int{numA, numB} {
-		off := turn(magnetic+180*float64(k), 10*float64(num))
+		off := turn(magnetic+float64(180*k), 10*float64(num))
 		if off <= maxDesignator {
 			continue
 		}
@@ -154,7 +154,7 @@ func (fs *Faults) runway(spec Spec, field string, r RunwaySpec) {
 		}
 		fs.add(fmt.Sprintf("%s.end.%d.designator", field, k), r.Ends[k].Designator, mend,
 			"the bearing from this threshold is %03.0f magnetic (%03.0f true, variation %.1f), %.0f degrees from the designator",
-			math.Mod(magnetic+180*float64(k), 360), math.Mod(bearing+180*float64(k), 360), variation, off)
+			math.Mod(magnetic+float64(180*k), 360), math.Mod(bearing+float64(180*k), 360), variation, off)
 	}
 }
 

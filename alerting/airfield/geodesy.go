@@ -70,13 +70,13 @@ const planeRounds = 4
 func (p Plane) LatLon(east, north, height float64) (lat, lon float64) {
 	w := 1 - float64(float64(wgs84E2*p.sinLat)*p.sinLat)
 	meridian := wgs84A * (1 - wgs84E2) / (w * math.Sqrt(w))
-	parallel := wgs84A / math.Sqrt(w) * p.cosLat
+	parallel := float64(wgs84A / math.Sqrt(w) * p.cosLat)
 	lat = math.Atan2(p.sinLat, p.cosLat) / degree
 	lon = math.Atan2(p.sinLon, p.cosLon) / degree
 	for range planeRounds {
 		e, n, _ := p.EastNorthUp(lat, lon, height)
-		lat += (north - n) / (meridian + height) / degree
-		lon += (east - e) / (parallel + float64(height*p.cosLat)) / degree
+		lat += float64((north - n) / (meridian + height) / degree)
+		lon += float64((east - e) / (parallel + float64(height*p.cosLat)) / degree)
 	}
 	return lat, math.Remainder(lon, 360)
 }

@@ -134,16 +134,16 @@ func (c *gauss) horizontal(lat, lon, height, years float64) (north, east float64
 	for n := 1; n <= wmmDegree; n++ {
 		scale *= ratio
 		for m := 0; m <= n; m++ {
-			g := c.g[n][m] + years*c.gDot[n][m]
-			h := c.h[n][m] + years*c.hDot[n][m]
+			g := c.g[n][m] + float64(years*c.gDot[n][m])
+			h := c.h[n][m] + float64(years*c.hDot[n][m])
 			sin, cos := math.Sincos(float64(m) * lon * degree)
-			x += scale * (g*cos + h*sin) * dLeg[n][m]
-			y += scale * float64(m) * (g*sin - h*cos) * leg[n][m] / sinTh
-			z -= scale * float64(n+1) * (g*cos + h*sin) * leg[n][m]
+			x += float64(scale * (float64(g*cos) + float64(h*sin)) * dLeg[n][m])
+			y += float64(scale * float64(m) * (float64(g*sin) - float64(h*cos)) * leg[n][m] / sinTh)
+			z -= float64(scale * float64(n+1) * (float64(g*cos) + float64(h*sin)) * leg[n][m])
 		}
 	}
-	sin, cos := math.Sincos(geocentric - lat*degree)
-	return x*cos - z*sin, y
+	sin, cos := math.Sincos(geocentric - float64(lat*degree))
+	return float64(x*cos) - float64(z*sin), y
 }
 
 // schmidt are the Schmidt quasi-normalised associated Legendre functions
@@ -164,13 +164,13 @@ func schmidt(sinTh, cosTh float64) (p, d [wmmDegree + 1][wmmDegree + 1]float64) 
 				f = math.Sqrt(float64(2*m-1) / float64(2*m))
 			}
 			p[m][m] = f * sinTh * p[m-1][m-1]
-			d[m][m] = f * (cosTh*p[m-1][m-1] + sinTh*d[m-1][m-1])
+			d[m][m] = f * (float64(cosTh*p[m-1][m-1]) + float64(sinTh*d[m-1][m-1]))
 		}
 		for n := m + 1; n <= wmmDegree; n++ {
 			a := float64(2*n - 1)
 			norm := math.Sqrt(float64(n*n - m*m))
 			p[n][m] = a * cosTh * p[n-1][m] / norm
-			d[n][m] = a * (cosTh*d[n-1][m] - sinTh*p[n-1][m]) / norm
+			d[n][m] = a * (float64(cosTh*d[n-1][m]) - float64(sinTh*p[n-1][m])) / norm
 			if n > m+1 {
 				b := math.Sqrt(float64((n-1)*(n-1)-m*m)) / norm
 				p[n][m] -= b * p[n-2][m]

@@ -98,7 +98,7 @@ func (t Table) Scores() Scores {
 		POD: Share(t.Hits, t.Hits+t.Misses), FAR: Share(t.FalseAlarms, t.Hits+t.FalseAlarms),
 		POFD: Share(t.FalseAlarms, t.FalseAlarms+t.CorrectNulls), CSI: Share(t.Hits, t.Hits+t.FalseAlarms+t.Misses),
 		Bias: quotient(a+b, a+c), PC: quotient(a+d, n),
-		HSS: quotient(2*(a*d-b*c), (a+c)*(c+d)+(a+b)*(b+d)),
+		HSS: quotient(2*(float64(a*d)-float64(b*c)), float64((a+c)*(c+d))+float64((a+b)*(b+d))),
 		ETS: quotient(a-chance, a+b+c-chance),
 	}
 	if s.POD.Of == 0 || s.POFD.Of == 0 {

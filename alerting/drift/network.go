@@ -96,7 +96,7 @@ func (k Kernel) inverse(all []Observation) [][]float64 {
 		factor[i] = make([]float64, n)
 		for j := range i + 1 {
 			dx, dy := all[i].X-all[j].X, all[i].Y-all[j].Y
-			sum := k.Variance * math.Exp(-(float64(dx*dx)+float64(dy*dy))/(2*k.Length*k.Length))
+			sum := float64(k.Variance * math.Exp(-(float64(dx*dx)+float64(dy*dy))/(2*k.Length*k.Length)))
 			if i == j {
 				sum += k.Noise
 			}

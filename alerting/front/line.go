@@ -166,7 +166,7 @@ func (p *posterior) weigh(b *bank, hits []hit, waiting []int, behind, change qua
 			p.weight[i] = 0
 			continue
 		}
-		w := math.Exp(l) * p.unreached(b, i, waiting, now)
+		w := float64(math.Exp(l) * p.unreached(b, i, waiting, now))
 		if i >= fronts*headings*speeds {
 			edges += w
 			p.weight[i] = 0
@@ -304,7 +304,7 @@ const chanceSpan = 600.0
 // given the cosine of its angle to where it is expected: von Mises, with
 // I0(kappa) = exp(kappa)/sqrt(2 pi kappa).
 func concentrated(cos float64) float64 {
-	return float64(kappa*(cos-1)) + math.Log(2*math.Pi*kappa)/2
+	return float64(kappa*(cos-1)) + float64(math.Log(2*math.Pi*kappa)/2)
 }
 
 // agreement is the log of how much likelier the directions of the changes are
@@ -468,7 +468,7 @@ func (p *posterior) motion(b *bank) (toward, spread, speed, low, high float64) {
 		n += float64(w * b.north[h])
 		by[line%speeds] += w
 	})
-	toward = math.Atan2(e, n) * (180 / math.Pi)
+	toward = float64(math.Atan2(e, n) * (180 / math.Pi))
 	if toward < 0 {
 		toward += 360
 	}

@@ -238,7 +238,7 @@ func (f *fitter) settle(w *watch, c clockwork, t sensors.Instant, o *onset, firs
 	best := math.Inf(-1)
 	for l := range lengths {
 		length := lengthOf(l, width)
-		for mid := first; mid <= min(last, now-width); mid += width / 2 {
+		for mid := first; mid <= min(last, now-width); mid += float64(width / 2) {
 			b, a, ssr, ok := f.ramp(now-mid, length)
 			if !ok {
 				continue
@@ -301,7 +301,7 @@ func (f *fitter) gather(w *watch, c clockwork, t sensors.Instant, back int, sinc
 		if k == nil {
 			continue
 		}
-		f.age[f.n], f.v[f.n] = float64(i*c.w)+float64(c.w)/2, k.v
+		f.age[f.n], f.v[f.n] = float64(i*c.w)+float64(float64(c.w)/2), k.v
 		f.n++
 		f.e += k.v.East
 		f.en += k.v.North

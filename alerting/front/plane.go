@@ -79,7 +79,7 @@ func weight(q Passage) float64 {
 
 // shape fills the axes of the places from their covariance.
 func (p *Plane) shape(xx, xy, yy float64) {
-	half, diff := (xx+yy)/2, (xx-yy)/2
+	half, diff := float64((xx+yy)/2), (xx-yy)/2
 	root := math.Hypot(diff, xy)
 	p.Wide, p.Narrow = math.Sqrt(max(half+root, 0)), math.Sqrt(max(half-root, 0))
 	angle := math.Atan2(xy, diff) / 2 // of the long axis, from east
@@ -91,7 +91,7 @@ func (p *Plane) Speed() float64 { return 1 / math.Hypot(p.SX, p.SY) }
 
 // Toward is where it moves to, degrees true in [0, 360).
 func (p *Plane) Toward() float64 {
-	deg := math.Atan2(p.SX, p.SY) * (180 / math.Pi)
+	deg := float64(math.Atan2(p.SX, p.SY) * (180 / math.Pi))
 	if deg < 0 {
 		deg += 360
 	}

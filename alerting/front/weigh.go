@@ -153,7 +153,7 @@ func (t *Tracker) arrive(tr *track, now sensors.Instant) {
 			a.Arrived = true
 		}
 		a.At = after(f.First, at)
-		a.Earliest, a.Latest = after(f.First, at-ninety*sd), after(f.First, at+ninety*sd)
+		a.Earliest, a.Latest = after(f.First, at-float64(ninety*sd)), after(f.First, at+float64(ninety*sd))
 		a.Arrived = a.Arrived || a.Mast < 0 && a.At <= now
 		if a.Mast >= 0 {
 			a.Predicted = tr.predicted[a.Mast].take(&a, now)

@@ -113,7 +113,7 @@ func (c cut) share(counts []uint8) float64 {
 	}
 	n := float64(counts[c.at])
 	if c.part > 0 {
-		n += c.part * (float64(counts[c.at+1]) - n)
+		n += float64(c.part * (float64(counts[c.at+1]) - n))
 	}
 	if n < leastCount {
 		return 0

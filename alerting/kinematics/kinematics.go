@@ -107,7 +107,7 @@ func Polygon(ws []Wind) (divergence, vorticity float64, ok bool) {
 		a, b := ws[i], ws[(i+1)%len(ws)]
 		dx, dy := b.X-a.X, b.Y-a.Y
 		u, v := (a.U+b.U)/2, (a.V+b.V)/2
-		area += (float64(a.X*b.Y) - float64(b.X*a.Y)) / 2
+		area += float64((float64(a.X*b.Y) - float64(b.X*a.Y)) / 2)
 		divergence += float64(u*dy) - float64(v*dx)
 		vorticity += float64(u*dx) + float64(v*dy)
 	}

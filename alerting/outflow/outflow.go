@@ -146,7 +146,7 @@ func estimate(parts []windfield.Outflow, total, spacing float64) Outflow {
 	o.Spread[2] += grid
 	const z = 1.6449 // 95 % point of the normal law
 	// The radii tried lie about half a radius apart.
-	sd := math.Sqrt(radius/sum + float64(gridSpread*o.Radius*o.Radius)/4)
+	sd := math.Sqrt(radius/sum + float64(gridSpread*o.Radius*o.Radius/4))
 	o.RadiusLow, o.RadiusHigh = math.Max(o.Radius-float64(z*sd), 0), o.Radius+float64(z*sd)
 	sd = math.Sqrt(strength / sum)
 	o.StrengthLow, o.StrengthHigh = math.Max(o.Strength-float64(z*sd), 0), o.Strength+float64(z*sd)

@@ -230,15 +230,15 @@ func (s *Stretch) pairs(sign, least float64, fn func(i, j int)) {
 // ends of the side, per metre, scaled to the median of M: the mean profile is
 // flatter than any of the profiles it is the mean of.
 func (s *Stretch) steepest(side *Side, p Place) float64 {
-	length := float64(p.End-p.Enter) * Spacing
+	length := float64(float64(p.End-p.Enter) * Spacing)
 	if length <= 0 || p.Change <= 0 {
 		return 0
 	}
 	step := math.Min(slopeLength, length)
 	best := 0.0
 	for from := 0.0; from+step <= length+1e-9; from += Spacing / 4 {
-		a := s.at(float64(p.Enter) + from/Spacing)
-		b := s.at(float64(p.Enter) + (from+step)/Spacing)
+		a := s.at(float64(p.Enter) + float64(from/Spacing))
+		b := s.at(float64(p.Enter) + float64((from+step)/Spacing))
 		best = math.Max(best, side.sign*(a-b)/step)
 	}
 	return best * side.Quantile(0.5) / p.Change

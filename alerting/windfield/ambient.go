@@ -64,7 +64,7 @@ func (a *ambientMemory) shares(t sensors.Instant, least float64, out []float64) 
 			continue
 		}
 		for k := range out {
-			out[k] += ambientTemper * a.log[slot*a.states+k]
+			out[k] += float64(ambientTemper * a.log[slot*a.states+k])
 		}
 	}
 	best := math.Inf(-1)

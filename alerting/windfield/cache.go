@@ -141,7 +141,7 @@ func (e *Estimator) recentSpeed(m *averages.Mast) float64 {
 	for b := range blocks {
 		if m.Blocks[b].Present {
 			w := float64(e.layout.Seconds[b])
-			sum += w * math.Hypot(m.Blocks[b].East, m.Blocks[b].North)
+			sum += float64(w * math.Hypot(m.Blocks[b].East, m.Blocks[b].North))
 			seconds += w
 		}
 	}
@@ -162,7 +162,7 @@ func (e *Estimator) blockNoise(timeStep int) []float64 {
 		scale := noiseLeast * math.Pow(noiseRatio, float64(step&15)) / first
 		for b := range blocks {
 			for c := range blocks {
-				v := scale*e.layout.Covariance(unit, b, c) + instrument
+				v := float64(scale*e.layout.Covariance(unit, b, c)) + instrument
 				if b == c && step>>4&(1<<b) != 0 {
 					v += absentVariance
 				}

@@ -163,7 +163,7 @@ func (e *Estimator) child(en *entry, s *state, k int, form, twin template, ratio
 	mean, today := mul3(d.precision, d.b), mul3(d.precision, e.outflows.q)
 	evidence, now, v := 0.0, 0.0, e.outflows.rest
 	for i := range dims {
-		evidence += float64(d.b[i]*mean[i]) / 2
+		evidence += float64(float64(d.b[i]*mean[i]) / 2)
 		now += float64(e.outflows.q[i] * mean[i])
 		v += float64(e.outflows.q[i] * today[i])
 	}

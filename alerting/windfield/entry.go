@@ -163,7 +163,7 @@ func (e *Estimator) addGain(en *entry, s *state) {
 	}
 	// Jitter: the posterior covariance is singular to rounding where a target
 	// stands beside a mast.
-	jitter := 1e-6 + 1e-6*float64(f.Deviation*f.Deviation)
+	jitter := 1e-6 + float64(1e-6*float64(f.Deviation*f.Deviation))
 	for tries := 0; ; tries++ {
 		work := slices.Clone(cov)
 		for i := range nt {

@@ -76,7 +76,7 @@ func newFrontBank(masts []Mast, targets []Target, ages [blocks]float64, p Prior)
 		}
 		for _, speed := range p.FrontSpeeds {
 			// Up to where the last block before the line has left the last mast.
-			end := hi + speed*ages[blocks-1]
+			end := hi + float64(speed*ages[blocks-1])
 			for at := math.Ceil(lo/p.FrontSpacing) * p.FrontSpacing; at <= end; at += p.FrontSpacing {
 				for _, width := range p.FrontWidths {
 					b.fronts = append(b.fronts, front{east: sin, north: cos, at: at, speed: speed, width: width})

@@ -39,8 +39,8 @@ func (e *Estimator) covariances(field int) *known {
 		for _, b := range targets {
 			ee, en, nn := covariance(f, a.X-b.X, a.Y-b.Y)
 			// Var(-t.(u,v)) with both unit vectors.
-			k.targets = append(k.targets, float64(a.East*b.East)*(mean+ee)+float64(a.North*b.North)*(mean+nn)+
-				(float64(a.East*b.North)+float64(a.North*b.East))*en)
+			k.targets = append(k.targets, float64(float64(a.East*b.East)*(mean+ee))+float64(float64(a.North*b.North)*(mean+nn))+
+				float64((float64(a.East*b.North)+float64(a.North*b.East))*en))
 		}
 	}
 	e.known[field] = k

@@ -127,7 +127,7 @@ func (e *Estimator) partnerOf(m *second, mean1 [dims]float64, j int) (partner, b
 	mean2 := mul3(m.p, rest)
 	evidence, now1, now2 := 0.0, 0.0, 0.0
 	for r := range dims {
-		evidence += float64(rest[r]*mean2[r]) / 2
+		evidence += float64(float64(rest[r]*mean2[r]) / 2)
 		now2 += float64(e.outflows.q[r] * mean2[r])
 	}
 	if now2 < leastTwin {

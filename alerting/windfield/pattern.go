@@ -243,5 +243,5 @@ func belowZero(mean, sd float64) float64 { return math.Erfc(mean/(sd*math.Sqrt2)
 func positiveNormal(mean, sd, below, u float64) float64 {
 	p := below + float64(u*(1-below))
 	p = min(max(p, 1e-12), 1-1e-12)
-	return math.Max(mean+float64(sd*math.Sqrt2)*math.Erfinv(2*p-1), 0)
+	return math.Max(mean+float64(float64(sd*math.Sqrt2)*math.Erfinv(float64(2*p)-1)), 0)
 }

@@ -109,8 +109,8 @@ func positiveMean(mean, sd float64) float64 {
 // nothing to do with each other: for what is drawn beside the field.
 func Scores(d int) (z [3]float64) {
 	for k, step := range [...]int{53, 75, 91} { // odd, so each order holds every draw once
-		u := (float64(reverseBits((step*d+29*k)%Draws)) + 0.5) / Draws
-		z[k] = math.Sqrt2 * math.Erfinv(2*u-1)
+		u := float64((float64(reverseBits((step*d+29*k)%Draws)) + 0.5) / Draws)
+		z[k] = math.Sqrt2 * math.Erfinv(float64(2*u)-1)
 	}
 	return z
 }

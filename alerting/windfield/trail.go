@@ -112,7 +112,7 @@ func (t *trail) recall(now sensors.Instant) {
 		var wind [2]float64
 		if at >= 0 && t.held[slot] == at {
 			wind = t.wind[slot]
-			front *= math.Exp(p.TrailTemper * t.fronts[slot])
+			front = float64(front * math.Exp(p.TrailTemper*t.fronts[slot]))
 			total := none + front
 			for j, l := range t.log[slot*t.templates : (slot+1)*t.templates] {
 				t.factors[j] = p.TrailTemper * float64(l)

@@ -169,8 +169,8 @@ func New(masts []Mast, targets []Target, layout averages.Layout, prior Prior) *E
 	e.normals = fixedNormals(len(targets))
 	for d := range Draws {
 		e.order[d] = reverseBits(d)
-		e.levels[d] = (float64(reverseBits((37*d+11)%Draws)) + 0.5) / Draws
-		e.scores[d] = math.Sqrt2 * math.Erfinv(2*e.levels[d]-1)
+		e.levels[d] = float64((float64(reverseBits((37*d+11)%Draws)) + 0.5) / Draws)
+		e.scores[d] = math.Sqrt2 * math.Erfinv(float64(2*e.levels[d])-1)
 	}
 	n, most, total := blocks*2*len(masts), 0, 0
 	for _, c := range e.classes {
@@ -305,7 +305,7 @@ func (e *Estimator) weigh(snapshot *averages.Snapshot, en *entry) {
 	}
 	plain := (1 - e.trail.share - e.trail.front) * (1 - e.prior.FaultShare)
 	for k := range ambient {
-		w := plain * e.weights[k] * math.Exp(e.stateLog[k]-top)
+		w := float64(plain * e.weights[k] * math.Exp(e.stateLog[k]-top))
 		e.parts = append(e.parts, part{state: int16(k), class: -1, weight: w})
 		total += w
 	}

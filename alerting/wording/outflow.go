@@ -99,7 +99,7 @@ func trendOf(t outflow.Trend) string {
 
 // bearing is where a vector points, degrees true in [0, 360).
 func bearing(east, north float64) float64 {
-	return math.Mod(math.Atan2(east, north)*(180/math.Pi)+360, 360)
+	return math.Mod(float64(math.Atan2(east, north)*(180/math.Pi))+360, 360)
 }
 
 // compass names a direction by the nearest of eight points.

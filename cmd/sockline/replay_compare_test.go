@@ -51,7 +51,7 @@ func TestReview(t *testing.T) {
 	t.Run("event", func(t *testing.T) { reviewEvent(t, dir) }) // last: it adds to the journal
 }
 
-// storm is a mast that fails in a strong wind: what it sees is large, but not
+// storm is a mast that has failed in a strong wind before anybody saw: what it sees is large, but not
 // beyond-margin, since its neighbours contradict it.
 const storm = `
 airfield   skerrymoor
@@ -60,7 +60,7 @@ length     9 min
 seed       43
 wind       064 deg 36 kt
 turbulence B
-mast       touch25 reads 20 % at 8 min
+mast       touch25 reads 20 % at 40 s
 `
 
 // reviewStorm holds that a loss which rests on one mast is no more by other

@@ -115,7 +115,7 @@ func (l Layout) Age(b int) float64 {
 	for i := range b {
 		start += l.Seconds[i]
 	}
-	return float64(start) + float64(l.Seconds[b])/2
+	return float64(start) + float64(float64(l.Seconds[b])/2)
 }
 
 // Total is the length of all blocks together in seconds.

@@ -22,7 +22,7 @@ const leastResultant = 1e-9
 func circular(sin, cos float64) (mean, deviation float64, ok bool) {
 	squared := float64(sin*sin) + float64(cos*cos)
 	e := math.Sqrt(math.Max(0, 1-squared)) // rounding can make R exceed 1
-	deviation = math.Asin(e) * (1 + (2/math.Sqrt(3)-1)*e*e*e) * (180 / math.Pi)
+	deviation = math.Asin(e) * (1 + float64((2/math.Sqrt(3)-1)*e*e*e)) * (180 / math.Pi)
 	mean = quantity.NormalizeDegrees(math.Atan2(sin, cos) * (180 / math.Pi))
 	return mean, deviation, squared >= leastResultant*leastResultant
 }

@@ -23,7 +23,7 @@ type Turbulence struct {
 // calmed may still be restless.
 func (t Turbulence) In(speed float64) Turbulence {
 	if speed > t.Speed {
-		growth := (0.75*speed + 5.6) / (0.75*t.Speed + 5.6)
+		growth := (float64(0.75*speed) + 5.6) / (float64(0.75*t.Speed) + 5.6)
 		t.Variance *= growth * growth
 	}
 	return t
@@ -195,7 +195,7 @@ func (m *mast) coarseTurbulence(t sensors.Instant, layout Layout) Turbulence {
 		if n++; n > 1 && second-before.second <= coarseGap*sensors.Second {
 			apart[(second-before.second)/sensors.Second]++
 			de, dn := v.East-before.v.East, v.North-before.v.North
-			sum += (float64(de*de) + float64(dn*dn)) / 2
+			sum += float64((float64(de*de) + float64(dn*dn)) / 2)
 			pairs++
 		}
 		before = sample{second, v}
@@ -230,6 +230,6 @@ func ExpectedTime(speed float64) float64 {
 // the cautious side: sigma1 = Iref (0.75 V + 5.6) with Iref = 0.16 (IEC 61400-1
 // ed. 3, class A, the 90 % point; from memory).
 func Expected(speed float64) Turbulence {
-	sigma := 0.16 * (0.75*speed + 5.6)
+	sigma := 0.16 * (float64(0.75*speed) + 5.6)
 	return Turbulence{Variance: sigma * sigma, Time: ExpectedTime(speed), Speed: speed}
 }
