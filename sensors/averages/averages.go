@@ -283,7 +283,7 @@ func (r *Recorder) Snapshot(t sensors.Instant) *Snapshot {
 			// cache) changes seldom and depends on nothing but the bins.
 			m.turbulence = m.estimateTurbulence(t, r.layout)
 		}
-		if m.interval == 1 {
+		if m.interval <= strokeAcross {
 			m.seeStroke(t)
 		}
 		r.fill(&r.snapshot.masts[i], m, t)

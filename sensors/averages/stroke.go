@@ -13,7 +13,8 @@ import (
 // at 10 m/s. A change at one stroke is therefore held to speak of the
 // instrument, but only if the mast has not done the like of it in the last minutes,
 // by its own measure. It is no proof, and takes nothing away: the analysis weighs
-// whether the neighbours bear it out.
+// whether the neighbours bear it out. An instrument that reports more rarely than
+// every two seconds is not asked: by its next report the air may have turned, too.
 
 const (
 	// The second in which a stroke fell may hold both; those beside it are compared.
@@ -120,7 +121,7 @@ func (m *mast) between(before sensors.Instant, n int, after sensors.Instant, k i
 }
 
 // vector is the mean over the n seconds up to an instant, of which three in four
-// must be there.
+// that the instrument sends must be there.
 func (m *mast) vector(end sensors.Instant, n int) (mean quantity.Vector, ok bool) {
 	count := 0
 	for k := range n {
@@ -132,7 +133,7 @@ func (m *mast) vector(end sensors.Instant, n int) (mean quantity.Vector, ok bool
 	}
 	mean.East /= float64(max(count, 1))
 	mean.North /= float64(max(count, 1))
-	return mean, 4*count >= 3*n
+	return mean, 4*count >= 3*max(n/m.interval, 1)
 }
 
 // unbroken is which seconds of a block, counted back from its end, are of one

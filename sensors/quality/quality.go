@@ -41,7 +41,7 @@ func (c Checked) Flags() Flags { return c.flags }
 func (c Checked) Spikes() bool { return c.flags&FlagSpike != 0 }
 
 // Waits reports whether the reading stands out so far that what it is worth
-// shows with the next one that does not wait, which comes within a second or two.
+// shows with the next one that does not wait: one or two readings on.
 func (c Checked) Waits() bool { return c.waits }
 
 // Usable reports whether the reading may enter an average.

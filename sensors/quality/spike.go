@@ -24,6 +24,10 @@ const (
 	// two must make up half of it here: the readings beside a spike would be
 	// spikes too, else.
 	spikeFactor = 4.0
+	// spikeSteps is the same in root mean squares of what one reading differs from the
+	// next: at 2 s apart in a strong wind each of them is as good as independent, and
+	// one in thirty would stand out by two deviations.
+	spikeSteps = 2.75
 	// spikeFloor is the least standard deviation that is reckoned with, m/s: in
 	// light air a step of the resolution is no spike.
 	spikeFloor = 0.7
@@ -59,7 +63,7 @@ func (s *recent) take(r sensors.Reading) (spikes, waits bool) {
 		return false, false
 	}
 	out := r.Speed - s.speeds[s.n-1]
-	limit := spikeFactor / 2 * s.deviation()
+	limit := s.limit()
 	if s.waits > 0 {
 		least, side := math.Inf(1), math.Copysign(1, s.waiting[0]-s.speeds[s.n-1])
 		for _, v := range s.waiting[:s.waits] {
@@ -103,19 +107,24 @@ func (s *recent) keep(speed float64) {
 	s.n++
 }
 
-// deviation is the standard deviation of the readings kept, m/s, and no less than
-// spikeFloor.
-func (s *recent) deviation() float64 {
-	sum, squares := 0.0, 0.0
+// limit is how far a reading must stand out, m/s: beyond what the readings kept deviate
+// from their mean, and beyond what one differs from the next, whichever is more.
+func (s *recent) limit() float64 {
+	sum, squares, steps := 0.0, 0.0, 0.0
 	k := float64(s.n)
 	for _, v := range s.speeds[:s.n] {
 		sum += v
 	}
 	mean := sum / k
-	for _, v := range s.speeds[:s.n] {
+	for i, v := range s.speeds[:s.n] {
 		squares += float64((v - mean) * (v - mean))
+		if i > 0 {
+			step := v - s.speeds[i-1]
+			steps += float64(step * step)
+		}
 	}
-	return math.Max(math.Sqrt(squares/k), spikeFloor)
+	deviation := math.Max(math.Sqrt(squares/k), spikeFloor)
+	return math.Max(spikeFactor/2*deviation, spikeSteps*math.Sqrt(steps/(k-1)))
 }
 
 // calmRun is a run of readings without any speed.
