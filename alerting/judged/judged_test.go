@@ -117,7 +117,7 @@ func TestJudgedAgain(t *testing.T) {
 	lower.Noticeable, lower.Large = 8*quantity.Knot, 13*quantity.Knot
 	higher.Noticeable, higher.Large, higher.Margin, higher.Hysteresis = 13*quantity.Knot, 18*quantity.Knot, 25*quantity.Knot, 3*quantity.Knot
 	lower.Confidence, higher.Confidence = 0.7, 0.95
-	for _, scene := range []string{"outflow-on-path", "mast-dies", "mast-low-from-start"} {
+	for _, scene := range []string{"outflow-on-path", "mast-dies", "outflow-one-mast"} {
 		dir, day, lives, levels := keep(t, f, scene, live)
 		if len(lives) == 0 {
 			t.Fatalf("%s: no alert opened", scene)

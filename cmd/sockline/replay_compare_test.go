@@ -58,9 +58,9 @@ airfield   skerrymoor
 start      2026-07-01T14:00:00Z
 length     9 min
 seed       43
-wind       064 deg 36 kt
+wind       064 deg 30 kt
 turbulence B
-mast       touch25 reads 20 % at 40 s
+mast       touch07 reads 20 % at 10 s
 `
 
 // reviewStorm holds that a loss which rests on one mast is no more by other

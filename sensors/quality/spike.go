@@ -25,8 +25,8 @@ const (
 	// spikes too, else.
 	spikeFactor = 4.0
 	// spikeSteps is the same in root mean squares of what one reading differs from the
-	// next: at 2 s apart in a strong wind each of them is as good as independent, and
-	// one in thirty would stand out by two deviations.
+	// next: at 2 s apart in a wind of 15 m/s they are nearly independent, and one in 140
+	// would stand out by two deviations for no reason.
 	spikeSteps = 2.75
 	// spikeFloor is the least standard deviation that is reckoned with, m/s: in
 	// light air a step of the resolution is no spike.
