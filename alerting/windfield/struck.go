@@ -49,11 +49,11 @@ func (e *Estimator) strokeGain(en *entry, p *patterns, j int) float64 {
 	if !ok {
 		return 0
 	}
-	any := e.anyError()
+	free := e.anyError()
 	n, all := e.classes[faultClass].count(), e.b[faultClass]
 	b := [2]float64{all[j], all[n+j]}
-	m := any.information(p, j)
-	return struck.evidence(m, b) - any.evidence(m, b)
+	m := free.information(p, j)
+	return struck.evidence(m, b) - free.evidence(m, b)
 }
 
 // anyError is what is believed of the error of a mast without a stroke.

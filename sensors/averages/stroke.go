@@ -62,18 +62,21 @@ type change struct {
 func (m *mast) seeStroke(t sensors.Instant) {
 	at := t - strokeAfter*sensors.Second
 	before := at - strokeAcross*sensors.Second
-	c := m.between(before, 1, at, 1)
+	c, ok := m.between(before, 1, at, 1)
+	if !ok {
+		return
+	}
 	c.second = at
 	m.changes[slot(at)] = c
 	if c.vector < strokeVector || math.Abs(c.turn) < leastTurn && c.rate > -leastLoss {
 		return
 	}
-	after := m.between(before, strokeAfter, t, strokeAfter)
+	after, ok := m.between(before, strokeAfter, t, strokeAfter)
 	turned := math.Abs(after.rate) <= steadyRate && math.Abs(c.turn) >= leastTurn &&
 		math.Copysign(after.turn, float64(after.turn*c.turn)) >= max(leastTurn, strokeKept*math.Abs(c.turn))
 	slowed := math.Abs(after.turn) <= steadyTurn && c.rate <= -leastLoss &&
 		-after.rate >= max(leastLoss, -strokeKept*c.rate)
-	if after.vector < strokeVector || !turned && !slowed {
+	if !ok || after.vector < strokeVector || !turned && !slowed {
 		return
 	}
 	usualTurn, usualLoss, ok := m.usual(at)
@@ -105,19 +108,19 @@ func (m *mast) usual(at sensors.Instant) (turn, loss float64, ok bool) {
 }
 
 // between is the change from the n seconds up to one instant to the k up to
-// another; none where seconds are missing, or in a calm.
-func (m *mast) between(before sensors.Instant, n int, after sensors.Instant, k int) change {
+// another; false where seconds are missing, or in a calm.
+func (m *mast) between(before sensors.Instant, n int, after sensors.Instant, k int) (c change, ok bool) {
 	u, known := m.vector(before, n)
 	v, still := m.vector(after, k)
 	if !known || !still || u.Speed() < calmBelow || v.Speed() < calmBelow {
-		return change{}
+		return c, false
 	}
 	return change{
 		vector: math.Hypot(v.East-u.East, v.North-u.North),
 		turn: math.Atan2(float64(u.East*v.North)-float64(u.North*v.East),
 			float64(u.East*v.East)+float64(u.North*v.North)),
 		rate: math.Log(v.Speed() / u.Speed()),
-	}
+	}, true
 }
 
 // vector is the mean over the n seconds up to an instant, of which three in four

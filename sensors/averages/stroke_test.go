@@ -216,3 +216,23 @@ func TestSpikesLeftOut(t *testing.T) {
 		}
 	}
 }
+
+// After an outage nothing is known of what a mast usually does: no turn of the wind is
+// held against it.
+func TestNoStrokeAfterAnOutage(t *testing.T) {
+	st := station(time.Second)
+	r, add := feed(t, st, 30*time.Second)
+	for k := 1; k <= 1200; k++ {
+		instant := epoch + sensors.Instant(k)*sensors.Second
+		from := 270.0
+		if k > 1040 {
+			from = 200
+		}
+		if k <= 400 || k > 1000 {
+			add(instant, 10+0.1*float64(k%7), from+float64(k%3))
+		}
+		if s := r.Snapshot(instant).Mast(0).Stroke; s.At != 0 {
+			t.Fatalf("at %d s: a stroke at %v", k, s.At)
+		}
+	}
+}
