@@ -58,7 +58,7 @@ const leastMasts = 3
 
 // tuning tells whether any episode is one to tune on.
 func (p Plan) tuning() bool {
-	return p.Seed < ReportingSeed || p.Seed+uint64(p.Episodes) > TuningSeed
+	return p.Seed < ReportingSeed || p.Seed > TuningSeed-uint64(p.Episodes)
 }
 
 // Check names what makes a survey of this network and plan senseless.

@@ -70,7 +70,8 @@ const evenHanded = 0.005
 const strokeLasts = ambientSlots * ambientEvery
 
 // faultGains fills the logarithm of each mast's prior of being wrong over the
-// even-handed one: by what was remembered of it, and by that and its last stroke.
+// even-handed one: what it is weighed with, and what of that is not evidence of now. After a
+// stroke, which is, the latter is nothing.
 func (e *Estimator) faultGains(s *averages.Snapshot) {
 	low := math.Log(e.prior.FaultShare / evenHanded)
 	high := math.Log(e.prior.FaultShareLater / evenHanded)
@@ -80,9 +81,12 @@ func (e *Estimator) faultGains(s *averages.Snapshot) {
 		e.remembered[i] = low + float64((high-low)*min(max(share, 0), 1))
 		e.faultGain[i] = e.remembered[i]
 		e.struck[i] = averages.Stroke{}
-		if k := s.Mast(i).Stroke; k.At > 0 && s.At()-k.At < strokeLasts {
+		m := s.Mast(i)
+		// A mast that takes no part cannot be wrong by anything.
+		part := m.State == averages.Live && !e.masts[i].Aloft && i != e.without
+		if k := m.Stroke; part && k.At > 0 && s.At()-k.At < strokeLasts {
 			e.struck[i] = k
-			e.faultGain[i] = struck
+			e.faultGain[i], e.remembered[i] = struck, 0
 		}
 	}
 }

@@ -8,6 +8,7 @@ import (
 	gonum "gonum.org/v1/gonum/mat"
 
 	"sockline/sensors"
+	"sockline/sensors/averages"
 )
 
 // logDensity is that of N(mean, k) at y, by gonum's Cholesky factors, without what
@@ -169,6 +170,38 @@ func TestStrokeOfAllIsWind(t *testing.T) {
 			if k > 640 && p.Doubt[i] > 0.1 {
 				t.Errorf("mast %d at %d s: doubted with %.3f", i, k, p.Doubt[i])
 			}
+		}
+	}
+}
+
+// A mast that is left out, or is worked on, takes no part: its stroke says nothing.
+func TestStrokeOfOneThatTakesNoPart(t *testing.T) {
+	masts, targets := field(8)
+	s := newSite(t, len(masts))
+	e := New(masts, targets, s.layout, DefaultPrior())
+	for k := 1; k <= 700; k++ {
+		s.report(k, func(i int) (u, v float64) {
+			a, b := math.Sincos(float64(k)*0.7 + float64(i)*2.1)
+			c, d := math.Sincos(float64(i) * 1.3) // uneven air
+			u, v = 10+0.8*a+1.5*c, 0.7*b+1.5*d
+			if i == 3 && k > 600 {
+				u, v = 0.3*u, 0.3*v
+			}
+			return u, v
+		})
+		snapshot := s.recorder.Snapshot(epoch + sensors.Instant(k)*sensors.Second)
+		if k%10 != 0 || k < 620 {
+			continue
+		}
+		if p := e.Step(snapshot); p.Doubt[3] < 0.5 {
+			t.Errorf("at %d s: a mast that slowed down is doubted with %.3f", k, p.Doubt[3])
+		}
+		if p := e.Without(snapshot, 3); p.Doubt[3] > 0.01 || p.Alone[3] > 0.25 {
+			t.Errorf("at %d s: without it, it is doubted with %.3f, odds alone %.3g", k, p.Doubt[3], p.Alone[3])
+		}
+		snapshot.Mast(3).State = averages.Maintenance
+		if p := e.Step(snapshot); p.Doubt[3] > 0.01 || p.Alone[3] > 0.25 {
+			t.Errorf("at %d s: worked on, it is doubted with %.3f, odds alone %.3g", k, p.Doubt[3], p.Alone[3])
 		}
 	}
 }

@@ -48,9 +48,9 @@ type Posterior struct {
 	OutflowShare float64   // posterior probability that an outflow is under way
 	FrontShare   float64   // posterior probability that a front is passing
 	Doubt        []float64 // posterior probability that each mast is wrong
-	// Alone is, for each mast, the odds that it is wrong from an even-handed prior:
-	// above 1 its neighbours contradict it, be it a fault or an outflow that no
-	// other feels.
+	// Alone is, for each mast, the odds that it is wrong from an even-handed prior,
+	// or after a stroke of its instrument from what that says: above 1 its
+	// neighbours contradict it, be it a fault or an outflow that no other feels.
 	Alone []float64
 
 	Kinds    [Draws]PatternKind // what lies over the ambient field in each draw
@@ -103,8 +103,8 @@ type Estimator struct {
 	children   []part            // ... and how likely they are beside the mixture
 	pairings   []pairing         // by disturbed state
 	faultGain  []float64         // log of each mast's prior of being wrong over the even-handed one ...
-	remembered []float64         // ... by what was remembered of it alone ...
 	faultOdds  []float64         // ... and the same by pattern
+	remembered []float64         // what of it was remembered, and is no evidence of now
 	struck     []averages.Stroke // the stroke of each mast that still counts
 
 	// Scratch and result, sized once.

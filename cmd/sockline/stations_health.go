@@ -186,10 +186,10 @@ func strokeWords(s averages.Stroke) string {
 		if s.Turn > 0 { // from east to north
 			side = "anticlockwise"
 		}
-		return fmt.Sprintf("From one second to the next, at %s, its direction turned %s by about %.0f degrees, as a vane does that slips: look at its clamp.",
+		return fmt.Sprintf("Within a second or two, at %s, its direction turned %s by about %.0f degrees, as a vane does that slips: look at its clamp.",
 			seconds(s.At), side, math.Abs(s.Turn)*180/math.Pi)
 	}
-	return fmt.Sprintf("From one second to the next, at %s, its speed fell to about %.0f %%, as of cups that are damaged or held: look at them.",
+	return fmt.Sprintf("Within a second or two, at %s, its speed fell to about %.0f %%, as of cups that are damaged or held: look at them.",
 		seconds(s.At), 100*s.Ratio)
 }
 

@@ -316,12 +316,12 @@ func TestFindings(t *testing.T) {
 	at := momentOf(0)
 	h = &stationHealth{Neighbours: neighbourObject{Doubt: 0.97}, stroke: averages.Stroke{At: at, Turn: -62 * math.Pi / 180, Ratio: 1}}
 	contradicted := "Its neighbours contradict it at the moment: the wind between the masts is worked out as if the odds that it is wrong were over 95 in 100."
-	turned := "From one second to the next, at " + seconds(at) + ", its direction turned clockwise by about 62 degrees, as a vane does that slips: look at its clamp."
+	turned := "Within a second or two, at " + seconds(at) + ", its direction turned clockwise by about 62 degrees, as a vane does that slips: look at its clamp."
 	if got := findings(h); !slices.Equal(got, []string{contradicted, turned}) {
 		t.Errorf("got  %q\nwant %q", got, []string{contradicted, turned})
 	}
 	h.stroke = averages.Stroke{At: at, Ratio: 0.4}
-	slowed := "From one second to the next, at " + seconds(at) + ", its speed fell to about 40 %, as of cups that are damaged or held: look at them."
+	slowed := "Within a second or two, at " + seconds(at) + ", its speed fell to about 40 %, as of cups that are damaged or held: look at them."
 	if got := findings(h); !slices.Equal(got, []string{contradicted, slowed}) {
 		t.Errorf("got  %q\nwant %q", got, []string{contradicted, slowed})
 	}

@@ -65,6 +65,8 @@ func (o *surveyOptions) check() error {
 		return usagef("--next %d: give from 1 to %d", o.next, survey.MostSites)
 	case o.sites != "" && o.next == 0:
 		return usagef("--sites says where masts may stand: add --next NUMBER of masts to find places for")
+	case o.plan.Windy && o.compare != "":
+		return usagef("--windy finds false openings alone, and --compare compares what is found: leave one out")
 	case o.dir != "" && o.report != "":
 		return usagef("give either --out DIRECTORY or --report FILE")
 	case !(o.accept >= 0 && o.accept <= 1000):
@@ -186,6 +188,9 @@ func (o *surveyOptions) words(all []*surveyed) string {
 		words = append(words, "--compare "+all[1].path)
 	}
 	words = append(words, fmt.Sprintf("--episodes %d --seed %d --ground-step %g", o.plan.Episodes, o.plan.Seed, o.plan.GroundStep))
+	if o.plan.Windy {
+		words = append(words, "--windy")
+	}
 	if o.plan.Profile != "" {
 		words = append(words, "--profile "+string(o.plan.Profile))
 	}

@@ -283,12 +283,53 @@ func (r *Recorder) Snapshot(t sensors.Instant) *Snapshot {
 			// cache) changes seldom and depends on nothing but the bins.
 			m.turbulence = m.estimateTurbulence(t, r.layout)
 		}
+		m.settle(t)
 		if m.interval <= strokeAcross {
 			m.seeStroke(t)
 		}
 		r.fill(&r.snapshot.masts[i], m, t)
 	}
 	return &r.snapshot
+}
+
+// mean is the mean wind of the seconds from first up to last, counted back from end, that
+// the analysis believes, and how many of them the mast was heard in. Where it was, and
+// all of it waits or was a spike, it is the mean of all that was heard: a mast that
+// reports is not silent.
+func (m *mast) mean(end sensors.Instant, first, last int) (v quantity.Vector, heard int, exercise bool) {
+	var all quantity.Vector
+	believed := 0
+	for k := first; k < last; k++ {
+		second := end - sensors.Instant(k)*sensors.Second
+		b := m.at(second)
+		if b == nil {
+			continue
+		}
+		heard++
+		exercise = exercise || b.exercise
+		all.East += b.east / float64(b.n)
+		all.North += b.north / float64(b.n)
+		if w, ok := m.wind(second); ok {
+			believed++
+			v.East += w.East
+			v.North += w.North
+		}
+	}
+	n := float64(believed)
+	if believed == 0 {
+		v, n = all, float64(max(heard, 1))
+	}
+	return quantity.Vector{East: v.East / n, North: v.North / n}, heard, exercise
+}
+
+// settle believes what has waited for longer than the next reading may take.
+func (m *mast) settle(t sensors.Instant) {
+	if n := len(m.held); n > 0 && t.Sub(m.held[n-1].second) > quality.LongestWait {
+		for _, h := range m.held {
+			m.believe(h)
+		}
+		m.held = m.held[:0]
+	}
 }
 
 func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
@@ -298,6 +339,7 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 	switch {
 	case under:
 		out.State = Maintenance
+		m.stroke = Stroke{} // somebody sees to it
 		return
 	case m.last == 0:
 		out.State = Never
@@ -315,33 +357,15 @@ func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {
 	end := t
 	filled, want := 0, 0
 	for b, seconds := range r.layout.Seconds {
-		blk := &out.Blocks[b]
-		n := 0
 		first, last := m.unbroken(b, end, seconds)
-		for k := first; k < last; k++ {
-			second := end - sensors.Instant(k)*sensors.Second
-			v, ok := m.wind(second)
-			if !ok {
-				continue
-			}
-			blk.East += v.East
-			blk.North += v.North
-			out.Exercise = out.Exercise || m.bins[slot(second)].exercise
-			n++
-		}
+		v, heard, exercise := m.mean(end, first, last)
 		end -= sensors.Instant(seconds) * sensors.Second
 		expected := max((last-first)/m.interval, 1)
-		if n > 0 {
-			blk.East /= float64(n)
-			blk.North /= float64(n)
-			blk.Present = 3*n >= 2*expected
-			if m.siting.On {
-				v := m.siting.remove(quantity.Vector{East: blk.East, North: blk.North})
-				blk.East, blk.North = v.East, v.North
-			}
-		}
+		v = m.siting.remove(v)
+		out.Blocks[b] = Block{East: v.East, North: v.North, Present: heard > 0 && 3*heard >= 2*expected}
+		out.Exercise = out.Exercise || exercise
 		if b < 2 {
-			filled += n
+			filled += heard
 			want += expected
 		}
 	}

@@ -236,3 +236,87 @@ func TestNoStrokeAfterAnOutage(t *testing.T) {
 		}
 	}
 }
+
+// What waits, and what is a spike, has been heard: neither takes a mast out of service,
+// nor does an onset, however short its window and however seldom it reports.
+func TestWhatWaitsIsHeard(t *testing.T) {
+	for _, interval := range []time.Duration{time.Second, 2 * time.Second} {
+		for _, window := range []time.Duration{6 * time.Second, 18 * time.Second, 30 * time.Second} {
+			st := station(interval)
+			r, add := feed(t, st, window)
+			rng := rand.New(rand.NewPCG(8, 1))
+			out, held := 0, 0
+			const seconds = 3000
+			for k := 1; k <= seconds; k++ {
+				instant := epoch + sensors.Instant(k)*sensors.Second
+				if k%int(interval/time.Second) == 0 {
+					speed := 8 + 0.3*rng.NormFloat64()
+					if k > 2000 {
+						speed += 10
+					} else if k > 300 && rng.Float64() < 0.1 {
+						speed += 12
+					}
+					if add(instant, speed, 268+float64(k%5)).Waits() {
+						held++
+					}
+				}
+				m := r.Snapshot(instant).Mast(0)
+				if k > 100 && m.State != Live {
+					out++
+				}
+				if b := m.Blocks[0]; k > 2010 && (b.East < 17 || b.East > 19) {
+					t.Errorf("every %s, window of %s: %d s after an onset the newest block is %.1f m/s", interval, window, k-2000, b.East)
+				}
+			}
+			if out > 0 || held < 50 {
+				t.Errorf("every %s, window of %s: not live in %d of %d steps; %d readings waited", interval, window, out, seconds, held)
+			}
+		}
+	}
+}
+
+// An onset after which a mast falls silent for some seconds is believed all the same.
+func TestNothingWaitsForEver(t *testing.T) {
+	st := station(time.Second)
+	st.StaleAfter = 10 * time.Second
+	r, add := feed(t, st, 30*time.Second)
+	for k := 1; k <= 307; k++ {
+		instant := epoch + sensors.Instant(k)*sensors.Second
+		switch {
+		case k <= 300:
+			add(instant, 6+0.1*float64(k%7), 269+float64(k%3))
+		case k <= 302:
+			if !add(instant, 20, 269+float64(k%3)).Waits() {
+				t.Fatalf("the onset at %d s does not wait", k)
+			}
+		}
+		r.Snapshot(instant)
+	}
+	if len(r.masts[0].held) > 0 {
+		t.Error("it waits for ever")
+	}
+	if v, ok := r.masts[0].wind(epoch + 302*sensors.Second); !ok || v.East < 19 {
+		t.Errorf("what waited is not believed: %.1f m/s", v.East)
+	}
+}
+
+// Whoever works on a mast has seen to what its instrument did before.
+func TestStrokeEndsWithMaintenance(t *testing.T) {
+	st := station(time.Second)
+	st.Maintenance = []sensors.Maintenance{{From: epoch + 500*sensors.Second, To: epoch + 560*sensors.Second}}
+	r, add := feed(t, st, 30*time.Second)
+	for k := 1; k <= 700; k++ {
+		instant := epoch + sensors.Instant(k)*sensors.Second
+		from := 270.0
+		if k > 400 && k < 540 {
+			from = 200
+		}
+		add(instant, 10+0.1*float64(k%7), from+float64(k%3))
+		switch s := r.Snapshot(instant).Mast(0).Stroke; {
+		case k == 450 && s.At == 0:
+			t.Fatal("no stroke is seen")
+		case k > 500 && s.At != 0:
+			t.Fatalf("at %d s: a stroke at %v", k, s.At)
+		}
+	}
+}

@@ -14,6 +14,8 @@ const (
 	// spikeLongest is how many readings in a row may be one spike. An onset waits for
 	// so many readings before it is believed.
 	spikeLongest = 2
+	// LongestWait is how long a reading waits at most for what shows whether it is one.
+	LongestWait = spikeLongest * spikeGap
 	// spikeGap is how far apart readings may be that are compared: at longer
 	// intervals one speed says little of the next, and every third would be a
 	// spike.
