@@ -144,7 +144,7 @@ func (fs *Faults) runway(spec Spec, field string, r RunwaySpec) {
 	}
 	magnetic := quantity.NormalizeDegrees(bearing - variation)
 	for k, num := range []int{numA, numB} {
-		off := turn(magnetic+float64(180*k), 10*float64(num))
+		off := turn(magnetic+float64(180*k), float64(10*float64(num)))
 		if off <= maxDesignator {
 			continue
 		}

@@ -173,8 +173,8 @@ func schmidt(sinTh, cosTh float64) (p, d [wmmDegree + 1][wmmDegree + 1]float64) 
 			d[n][m] = a * (float64(cosTh*d[n-1][m]) - float64(sinTh*p[n-1][m])) / norm
 			if n > m+1 {
 				b := math.Sqrt(float64((n-1)*(n-1)-m*m)) / norm
-				p[n][m] -= b * p[n-2][m]
-				d[n][m] -= b * d[n-2][m]
+				p[n][m] -= float64(b * p[n-2][m])
+				d[n][m] -= float64(b * d[n-2][m])
 			}
 		}
 	}

@@ -80,7 +80,7 @@ func (k Kernel) LeaveOneOut(all []Observation) ([]Prediction, error) {
 		}
 		variance := 1 / inverse[i][i]
 		out[i] = Prediction{
-			Wind:      quantity.Vector{East: o.Wind.East - miss.East*variance, North: o.Wind.North - miss.North*variance},
+			Wind:      quantity.Vector{East: o.Wind.East - float64(miss.East*variance), North: o.Wind.North - float64(miss.North*variance)},
 			Deviation: math.Sqrt(math.Max(0, variance-k.Noise)),
 		}
 	}

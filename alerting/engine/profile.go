@@ -76,7 +76,7 @@ func (e *Engine) Forecast(path int, seconds float64) (shear.Forecast, bool) {
 			}
 		}
 		for t, v := range row {
-			f.posterior.Mean[t] += v / windfield.Draws
+			f.posterior.Mean[t] += float64(v / windfield.Draws)
 		}
 	}
 	s.Measure(&f.posterior)

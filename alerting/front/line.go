@@ -206,7 +206,7 @@ func (p *posterior) together(hits []hit, agree, chance float64) {
 	}
 	ssr := max(wtt-float64(wt*wt)/w, 0)
 	p.atOnce = math.Log(priorAtOnce) + agree + chance -
-		(ssr+logs+math.Log(w)+float64(float64(len(hits)-1)*math.Log(2*math.Pi)))/2
+		float64((ssr+logs+math.Log(w)+float64(float64(len(hits)-1)*math.Log(2*math.Pi)))/2)
 }
 
 // times fills weight with the logarithm of prior times likelihood of each line,
@@ -241,9 +241,9 @@ func (p *posterior) times(b *bank, hits []hit, behind, change quantity.Vector) {
 			for s := range speeds {
 				// The integral over t0 of the normal densities; a line that cannot
 				// come within reach of the best is spared its logarithm.
-				like := b.curved[c] + prior[h][s] + turned + chance - (p.ssr[s]+constant)/2
-				if p.weight[i] = math.Inf(-1); like-least/2 > best-hopeless {
-					p.weight[i] = like - (p.logs[s]+math.Log(p.product[s]))/2
+				like := b.curved[c] + prior[h][s] + turned + chance - float64((p.ssr[s]+constant)/2)
+				if p.weight[i] = math.Inf(-1); like-float64(least/2) > best-hopeless {
+					p.weight[i] = like - float64((p.logs[s]+math.Log(p.product[s]))/2)
 					best = max(best, p.weight[i])
 				}
 				i++
@@ -371,7 +371,7 @@ func fillPrior(b *bank, behind, change quantity.Vector, prior *[headings][speeds
 			likeChange = heading((float64(change.East*e)+float64(change.North*n))/size, headingChange)
 		}
 		for s := range speeds {
-			p := (float64((1-part-headingUniform)*likeChange) + headingUniform/headings) * climate[s]
+			p := float64((float64((1-part-headingUniform)*likeChange) + headingUniform/headings) * climate[s])
 			if likeBehind > 1e-9 && ahead > 1 {
 				p += float64(float64(part*likeBehind) * float64(logNormal(b.speed[s], shareBehind*ahead, spreadBehind)*cell))
 			}

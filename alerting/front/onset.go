@@ -81,7 +81,7 @@ type onset struct {
 
 // over is when a change has come to its end.
 func (o *onset) over() sensors.Instant {
-	return o.alarm + sensors.Instant((o.at+o.lasts/2)*1000)
+	return o.alarm + sensors.Instant((o.at+float64(o.lasts/2))*1000)
 }
 
 // from is the middle of the change in s after an instant.
@@ -276,7 +276,7 @@ func (f *fitter) settle(w *watch, c clockwork, t sensors.Instant, o *onset, firs
 }
 
 func scaled(v quantity.Vector, by float64) quantity.Vector {
-	return quantity.Vector{East: v.East * by, North: v.North * by}
+	return quantity.Vector{East: float64(v.East * by), North: float64(v.North * by)}
 }
 
 // fitter is the scratch of settle.

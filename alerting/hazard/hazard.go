@@ -158,7 +158,7 @@ func verticalFBar(slope float64, v View, c Change, l Levels) float64 {
 	if v.Glide == 0 || l.FastestApproach <= 0 {
 		return 0
 	}
-	h := v.Crossing + float64(v.Glide*(c.From+c.To))/2
+	h := v.Crossing + float64(float64(v.Glide*(c.From+c.To))/2)
 	return 2 * max(h, 0) * slope / l.FastestApproach
 }
 

@@ -68,7 +68,7 @@ func (m *TrendMemory) judge(before Trend) Trend {
 //
 //	rise = (n-1) sum (x-x') y / sum (x-x')^2
 func (m *TrendMemory) rise() float64 {
-	mid := float64(m.Whole-1) / 2
+	mid := float64(float64(m.Whole-1) / 2)
 	var above, below float64
 	for i := range m.Whole {
 		x := float64(i) - mid

@@ -215,7 +215,7 @@ func (s *Stretch) pairs(sign, least float64, fn func(i, j int)) {
 		}
 	}
 	for i, v := range s.Mean {
-		if !s.Observed[i] || sign*v-end < least {
+		if !s.Observed[i] || float64(sign*v)-end < least {
 			continue
 		}
 		for j := i + 1; j < len(s.Mean) && j <= i+reachPoints; j++ {
@@ -253,7 +253,7 @@ func (s *Stretch) at(i float64) float64 {
 
 // Quantile of ascending values, by linear interpolation between them.
 func Quantile(sorted []float64, p float64) float64 {
-	x := p * float64(len(sorted)-1)
+	x := float64(p * float64(len(sorted)-1))
 	k := min(int(x), len(sorted)-2)
 	f := x - float64(k)
 	return float64(sorted[k]*(1-f)) + float64(sorted[k+1]*f)

@@ -76,7 +76,7 @@ func (a *ambientMemory) shares(t sensors.Instant, least float64, out []float64) 
 		out[k] = math.Exp(l - best)
 		sum += out[k]
 	}
-	free := 1 - float64(len(out))*least
+	free := 1 - float64(float64(len(out))*least)
 	for k := range out {
 		out[k] = least + free*out[k]/sum
 	}

@@ -168,7 +168,7 @@ func (e *Estimator) child(en *entry, s *state, k int, form, twin template, ratio
 		v += float64(e.outflows.q[i] * today[i])
 	}
 	sharpness := 1 / math.Sqrt(2*v)
-	weight := math.Exp(evidence-(logDet+logDetC)/2+scale) * math.Erfc(-now*sharpness)
+	weight := math.Exp(evidence-float64((logDet+logDetC)/2)+scale) * math.Erfc(-now*sharpness)
 	e.children = append(e.children, part{state: int16(k), class: derivedClass, pattern: int32(n), weight: weight, now: now, sharpness: sharpness})
 }
 

@@ -63,7 +63,7 @@ func (e *Estimator) newEntry(live []int, noise []float64) (*entry, error) {
 // component, over dt seconds.
 func (p *Prior) meanCovariance(dt float64) float64 {
 	return float64(p.MeanDeviation*p.MeanDeviation) +
-		float64(p.DriftDeviation*p.DriftDeviation)*math.Exp(-dt/p.DriftTime)
+		float64(float64(p.DriftDeviation*p.DriftDeviation)*math.Exp(-dt/p.DriftTime))
 }
 
 // atLive fills in the unit winds of all patterns at the live masts; entries with

@@ -28,7 +28,7 @@ func slowExplain(out, b, precision, odds, extra []float64) (fit, best float64) {
 		v := float64(q[0]*float64(b0*b0)) + float64(q[3]*float64(b1*b1)) + float64(q[5]*float64(b2*b2)) +
 			2*(float64(q[1]*float64(b0*b1))+float64(q[2]*float64(b0*b2))+float64(q[4]*float64(b1*b2)))
 		fit = max(fit, v)
-		out[j] = v/2 + odds[j]
+		out[j] = float64(v/2) + odds[j]
 		if extra != nil {
 			out[j] += extra[j]
 		}

@@ -36,7 +36,7 @@ type front struct {
 // behind is how much of the change has come at a place, age seconds ago: a
 // smooth step.
 func (f front) behind(x, y, age float64) float64 {
-	line := f.at - f.speed*age
+	line := f.at - float64(f.speed*age)
 	d := line - (float64(x*f.east) + float64(y*f.north))
 	return (1 + math.Tanh(d/f.width)) / 2
 }

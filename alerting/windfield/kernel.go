@@ -20,8 +20,8 @@ func covariance(f Field, dx, dy float64) (ee, en, nn float64) {
 	l2 := float64(f.Length * f.Length)
 	e := math.Exp(-(float64(dx*dx) + float64(dy*dy)) / (2 * l2))
 	s := float64(f.Deviation * f.Deviation)
-	irr := s * f.Irrotational * e
-	nd := s * (1 - f.Irrotational) * e
+	irr := float64(s * f.Irrotational * e)
+	nd := float64(s * (1 - f.Irrotational) * e)
 	xx := float64(dx*dx) / l2
 	yy := float64(dy*dy) / l2
 	xy := float64(dx*dy) / l2

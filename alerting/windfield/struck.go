@@ -85,6 +85,6 @@ func (w mistake) evidence(m [3]float64, b [2]float64) float64 {
 	v := w.variance
 	mean, det := w.posterior(m, b)
 	h0, h1 := b[0]+w.mean[0]/v, b[1]+w.mean[1]/v
-	return (float64(h0*mean[0])+float64(h1*mean[1]))/2 -
-		(float64(w.mean[0]*w.mean[0])+float64(w.mean[1]*w.mean[1]))/(2*v) - math.Log(float64(v*v)*det)/2
+	return float64((float64(h0*mean[0])+float64(h1*mean[1]))/2) -
+		(float64(w.mean[0]*w.mean[0])+float64(w.mean[1]*w.mean[1]))/(2*v) - float64(math.Log(float64(v*v)*det)/2)
 }

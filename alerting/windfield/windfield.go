@@ -462,7 +462,7 @@ func (e *Estimator) count(p *patterns, k, c int, least, scale float64) float64 {
 	for i, j := range strong {
 		now := p.strengthNow(j, b[j], b[n+j], b[2*n+j])
 		// A positive strength puts twice its posterior probability on the evidence.
-		weight := weights[i] * math.Erfc(-now*p.sharpness[j])
+		weight := float64(weights[i] * math.Erfc(-now*p.sharpness[j]))
 		sum += weight
 		e.parts = append(e.parts, part{state: int16(k), class: int16(c), pattern: int32(j), weight: weight, now: now, sharpness: p.sharpness[j]})
 	}

@@ -110,4 +110,4 @@ func fixed(v float64, decimals int) string {
 	return s
 }
 
-func roundTen(v float64) float64 { return math.Round(v/10) * 10 }
+func roundTen(v float64) float64 { return float64(math.Round(v/10) * 10) }

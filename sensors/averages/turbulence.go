@@ -163,7 +163,7 @@ func detrendedCovariances(x *[turbulenceSpan]float64, have *[turbulenceSpan]bool
 		// The first and last half minute have a lopsided running mean.
 		for k := detrendHalf; k+lag < n-detrendHalf; k++ {
 			if have[k] && have[k+lag] {
-				c += residual[k] * residual[k+lag]
+				c += float64(residual[k] * residual[k+lag])
 				pairs++
 			}
 		}

@@ -196,7 +196,7 @@ func slopeWithNoise(x, d []float64) (a float64) {
 		sxd += float64(x[i] * d[i])
 	}
 	k := float64(len(x))
-	a = (k*sxd - float64(sx*sd)) / (k*sxx - float64(sx*sx))
+	a = (float64(k*sxd) - float64(sx*sd)) / (float64(k*sxx) - float64(sx*sx))
 	if n := (sd - float64(a*sx)) / k; n < 0 {
 		a = sxd / sxx
 	}
