@@ -98,8 +98,8 @@ func TestStrokes(t *testing.T) {
 	}
 }
 
-// Gusty air does not look like one more than once in two hours of a mast, and
-// neither do gust fronts that turn the wind about within seconds, nor onsets.
+// Gusty air does not look like one more than once in two hours of a mast, and hardly
+// any of the gust fronts that turn the wind about within seconds.
 func TestAirIsNoStroke(t *testing.T) {
 	rng := rand.New(rand.NewPCG(4, 9))
 	const hours = 40
