@@ -91,117 +91,95 @@ func TestMistakeAgainstDensities(t *testing.T) {
 	}
 }
 
-// strokeSite is what the step after so many seconds makes of eight masts in a wind
-// of 12 m/s with turbulence of a fixed pattern. Mast 3 tells a wind that is turned
-// (radians) and made weaker as by says.
-func strokeSite(t *testing.T, last int, by func(k int) (turn, ratio float64)) *Posterior {
+// eightMasts steps an estimator every tenth second from first to last over eight masts
+// with turbulence of a fixed pattern, apart times as far apart as those of field: wind is
+// the wind at second k of mast i without it, m/s.
+func eightMasts(t *testing.T, apart float64, first, last int, wind func(k, i int) (u, v float64), see func(k int, e *Estimator, s *averages.Snapshot)) {
 	t.Helper()
 	masts, targets := field(8)
+	for i := range masts {
+		masts[i].X, masts[i].Y = apart*masts[i].X, apart*masts[i].Y
+	}
 	s := newSite(t, len(masts))
 	e := New(masts, targets, s.layout, DefaultPrior())
-	var p *Posterior
 	for k := 1; k <= last; k++ {
-		s.report(k, func(i int) (u, v float64) {
+		s.report(k, func(i int) (float64, float64) {
 			a, b := math.Sincos(float64(k)*0.7 + float64(i)*2.1)
-			u, v = 12+0.8*a, 0.7*b
-			if i == 3 {
-				turn, ratio := by(k)
-				sin, cos := math.Sincos(turn)
-				u, v = ratio*(u*cos-v*sin), ratio*(u*sin+v*cos)
-			}
-			return u, v
+			u, v := wind(k, i)
+			return u + 0.8*a, v + 0.7*b
 		})
-		if snapshot := s.recorder.Snapshot(epoch + sensors.Instant(k)*sensors.Second); k%10 == 0 {
-			p = e.Step(snapshot)
+		snapshot := s.recorder.Snapshot(epoch + sensors.Instant(k)*sensors.Second)
+		if k%10 == 0 && k >= first {
+			see(k, e, snapshot)
 		}
 	}
-	return p
+}
+
+// uneven is a wind of 10 m/s in which the masts differ by eddies that stay, and mast 3
+// tells what instrument makes of it from second 601 on.
+func uneven(instrument func(u, v float64) (float64, float64)) func(k, i int) (u, v float64) {
+	return func(k, i int) (float64, float64) {
+		c, d := math.Sincos(float64(i) * 1.3)
+		u, v := 10+1.5*c, 1.5*d
+		if i == 3 && k > 600 {
+			return instrument(u, v)
+		}
+		return u, v
+	}
 }
 
 // A vane that slips, or cups that lose speed, from one second to the next are
-// disbelieved at once where the neighbours speak against them.
+// disbelieved at once where the neighbours speak against them, even if they are so far
+// away that an outflow might stand over the one mast alone.
 func TestStrokeIsNoOutflow(t *testing.T) {
-	const begin = 600
-	for name, stroke := range map[string][2]float64{
-		"a vane slips":     {80 * math.Pi / 180, 1},
-		"cups lose an arm": {0, 0.3},
+	for name, instrument := range map[string]func(u, v float64) (float64, float64){
+		"a vane slips":     func(u, v float64) (float64, float64) { return -v, u },
+		"cups lose an arm": func(u, v float64) (float64, float64) { return 0.3 * u, 0.3 * v },
 	} {
-		for _, after := range []int{10, 20, 60, 300} {
-			p := strokeSite(t, begin+after, func(k int) (turn, ratio float64) {
-				if k > begin {
-					return stroke[0], stroke[1]
-				}
-				return 0, 1
-			})
-			if p.Doubt[3] < 0.9 || p.OutflowShare > 0.1 || p.Alone[3] < 1 {
+		eightMasts(t, 3, 10, 900, uneven(instrument), func(k int, e *Estimator, s *averages.Snapshot) {
+			p := e.Step(s)
+			if k >= 610 && (p.Doubt[3] < 0.9 || p.OutflowShare > 0.1 || p.Alone[3] < 1) {
 				t.Errorf("%s, %d s later: doubted with %.3f, odds that it stands alone %.3g, an outflow with %.2f",
-					name, after, p.Doubt[3], p.Alone[3], p.OutflowShare)
+					name, k-600, p.Doubt[3], p.Alone[3], p.OutflowShare)
 			}
-		}
+		})
 	}
 }
 
 // A stroke that the neighbours know as well is wind, and the mast is believed.
 func TestStrokeOfAllIsWind(t *testing.T) {
-	masts, targets := field(8)
-	s := newSite(t, len(masts))
-	e := New(masts, targets, s.layout, DefaultPrior())
-	for k := 1; k <= 700; k++ {
-		s.report(k, func(i int) (u, v float64) {
-			a, b := math.Sincos(float64(k)*0.7 + float64(i)*2.1)
-			u, v = 9+0.8*a, 0.7*b
-			if k > 600 {
-				u, v = -v, u
-			}
-			return u, v
-		})
-		snapshot := s.recorder.Snapshot(epoch + sensors.Instant(k)*sensors.Second)
-		if k%10 != 0 {
-			continue
+	wind := func(k, _ int) (u, v float64) {
+		if k > 600 {
+			return 0, 9
 		}
-		p := e.Step(snapshot)
-		if k <= 600 {
-			continue
-		}
-		for i := range masts {
-			if snapshot.Mast(i).Stroke.At == 0 {
+		return 9, 0
+	}
+	eightMasts(t, 1, 10, 700, wind, func(k int, e *Estimator, s *averages.Snapshot) {
+		p := e.Step(s)
+		for i := range s.Len() {
+			if k > 600 && s.Mast(i).Stroke.At == 0 {
 				t.Fatalf("mast %d at %d s: no stroke was seen", i, k)
 			}
 			if k > 640 && p.Doubt[i] > 0.1 {
 				t.Errorf("mast %d at %d s: doubted with %.3f", i, k, p.Doubt[i])
 			}
 		}
-	}
+	})
 }
 
 // A mast that is left out, or is worked on, takes no part: its stroke says nothing.
 func TestStrokeOfOneThatTakesNoPart(t *testing.T) {
-	masts, targets := field(8)
-	s := newSite(t, len(masts))
-	e := New(masts, targets, s.layout, DefaultPrior())
-	for k := 1; k <= 700; k++ {
-		s.report(k, func(i int) (u, v float64) {
-			a, b := math.Sincos(float64(k)*0.7 + float64(i)*2.1)
-			c, d := math.Sincos(float64(i) * 1.3) // uneven air
-			u, v = 10+0.8*a+1.5*c, 0.7*b+1.5*d
-			if i == 3 && k > 600 {
-				u, v = 0.3*u, 0.3*v
-			}
-			return u, v
-		})
-		snapshot := s.recorder.Snapshot(epoch + sensors.Instant(k)*sensors.Second)
-		if k%10 != 0 || k < 620 {
-			continue
-		}
-		if p := e.Step(snapshot); p.Doubt[3] < 0.5 {
+	slow := uneven(func(u, v float64) (float64, float64) { return 0.3 * u, 0.3 * v })
+	eightMasts(t, 1, 620, 700, slow, func(k int, e *Estimator, s *averages.Snapshot) {
+		if p := e.Step(s); p.Doubt[3] < 0.5 {
 			t.Errorf("at %d s: a mast that slowed down is doubted with %.3f", k, p.Doubt[3])
 		}
-		if p := e.Without(snapshot, 3); p.Doubt[3] > 0.01 || p.Alone[3] > 0.25 {
-			t.Errorf("at %d s: without it, it is doubted with %.3f, odds alone %.3g", k, p.Doubt[3], p.Alone[3])
+		if p := e.Without(s, 3); p.Doubt[3] > 0.001 || p.Alone[3] > 0.25 {
+			t.Errorf("at %d s: without it, it is doubted with %.4f, odds alone %.3g", k, p.Doubt[3], p.Alone[3])
 		}
-		snapshot.Mast(3).State = averages.Maintenance
-		if p := e.Step(snapshot); p.Doubt[3] > 0.01 || p.Alone[3] > 0.25 {
-			t.Errorf("at %d s: worked on, it is doubted with %.3f, odds alone %.3g", k, p.Doubt[3], p.Alone[3])
+		s.Mast(3).State = averages.Maintenance
+		if p := e.Step(s); p.Doubt[3] > 0.001 || p.Alone[3] > 0.25 {
+			t.Errorf("at %d s: worked on, it is doubted with %.4f, odds alone %.3g", k, p.Doubt[3], p.Alone[3])
 		}
-	}
+	})
 }

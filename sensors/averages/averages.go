@@ -171,7 +171,7 @@ func NewRecorder(stations []sensors.Station, layout Layout) *Recorder {
 		r.masts[i].station = &stations[i]
 		r.masts[i].staleAfter = s.StaleAfter
 		r.masts[i].corrector = correction.New(s)
-		r.masts[i].held = make([]sample, 0, mostHeld)
+		r.masts[i].held = make([]sample, 0, quality.LongestSpike)
 	}
 	r.snapshot.masts = make([]Mast, len(stations))
 	return r
@@ -191,10 +191,7 @@ func (r *Recorder) Add(c quality.Checked) {
 		m.held = m.held[:0]
 	}
 	if !c.Waits() {
-		for _, h := range m.held {
-			m.believe(h)
-		}
-		m.held = m.held[:0]
+		m.release()
 	}
 	if _, under := m.station.UnderMaintenance(rd.Time); under {
 		return // a vane that is turned by hand tells no wind
@@ -205,9 +202,6 @@ func (r *Recorder) Add(c quality.Checked) {
 		m.believe(s)
 	}
 }
-
-// mostHeld is how many readings wait at a time as a rule: as many as a spike lasts.
-const mostHeld = 2
 
 // sample is the wind of a reading, as corrected.
 type sample struct {
@@ -325,11 +319,16 @@ func (m *mast) mean(end sensors.Instant, first, last int) (v quantity.Vector, he
 // settle believes what has waited for longer than the next reading may take.
 func (m *mast) settle(t sensors.Instant) {
 	if n := len(m.held); n > 0 && t.Sub(m.held[n-1].second) > quality.LongestWait {
-		for _, h := range m.held {
-			m.believe(h)
-		}
-		m.held = m.held[:0]
+		m.release()
 	}
+}
+
+// release believes all that waits.
+func (m *mast) release() {
+	for _, h := range m.held {
+		m.believe(h)
+	}
+	m.held = m.held[:0]
 }
 
 func (r *Recorder) fill(out *Mast, m *mast, t sensors.Instant) {

@@ -11,11 +11,11 @@ const (
 	// spikeMemory is how many readings before a spike its measure is taken from.
 	spikeMemory = 32
 	spikeLeast  = 16
-	// spikeLongest is how many readings in a row may be one spike. An onset waits for
-	// so many readings before it is believed.
-	spikeLongest = 2
+	// LongestSpike is how many readings in a row may be one spike. An onset waits for
+	// so many readings at most before it is believed.
+	LongestSpike = 2
 	// LongestWait is how long a reading waits at most for what shows whether it is one.
-	LongestWait = spikeLongest * spikeGap
+	LongestWait = LongestSpike * spikeGap
 	// spikeGap is how far apart readings may be that are compared: at longer
 	// intervals one speed says little of the next, and every third would be a
 	// spike.
@@ -27,8 +27,8 @@ const (
 	// spikes too, else.
 	spikeFactor = 4.0
 	// spikeSteps is the same in root mean squares of what one reading differs from the
-	// next: at 2 s apart in a wind of 15 m/s they are nearly independent, and one in 140
-	// would stand out by two deviations for no reason.
+	// next: every 2 s in a drawn wind of 15 m/s one in 140 would be left out for standing
+	// out by two deviations, in turbulence without a spike.
 	spikeSteps = 2.75
 	// spikeFloor is the least standard deviation that is reckoned with, m/s: in
 	// light air a step of the resolution is no spike.
@@ -45,14 +45,14 @@ type recent struct {
 	speeds  [spikeMemory]float64
 	n       int
 	last    sensors.Instant // of the newest reading, whether it stands out or not
-	waiting [spikeLongest]float64
+	waiting [LongestSpike]float64
 	waits   int // how many stand out
 }
 
 // take takes in a usable reading and says whether the ones before it that stood
 // out were spikes: one or two readings on one side of both their neighbours. An
 // onset is none, because the wind stays. It also says whether the reading itself
-// stands out: then it waits for the next, for no longer than spikeGap a reading.
+// stands out: then it waits for the next.
 func (s *recent) take(r sensors.Reading) (spikes, waits bool) {
 	gap := r.Time.Sub(s.last)
 	s.last = r.Time
@@ -75,7 +75,7 @@ func (s *recent) take(r sensors.Reading) (spikes, waits bool) {
 		case least > limit:
 			spikes = true
 			s.waits = 0
-		case side*out > limit && s.waits < spikeLongest:
+		case side*out > limit && s.waits < LongestSpike:
 			// It stands out as they do, and tells nothing of them.
 		default:
 			s.release()

@@ -154,7 +154,7 @@ func TestManySpikes(t *testing.T) {
 			if waiting = append(waiting, spiked); !got.Waits() {
 				believe()
 			}
-			if len(waiting) > spikeLongest {
+			if len(waiting) > LongestSpike {
 				t.Fatalf("%g m/s: %d readings wait", u, len(waiting))
 			}
 		}
